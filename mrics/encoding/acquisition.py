@@ -1,0 +1,73 @@
+"""Undersampled multi-channel k-space with its noise level."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from mrics.sampling.pattern import Pattern
+from mrics.scan.volume import Axes
+
+
+@dataclass(frozen=True)
+class Acquisition:
+    """What the scanner would hand over, simulated or measured.
+
+    Attributes
+    ----------
+    kspace : ndarray of shape (plane, channel, u, v), complex64 or complex128
+        Centred k-space, zero where nothing was acquired; may be memory-mapped.
+    mask : ndarray of bool, shape (pattern, u, v) or (pattern, u, 1)
+        Acquired samples, centred; a 1-D pattern acts along u and v is the readout (length 1 here).
+    pattern_index : ndarray of int, shape (plane,)
+        Which entry of ``mask`` each plane was acquired with.
+    pattern : Pattern
+        The pattern the mask was made of.
+    sigma_scan : float
+        Noise of the scan itself, standard deviation of the real part of one k-space sample.
+    sigma_added : float
+        Noise that was added in simulation, same unit.
+    sensitivities : ndarray of shape (plane or 1, channel, u, v) or None
+        Receive sensitivities in image space, natural order; None for one uniform channel.
+    covariance : ndarray of shape (channel, channel) or None
+        Psi = E[n n^H]/2; None for sigma^2 times identity.
+    axes : Axes or None
+        How planes lie in the file, None for a bare stack.
+    volume_shape : tuple of int
+        Shape of the source volume, for putting planes back; (plane, u, v) for a bare stack.
+    calibration : tuple of int
+        Fully sampled central positions along u (and v).
+    notes : tuple of str
+        What was simulated (phase, sensitivities), for the report.
+    """
+
+    kspace: NDArray[Any]
+    mask: NDArray[np.bool_]
+    pattern_index: NDArray[np.intp]
+    pattern: Pattern
+    sigma_scan: float = 0.0
+    sigma_added: float = 0.0
+    sensitivities: NDArray[Any] | None = None
+    covariance: NDArray[Any] | None = None
+    axes: Axes | None = None
+    volume_shape: tuple[int, ...] = ()
+    calibration: tuple[int, ...] = (0,)
+    notes: tuple[str, ...] = field(default=())
+
+    @property
+    def sigma(self) -> float:
+        """Total noise: root of the sum of squares of scan noise and added noise."""
+        return float(np.hypot(self.sigma_scan, self.sigma_added))
+
+    @property
+    def shape(self) -> tuple[int, int, int]:
+        """Shape (plane, u, v) of the image stack."""
+        return (self.kspace.shape[0], self.kspace.shape[2], self.kspace.shape[3])
+
+    @property
+    def channels(self) -> int:
+        """Number of channels."""
+        return int(self.kspace.shape[1])

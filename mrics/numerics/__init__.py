@@ -1,0 +1,26 @@
+"""Shared kernels: Fourier transform, threads, random streams."""
+
+from mrics.numerics.fourier import (
+    centred_fft,
+    centred_ifft,
+    fft_planes,
+    ifft_planes,
+    recentre,
+    uncentre,
+)
+from mrics.numerics.rng import stream, uniforms
+from mrics.numerics.threads import map_blocks, set_threads, threads
+
+__all__ = [
+    "centred_fft",
+    "centred_ifft",
+    "fft_planes",
+    "ifft_planes",
+    "map_blocks",
+    "recentre",
+    "set_threads",
+    "stream",
+    "threads",
+    "uncentre",
+    "uniforms",
+]

@@ -1,0 +1,36 @@
+"""How many compute threads this process may use, and running a function over plane blocks."""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Callable, Iterable
+from concurrent.futures import ThreadPoolExecutor
+from typing import Any
+
+_threads = max(1, len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else 1)
+
+
+def threads() -> int:
+    """Number of compute threads this process uses (default: the cores it may run on)."""
+    return _threads
+
+
+def set_threads(count: int) -> None:
+    """Set the number of compute threads; a study's worker process uses one."""
+    global _threads
+    if count < 1:
+        raise ValueError(f"thread count must be at least 1, got {count}")
+    _threads = int(count)
+
+
+def map_blocks(function: Callable[[Any], Any], blocks: Iterable[Any]) -> list[Any]:
+    """Run ``function`` on every block, over the compute threads, results in the order given.
+
+    The function must spend its time outside the interpreter lock (FFTs, compiled kernels).
+    """
+    items = list(blocks)
+    count = min(_threads, len(items))
+    if count <= 1:
+        return [function(item) for item in items]
+    with ThreadPoolExecutor(count) as pool:
+        return list(pool.map(function, items))
