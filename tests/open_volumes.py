@@ -91,12 +91,6 @@ _UNREACHABLE = (
     "ProxyError",
     "No module named pip",
 )
-    "NewConnectionError",
-    "ConnectTimeout",
-    "Retrying (",
-    "ProxyError",
-    "No module named pip",
-)
 
 
 def open_volume(identity: str) -> Path:
