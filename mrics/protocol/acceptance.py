@@ -1,0 +1,72 @@
+"""``[acceptance]``: limits a measure must keep, ``<metric>_min``, ``_max`` or ``_worst``."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+from dataclasses import dataclass
+from typing import Any
+
+from mrics.errors import ProtocolError
+from mrics.protocol.messages import nearest, place, shown
+
+
+@dataclass(frozen=True)
+class Limit:
+    """One acceptance limit.
+
+    Attributes
+    ----------
+    key : str
+        As written, for example ``"ssim_min"``.
+    metric : str
+        Name of the measure.
+    side : str
+        ``"min"`` where the measure must not fall below the limit, ``"max"`` where it must not
+        exceed it.
+    worst : bool
+        True where the worst slice of any scan and draw is limited, False for the mean.
+    value : float
+        The limit.
+    """
+
+    key: str
+    metric: str
+    side: str
+    worst: bool
+    value: float
+
+
+def read_limits(table: Mapping[str, Any], path: object, text: str) -> tuple[Limit, ...]:
+    """The limits of the table, each checked against the measures mrics takes.
+
+    Raises
+    ------
+    ProtocolError
+        For an unknown measure or ending, a limit on the wrong side or a value that is no number.
+    """
+    from mrics.quality import METRICS, acceptance_keys
+
+    known = acceptance_keys()
+    limits = []
+    for key, value in table.items():
+        where = place(path, text, ("acceptance", key))
+        if key not in known:
+            metric, _, kind = key.rpartition("_")
+            if metric in METRICS and kind in ("min", "max"):
+                better = METRICS[metric].direction
+                raise ProtocolError(
+                    f"{key} limits {metric} on the wrong side: {better} is better.",
+                    where,
+                    f"Use {metric}_{'min' if kind == 'max' else 'max'}, or {metric}_worst for the "
+                    "worst slice.",
+                )
+            raise ProtocolError(f"Unknown acceptance limit {key!r}.", where, nearest(key, known))
+        number = isinstance(value, int | float) and not isinstance(value, bool)
+        if not number or not math.isfinite(value):
+            raise ProtocolError(
+                f"acceptance.{key} = {shown(value)} is not allowed.", where, "Give a finite number."
+            )
+        means = known[key]
+        limits.append(Limit(key, means.metric, means.side, means.worst, float(value)))
+    return tuple(limits)

@@ -1,0 +1,132 @@
+"""The arms of a study: sampling entry x acceleration x recovery entry, and today's protocol."""
+
+from __future__ import annotations
+
+import re
+import unicodedata
+from dataclasses import dataclass, field, replace
+from typing import Any
+
+from mrics.protocol.sections import Recovery, Sampling, Today
+
+
+@dataclass(frozen=True)
+class Arm:
+    """One pattern family at one acceleration with one recovery.
+
+    Attributes
+    ----------
+    id : str
+        Readable and unique within the protocol, for example ``"power-law-r4-wavelet"``.
+    label : str
+        The same for people, for example ``"power law, R = 4, wavelet"``.
+    today : bool
+        True for the protocol now in use.
+    sampling_name : str
+        Name of the sampling entry.
+    sampling : dict
+        Its keys, as ``mrics.sampling.draw_entry`` takes them.
+    acceleration : float
+        Acceleration asked for.
+    recovery : str
+        Method.
+    recovery_name : str
+        Name of the recovery entry.
+    recovery_settings : dict
+        Settings of the method.
+    averages : int or None
+        Averages of this arm where they differ from those of ``[sequence]``.
+    """
+
+    id: str
+    label: str
+    today: bool
+    sampling_name: str
+    sampling: dict[str, Any] = field(hash=False)
+    acceleration: float
+    recovery: str
+    recovery_name: str
+    recovery_settings: dict[str, Any] = field(hash=False)
+    averages: int | None = None
+
+
+def sampling_name(entry: Sampling, others: tuple[Sampling, ...] = ()) -> str:
+    """The entry's name, or its law and draw, numbered where entries before it have the same."""
+    plain = entry.name or " ".join(
+        str(entry.extra[key]) for key in ("law", "draw") if key in entry.extra
+    )
+    earlier = sum(sampling_name(other) == plain for other in others) if others else 0
+    return f"{plain} {earlier + 1}" if earlier and not entry.name else plain or "sampling"
+
+
+def expand_arms(
+    sampling: tuple[Sampling, ...],
+    recovery: tuple[Recovery, ...],
+    today: Today | None,
+) -> tuple[Arm, ...]:
+    """Every arm, today's first, ids unique and independent of the order of other entries."""
+    arms: list[Arm] = []
+    if today is not None:
+        entry, today_recovery = today_entry(today, sampling)
+        arms.append(_arm(entry, today.acceleration, today_recovery, sampling_name(entry), True))
+    for at, entry in enumerate(sampling):
+        name = sampling_name(entry, sampling[:at])
+        for acceleration in entry.acceleration:
+            for method in recovery:
+                arms.append(_arm(entry, acceleration, method, name, False))
+    return tuple(_unique(arms))
+
+
+def today_entry(today: Today, sampling: tuple[Sampling, ...]) -> tuple[Sampling, Recovery]:
+    """Today's arm as a sampling and a recovery entry.
+
+    ``sampling`` is the name of a ``[[sampling]]`` table, whose keys are then taken over, or a
+    law; further keys of ``[today]`` go on top.
+    """
+    if isinstance(today.sampling, dict):
+        keys = dict(today.sampling)
+    else:
+        named = next((s for s in sampling if s.name == today.sampling), None)
+        keys = {"name": named.name, **named.extra} if named else {"law": today.sampling}
+    keys.update(today.extra)
+    keys.setdefault("name", str(keys.get("law", "today")))
+    entry = Sampling(**{**keys, "acceleration": today.acceleration, "averages": today.averages})
+    if isinstance(today.recovery, dict):
+        return entry, Recovery(**today.recovery)
+    return entry, Recovery(method=today.recovery, name=None)
+
+
+def _arm(entry: Sampling, acceleration: float, method: Recovery, name: str, today: bool) -> Arm:
+    recovery_name = method.name or method.method
+    parts = (name, f"r{acceleration:g}", recovery_name)
+    identity = "-".join(slug(part) for part in (("today", *parts) if today else parts))
+    label = f"{name}, R = {acceleration:g}, {recovery_name}"
+    return Arm(
+        id=identity,
+        label=f"today: {label}" if today else label,
+        today=today,
+        sampling_name=name,
+        sampling={"name": name, "acceleration": acceleration, **entry.extra},
+        acceleration=acceleration,
+        recovery=method.method,
+        recovery_name=recovery_name,
+        recovery_settings=method.extra,
+        averages=entry.averages,
+    )
+
+
+def slug(text: str) -> str:
+    """Lower-case letters, digits, points and hyphens; never empty."""
+    plain = unicodedata.normalize("NFKD", text).encode("ascii", "ignore").decode().lower()
+    return re.sub(r"[^a-z0-9.]+", "-", plain).strip("-.") or "entry"
+
+
+def _unique(arms: list[Arm]) -> list[Arm]:
+    """Number the ids that repeat (entries whose names differ only in what a slug drops)."""
+    seen: dict[str, int] = {}
+    out = []
+    for arm in arms:
+        seen[arm.id] = seen.get(arm.id, 0) + 1
+        again = seen[arm.id]
+        out.append(replace(arm, id=f"{arm.id}-{again}") if again > 1 else arm)
+    return out
