@@ -40,14 +40,18 @@ def centred_ifft(kspace: Array, axes: tuple[int, ...] = _PLANE) -> Array:
     )
 
 
-def fft_planes(image: Array, overwrite: bool = False, workers: int = 1) -> Array:
+def fft_planes(
+    image: Array, overwrite: bool = False, workers: int = 1, axes: tuple[int, ...] = _PLANE
+) -> Array:
     """Un-centred orthonormal transform of the last two axes; complex ``overwrite`` is in place."""
-    return scipy.fft.fft2(image, norm="ortho", overwrite_x=overwrite, workers=workers)
+    return scipy.fft.fftn(image, axes=axes, norm="ortho", overwrite_x=overwrite, workers=workers)
 
 
-def ifft_planes(kspace: Array, overwrite: bool = False, workers: int = 1) -> Array:
+def ifft_planes(
+    kspace: Array, overwrite: bool = False, workers: int = 1, axes: tuple[int, ...] = _PLANE
+) -> Array:
     """Inverse of :func:`fft_planes`."""
-    return scipy.fft.ifft2(kspace, norm="ortho", overwrite_x=overwrite, workers=workers)
+    return scipy.fft.ifftn(kspace, axes=axes, norm="ortho", overwrite_x=overwrite, workers=workers)
 
 
 def centre_phase(length: int, dtype: Any = np.complex128) -> Array:
