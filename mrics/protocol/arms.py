@@ -7,6 +7,8 @@ import unicodedata
 from dataclasses import dataclass, field, replace
 from typing import Any
 
+from mrics.errors import ProtocolError
+from mrics.protocol.messages import nearest
 from mrics.protocol.sections import Recovery, Sampling, Today
 
 
@@ -51,9 +53,9 @@ class Arm:
 
 
 def sampling_name(entry: Sampling, others: tuple[Sampling, ...] = ()) -> str:
-    """The entry's name, or its law and draw, numbered where entries before it have the same."""
+    """The entry's name, or its pattern or law and draw, numbered where earlier ones are equal."""
     plain = entry.name or " ".join(
-        str(entry.extra[key]) for key in ("law", "draw") if key in entry.extra
+        str(entry.extra[key]) for key in ("pattern", "law", "draw") if key in entry.extra
     )
     earlier = sum(sampling_name(other) == plain for other in others) if others else 0
     return f"{plain} {earlier + 1}" if earlier and not entry.name else plain or "sampling"
@@ -68,10 +70,10 @@ def expand_arms(
     arms: list[Arm] = []
     if today is not None:
         entry, today_recovery = today_entry(today, sampling)
-        arms.append(_arm(entry, today.acceleration, today_recovery, sampling_name(entry), True))
+        arms.append(_arm(entry, entry.accelerations[0], today_recovery, sampling_name(entry), True))
     for at, entry in enumerate(sampling):
         name = sampling_name(entry, sampling[:at])
-        for acceleration in entry.acceleration:
+        for acceleration in entry.accelerations:
             for method in recovery:
                 arms.append(_arm(entry, acceleration, method, name, False))
     return tuple(_unique(arms))
@@ -81,16 +83,39 @@ def today_entry(today: Today, sampling: tuple[Sampling, ...]) -> tuple[Sampling,
     """Today's arm as a sampling and a recovery entry.
 
     ``sampling`` is the name of a ``[[sampling]]`` table, whose keys are then taken over, or a
-    law; further keys of ``[today]`` go on top.
+    pattern or law of the sampling room; further keys of ``[today]`` go on top.
+
+    Raises
+    ------
+    ProtocolError
+        For a name that is none of these.
     """
-    if isinstance(today.sampling, dict):
-        keys = dict(today.sampling)
+    from mrics.sampling import LAWS, PATTERNS
+
+    names = [sampling_name(other, sampling[:at]) for at, other in enumerate(sampling)]
+    asked = today.sampling
+    if isinstance(asked, dict):
+        keys = dict(asked)
+    elif asked in names:
+        keys = {"name": asked, **sampling[names.index(asked)].extra}
+    elif asked in PATTERNS:
+        keys = {"pattern": asked}
+    elif asked in LAWS:
+        keys = {"law": asked}
     else:
-        named = next((s for s in sampling if s.name == today.sampling), None)
-        keys = {"name": named.name, **named.extra} if named else {"law": today.sampling}
+        raise ProtocolError(
+            f"sampling = {asked!r} is not known.",
+            "sampling",
+            nearest(asked, [*names, *PATTERNS, *LAWS]),
+        )
     keys.update(today.extra)
-    keys.setdefault("name", str(keys.get("law", "today")))
-    entry = Sampling(**{**keys, "acceleration": today.acceleration, "averages": today.averages})
+    plain = "steps" in keys or keys.get("pattern") == "full"
+    asked_for = 1.0 if today.acceleration is None and not plain else today.acceleration
+    for key, value in (("acceleration", asked_for), ("averages", today.averages)):
+        if value is not None:
+            keys[key] = value
+    keys.setdefault("name", str(keys.get("pattern", keys.get("law", "today"))))
+    entry = Sampling(**keys)
     if isinstance(today.recovery, dict):
         return entry, Recovery(**today.recovery)
     return entry, Recovery(method=today.recovery, name=None)
@@ -106,13 +131,21 @@ def _arm(entry: Sampling, acceleration: float, method: Recovery, name: str, toda
         label=f"today: {label}" if today else label,
         today=today,
         sampling_name=name,
-        sampling={"name": name, "acceleration": acceleration, **entry.extra},
+        sampling=entry_keys(entry, name, acceleration),
         acceleration=acceleration,
         recovery=method.method,
         recovery_name=recovery_name,
         recovery_settings=method.extra,
         averages=entry.averages,
     )
+
+
+def entry_keys(
+    entry: Sampling, name: str, acceleration: float | tuple[float, ...] | None
+) -> dict[str, Any]:
+    """The entry's keys as the sampling room takes them."""
+    asked = {} if acceleration is None else {"acceleration": acceleration}
+    return {"name": name, **asked, **entry.extra}
 
 
 def slug(text: str) -> str:

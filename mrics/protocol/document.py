@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import tomllib
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, TypeVar
@@ -33,6 +33,7 @@ from mrics.scan.volume import Axes
 LARGEST_FILE = 1_000_000
 TABLES = ("protocol", "sequence", "grid", "today", "acceptance", "study", "coils")
 LISTS = ("sampling", "recovery")
+Fail = Callable[[str, Location, str], None]
 AnySection = TypeVar("AnySection", Section, OpenSection)
 
 
@@ -274,7 +275,7 @@ def _check(protocol: Protocol) -> None:
     _check_arms(protocol, fail)
 
 
-def _check_arms(protocol: Protocol, fail: Any) -> None:
+def _check_arms(protocol: Protocol, fail: Fail) -> None:
     if not protocol.sampling and protocol.today is None:
         fail(
             "The protocol has no arms: no [[sampling]] table and no [today].",
@@ -289,27 +290,20 @@ def _check_arms(protocol: Protocol, fail: Any) -> None:
         )
     _repeats(protocol, fail)
     for at, entry in enumerate(protocol.sampling):
-        keys = {"acceleration": list(entry.acceleration), **entry.extra}
-        if entry.name is not None:
-            keys["name"] = entry.name
-        _ask_room(protocol, ("sampling", at), lambda keys=keys: _check_sampling(keys))
+        _ask_room(protocol, ("sampling", at), _check_sampling, entry)
+        if not entry.accelerations:
+            fail(
+                "Key 'acceleration' is missing.",
+                ("sampling", at, "acceleration"),
+                "Add acceleration, one number from 1 or a list of them.",
+            )
     for at, method in enumerate(protocol.recovery):
-        _ask_room(
-            protocol,
-            ("recovery", at),
-            lambda method=method: _check_settings(method.method, method.extra),
-        )
+        _ask_room(protocol, ("recovery", at), _check_settings, method)
     if protocol.today is not None:
-        try:
-            entry, method = _arms.today_entry(protocol.today, protocol.sampling)
-        except ValidationError as error:
-            raise refuse(error, Today, ("today",), protocol.path, protocol.text) from None
-        keys = {"name": entry.name, "acceleration": list(entry.acceleration), **entry.extra}
-        _ask_room(protocol, ("today",), lambda: _check_sampling(keys))
-        _ask_room(protocol, ("today",), lambda: _check_settings(method.method, method.extra))
+        _ask_room(protocol, ("today",), _check_today, protocol)
 
 
-def _repeats(protocol: Protocol, fail: Any) -> None:
+def _repeats(protocol: Protocol, fail: Fail) -> None:
     for section, entries in (("sampling", protocol.sampling), ("recovery", protocol.recovery)):
         labels = [
             entry.name or (entry.method if isinstance(entry, Recovery) else None)
@@ -323,36 +317,48 @@ def _repeats(protocol: Protocol, fail: Any) -> None:
                     "Give each a name of its own.",
                 )
     for at, entry in enumerate(protocol.sampling):
-        if len(set(entry.acceleration)) < len(entry.acceleration):
+        if len(set(entry.accelerations)) < len(entry.accelerations):
             fail(
-                f"acceleration = {shown(entry.acceleration)} repeats a value.",
+                f"acceleration = {shown(entry.accelerations)} repeats a value.",
                 ("sampling", at, "acceleration"),
                 "List every acceleration once.",
             )
 
 
-def _check_sampling(keys: dict[str, Any]) -> None:
-    try:
-        from mrics.sampling import check_sampling
-    except ImportError:
-        return
-    check_sampling(keys)
+def _check_sampling(entry: Sampling) -> None:
+    from mrics.sampling import check_sampling
+
+    check_sampling(_arms.entry_keys(entry, entry.name or "", entry.acceleration))
 
 
-def _check_settings(method: str, settings: dict[str, Any]) -> None:
+def _check_settings(entry: Recovery) -> None:
     try:
         from mrics.recovery import check_settings
     except ImportError:
         return
-    check_settings(method, settings)
+    check_settings(entry.method, entry.extra)
 
 
-def _ask_room(protocol: Protocol, location: Location, question: Any) -> None:
+def _check_today(protocol: Protocol) -> None:
+    assert protocol.today is not None
+    try:
+        entry, method = _arms.today_entry(protocol.today, protocol.sampling)
+    except ValidationError as error:
+        raise refuse(error, Sampling, ("today",), protocol.path, protocol.text) from None
+    _check_sampling(entry)
+    _check_settings(method)
+
+
+def _ask_room(
+    protocol: Protocol, location: Location, check: Callable[[Any], None], subject: Any
+) -> None:
     """Run another room's check and put file, line and key before what it says."""
     try:
-        question()
+        check(subject)
     except MricsError as error:
         where = place(protocol.path, protocol.text, location)
-        raise ProtocolError(
-            error.what, f"{where}, {error.where}" if error.where else where, error.fix
-        ) from error
+        if str(protocol.path) in error.where:
+            where = error.where
+        elif error.where:
+            where = f"{where}, {error.where}"
+        raise ProtocolError(error.what, where, error.fix) from error

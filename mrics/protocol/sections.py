@@ -6,6 +6,7 @@ messages and the template of a new protocol are made.
 
 from __future__ import annotations
 
+import math
 from typing import Annotated, Any, Literal
 
 from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, model_validator
@@ -32,7 +33,9 @@ Milliseconds = Annotated[float, Field(gt=0, le=600000)]
 
 
 def _as_list(value: Any) -> Any:
-    """One number where a list may stand."""
+    """One value where a list may stand."""
+    if value == () or value is None:
+        raise ValueError("one value or a list of at least one")
     return value if isinstance(value, tuple) else (value,)
 
 
@@ -176,7 +179,9 @@ class Today(OpenSection):
     sampling: TextOrTable = Field(
         description="name of a [[sampling]] table, a law or family, or a table of its own"
     )
-    acceleration: Acceleration = Field(1.0, description="acceleration in use today")
+    acceleration: Acceleration | None = Field(
+        None, description="acceleration in use today; 1 or the product of its steps where left out"
+    )
     recovery: Annotated[Any, BeforeValidator(_method)] = Field(
         "zero-filled", description="method, or a table with method and settings"
     )
@@ -186,15 +191,25 @@ class Today(OpenSection):
 
 
 class Sampling(OpenSection):
-    """One ``[[sampling]]`` table; keys of the law and the draw are kept and checked there."""
+    """One ``[[sampling]]`` table; keys of its law, draw or pattern are checked by sampling."""
 
     name: str | None = Field(None, min_length=1, max_length=80, description="label of this entry")
-    acceleration: Annotated[tuple[Acceleration, ...], BeforeValidator(_as_list)] = Field(
-        min_length=1, description="one acceleration or a list"
+    acceleration: Annotated[tuple[Acceleration, ...], BeforeValidator(_as_list)] | None = Field(
+        None, description="one acceleration or a list; a lattice with steps needs none"
     )
     averages: Annotated[int, Field(ge=1, le=256)] | None = Field(
         None, description="signal averages of these arms (default: those of [sequence])"
     )
+
+    @property
+    def accelerations(self) -> tuple[float, ...]:
+        """What ``acceleration`` says, else what a regular pattern's own keys say, else empty."""
+        if self.acceleration:
+            return self.acceleration
+        if self.extra.get("pattern") == "full":
+            return (1.0,)
+        steps = self.extra.get("steps", ())
+        return (float(math.prod(_as_list(steps))),) if steps else ()
 
 
 class Recovery(OpenSection):
@@ -247,9 +262,7 @@ class Study(Section):
 
     scans: Annotated[
         tuple[Annotated[ScanEntry, BeforeValidator(_as_entry)], ...], BeforeValidator(_as_list)
-    ] = Field(
-        min_length=1, description="scan files, patterns or pairs, relative to the protocol file"
-    )
+    ] = Field(description="scan files, patterns or pairs, relative to the protocol file")
     draws: Annotated[int, Field(ge=1, le=10000)] = Field(1, description="draws of each pattern")
     seed: Annotated[int, Field(ge=0, le=2**63 - 1)] = Field(0, description="seed of the study")
     slices: Annotated[Any, BeforeValidator(_slices)] = Field(
