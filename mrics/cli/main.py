@@ -1,0 +1,152 @@
+"""Commands. Each reads its arguments, calls one function of another room and prints."""
+
+from __future__ import annotations
+
+import sys
+from pathlib import Path
+from typing import Annotated, Any
+
+import typer
+
+from mrics.caution import RESEARCH_ONLY
+from mrics.errors import MricsError
+
+app = typer.Typer(
+    name="mrics",
+    help=f"Plan MRI undersampling on fully sampled scans.\n\n{RESEARCH_ONLY}",
+    no_args_is_help=True,
+    add_completion=False,
+    pretty_exceptions_enable=False,
+    rich_markup_mode=None,
+)
+
+Force = Annotated[bool, typer.Option("--force", help="Replace what is there.")]
+Quick = Annotated[bool, typer.Option("--quick", help="Few slices, for a first look.")]
+Workers = Annotated[int, typer.Option("--workers", min=1, help="Processes to compute in.")]
+ProtocolFile = Annotated[Path, typer.Argument(metavar="PROTOCOL", help="Protocol file (TOML).")]
+StudyFolder = Annotated[Path, typer.Argument(metavar="DIR", help="Folder of a finished study.")]
+
+
+def main() -> None:
+    """Run the command line; bad input is told in three lines and exits with status 2."""
+    arguments = sys.argv[1:]
+    debug = "--debug" in arguments
+    arguments = [a for a in arguments if a != "--debug"]
+    try:
+        app(args=arguments, standalone_mode=True)
+    except MricsError as error:
+        if debug:
+            raise
+        typer.echo(f"mrics: {error}", err=True)
+        sys.exit(2)
+    except KeyboardInterrupt:
+        typer.echo("mrics: stopped; finished units are kept, run again to go on", err=True)
+        sys.exit(130)
+
+
+def _version(wanted: bool) -> None:
+    if wanted:
+        import mrics
+
+        typer.echo(f"mrics {mrics.__version__}\n{RESEARCH_ONLY}")
+        raise typer.Exit
+
+
+@app.callback()
+def options(
+    version: Annotated[
+        bool, typer.Option("--version", callback=_version, is_eager=True, help="Print the version.")
+    ] = False,
+    debug: Annotated[bool, typer.Option("--debug", help="Show the traceback of an error.")] = False,
+) -> None:
+    """Options of every command."""
+
+
+@app.command()
+def demo(
+    out: Annotated[Path, typer.Option("--out", help="Folder to write to.")] = Path("mrics-demo"),
+) -> None:
+    """Study the shipped sample scans with a shipped protocol and write a report.
+
+    Example: mrics demo --out knee-demo
+    """
+    from mrics.cli.shipped import demo_protocol
+
+    _run(demo_protocol(), out, quick=False, force=False, workers=1)
+
+
+@app.command()
+def new(
+    scans: Annotated[list[Path], typer.Argument(metavar="SCAN...", help="NIfTI files.")],
+    out: Annotated[Path, typer.Option("--out", help="Protocol file to write.")],
+    force: Force = False,
+) -> None:
+    """Write a commented protocol from the scans' headers, ready to run.
+
+    Example: mrics new knee_a.nii.gz knee_b.nii.gz --out knee.toml
+    """
+    from mrics.cli.writing import write_new
+    from mrics.protocol import new_protocol
+
+    write_new(out, new_protocol(scans, out=out), force)
+    typer.echo(f"protocol: {out}\nnext:     mrics plan {out}")
+
+
+@app.command()
+def plan(
+    protocol: ProtocolFile,
+    page: Annotated[
+        Path | None, typer.Option("--page", help="Where to write the page of pattern pictures.")
+    ] = None,
+) -> None:
+    """Lines acquired, achieved R and scan time of every arm, without touching image data.
+
+    Example: mrics plan knee.toml
+    """
+    from mrics.cli.tables import plan_table
+    from mrics.protocol import load_protocol
+    from mrics.report import write_plan_page
+    from mrics.study import plan_study
+
+    study_plan = plan_study(load_protocol(protocol))
+    typer.echo(plan_table(study_plan))
+    where = page if page is not None else protocol.with_suffix(".plan.html")
+    write_plan_page(study_plan, where)
+    typer.echo(f"\npage: {where}\n{RESEARCH_ONLY}")
+
+
+@app.command()
+def run(
+    protocol: ProtocolFile,
+    out: Annotated[Path, typer.Option("--out", help="Study folder.")],
+    quick: Quick = False,
+    force: Force = False,
+    workers: Workers = 1,
+) -> None:
+    """Undersample, recover and measure; write results, maps and the report.
+
+    Example: mrics run knee.toml --out knee-study
+    """
+    _run(protocol, out, quick=quick, force=force, workers=workers)
+
+
+@app.command()
+def report(folder: StudyFolder) -> None:
+    """Draw the page again from results.json and the stored maps.
+
+    Example: mrics report knee-study
+    """
+    from mrics.report import write_report
+
+    typer.echo(f"report: {write_report(folder)}\n{RESEARCH_ONLY}")
+
+
+def _run(protocol: Path, out: Path, **settings: Any) -> None:
+    from mrics.cli.progress import progress_line
+    from mrics.cli.tables import verdict_lines
+    from mrics.report import run_study
+
+    with progress_line() as progress:
+        results = run_study(protocol, out, progress=progress, **settings)
+    typer.echo(verdict_lines(results))
+    typer.echo(f"report:  {out / 'report.html'}\n{RESEARCH_ONLY}")

@@ -1,0 +1,291 @@
+"""What a study will do, known before any image data are touched."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from mrics.errors import MricsError, StudyError
+from mrics.protocol import Arm, Protocol, ScanFiles
+from mrics.protocol.arms import slug
+from mrics.protocol.timing import Timing, console_difference, scan_time
+from mrics.sampling import Pattern
+from mrics.scan import Axes, read_header
+from mrics.study.code_version import code_version
+from mrics.study.prepare import PlaneChoice
+from mrics.study.units import Noise, Unit, content_key, draw_of, pattern_grid
+
+
+@dataclass(frozen=True)
+class PlanRow:
+    """One arm as planned.
+
+    Attributes
+    ----------
+    arm : Arm
+        The arm.
+    pattern : Pattern
+        Its first draw on the first scan's grid.
+    timing : Timing
+        Scan time of the arm and of the full scan.
+    """
+
+    arm: Arm
+    pattern: Pattern
+    timing: Timing
+
+    @property
+    def calibration_share(self) -> float:
+        """Acquired positions of the calibration region / all acquired positions."""
+        return _calibrated(self.pattern) / max(1, self.pattern.acquired)
+
+    def as_dict(self) -> dict[str, Any]:
+        """The row as results files hold it."""
+        return {
+            "id": self.arm.id,
+            "label": self.arm.label,
+            "today": self.arm.today,
+            "sampling": self.arm.sampling_name,
+            "sampling_settings": self.arm.sampling,
+            "recovery": self.arm.recovery,
+            "recovery_name": self.arm.recovery_name,
+            "recovery_settings": self.arm.recovery_settings,
+            "acceleration_target": self.arm.acceleration,
+            "calibration_share": self.calibration_share,
+            "scan_time_s": self.timing.scan_time_s,
+            "full_scan_time_s": self.timing.full_scan_time_s,
+        }
+
+
+@dataclass(frozen=True)
+class StudyPlan:
+    """Arms x draws x scans of one protocol.
+
+    Attributes
+    ----------
+    protocol : Protocol
+        The protocol.
+    axes : Axes
+        Which file axes are encoded.
+    scans : tuple of ScanFiles
+        Files of every scan.
+    scan_ids : tuple of str
+        Their labels in results and file names, unique.
+    rows : tuple of PlanRow
+        Every arm.
+    choice : PlaneChoice
+        Which planes are studied.
+    noise : Noise
+        Noise added to every arm.
+    channel_axis : int or None
+        File axis of receive channels.
+    """
+
+    protocol: Protocol
+    axes: Axes
+    scans: tuple[ScanFiles, ...]
+    scan_ids: tuple[str, ...]
+    rows: tuple[PlanRow, ...]
+    choice: PlaneChoice
+    noise: Noise
+    channel_axis: int | None
+
+    def units(self, folder: Path, hashes: Sequence[str]) -> list[Unit]:
+        """Every unit, scan by scan so that each scan is read once; ``hashes`` name the scans."""
+        study = self.protocol.study
+        units = []
+        for scan, scan_id, sha256 in zip(self.scans, self.scan_ids, hashes, strict=True):
+            for row in self.rows:
+                ratio = self._averages_ratio(row.arm)
+                for draw in range(self._draws(row)):
+                    key = content_key(
+                        scan=sha256,
+                        axes=(self.axes.readout, self.axes.phase, self.axes.partition),
+                        planes=self.choice.spec,
+                        channel_axis=self.channel_axis,
+                        sampling={k: v for k, v in row.arm.sampling.items() if k != "name"},
+                        acceleration=row.arm.acceleration,
+                        recovery=row.arm.recovery,
+                        settings=row.arm.recovery_settings,
+                        noise=(self.noise.sigma, self.noise.snr, self.noise.percent, ratio),
+                        draw=draw,
+                        seed=study.seed,
+                        code=code_version(),
+                    )
+                    units.append(
+                        Unit(
+                            key=key,
+                            scan_id=scan_id,
+                            files=scan,
+                            axes=self.axes,
+                            choice=self.choice,
+                            channel_axis=self.channel_axis,
+                            arm=row.arm,
+                            draw=draw,
+                            seed=study.seed,
+                            noise=self.noise,
+                            averages_ratio=ratio,
+                            folder=folder,
+                            keep_maps=draw == 0,
+                        )
+                    )
+        return units
+
+    def notes(self, records: Sequence[dict[str, Any]]) -> list[str]:
+        """What a reader must know before the numbers: simulation, noise, planes."""
+        notes = [
+            "Lines were left out after the scan: measured samples share the reference's noise, "
+            "which is optimistic."
+        ]
+        magnitude = [r["id"] for r in records if r["complex_source"] == "magnitude"]
+        if magnitude:
+            notes.append(
+                f"Magnitude only ({', '.join(magnitude)}): the phase is unknown, k-space is "
+                "Hermitian, and recovery is easier than on a complex scan."
+            )
+        added = [r for r in records if r["sigma_added"] > 0]
+        if added:
+            notes.append(
+                "Noise was added: "
+                + ", ".join(f"{r['id']} sigma {r['sigma_added']:.4g}" for r in added)
+                + "."
+            )
+        few = [r for r in records if len(r["planes"]) < r["shape"]["ijk".index(r["plane_axis"])]]
+        if few and self.choice.spec != "all":
+            notes.append(
+                "Only part of the slices was studied: "
+                + ", ".join(f"{r['id']} {len(r['planes'])}" for r in few)
+                + "."
+            )
+        notes.append(
+            "One receive channel is simulated: the image is taken as the combined image of the "
+            "array."
+        )
+        return notes
+
+    def findings(self) -> list[str]:
+        """What the timing rests on, each said once, and how it compares with the console."""
+        said = [text for row in self.rows for text in row.timing.findings]
+        today = next((row for row in self.rows if row.arm.today), None)
+        if today is not None:
+            console = console_difference(self.protocol.sequence, today.timing.scan_time_s)
+            said += [console] if console else []
+        return list(dict.fromkeys(said))
+
+    def _draws(self, row: PlanRow) -> int:
+        """Regular patterns have no luck in them: one draw says all."""
+        return self.protocol.study.draws if row.pattern.probability is not None else 1
+
+    def _averages_ratio(self, arm: Arm) -> float:
+        sequence = self.protocol.sequence
+        reference = self.protocol.study.reference_averages or sequence.averages
+        return reference / (arm.averages or sequence.averages)
+
+
+def plan_study(protocol: Protocol, *, quick: bool = False) -> StudyPlan:
+    """Plan a study from the protocol and the scans' headers.
+
+    Parameters
+    ----------
+    protocol : Protocol
+        The protocol.
+    quick : bool
+        Study ``quick_slices`` slices only.
+
+    Raises
+    ------
+    MricsError
+        Where a scan's header cannot be read, a grid does not fit, or a pattern or timing is
+        impossible.
+    """
+    study = protocol.study
+    axes = protocol.axes()
+    scans = protocol.scan_files()
+    choice = PlaneChoice(study.slices)
+    if quick:
+        given = study.slices
+        few = study.quick_slices
+        if isinstance(given, tuple):
+            choice = PlaneChoice(given[:few])
+        else:
+            choice = PlaneChoice(few if given == "all" else min(few, int(given)))
+    grids: dict[tuple[int, ...], str] = {}
+    shapes = [read_header(scan.path).shape for scan in scans]
+    for scan, shape in zip(scans, shapes, strict=True):
+        grids.setdefault(pattern_grid(axes, shape), scan.path.name)
+    slices = protocol.grid.slices or shapes[0][axes.order[0]]
+    arms = protocol.arms()
+    rows: list[PlanRow] = []
+    for number, (grid, name) in enumerate(grids.items()):
+        for arm in arms:
+            try:
+                pattern = draw_of(arm, grid, study.seed, 0)
+            except MricsError as error:
+                where = f"{protocol.path}: arm {arm.label}, grid of {name}"
+                raise type(error)(error.what, f"{where}; {error.where}", error.fix) from error
+            if number == 0:
+                rows.append(PlanRow(arm, pattern, arm_timing(protocol, pattern, arm, slices)))
+    return StudyPlan(
+        protocol=protocol,
+        axes=axes,
+        scans=scans,
+        scan_ids=_unique_ids(scans),
+        rows=tuple(rows),
+        choice=choice,
+        noise=Noise(study.sigma_added, study.snr, study.noise_percent),
+        channel_axis=protocol.grid.channel_axis,
+    )
+
+
+def arm_timing(protocol: Protocol, pattern: Pattern, arm: Arm, slices: int) -> Timing:
+    """Scan time of an arm.
+
+    Time is spent on the steps the scanner acquires (``phase_steps``, ``partition_steps``), which
+    oversampling and interpolation make differ from the image matrix the pattern is drawn on; the
+    arm then acquires the same share of them.
+    """
+    grid = protocol.grid
+    steps = [
+        given or size
+        for given, size in zip((grid.phase_steps, grid.partition_steps), pattern.grid, strict=False)
+    ]
+    full = math.prod(steps)
+    acquired = pattern.acquired
+    if full != math.prod(pattern.grid):
+        acquired = min(full, math.ceil(full / pattern.acceleration - 1e-9))
+    three_d = len(pattern.grid) == 2
+    return scan_time(
+        protocol.sequence,
+        acquired,
+        full,
+        slices=1 if three_d else slices,
+        partitions=steps[1] if three_d else None,
+        calibration=_calibrated(pattern),
+        averages=arm.averages,
+    )
+
+
+def _calibrated(pattern: Pattern) -> int:
+    """Positions of the calibration region."""
+    if len(pattern.calibration) != len(pattern.grid):
+        return 0
+    return math.prod(
+        min(lines, size) for lines, size in zip(pattern.calibration, pattern.grid, strict=True)
+    )
+
+
+def _unique_ids(scans: Sequence[ScanFiles]) -> tuple[str, ...]:
+    ids: list[str] = []
+    for scan in scans:
+        plain = slug(scan.name)
+        again = 2
+        label = plain
+        while label in ids:
+            label, again = f"{plain}-{again}", again + 1
+        ids.append(label)
+    if not ids:
+        raise StudyError("The protocol names no scans.", "study.scans", "Name at least one scan.")
+    return tuple(ids)

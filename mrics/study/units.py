@@ -1,0 +1,220 @@
+"""One unit of a study: one scan, one arm, one draw, from undersampling to numbers."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import time
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from mrics.encoding import undersample
+from mrics.numerics import set_threads
+from mrics.protocol import Arm, ScanFiles
+from mrics.quality import error_maps, score_planes
+from mrics.recovery import recover
+from mrics.sampling import Pattern, draw_entry
+from mrics.scan import Axes, write_nifti
+from mrics.study.files import plain, write_json
+from mrics.study.prepare import PlaneChoice, Prepared, prepare
+
+
+@dataclass(frozen=True)
+class Noise:
+    """Noise added to every arm, as the protocol states it (at most one is given).
+
+    Attributes
+    ----------
+    sigma, snr, percent : float or None
+        Standard deviation of the real part; mean body magnitude over it; percent of the maximum.
+    """
+
+    sigma: float | None = None
+    snr: float | None = None
+    percent: float | None = None
+
+    def added(self, scan: Prepared) -> float:
+        """Sigma to add to this scan so that the total is what was asked (never below its own)."""
+        if self.sigma is not None:
+            return self.sigma
+        if self.percent is not None:
+            return self.percent / 100.0 * scan.data_range
+        if self.snr is not None:
+            total = scan.snr * scan.sigma / self.snr if scan.sigma > 0 else 0.0
+            if scan.sigma == 0:
+                total = float(np.abs(scan.stack[scan.body]).mean()) / self.snr
+            return float(np.sqrt(max(0.0, total**2 - scan.sigma**2)))
+        return 0.0
+
+
+@dataclass(frozen=True)
+class Unit:
+    """What one unit computes; everything a worker process needs, nothing it can only guess.
+
+    Attributes
+    ----------
+    key : str
+        Content key: equal keys have equal results.
+    scan_id : str
+        Label of the scan in the results.
+    files, axes, choice, channel_axis
+        How the scan is read.
+    arm : Arm
+        The arm.
+    draw : int
+        Number of the draw.
+    seed : int
+        Seed of the study.
+    noise : Noise
+        Noise added.
+    averages_ratio : float
+        Averages of the reference over averages of the arm.
+    folder : Path
+        Study folder.
+    keep_maps : bool
+        Whether images are written too.
+    """
+
+    key: str
+    scan_id: str
+    files: ScanFiles
+    axes: Axes
+    choice: PlaneChoice
+    channel_axis: int | None
+    arm: Arm
+    draw: int
+    seed: int
+    noise: Noise
+    averages_ratio: float
+    folder: Path
+    keep_maps: bool
+
+    @property
+    def result_path(self) -> Path:
+        """Where the unit's result is written."""
+        return self.folder / "units" / f"{self.key}.json"
+
+
+def content_key(**parts: object) -> str:
+    """Hash of everything a unit's numbers depend on."""
+    text = json.dumps(plain(parts), sort_keys=True)
+    return hashlib.sha256(text.encode()).hexdigest()[:24]
+
+
+def draw_of(arm: Arm, shape: tuple[int, ...], seed: int, draw: int, frames: int = 0) -> Pattern:
+    """Pattern of one draw of an arm.
+
+    Arms with the same sampling entry and acceleration share their draws, whatever their recovery,
+    and so do all scans of one grid: arms are compared on the same patterns.
+    """
+    return draw_entry(
+        arm.sampling, shape, arm.acceleration, seed, frames=frames, identity=("draw", draw)
+    )
+
+
+def set_worker_threads() -> None:
+    """One compute thread in a worker process: the pool itself fills the cores."""
+    set_threads(1)
+
+
+def run_unit(unit: Unit) -> dict[str, Any]:
+    """Compute a unit, write its maps and then its result file; return the result."""
+    started = time.perf_counter()
+    scan = prepare(unit.files, unit.axes, unit.choice, unit.channel_axis)
+    grid = pattern_grid(unit.axes, scan.scan.shape)
+    frames = scan.scan.frames if scan.scan.frames > 1 else 0
+    pattern = draw_of(unit.arm, grid, unit.seed, unit.draw, frames)
+    # Fewer averages than the reference: its noise is raised by what the missing averages add.
+    fewer = scan.sigma * float(np.sqrt(max(0.0, unit.averages_ratio - 1.0)))
+    added = float(np.hypot(unit.noise.added(scan), fewer))
+    acquisition = undersample(
+        scan.stack,
+        pattern,
+        sigma=added,
+        seed=_noise_seed(unit, scan),
+        sigma_scan=scan.sigma,
+    )
+    recovered = recover(acquisition, method=unit.arm.recovery, **unit.arm.recovery_settings)
+    slices = score_planes(recovered.image, scan.stack, scan.body, scan.data_range)
+    certificate = recovered.certificate.as_dict()
+    wall_s = certificate.pop("wall_s")
+    result: dict[str, Any] = {
+        "key": unit.key,
+        "arm": unit.arm.id,
+        "scan": unit.scan_id,
+        "draw": unit.draw,
+        "seed": unit.seed,
+        "sigma": acquisition.sigma,
+        "sigma_added": added,
+        "weight": certificate["weight"],
+        "acceleration": pattern.acceleration,
+        "acceleration_in_shutter": pattern.acceleration_in_shutter,
+        "acquired": pattern.acquired,
+        "pattern_hash": pattern.hash,
+        "certificate": certificate,
+        "slices": [
+            {"index": index, "frame": frame, **values}
+            for (frame, index), values in zip(_places(scan), slices, strict=True)
+        ],
+        "maps": _write_maps(unit, scan, recovered.image, pattern) if unit.keep_maps else [],
+        "timing": {"recovery_s": wall_s, "unit_s": time.perf_counter() - started},
+    }
+    write_json(unit.result_path, result)
+    return result
+
+
+def pattern_grid(axes: Axes, shape: tuple[int, ...]) -> tuple[int, ...]:
+    """Shape of the phase-encode grid of a scan of ``shape``: (phase,) or (phase, partition)."""
+    _, u, v = (shape[a] for a in axes.order)
+    return (u, v) if axes.partition is not None else (u,)
+
+
+def _noise_seed(unit: Unit, scan: Prepared) -> int:
+    """The same noise for every arm of a scan and draw, so that arms compare in pairs."""
+    identity = f"{unit.seed}\x1fnoise\x1f{scan.scan.sha256}\x1f{unit.draw}"
+    return int.from_bytes(hashlib.sha256(identity.encode()).digest()[:8], "little")
+
+
+def _places(scan: Prepared) -> list[tuple[int, int]]:
+    return [(frame, index) for frame in range(scan.scan.frames) for index in scan.planes]
+
+
+def _write_maps(
+    unit: Unit, scan: Prepared, image: Any, pattern: Pattern
+) -> list[dict[str, str | int]]:
+    folder = unit.folder / "arms" / unit.arm.id
+    signed, complex_error = error_maps(image, scan.stack)
+    arrays: dict[str, Any] = {
+        "recovered": image if np.iscomplexobj(scan.stack) else np.abs(image),
+        "error": signed,
+    }
+    if complex_error is not None and np.iscomplexobj(scan.stack):
+        arrays["error_complex"] = complex_error
+    written: list[dict[str, str | int]] = []
+    for kind, stack in arrays.items():
+        path = folder / f"{unit.scan_id}_draw{unit.draw}_{kind}.nii.gz"
+        dtype = np.complex64 if np.iscomplexobj(stack) else np.float32
+        write_nifti(path, scan.to_volume(stack.astype(dtype, copy=False)), scan.scan)
+        written.append(_entry(unit, kind, path))
+    path = folder / f"{unit.scan_id}_draw{unit.draw}_pattern.nii.gz"
+    mask = pattern.mask
+    if pattern.frames:
+        mask = np.moveaxis(mask, 0, -1)
+    shape = (*pattern.grid, *(1,) * (3 - len(pattern.grid)))
+    volume = mask.reshape(*shape, *mask.shape[len(pattern.grid) :]).astype(np.uint8)
+    write_nifti(path, volume, None)
+    written.append(_entry(unit, "pattern", path))
+    return written
+
+
+def _entry(unit: Unit, kind: str, path: Path) -> dict[str, str | int]:
+    return {
+        "kind": kind,
+        "scan": unit.scan_id,
+        "arm": unit.arm.id,
+        "draw": unit.draw,
+        "file": path.relative_to(unit.folder).as_posix(),
+    }
