@@ -14,22 +14,44 @@ from mrics.quality.metrics import (
 )
 
 _LAZY = {
+    "Comparison": "comparison",
+    "Interval": "confidence",
+    "Summary": "confidence",
+    "Verdict": "acceptance",
+    "compare": "comparison",
+    "compare_arms": "comparison",
+    "equivalence": "comparison",
+    "holm": "comparison",
+    "non_inferiority": "comparison",
+    "summarise": "confidence",
     "ErrorMaps": "maps",
     "error_maps": "maps",
     "score": "scores",
     "score_planes": "scores",
+    "verdict": "acceptance",
 }
 
 __all__ = [
     "METRICS",
     "AcceptanceKey",
+    "Comparison",
     "ErrorMaps",
+    "Interval",
     "Metric",
+    "Summary",
+    "Verdict",
     "acceptance_key",
     "acceptance_keys",
+    "compare",
+    "compare_arms",
+    "equivalence",
     "error_maps",
+    "holm",
+    "non_inferiority",
     "score",
     "score_planes",
+    "summarise",
+    "verdict",
 ]
 
 

@@ -1,8 +1,9 @@
 """The table of measures: what each one means, its unit, and which way is better.
 
 The protocol's acceptance keys are made from it (``<metric>_min`` where higher is better,
-``<metric>_max`` where lower is better, ``<metric>_worst`` for the worst slice), and the report
-prints the definitions from it.
+``<metric>_max`` where lower is better, ``<metric>_worst`` for the worst slice, ``<metric>_margin``
+for non-inferiority and ``<metric>_equivalence`` for equivalence to the baseline arm), and the
+report prints the definitions from it.
 """
 
 from __future__ import annotations
@@ -49,13 +50,14 @@ class AcceptanceKey:
         Key of :data:`METRICS`.
     side : str
         "min" where the value must not fall below the limit, "max" where it must not exceed it.
-    worst : bool
-        True where the limit is on the worst slice, False where it is on the scan mean.
+    kind : str
+        "mean" (limit on the scan mean), "worst" (on the worst slice), "margin" (largest acceptable
+        loss against the baseline) or "equivalence" (largest difference either way).
     """
 
     metric: str
     side: str
-    worst: bool
+    kind: str
 
 
 _IN_MASK = "over the voxels of the body mask, magnitudes, no rescaling or phase fitting"
@@ -112,8 +114,9 @@ def acceptance_keys() -> dict[str, AcceptanceKey]:
     keys = {}
     for name, metric in METRICS.items():
         side = "max" if metric.direction == "lower" else "min"
-        keys[f"{name}_{side}"] = AcceptanceKey(name, side, worst=False)
-        keys[f"{name}_worst"] = AcceptanceKey(name, side, worst=True)
+        keys[f"{name}_{side}"] = AcceptanceKey(name, side, "mean")
+        for kind in ("worst", "margin", "equivalence"):
+            keys[f"{name}_{kind}"] = AcceptanceKey(name, side, kind)
     return keys
 
 

@@ -25,7 +25,8 @@ def test_acceptance_keys_follow_the_direction():
     keys = acceptance_keys()
     assert (keys["ssim_min"].metric, keys["ssim_min"].side) == ("ssim", "min")
     assert keys["nrmse_max"].side == "max"
-    assert keys["ssim_worst"].worst
+    assert keys["ssim_worst"].kind == "worst"
+    assert keys["ssim_margin"].kind == "margin"
     assert keys["ssim_worst"].side == "min"
     assert "ssim_max" not in keys
 
