@@ -7,20 +7,34 @@ from typing import Any
 
 _HOME = {
     "Arm": "arms",
+    "Limit": "acceptance",
     "Protocol": "document",
     "ScanFiles": "files",
+    "Timing": "timing",
+    "console_difference": "timing",
     "from_text": "document",
     "load_protocol": "document",
+    "minutes": "timing",
     "new_protocol": "template",
+    "scan_time": "arm_time",
+    "sequence_time": "timing",
+    "snr_index": "timing",
 }
 
 __all__ = [
     "Arm",
+    "Limit",
     "Protocol",
     "ScanFiles",
+    "Timing",
+    "console_difference",
     "from_text",
     "load_protocol",
+    "minutes",
     "new_protocol",
+    "scan_time",
+    "sequence_time",
+    "snr_index",
 ]
 
 

@@ -1,4 +1,4 @@
-"""``[acceptance]``: limits a measure must keep, ``<metric>_min``, ``_max`` or ``_worst``."""
+"""``[acceptance]``: limits a measure must keep, ``<metric>_min``, ``_max``, ``_worst`` ..."""
 
 from __future__ import annotations
 
@@ -24,8 +24,9 @@ class Limit:
     side : str
         ``"min"`` where the measure must not fall below the limit, ``"max"`` where it must not
         exceed it.
-    worst : bool
-        True where the worst slice of any scan and draw is limited, False for the mean.
+    kind : str
+        ``"mean"``, ``"worst"`` (slice of any scan and draw), or ``"margin"`` and ``"equivalence"``
+        against the baseline.
     value : float
         The limit.
     """
@@ -33,8 +34,13 @@ class Limit:
     key: str
     metric: str
     side: str
-    worst: bool
+    kind: str
     value: float
+
+    @property
+    def worst(self) -> bool:
+        """True where the worst slice is limited."""
+        return self.kind == "worst"
 
 
 def read_limits(table: Mapping[str, Any], path: object, text: str) -> tuple[Limit, ...]:
@@ -68,5 +74,5 @@ def read_limits(table: Mapping[str, Any], path: object, text: str) -> tuple[Limi
                 f"acceptance.{key} = {shown(value)} is not allowed.", where, "Give a finite number."
             )
         means = known[key]
-        limits.append(Limit(key, means.metric, means.side, means.worst, float(value)))
+        limits.append(Limit(key, means.metric, means.side, means.kind, float(value)))
     return tuple(limits)
