@@ -1,1 +1,26 @@
-"""The report room."""
+"""The page, figures and tables of a finished study, drawn from its folder alone."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from mrics.report.page import write_report
+    from mrics.report.plan_page import write_plan_page
+    from mrics.report.run import run_study
+
+__all__ = ["run_study", "write_plan_page", "write_report"]
+
+_HOME = {
+    "run_study": "mrics.report.run",
+    "write_plan_page": "mrics.report.plan_page",
+    "write_report": "mrics.report.page",
+}
+
+
+def __getattr__(name: str) -> Any:
+    if name not in _HOME:
+        raise AttributeError(f"module {__name__!r} has no attribute {name!r}")
+    from importlib import import_module
+
+    return getattr(import_module(_HOME[name]), name)

@@ -1,0 +1,163 @@
+"""report.html: one self-contained page, drawn from results.json and the stored maps alone."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Any
+
+from mrics.report.arms import ArmPictures, arm_pictures, pattern_picture, windows
+from mrics.report.charts import against_acceleration, by_slice
+from mrics.report.folder import StudyFolder, open_folder
+from mrics.report.image_figures import Window, panel_figure
+from mrics.report.pattern_figures import largest_side_value, pattern_figure, point_spread
+from mrics.report.rendering import render, write_page
+from mrics.report.style_figures import svg_uri
+from mrics.report.summary import (
+    first_metric,
+    limits_of,
+    metrics_of,
+    range_marks,
+    unfinished,
+)
+from mrics.report.words import metric_value, metric_words, number
+
+_CHARTED = ("nrmse", "psnr", "ssim", "hfen")
+
+
+def write_report(directory: str | Path) -> Path:
+    """Draw ``report.html`` of a study folder again.
+
+    Parameters
+    ----------
+    directory : str or Path
+        Folder with results.json and the maps it names. Scans are not read.
+
+    Returns
+    -------
+    Path
+        The page that was written.
+
+    Raises
+    ------
+    ReportError
+        For a folder without results, results of a newer version, damaged maps, or a folder that
+        cannot be written to. Maps that are gone and units that never ran are named in the page.
+    """
+    study = open_folder(directory)
+    return write_page(study.directory / "report.html", render("report.html", **page_values(study)))
+
+
+def page_values(study: StudyFolder) -> dict[str, Any]:
+    """Everything the template shows."""
+    metrics = metrics_of(study)
+    scales = windows(study)
+    charted = tuple(m for m in metrics if m.key in _CHARTED)
+    today = next((a for a in study.arms if a.get("today")), None)
+    return {
+        "study": study.results,
+        "about": study.results["protocol"],
+        "verdict": study.results.get("verdict") or {},
+        "arms": [_arm(study, arm, charted, scales) for arm in study.arms],
+        "today": today,
+        "metrics": metrics,
+        "marks": {m.key: range_marks(study, m) for m in metrics},
+        "limits": limits_of(study),
+        "first_metric": metric_words(first_metric(study)),
+        "chart": svg_uri(against_acceleration(study, charted)) if charted else None,
+        "chart_text": _chart_text(study, charted),
+        "missing_maps": study.missing,
+        "units_done": sum(1 for u in study.results["units"] if u.get("slices")),
+        "units_planned": study.results.get("units_planned"),
+        "unfinished": unfinished(study),
+        "unreached": _unreached(study),
+        "provenance": study.results.get("provenance") or {},
+        "timing": study.results.get("timing") or {},
+    }
+
+
+def _arm(
+    study: StudyFolder, arm: dict[str, Any], metrics: Any, scales: dict[str, Window]
+) -> dict[str, Any]:
+    """One arm with its pictures as data URIs."""
+    out: dict[str, Any] = {"row": arm, "units": study.units(arm["id"])}
+    picture = pattern_picture(study, arm)
+    out["pattern"] = None
+    if picture is not None:
+        peak, at = largest_side_value(point_spread(picture.mask))
+        distance = " and ".join(f"{d:+d}" for d in at)
+        out["pattern"] = svg_uri(pattern_figure(picture))
+        out["pattern_text"] = (
+            f"Sampling pattern of {arm['label']}: {int(picture.mask.sum())} of "
+            f"{picture.mask.size} positions; density by distance from the centre of k-space; "
+            f"point spread with its largest side value {100 * peak:.1f} % of the peak at "
+            f"{distance} voxels."
+        )
+    shown = arm_pictures(study, arm)
+    out["pictures"] = shown
+    if shown is not None:
+        view = study.view(shown.scan)
+        figure = panel_figure(
+            shown.rows, scales[shown.scan["id"]], view.row_mm / view.column_mm, view.ends
+        )
+        out["images"] = svg_uri(figure)
+        out["window"] = scales[shown.scan["id"]]
+        out["images_text"] = _images_text(arm, shown, scales[shown.scan["id"]])
+    limited = [x.metric for x in limits_of(study)]
+    chosen = [m for m in metrics if m.key in limited] + [m for m in metrics if m.key not in limited]
+    chosen = sorted(chosen[:3], key=metrics.index)
+    out["by_slice"] = None
+    if out["units"] and chosen:
+        out["by_slice"] = svg_uri(by_slice(study, arm, tuple(chosen)))
+        out["by_slice_text"] = (
+            f"{', '.join(m.label for m in chosen)} of {arm['label']} by slice, "
+            "mean and range over draws, one curve for each scan."
+        )
+    return out
+
+
+def _images_text(arm: dict[str, Any], shown: ArmPictures, window: Window) -> str:
+    slices = "; ".join(r.title.replace("\n", ", ") for r in shown.rows)
+    return (
+        f"Reference, recovered and error images of {arm['label']}, scan {shown.scan['name']}: "
+        f"{slices}. Window {number(window.low)} to {number(window.high)}, error scale "
+        f"±{number(window.error_end)}."
+    )
+
+
+def _chart_text(study: StudyFolder, metrics: Any) -> str:
+    """What the chart says, in words, for a reader who cannot see it."""
+    parts = []
+    for metric in metrics:
+        values = [
+            f"{a['label']} {metric_value(metric.key, a['metrics'][metric.key]['mean'])}"
+            for a in study.arms
+            if metric.key in (a.get("metrics") or {})
+        ]
+        parts.append(f"{metric.label}: {', '.join(values)}")
+    return "Metrics against acceleration. " + ". ".join(parts) + "."
+
+
+def _unreached(study: StudyFolder) -> list[dict[str, Any]]:
+    """Arms whose recoveries did not all reach their stopping measure, or are not certified."""
+    rows = []
+    for arm in study.arms:
+        units = [u for u in study.units(arm["id"]) if u.get("certificate")]
+        open_units = [u for u in units if not u["certificate"].get("reached", True)]
+        loose = [u for u in units if not u["certificate"].get("certified", True)]
+        if not open_units and not loose:
+            continue
+        notes = {u["certificate"].get("note") for u in (open_units or loose)} - {"", None}
+        worst = max((u["certificate"].get("optimality") or 0.0 for u in open_units), default=None)
+        tolerance = next((u["certificate"].get("tolerance") for u in open_units), None)
+        rows.append(
+            {
+                "label": arm["label"],
+                "open": len(open_units),
+                "loose": len(loose),
+                "of": len(units),
+                "worst": worst,
+                "tolerance": tolerance,
+                "notes": sorted(notes),
+            }
+        )
+    return rows

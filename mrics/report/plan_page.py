@@ -1,0 +1,77 @@
+"""The page of a plan: what every arm acquires, how long it takes, how its pattern looks."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from mrics.report.arms import axis_name
+from mrics.report.pattern_figures import (
+    PatternPicture,
+    largest_side_value,
+    pattern_figure,
+    point_spread,
+)
+from mrics.report.rendering import render, write_page
+from mrics.report.style_figures import svg_uri
+
+if TYPE_CHECKING:
+    from mrics.study import PlanRow, StudyPlan
+
+
+def write_plan_page(plan: StudyPlan, path: str | Path) -> Path:
+    """Write the page of pattern pictures and times.
+
+    Parameters
+    ----------
+    plan : StudyPlan
+        As ``mrics.study.plan_study`` gives it.
+    path : str or Path
+        HTML file to write.
+
+    Raises
+    ------
+    ReportError
+        Where the file cannot be written.
+    """
+    today = next((row for row in plan.rows if row.arm.today), None)
+    rows: list[dict[str, Any]] = []
+    drawn: dict[str, dict[str, Any]] = {}
+    for row in plan.rows:
+        key = row.pattern.hash
+        if key not in drawn:
+            drawn[key] = _picture(row, plan) | {"labels": [], "number": len(drawn) + 1}
+        drawn[key]["labels"].append(row.arm.label)
+        rows.append({"row": row, "number": drawn[key]["number"]})
+    text = render(
+        "plan.html",
+        plan=plan,
+        rows=rows,
+        patterns=list(drawn.values()),
+        today=today,
+        findings=plan.findings(),
+    )
+    return write_page(Path(path), text)
+
+
+def _picture(row: PlanRow, plan: StudyPlan) -> dict[str, Any]:
+    """Pictures of one pattern; arms that differ in recovery alone share them."""
+    pattern = row.pattern
+    first = pattern.mask[0] if pattern.frames else pattern.mask
+    probability = pattern.probability
+    if probability is not None and probability.shape != first.shape:
+        probability = probability[0]
+    grid = {"phase_axis": plan.axes.phase, "partition_axis": plan.axes.partition}
+    picture = PatternPicture(
+        first, axis_name("phase", grid), axis_name("partition", grid), probability
+    )
+    peak, at = largest_side_value(point_spread(first))
+    distance = " and ".join(f"{d:+d}" for d in at)
+    return {
+        "pattern": pattern,
+        "figure": svg_uri(pattern_figure(picture)),
+        "text": (
+            f"{int(first.sum())} of {first.size} positions acquired; largest side value of the "
+            f"point spread {100 * peak:.1f} % of the peak at {distance} voxels."
+        ),
+    }

@@ -1,0 +1,71 @@
+"""The look of every matplotlib figure, and how figures become files or data URIs."""
+
+from __future__ import annotations
+
+import base64
+import io
+from collections.abc import Iterator
+from contextlib import contextmanager
+from typing import Any
+
+from mrics.report.colours import GRID, INK, MUTED
+
+_STYLE: Any = {
+    "font.family": "sans-serif",
+    "font.sans-serif": ["DejaVu Sans"],
+    "font.size": 9.0,
+    "axes.edgecolor": MUTED,
+    "axes.labelcolor": INK,
+    "axes.titlesize": 9.0,
+    "axes.titleweight": "bold",
+    "axes.titlelocation": "left",
+    "axes.linewidth": 0.8,
+    "axes.spines.top": False,
+    "axes.spines.right": False,
+    "axes.grid": False,
+    "axes.formatter.use_mathtext": True,
+    "grid.color": GRID,
+    "grid.linewidth": 0.7,
+    "text.color": INK,
+    "xtick.color": MUTED,
+    "ytick.color": MUTED,
+    "xtick.labelcolor": INK,
+    "ytick.labelcolor": INK,
+    "legend.frameon": False,
+    "legend.fontsize": 8.0,
+    "figure.facecolor": "white",
+    "savefig.facecolor": "white",
+    "image.interpolation": "none",
+    "svg.fonttype": "path",
+    "svg.hashsalt": "mrics",
+    "pdf.fonttype": 42,
+}
+
+
+@contextmanager
+def figure_style() -> Iterator[None]:
+    """Draw with the house style, whatever the reader's own matplotlib settings are."""
+    from matplotlib import rc_context, rcdefaults
+
+    with rc_context():
+        rcdefaults()
+        with rc_context(_STYLE):
+            yield
+
+
+def new_figure(width_in: float, height_in: float) -> Any:
+    """An empty figure (inches) that lays itself out; no global state."""
+    from matplotlib.backends.backend_agg import FigureCanvasAgg
+    from matplotlib.figure import Figure
+
+    figure = Figure(figsize=(width_in, height_in), layout="constrained")
+    FigureCanvasAgg(figure)
+    return figure
+
+
+def svg_uri(figure: Any) -> str:
+    """The figure as an SVG data URI; the same figure gives the same bytes."""
+    stream = io.BytesIO()
+    with figure_style():
+        figure.savefig(stream, format="svg", metadata={"Date": None, "Creator": "mrics"})
+    return "data:image/svg+xml;base64," + base64.b64encode(stream.getvalue()).decode("ascii")

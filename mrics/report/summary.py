@@ -1,0 +1,190 @@
+"""What the page says of a study, taken from results.json without drawing anything."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+from mrics.report.folder import StudyFolder
+from mrics.report.words import MetricWords, metric_words
+
+_ORDER = ("nrmse", "psnr", "ssim", "hfen")
+
+
+@dataclass(frozen=True)
+class RangeMark:
+    """One metric of one arm, placed on a scale from 0 to 100 shared by all arms.
+
+    Attributes
+    ----------
+    mean, low, high : float
+        Mean, smallest and largest slice value.
+    interval : tuple of float or None
+        Confidence interval, where the study states one.
+    places : dict
+        Positions (0-100) of mean, low, high, interval_low, interval_high and limits.
+    failed : bool
+        Whether a limit on this metric failed.
+    text : str
+        Sentence for a screen reader and for the tooltip.
+    """
+
+    mean: float
+    low: float
+    high: float
+    interval: tuple[float, float] | None
+    places: dict[str, Any]
+    failed: bool
+    text: str
+
+
+@dataclass(frozen=True)
+class Limit:
+    """One acceptance limit of the protocol.
+
+    Attributes
+    ----------
+    key, metric : str
+        As written in the protocol, and the metric it limits.
+    kind : str
+        "mean", "worst" (slice), "margin" or "equivalence" (difference to another arm).
+    at_least : bool
+        True where values above the limit pass.
+    value : float
+        The limit.
+    """
+
+    key: str
+    metric: str
+    kind: str
+    at_least: bool
+    value: float
+
+
+def limits_of(study: StudyFolder) -> tuple[Limit, ...]:
+    """Acceptance limits, from the verdicts of the arms (every arm lists the same ones)."""
+    seen: dict[str, Limit] = {}
+    for arm in study.arms:
+        for item in (arm.get("verdict") or {}).get("limits") or []:
+            limit = _limit(str(item["key"]), item.get("limit"))
+            if limit is not None:
+                seen.setdefault(limit.key, limit)
+    return tuple(seen.values())
+
+
+def drawn_limits(study: StudyFolder, metric: str) -> list[Limit]:
+    """Limits on the values of a metric themselves, not on differences of arms."""
+    return [x for x in limits_of(study) if x.metric == metric and x.kind in ("mean", "worst")]
+
+
+def _limit(key: str, value: Any) -> Limit | None:
+    """What a key of the acceptance table limits; None for one that this version does not know."""
+    from mrics.quality import acceptance_keys
+
+    known = acceptance_keys().get(key)
+    if known is None or not isinstance(value, (int, float)):
+        return None
+    return Limit(key, known.metric, known.kind, known.side == "min", float(value))
+
+
+def metrics_of(study: StudyFolder) -> tuple[MetricWords, ...]:
+    """Metrics that any arm has, the four of the first page first."""
+    keys: dict[str, None] = {}
+    for arm in study.arms:
+        keys.update(dict.fromkeys(arm.get("metrics") or {}))
+    ordered = [k for k in _ORDER if k in keys] + [k for k in keys if k not in _ORDER]
+    return tuple(metric_words(k) for k in ordered)
+
+
+def first_metric(study: StudyFolder) -> str:
+    """The metric that chooses which slices are shown: the first limited one, else NRMSE."""
+    shown = [m.key for m in metrics_of(study)]
+    for limit in limits_of(study):
+        if limit.metric in shown:
+            return limit.metric
+    return "nrmse" if "nrmse" in shown or not shown else shown[0]
+
+
+def range_marks(study: StudyFolder, metric: MetricWords) -> dict[str, RangeMark]:
+    """Range marks of one metric for every arm that has it, on one scale."""
+    from mrics.report.words import metric_value
+
+    rows = {a["id"]: a["metrics"][metric.key] for a in study.arms if _has(a, metric.key)}
+    limits = drawn_limits(study, metric.key)
+    values = [v for r in rows.values() for v in (r["min"], r["max"])] + [x.value for x in limits]
+    if not values:
+        return {}
+    low, high = min(values), max(values)
+    span = (high - low) or abs(high) or 1.0
+
+    def place(value: float) -> float:
+        return round(3 + 94 * (value - low) / span, 2)
+
+    out = {}
+    for arm in study.arms:
+        if arm["id"] not in rows:
+            continue
+        row = rows[arm["id"]]
+        interval = row.get("interval")
+        ends = (interval["low"], interval["high"]) if interval else None
+        failed = any(
+            x["status"] == "fail" and _limit_metric(x["key"]) == metric.key
+            for x in (arm.get("verdict") or {}).get("limits") or []
+        )
+        places: dict[str, Any] = {k: place(row[k]) for k in ("mean", "min", "max")}
+        places["limits"] = [(place(x.value), x.kind) for x in limits]
+        if ends:
+            places["interval"] = (place(ends[0]), place(ends[1]))
+        shown = {k: metric_value(metric.key, row[k]) for k in ("mean", "min", "max")}
+        text = (
+            f"{metric.label}: mean {shown['mean']}, range over draws and slices "
+            f"{shown['min']} to {shown['max']}"
+        )
+        if interval:
+            text += (
+                f", {100 * interval['level']:g} % interval over {interval['over']} "
+                f"{metric_value(metric.key, ends[0])} to {metric_value(metric.key, ends[1])}"
+                if ends
+                else ""
+            )
+        out[arm["id"]] = RangeMark(row["mean"], row["min"], row["max"], ends, places, failed, text)
+    return out
+
+
+def _has(arm: dict[str, Any], key: str) -> bool:
+    row = (arm.get("metrics") or {}).get(key) or {}
+    return row.get("mean") is not None
+
+
+def _limit_metric(key: str) -> str:
+    limit = _limit(key, 0.0)
+    return limit.metric if limit else key
+
+
+def unfinished(study: StudyFolder) -> list[tuple[str, str]]:
+    """(arm label, scan name) of every arm and scan without one finished unit."""
+    return [
+        (str(arm["label"]), str(scan.get("name") or scan["id"]))
+        for arm in study.arms
+        for scan in study.scans
+        if not study.units(arm["id"], scan["id"])
+    ]
+
+
+def shown_slices(study: StudyFolder, arm: str, scan: str, draw: int | None) -> dict[str, Any]:
+    """Worst and median slice of one unit by :func:`first_metric`.
+
+    Returns
+    -------
+    dict
+        Keys "worst" and "median", each the slice's entry in results.json; empty without units.
+    """
+    key = first_metric(study)
+    units = [u for u in study.units(arm, scan) if draw is None or u["draw"] == draw]
+    if not units:
+        return {}
+    rows = [s for s in units[0]["slices"] if s.get(key) is not None]
+    if not rows:
+        return {}
+    rows.sort(key=lambda s: s[key], reverse=metric_words(key).better == "low")
+    return {"worst": rows[0], "median": rows[len(rows) // 2]}
