@@ -5,7 +5,7 @@ from __future__ import annotations
 import textwrap
 from typing import Any
 
-from mrics.protocol.timing import minutes
+from mrics.protocol import minutes
 from mrics.study import StudyPlan
 
 WIDTH = 100

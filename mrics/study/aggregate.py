@@ -1,138 +1,171 @@
-"""Arm numbers from units: mean, range, worst slice, and what the acceptance limits say."""
+"""Arm numbers from units: mean, range, interval, worst slice, and what the limits say."""
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Sequence
+from dataclasses import dataclass
 from typing import Any
 
-from mrics.protocol.acceptance import Limit
-from mrics.protocol.timing import minutes
-from mrics.quality import METRICS
+from mrics.protocol import Limit, minutes
+from mrics.quality import METRICS, Comparison, Summary, compare_arms, summarise, verdict
 
-SCORED = ("nrmse", "psnr", "ssim", "hfen", "nrmse_complex")
+Records = list[tuple[str, int, tuple[int, int], float | None]]
 
 
-def arm_metrics(units: Sequence[dict[str, Any]]) -> dict[str, dict[str, Any]]:
-    """Every score of one arm over its units.
+@dataclass(frozen=True)
+class ArmNumbers:
+    """Everything the units of one arm say together.
 
-    The mean is over scans, of the mean over draws, of the mean over slices; ``min`` and ``max``
-    are over all slices of all draws and scans; ``worst`` is the extreme in the bad direction, and
-    ``worst_where`` says which scan, draw and slice. Slices without a value are left out.
+    Attributes
+    ----------
+    metrics : dict
+        Metric name to mean, min, max, interval, worst and where, as results files hold it.
+    comparisons : dict
+        Metric name to the paired difference to today's arm; empty without one.
+    verdict : dict
+        What the acceptance limits say.
     """
-    metrics: dict[str, dict[str, Any]] = {}
-    for name in SCORED:
-        values = [
-            (part[name], unit["scan"], unit["draw"], part["index"], part["frame"])
-            for unit in units
-            for part in unit["slices"]
-            if part.get(name) is not None
-        ]
-        if not values:
-            continue
-        pick = max if METRICS[name].direction == "lower" else min
-        worst = pick(values, key=lambda item: item[0])
-        metrics[name] = {
-            "mean": _mean(scan_means(units, name).values()),
-            "min": min(v[0] for v in values),
-            "max": max(v[0] for v in values),
-            "interval": None,
-            "worst": worst[0],
-            "worst_where": {
-                "scan": worst[1],
-                "draw": worst[2],
-                "slice": worst[3],
-                "frame": worst[4],
-            },
+
+    metrics: dict[str, dict[str, Any]]
+    comparisons: dict[str, dict[str, Any]]
+    verdict: dict[str, Any]
+
+
+def arm_numbers(
+    units: dict[str, list[dict[str, Any]]],
+    limits: Sequence[Limit],
+    today: str | None,
+    seed: int,
+) -> dict[str, ArmNumbers]:
+    """Numbers of every arm.
+
+    Parameters
+    ----------
+    units : dict of arm id to list of unit results
+        Finished units.
+    limits : sequence of Limit
+        The protocol's acceptance limits.
+    today : str or None
+        Id of the arm in use today, to which differences are taken.
+    seed : int
+        Of the bootstrap.
+    """
+    scored = [
+        name for name in METRICS if any(_has(unit, name) for u in units.values() for unit in u)
+    ]
+    summaries: dict[str, dict[str, Summary | None]] = {
+        arm: {
+            name: summarise(_records(mine, name), direction=METRICS[name].direction, seed=seed)
+            for name in scored
         }
-    return metrics
-
-
-def scan_means(units: Iterable[dict[str, Any]], name: str) -> dict[str, float]:
-    """Mean of one score per scan: slices first, then draws."""
-    draws: dict[str, list[float]] = {}
-    for unit in units:
-        values = [part[name] for part in unit["slices"] if part.get(name) is not None]
-        if values:
-            draws.setdefault(unit["scan"], []).append(_mean(values))
-    return {scan: _mean(values) for scan, values in draws.items()}
-
-
-def arm_verdict(
-    metrics: dict[str, dict[str, Any]], limits: Sequence[Limit], n_scans: int
-) -> dict[str, Any]:
-    """What the limits say of one arm: each limit with its value and by how much it was kept."""
-    rows = []
-    for limit in limits:
-        summary = metrics.get(limit.metric)
-        value = None if summary is None else summary["worst" if limit.worst else "mean"]
-        if value is None:
-            rows.append(_row(limit, None, None, "undecided"))
-            continue
-        margin = value - limit.value if limit.side == "min" else limit.value - value
-        rows.append(_row(limit, value, margin, "pass" if margin >= 0 else "fail"))
-    states = {row["status"] for row in rows}
-    if not rows:
-        status = "undecided"
-    elif "fail" in states:
-        status = "fail"
-    else:
-        status = "undecided" if "undecided" in states else "pass"
-    scans = "this scan" if n_scans == 1 else f"these {n_scans} scans"
-    return {
-        "status": status,
-        "limits": rows,
-        "confidence": f"observed on {scans} only; no interval beyond them is claimed",
+        for arm, mine in units.items()
     }
+    differences: dict[str, dict[str, Comparison]] = {arm: {} for arm in units}
+    if today is not None:
+        for name in scored:
+            for arm, comparison in _against_today(units, today, name, seed).items():
+                differences[arm][name] = comparison
+    metric_of = {limit.key: limit.metric for limit in limits}
+    numbers = {}
+    for arm in units:
+        # Today's arm has no difference to itself to hold a margin against.
+        held = {
+            limit.key: limit.value
+            for limit in limits
+            if arm != today or limit.kind in ("mean", "worst")
+        }
+        judged = verdict(summaries[arm], held, differences[arm])
+        numbers[arm] = ArmNumbers(
+            metrics={name: _placed(summary) for name, summary in summaries[arm].items() if summary},
+            comparisons={name: c.as_dict() for name, c in differences[arm].items()},
+            verdict={
+                **judged.as_dict(),
+                "limits": [
+                    {**one.as_dict(), "metric": metric_of[one.key]} for one in judged.limits
+                ],
+            },
+        )
+    return numbers
 
 
 def overall_verdict(arms: Sequence[dict[str, Any]]) -> dict[str, Any]:
-    """The fastest arm that passes every limit (the protocol in use today left out)."""
-    candidates = [a for a in arms if not a["today"]]
-    passing = [a for a in candidates if a["verdict"]["status"] == "pass"]
+    """The fastest candidate that passes every limit (today's arm is no candidate)."""
     if not any(a["verdict"]["limits"] for a in arms):
         return {
             "status": "undecided",
             "arm": None,
             "sentence": "No acceptance limits were given, so nothing is decided.",
         }
+    candidates = [a for a in arms if not a["today"]]
+    passing = [a for a in candidates if a["verdict"]["status"].startswith("pass")]
+    open_arms = [a for a in candidates if a["verdict"]["status"] == "undecided"]
     if not passing:
+        sentence = "No candidate passes every limit."
+        if open_arms:
+            sentence = (
+                f"No candidate passes every limit; undecided: {_listed(open_arms)} "
+                "(the interval holds the limit)."
+            )
         return {
-            "status": "fail" if candidates else "undecided",
+            "status": "undecided" if open_arms else "fail",
             "arm": None,
-            "sentence": "No candidate passes every limit.",
+            "sentence": sentence,
         }
     best = min(passing, key=_speed_then_error)
-    saved = best["full_scan_time_s"] - best["scan_time_s"]
-    today = next((a for a in arms if a["today"]), None)
+    status = best["verdict"]["status"]
+    scope = "every limit" if status == "pass" else "every limit on the scan studied"
+    full, mine = best["full_scan_time_s"], best["scan_time_s"]
     sentence = (
-        f"{best['label']} passes every limit on the scans studied: "
-        f"{minutes(best['full_scan_time_s'])} fully sampled becomes "
-        f"{minutes(best['scan_time_s'])} ({minutes(saved)} saved)"
+        f"{best['label']} passes {scope}: {minutes(full)} fully sampled becomes {minutes(mine)}, "
+        f"{minutes(full - mine)} saved"
     )
+    today = next((a for a in arms if a["today"]), None)
     if today is not None:
-        gain = today["scan_time_s"] - best["scan_time_s"]
+        gain = today["scan_time_s"] - mine
         word = "saved" if gain >= 0 else "lost"
         sentence += (
             f"; against today's {minutes(today['scan_time_s'])}, {minutes(abs(gain))} {word}"
         )
-    return {"status": "pass", "arm": best["id"], "sentence": sentence + "."}
+    faster = [a for a in open_arms if a["scan_time_s"] < mine]
+    if faster:
+        sentence += f"; faster but undecided: {_listed(faster)}"
+    return {"status": status, "arm": best["id"], "sentence": sentence + "."}
+
+
+def _against_today(
+    units: dict[str, list[dict[str, Any]]], today: str, name: str, seed: int
+) -> dict[str, Comparison]:
+    arms = {arm: _records(mine, name) for arm, mine in units.items() if arm != today}
+    arms = {arm: records for arm, records in arms.items() if any(r[3] is not None for r in records)}
+    baseline = _records(units[today], name)
+    if not arms or not any(r[3] is not None for r in baseline):
+        return {}
+    return compare_arms(arms, baseline, seed=seed)
+
+
+def _records(units: Sequence[dict[str, Any]], name: str) -> Records:
+    return [
+        (unit["scan"], unit["draw"], (part["index"], part["frame"]), part.get(name))
+        for unit in units
+        for part in unit["slices"]
+    ]
+
+
+def _has(unit: dict[str, Any], name: str) -> bool:
+    return any(name in part for part in unit["slices"])
+
+
+def _placed(summary: Summary) -> dict[str, Any]:
+    """A summary with the place of its worst slice as plain numbers."""
+    values = summary.as_dict()
+    index, frame = values["worst_where"]["slice"]
+    values["worst_where"] = {**values["worst_where"], "slice": index, "frame": frame}
+    return values
+
+
+def _listed(arms: Sequence[dict[str, Any]]) -> str:
+    return ", ".join(a["label"] for a in arms)
 
 
 def _speed_then_error(arm: dict[str, Any]) -> tuple[float, float]:
     return (arm["scan_time_s"], arm["metrics"].get("nrmse", {}).get("mean", 0.0))
-
-
-def _row(limit: Limit, value: float | None, margin: float | None, status: str) -> dict[str, Any]:
-    return {
-        "key": limit.key,
-        "metric": limit.metric,
-        "limit": limit.value,
-        "value": value,
-        "margin": margin,
-        "status": status,
-    }
-
-
-def _mean(values: Iterable[float]) -> float:
-    items = list(values)
-    return sum(items) / len(items)

@@ -9,9 +9,8 @@ from pathlib import Path
 from typing import Any
 
 from mrics.errors import MricsError, StudyError
-from mrics.protocol import Arm, Protocol, ScanFiles
+from mrics.protocol import Arm, Protocol, ScanFiles, Timing, console_difference, scan_time
 from mrics.protocol.arms import slug
-from mrics.protocol.timing import Timing, console_difference, scan_time
 from mrics.sampling import Pattern
 from mrics.scan import Axes, read_header
 from mrics.study.code_version import code_version
@@ -176,8 +175,9 @@ class StudyPlan:
         return list(dict.fromkeys(said))
 
     def _draws(self, row: PlanRow) -> int:
-        """Regular patterns have no luck in them: one draw says all."""
-        return self.protocol.study.draws if row.pattern.probability is not None else 1
+        """A regular pattern has no luck in it: without added noise one draw says all."""
+        lucky = row.pattern.probability is not None or self.noise != Noise()
+        return self.protocol.study.draws if lucky else 1
 
     def _averages_ratio(self, arm: Arm) -> float:
         sequence = self.protocol.sequence
@@ -216,7 +216,7 @@ def plan_study(protocol: Protocol, *, quick: bool = False) -> StudyPlan:
     shapes = [read_header(scan.path).shape for scan in scans]
     for scan, shape in zip(scans, shapes, strict=True):
         grids.setdefault(pattern_grid(axes, shape), scan.path.name)
-    slices = protocol.grid.slices or shapes[0][axes.order[0]]
+    slices = None if axes.partition else shapes[0][axes.order[0]]
     arms = protocol.arms()
     rows: list[PlanRow] = []
     for number, (grid, name) in enumerate(grids.items()):
@@ -227,7 +227,9 @@ def plan_study(protocol: Protocol, *, quick: bool = False) -> StudyPlan:
                 where = f"{protocol.path}: arm {arm.label}, grid of {name}"
                 raise type(error)(error.what, f"{where}; {error.where}", error.fix) from error
             if number == 0:
-                rows.append(PlanRow(arm, pattern, arm_timing(protocol, pattern, arm, slices)))
+                rows.append(
+                    PlanRow(arm, pattern, scan_time(protocol, pattern, arm=arm, slices=slices))
+                )
     return StudyPlan(
         protocol=protocol,
         axes=axes,
@@ -237,34 +239,6 @@ def plan_study(protocol: Protocol, *, quick: bool = False) -> StudyPlan:
         choice=choice,
         noise=Noise(study.sigma_added, study.snr, study.noise_percent),
         channel_axis=protocol.grid.channel_axis,
-    )
-
-
-def arm_timing(protocol: Protocol, pattern: Pattern, arm: Arm, slices: int) -> Timing:
-    """Scan time of an arm.
-
-    Time is spent on the steps the scanner acquires (``phase_steps``, ``partition_steps``), which
-    oversampling and interpolation make differ from the image matrix the pattern is drawn on; the
-    arm then acquires the same share of them.
-    """
-    grid = protocol.grid
-    steps = [
-        given or size
-        for given, size in zip((grid.phase_steps, grid.partition_steps), pattern.grid, strict=False)
-    ]
-    full = math.prod(steps)
-    acquired = pattern.acquired
-    if full != math.prod(pattern.grid):
-        acquired = min(full, math.ceil(full / pattern.acceleration - 1e-9))
-    three_d = len(pattern.grid) == 2
-    return scan_time(
-        protocol.sequence,
-        acquired,
-        full,
-        slices=1 if three_d else slices,
-        partitions=steps[1] if three_d else None,
-        calibration=_calibrated(pattern),
-        averages=arm.averages,
     )
 
 

@@ -20,7 +20,7 @@ import mrics
 from mrics.caution import RESEARCH_ONLY
 from mrics.protocol import Protocol, load_protocol
 from mrics.scan import write_nifti
-from mrics.study.aggregate import SCORED, arm_metrics, arm_verdict, overall_verdict
+from mrics.study.aggregate import arm_numbers, overall_verdict
 from mrics.study.code_version import code_version
 from mrics.study.files import plain, read_json, write_json, write_text
 from mrics.study.folder import claim_folder
@@ -191,6 +191,7 @@ def _write_references(plan: StudyPlan, folder: Path) -> list[dict[str, Any]]:
             ("body", scan.body.astype(np.uint8)),
         ):
             path = folder / "reference" / f"{scan_id}_{kind}.nii.gz"
+            path.parent.mkdir(exist_ok=True)
             write_nifti(path, scan.to_volume(stack), scan.scan)
             written.append(
                 {
@@ -211,10 +212,12 @@ def _results(
     references: list[dict[str, Any]],
 ) -> dict[str, Any]:
     protocol = plan.protocol
+    by_arm = {row.arm.id: [r for r in results if r["arm"] == row.arm.id] for row in plan.rows}
+    today = next((row.arm.id for row in plan.rows if row.arm.today), None)
+    numbers = arm_numbers(by_arm, protocol.acceptance, today, protocol.study.seed)
     arms = []
     for row in plan.rows:
-        units = [r for r in results if r["arm"] == row.arm.id]
-        metrics = arm_metrics(units)
+        units = by_arm[row.arm.id]
         certificates = [u["certificate"] for u in units]
         arms.append(
             {
@@ -224,8 +227,9 @@ def _results(
                     np.mean([u["acceleration_in_shutter"] for u in units])
                 ),
                 "acquired": float(np.mean([u["acquired"] for u in units])),
-                "metrics": metrics,
-                "verdict": arm_verdict(metrics, protocol.acceptance, len(records)),
+                "metrics": numbers[row.arm.id].metrics,
+                "against_today": numbers[row.arm.id].comparisons,
+                "verdict": numbers[row.arm.id].verdict,
                 "certificates": {
                     "reached": sum(bool(c["reached"]) for c in certificates),
                     "of": len(certificates),
@@ -275,13 +279,14 @@ def provenance(seed: int) -> dict[str, Any]:
 def _table(results: Sequence[dict[str, Any]]) -> str:
     """One line per unit and slice, with the arm's and unit's numbers beside it."""
     stream = io.StringIO()
-    head = ["arm", "scan", "draw", "slice", "frame", "acceleration", "sigma", "weight", *SCORED]
+    scored = list(dict.fromkeys(k for r in results for part in r["slices"] for k in part))[2:]
+    head = ["arm", "scan", "draw", "slice", "frame", "acceleration", "sigma", "weight", *scored]
     writer = csv.writer(stream, lineterminator="\n")
     writer.writerow(head)
     for result in results:
         for part in result["slices"]:
             row = [result["arm"], result["scan"], result["draw"], part["index"], part["frame"]]
             row += [plain(result[k]) for k in ("acceleration", "sigma", "weight")]
-            row += [plain(part.get(name)) for name in SCORED]
+            row += [plain(part.get(name)) for name in scored]
             writer.writerow(["" if value is None else value for value in row])
     return stream.getvalue()

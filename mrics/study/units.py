@@ -17,7 +17,7 @@ from mrics.protocol import Arm, ScanFiles
 from mrics.quality import error_maps, score_planes
 from mrics.recovery import recover
 from mrics.sampling import Pattern, draw_entry
-from mrics.scan import Axes, write_nifti
+from mrics.scan import Axes, Scan, write_nifti
 from mrics.study.files import plain, write_json
 from mrics.study.prepare import PlaneChoice, Prepared, prepare
 
@@ -163,7 +163,9 @@ def run_unit(unit: Unit) -> dict[str, Any]:
         "timing": {"recovery_s": wall_s, "unit_s": time.perf_counter() - started},
     }
     write_json(unit.result_path, result)
-    return result
+    # The same digits whether a unit was computed now or read back.
+    rounded: dict[str, Any] = plain(result)
+    return rounded
 
 
 def pattern_grid(axes: Axes, shape: tuple[int, ...]) -> tuple[int, ...]:
@@ -186,6 +188,7 @@ def _write_maps(
     unit: Unit, scan: Prepared, image: Any, pattern: Pattern
 ) -> list[dict[str, str | int]]:
     folder = unit.folder / "arms" / unit.arm.id
+    folder.mkdir(parents=True, exist_ok=True)
     signed, complex_error = error_maps(image, scan.stack)
     arrays: dict[str, Any] = {
         "recovered": image if np.iscomplexobj(scan.stack) else np.abs(image),
@@ -205,7 +208,8 @@ def _write_maps(
         mask = np.moveaxis(mask, 0, -1)
     shape = (*pattern.grid, *(1,) * (3 - len(pattern.grid)))
     volume = mask.reshape(*shape, *mask.shape[len(pattern.grid) :]).astype(np.uint8)
-    write_nifti(path, volume, None)
+    # The phase-encode grid has no place in the patient: unit voxels at the origin.
+    write_nifti(path, volume, Scan(volume, np.eye(4), (1.0, 1.0, 1.0)))
     written.append(_entry(unit, "pattern", path))
     return written
 
