@@ -144,12 +144,12 @@ def read_header(path: str | Path) -> Header:
     _check_size(path, shape, dtype, offset, zipped)
     slope, inter = _scaling(source, path)
     to_mm = _to_mm(source, path)
-    affine = _affine(source, path, to_mm)
+    voxel = _voxel(source, path, to_mm)
     return Header(
         path=path,
         shape=shape,
-        voxel_mm=_voxel(source, path, to_mm),
-        affine=affine,
+        voxel_mm=voxel,
+        affine=_affine(source, path, to_mm),
         dtype=dtype,
         slope=slope,
         inter=inter,
@@ -207,9 +207,9 @@ def _parse(first: bytes, path: Path) -> Any:
         )
     kind: Any
     if len(first) >= 348 and first[344:347] == b"n+1":
-        kind, block = nib.Nifti1Header, first[:348]
+        kind, size = nib.Nifti1Header, 348
     elif len(first) >= 540 and first[4:7] == b"n+2":
-        kind, block = nib.Nifti2Header, first[:540]
+        kind, size = nib.Nifti2Header, 540
     else:
         found = "an empty file" if not first else f"it starts with {first[:8]!r}"
         raise ScanError(
@@ -217,10 +217,11 @@ def _parse(first: bytes, path: Path) -> Any:
             str(path),
             "Give a .nii or .nii.gz file; convert other formats first.",
         )
-    try:
-        return kind(block, check=False)
-    except Exception as error:  # nibabel raises several types on mutated headers
-        raise _bad_header(path, str(error)) from error
+    for order, name in (("<", "little"), (">", "big")):
+        if int.from_bytes(first[:4], name) == size:  # type: ignore[arg-type]
+            return kind(first[:size], endianness=order, check=False)
+    stated = int.from_bytes(first[:4], "little")
+    raise _bad_header(path, f"sizeof_hdr is {stated}, it must be {size}")
 
 
 def _bad_header(path: Path, why: str) -> ScanError:

@@ -15,6 +15,8 @@ from mrics.scan.volume import Scan
 TISSUE_SHARE = 0.12
 # Times the median of air: after the 3 x 3 x 3 mean, air reaches 1.5 once in 10^5 voxels.
 AIR_FACTOR = 1.6
+# A dark class brighter than this share of the bright one is tissue: the volume has no air.
+AIR_SHARE = 0.35
 _BINS = 512
 
 
@@ -23,7 +25,8 @@ def body_mask(volume: Scan | NDArray[Any]) -> NDArray[np.bool_]:
 
     The magnitude (root sum of squares over channels, mean over frames) is smoothed by a
     3 x 3 x 3 mean and split by Otsu's criterion on its square root. Voxels above 0.12 x the mean
-    of the bright class and above 1.6 x the median of the dark class are kept; of these, the
+    of the bright class and, where the dark class is air (its median below 0.35 x that mean), above
+    1.6 x its median are kept; of these, the
     connected parts of at least 1 % of the largest; holes are filled in three dimensions and in
     every plane along each axis.
 
@@ -42,12 +45,13 @@ def body_mask(volume: Scan | NDArray[Any]) -> NDArray[np.bool_]:
     level = _otsu(np.sqrt(smooth)) ** 2
     bright = smooth > level
     dark = smooth[~bright]
-    threshold = TISSUE_SHARE * float(smooth[bright].mean())
-    if dark.size:
-        threshold = max(threshold, min(AIR_FACTOR * float(np.median(dark)), level))
+    tissue = float(smooth[bright].mean())
+    threshold = TISSUE_SHARE * tissue
+    air = float(np.median(dark)) if dark.size else 0.0
+    if air < AIR_SHARE * tissue:
+        threshold = max(threshold, min(AIR_FACTOR * air, level))
     mask = smooth > threshold
-    mask = _large_parts(ndimage.binary_opening(mask) if min(mask.shape) > 2 else mask, mask)
-    return _fill(mask)
+    return _fill(_large_parts(_opened(mask), mask))
 
 
 def spatial_magnitude(volume: Scan | NDArray[Any]) -> NDArray[np.float32]:
@@ -81,6 +85,13 @@ def _otsu(values: NDArray[Any]) -> float:
     between = np.zeros(_BINS)
     between[inside] = (moment[inside] - mean * below[inside]) ** 2 / (below * above)[inside]
     return float(edges[1:][int(np.argmax(between))])
+
+
+def _opened(mask: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    """Thin bridges and specks removed; the volume's border counts as body."""
+    if min(mask.shape) < 3:
+        return mask
+    return ndimage.binary_dilation(ndimage.binary_erosion(mask, border_value=1)) & mask
 
 
 def _large_parts(opened: NDArray[np.bool_], whole: NDArray[np.bool_]) -> NDArray[np.bool_]:

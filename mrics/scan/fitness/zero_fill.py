@@ -22,33 +22,29 @@ def zero_filled(view: ScanView) -> tuple[Finding, ...]:
         length = view.volume.shape[axis]
         if length < _LEAST_LENGTH:
             continue
-        step, half = _largest_step(_folded(view.power(axis)))
-        if step > STEP:
-            findings.append(_finding(LETTERS[axis], length, min(2 * half, length), step))
+        power = view.power(axis)
+        centre = length // 2
+        up, last_up = _largest_step(power[centre:])
+        down, last_down = _largest_step(power[centre::-1])
+        if min(up, down) > STEP and abs(last_up - last_down) <= 2:
+            true = last_up + last_down + 1
+            findings.append(_finding(LETTERS[axis], length, true, min(up, down)))
     return tuple(findings)
 
 
-def _folded(power: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Mean of +k and -k, for k = 0 ... (N-1)//2."""
-    centre = len(power) // 2
-    reach = (len(power) - 1) // 2
-    up = power[centre : centre + reach + 1]
-    down = power[centre - reach : centre + 1][::-1]
-    return (up + down) / 2
+def _largest_step(power: NDArray[np.float64]) -> tuple[float, int]:
+    """Largest fall of log power from one sample to all further out, beyond the trend before it.
 
-
-def _largest_step(folded: NDArray[np.float64]) -> tuple[float, int]:
-    """Largest fall of log power between two windows, beyond their own trends, and its place."""
-    floor = folded.max() * 1e-16 + np.finfo(np.float64).tiny
-    level = np.log(folded + floor)
-    best, edge = 0.0, len(level)
-    for k in range(len(level) // 2, len(level) - _WINDOW):
-        inner, outer = level[k - _WINDOW : k], level[k + 1 : k + 1 + _WINDOW]
-        trend = max(inner[0] - inner[-1], 0.0) + max(outer[0] - outer[-1], 0.0)
-        step = float(inner.mean() - outer.mean() - trend)
+    Returns the fall and the index of the last sample before it.
+    """
+    level = np.log(power + power.max() * 1e-16 + np.finfo(np.float64).tiny)
+    best, last = 0.0, len(level) - 1
+    for k in range(int(0.4 * len(level)), len(level) - _WINDOW):
+        inner = level[k - _WINDOW + 1 : k + 1]
+        step = float(inner.min() - level[k + 1 :].max() - max(inner[0] - inner[-1], 0.0))
         if step > best:
-            best, edge = step, k
-    return best, edge
+            best, last = step, k
+    return best, last
 
 
 def _finding(letter: str, length: int, true: int, step: float) -> Finding:
