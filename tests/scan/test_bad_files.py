@@ -11,7 +11,7 @@ from pathlib import Path
 import nibabel as nib
 import numpy as np
 import pytest
-from files import blob, nifti_bytes, save, write
+from nifti_files import blob, nifti_bytes, save, write
 
 from mrics.errors import ScanError
 from mrics.numerics.memory import available_memory

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from files import blob
+from nifti_files import blob
 from open_volumes import open_volume
 from scipy import ndimage, stats
 

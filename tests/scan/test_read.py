@@ -11,7 +11,7 @@ from pathlib import Path
 import nibabel as nib
 import numpy as np
 import pytest
-from files import blob, nifti_bytes, save, write
+from nifti_files import blob, nifti_bytes, save, write
 from open_volumes import open_volume
 
 from mrics.scan import read_header, read_scan
