@@ -5,8 +5,10 @@ from __future__ import annotations
 import math
 from dataclasses import replace
 
+from mrics.errors import ProtocolError
 from mrics.protocol.arms import Arm
 from mrics.protocol.document import Protocol
+from mrics.protocol.messages import within
 from mrics.protocol.timing import Timing, sequence_time
 from mrics.sampling import Pattern, draw_entry
 
@@ -49,15 +51,19 @@ def scan_time(
     full, matrix = math.prod(steps), math.prod(pattern.grid)
     if not sequence.three_d and grid.slices is None and slices is None:
         findings.append("The number of slices is not given: time is for one package.")
-    timing = sequence_time(
-        sequence,
-        min(full, max(1, round(count * full / matrix))),
-        full,
-        slices=grid.slices or slices or 1,
-        partitions=steps[1] if len(steps) > 1 else None,
-        calibration=round(separate * full / matrix),
-        averages=None if arm is None else arm.averages,
-    )
+    try:
+        timing = sequence_time(
+            sequence,
+            min(full, max(1, round(count * full / matrix))),
+            full,
+            slices=grid.slices or slices or 1,
+            partitions=steps[1] if len(steps) > 1 else None,
+            calibration=round(separate * full / matrix),
+            averages=None if arm is None else arm.averages,
+        )
+    except ProtocolError as error:
+        where = within(protocol.path, protocol.text, ("sequence",), error.where)
+        raise ProtocolError(error.what, where, error.fix) from error
     return replace(timing, findings=(*findings, *timing.findings))
 
 

@@ -15,7 +15,7 @@ from mrics.errors import MricsError, ProtocolError
 from mrics.protocol import arms as _arms
 from mrics.protocol import files as _files
 from mrics.protocol.acceptance import Limit, read_limits
-from mrics.protocol.messages import Location, nearest, place, refuse, shown
+from mrics.protocol.messages import Location, nearest, place, refuse, shown, within
 from mrics.protocol.sections import (
     About,
     Coils,
@@ -332,10 +332,8 @@ def _check_sampling(entry: Sampling) -> None:
 
 
 def _check_settings(entry: Recovery) -> None:
-    try:
-        from mrics.recovery import check_settings
-    except ImportError:
-        return
+    from mrics.recovery import check_settings
+
     check_settings(entry.method, entry.extra)
 
 
@@ -356,9 +354,7 @@ def _ask_room(
     try:
         check(subject)
     except MricsError as error:
-        where = place(protocol.path, protocol.text, location)
-        if str(protocol.path) in error.where:
-            where = error.where
-        elif error.where:
-            where = f"{where}, {error.where}"
+        where = error.where
+        if str(protocol.path) not in where:
+            where = within(protocol.path, protocol.text, location, where)
         raise ProtocolError(error.what, where, error.fix) from error

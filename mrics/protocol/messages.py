@@ -65,6 +65,16 @@ def place(path: object, text: str, location: Location) -> str:
     return f"{at}, key {key}" if key else at
 
 
+def within(path: object, text: str, location: Location, where: str) -> str:
+    """The place of what another room's error calls ``where``, inside the table at ``location``."""
+    key = where.split(" ")[0].strip(",")
+    if key and line_of(text, (*location, key)) != line_of(text, location):
+        exact = place(path, text, (*location, key))
+        return exact if where == key else f"{exact} ({where})"
+    table = place(path, text, location)
+    return f"{table}, {where}" if where else table
+
+
 def allowed(annotation: Any, metadata: Iterable[Any] = ()) -> str:
     """What a field accepts, in words: type and range."""
     while typing.get_origin(annotation) is typing.Annotated:

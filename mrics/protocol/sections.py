@@ -41,6 +41,8 @@ def _as_list(value: Any) -> Any:
 
 def _as_entry(value: Any) -> Any:
     """A bare path where a table of paths may stand."""
+    if not isinstance(value, str | dict):
+        raise ValueError("a path in quotes, or a table of two files")
     return {"path": value} if isinstance(value, str) else value
 
 

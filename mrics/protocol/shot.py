@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from mrics.errors import ProtocolError
 from mrics.protocol.sections import Sequence
@@ -64,14 +64,7 @@ def plan_shot(sequence: Sequence, *, acquired: int, partitions: int | None = Non
                 "slice_time_ms",
                 f"Give slice_time_ms of at least {shot.slice_ms:g}, or shorten what it holds.",
             )
-        shot = Shot(
-            shot.positions,
-            shot.fixed,
-            sequence.slice_time_ms,
-            "slice_time_ms",
-            shot.centre,
-            shot.findings,
-        )
+        shot = replace(shot, slice_ms=sequence.slice_time_ms, basis="slice_time_ms")
     if shot.slice_ms is not None and shot.slice_ms > sequence.repetition_time_ms + 1e-9:
         raise _impossible(
             f"One shot lasts {shot.slice_ms:g} ms ({shot.basis}), longer than "
@@ -239,4 +232,4 @@ def _with_inversion(sequence: Sequence) -> str:
 
 
 def _impossible(what: str, key: str, fix: str) -> ProtocolError:
-    return ProtocolError(what, f"key sequence.{key}", fix)
+    return ProtocolError(what, key, fix)
