@@ -115,7 +115,8 @@ def draw_limits(axes: Any, limits: list[Limit]) -> None:
         axes.axhline(limit.value, color=FAIL, lw=1.1, ls=style, zorder=1.5)
         ends = (low, limit.value) if limit.at_least else (limit.value, high)
         if limit.kind == "mean":
-            axes.axhspan(*ends, facecolor="none", edgecolor=FAIL, alpha=0.18, hatch="////", lw=0)
+            look = {"facecolor": "none", "edgecolor": FAIL, "hatch": "///", "lw": 0, "alpha": 0.35}
+            axes.axhspan(*ends, zorder=0.5, **look)
 
 
 def _legend(study: StudyFolder, looks: dict[str, tuple[str, str]]) -> tuple[list[Any], list[str]]:

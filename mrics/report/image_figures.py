@@ -105,7 +105,7 @@ def panel_figure(
         bar = figure.colorbar(grey[0], ax=grid[:, :2].ravel().tolist(), **scale)
         bar.set_label("image value (common window)")
         error_bar = figure.colorbar(grey[1], ax=grid[:, 2].tolist(), **scale)
-        error_bar.set_label(f"recovered − reference, window ×{window.factor}")
+        error_bar.set_label("recovered − reference")
         error_bar.set_ticks([-window.error_end, 0, window.error_end])
         error_bar.set_ticklabels([f"−{number(window.error_end)}", "0", number(window.error_end)])
         for each in (bar, error_bar):

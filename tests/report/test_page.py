@@ -1,0 +1,209 @@
+"""The page of a study: complete, self-contained, escaped, and clear about what is missing."""
+
+import json
+import re
+import shutil
+from html.parser import HTMLParser
+from pathlib import Path
+
+import pytest
+from study_building import StudyPlan, build_study, read_results
+
+from mrics.caution import RESEARCH_ONLY
+from mrics.errors import ReportError
+from mrics.report import write_report
+
+
+class Tags(HTMLParser):
+    """Collects start tags and text."""
+
+    def __init__(self, page: str) -> None:
+        super().__init__()
+        self.found: list[tuple[str, dict[str, str | None]]] = []
+        self.text = ""
+        self.feed(page)
+
+    def handle_starttag(self, tag: str, attrs: list[tuple[str, str | None]]) -> None:
+        self.found.append((tag, dict(attrs)))
+
+    def handle_data(self, data: str) -> None:
+        self.text += data
+
+    def every(self, tag: str) -> list[dict[str, str | None]]:
+        return [attributes for name, attributes in self.found if name == tag]
+
+
+@pytest.fixture(scope="module")
+def page(small_study: Path) -> str:
+    return write_report(small_study).read_text()
+
+
+@pytest.fixture(scope="module")
+def tiny_study(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    arms = ((2.0, "zero-filled"), (3.0, "windowed"))
+    plan = StudyPlan(shape=(3, 32, 24), scans=2, draws=1, arms=arms)
+    return build_study(tmp_path_factory.mktemp("tiny"), plan)
+
+
+@pytest.fixture
+def own_study(tiny_study: Path, tmp_path: Path) -> Path:
+    """A copy that a test may change."""
+    return Path(shutil.copytree(tiny_study, tmp_path / "study"))
+
+
+def change(folder: Path, **values: object) -> None:
+    results = read_results(folder) | values
+    (folder / "results.json").write_text(json.dumps(results))
+
+
+def test_caution_stands_first_and_last(page: str) -> None:
+    text = Tags(page.split("<body>")[1]).text.strip()
+    assert text.startswith("Skip to the answer\n" + RESEARCH_ONLY)
+    assert text.endswith(RESEARCH_ONLY)
+
+
+def test_question_and_answer_come_before_everything_else(page: str, small_study: Path) -> None:
+    results = read_results(small_study)
+    where = [
+        page.index(text)
+        for text in (
+            results["protocol"]["question"],
+            results["verdict"]["sentence"].split(";")[0],
+            "<table",
+            "What weakens this answer",
+            "What acceleration costs",
+            "Arm by arm",
+            "Where this comes from",
+        )
+    ]
+    assert where == sorted(where)
+
+
+def test_nothing_is_fetched(page: str) -> None:
+    tags = Tags(page)
+    for _, attributes in tags.found:
+        for name in ("src", "href", "srcset", "action", "poster", "data"):
+            value = attributes.get(name)
+            assert value is None or value.startswith(("data:", "#")), value
+    assert not tags.every("link")
+    assert not re.search(r"url\((?!['\"]?data:)|@import", page)
+    policy = next(m for m in tags.every("meta") if m.get("http-equiv"))["content"]
+    assert policy is not None
+    assert "default-src 'none'" in policy
+    assert "http:" not in policy
+
+
+def test_every_number_of_the_verdict_table_is_the_stored_one(page: str, small_study: Path) -> None:
+    table = page[page.index('id="verdict-table"') : page.index("</table>")]
+    for arm in read_results(small_study)["arms"]:
+        assert f"{arm['metrics']['ssim']['mean']:.3f}" in table
+        assert f"{arm['metrics']['psnr']['mean']:.1f}" in table
+        for limit in arm["verdict"]["limits"]:
+            if limit["status"] == "fail":
+                assert f"missed by {abs(limit['margin']):.2g}" in table
+    assert table.count("in use today") == 1
+
+
+def test_pictures_have_text_and_tables_have_headers(page: str) -> None:
+    tags = Tags(page)
+    assert all(len(image.get("alt") or "") > 20 for image in tags.every("img"))
+    assert all(head.get("scope") in ("col", "row") for head in tags.every("th"))
+    assert 'lang="en"' in page
+
+
+def test_same_folder_gives_same_bytes(small_study: Path, page: str) -> None:
+    assert write_report(small_study).read_text() == page
+
+
+def test_markup_from_outside_stays_text(tmp_path: Path) -> None:
+    bad = "<script>alert(1)</script><img src=x onerror=alert(2)>"
+    plan = StudyPlan(shape=(3, 32, 24), scans=1, draws=1, arms=((2.0, "windowed"),), title=bad)
+    folder = build_study(tmp_path, plan)
+    results = read_results(folder)
+    results["scans"][0]["name"] = bad
+    results["arms"][0]["label"] = bad
+    results["notes"] = [bad]
+    results["protocol"]["text"] = bad
+    (folder / "results.json").write_text(json.dumps(results))
+    page = write_report(folder).read_text()
+    assert "<script>alert" not in page
+    assert "<img src=x" not in page
+    assert "&lt;script&gt;alert(1)" in page
+
+
+def test_maps_that_are_gone_are_named(own_study: Path) -> None:
+    gone = next(m["file"] for m in read_results(own_study)["maps"] if m["kind"] == "recovered")
+    (own_study / gone).unlink()
+    page = write_report(own_study).read_text()
+    assert "Stored maps that are gone" in page
+    assert gone in page
+
+
+def test_page_without_any_map(own_study: Path) -> None:
+    shutil.rmtree(own_study / "maps")
+    page = write_report(own_study).read_text()
+    assert "No images of this arm are stored" in page
+    assert "Verdict of every arm" in page
+
+
+def test_interrupted_study_says_what_is_missing(own_study: Path) -> None:
+    results = read_results(own_study)
+    last = results["arms"][-1]
+    units = [u for u in results["units"] if u["arm"] != last["id"]]
+    last["metrics"] = {}
+    last["verdict"] = {"status": "undecided", "limits": [], "confidence": ""}
+    change(own_study, units=units, arms=results["arms"], units_planned=4)
+    page = write_report(own_study).read_text()
+    assert "2 of 4 units" in page
+    assert f"Nothing yet of: {last['label']}" in page
+    assert "No unit of this arm is finished" in page
+
+
+def test_unreached_certificates_are_listed(own_study: Path) -> None:
+    results = read_results(own_study)
+    results["units"][0]["certificate"] |= {
+        "reached": False,
+        "optimality": 3e-3,
+        "tolerance": 1e-4,
+        "note": "stopped at 60 iterations",
+    }
+    change(own_study, units=results["units"])
+    page = write_report(own_study).read_text()
+    assert "1 of 2 units stopped short" in page
+    assert "stopped at 60 iterations" in page
+
+
+def test_results_of_a_newer_version_are_refused(own_study: Path) -> None:
+    change(own_study, schema=2, mrics="9.0")
+    with pytest.raises(ReportError, match=r"schema 2 \(mrics 9.0\)"):
+        write_report(own_study)
+
+
+def test_folder_without_results_is_refused(tmp_path: Path) -> None:
+    with pytest.raises(ReportError, match=r"holds no results\.json"):
+        write_report(tmp_path)
+
+
+def test_damaged_results_are_refused(own_study: Path) -> None:
+    text = (own_study / "results.json").read_text()
+    (own_study / "results.json").write_text(text[:200])
+    with pytest.raises(ReportError, match="cannot be read"):
+        write_report(own_study)
+    (own_study / "results.json").write_text('{"schema": 1}')
+    with pytest.raises(ReportError, match="lacks mrics, protocol, scans, units, arms"):
+        write_report(own_study)
+
+
+def test_damaged_map_is_named(own_study: Path) -> None:
+    name = next(m["file"] for m in read_results(own_study)["maps"] if m["kind"] == "reference")
+    (own_study / name).write_bytes(b"not an image")
+    with pytest.raises(ReportError, match=re.escape(name)):
+        write_report(own_study)
+
+
+def test_map_outside_the_folder_is_refused(own_study: Path) -> None:
+    maps = read_results(own_study)["maps"]
+    maps[0]["file"] = "../elsewhere.nii"
+    change(own_study, maps=maps)
+    with pytest.raises(ReportError, match="outside the study folder"):
+        write_report(own_study)
