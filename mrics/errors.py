@@ -65,3 +65,7 @@ class StudyError(MricsError):
 
 class ReportError(MricsError):
     """A report cannot be drawn."""
+
+
+class MricsWarning(UserWarning):
+    """Input that can be used, but not without saying so."""
