@@ -34,6 +34,8 @@ class Acquisition:
         Receive sensitivities in image space, natural order; None for one uniform channel.
     covariance : ndarray of shape (channel, channel) or None
         Psi = E[n n^H]/2; None for sigma^2 times identity.
+    compression : ndarray of shape (plane or 1, virtual, channel) or None
+        Matrices of orthonormal rows that make virtual channels of the whitened channels.
     axes : Axes or None
         How planes lie in the file, None for a bare stack.
     volume_shape : tuple of int
@@ -52,6 +54,7 @@ class Acquisition:
     sigma_added: float = 0.0
     sensitivities: NDArray[Any] | None = None
     covariance: NDArray[Any] | None = None
+    compression: NDArray[Any] | None = None
     axes: Axes | None = None
     volume_shape: tuple[int, ...] = ()
     calibration: tuple[int, ...] = (0,)

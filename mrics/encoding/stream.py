@@ -9,9 +9,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from mrics.encoding.acquisition import Acquisition
-from mrics.encoding.noise import relative_covariance, whitening
+from mrics.encoding.calibration import calibration_box
+from mrics.encoding.channels import channel_mixing, mix
 from mrics.encoding.operator import Encoding
-from mrics.errors import AcquisitionError
 from mrics.numerics import uncentre
 
 Array = NDArray[Any]
@@ -30,7 +30,9 @@ def blocks(
     acquisition : Acquisition
         Where it has a covariance, data and sensitivities are whitened by the covariance scaled to
         a mean diagonal of 1, so that every channel's noise is white with standard deviation
-        ``acquisition.sigma``.
+        ``acquisition.sigma``; where it has a compression, channels are the virtual ones. Several
+        channels without sensitivities get them from each block's calibration region
+        (``with_sensitivities`` estimates once and keeps them).
     max_bytes : int
         Largest size of one block's k-space; a block has at least one plane.
 
@@ -44,47 +46,43 @@ def blocks(
         Un-centred k-space, a copy that the caller may change.
     """
     n_planes, u, v = acquisition.shape
-    kspace = acquisition.kspace
-    maps = acquisition.sensitivities
-    if maps is None and acquisition.channels > 1:
-        raise AcquisitionError(
-            f"The acquisition has {acquisition.channels} channels and no sensitivities.",
-            "sensitivities",
-            "Estimate them from the calibration region first.",
-        )
-    matrix = None
-    if acquisition.covariance is not None and acquisition.channels > 1:
-        matrix = whitening(relative_covariance(acquisition.covariance, acquisition.channels))
+    kspace, maps = acquisition.kspace, acquisition.sensitivities
+    matrix = channel_mixing(acquisition)
     masks = uncentred_masks(acquisition)
-    size = acquisition.channels * u * v * kspace.dtype.itemsize
-    step = max(1, max_bytes // size)
+    virtual = acquisition.channels if matrix is None else matrix.shape[1]
+    step = max(1, max_bytes // (acquisition.channels * u * v * kspace.dtype.itemsize))
+    if maps is None and virtual > 1:
+        calibration_box(acquisition)
     shared = None
-    if maps is not None and maps.shape[0] == 1:
-        shared = _mix(matrix, np.asarray(maps, dtype=kspace.dtype))
+    if maps is not None and maps.shape[0] == 1 and (matrix is None or matrix.shape[0] == 1):
+        shared = mix(matrix, np.asarray(maps, dtype=kspace.dtype), slice(0, 1))
     for start in range(0, n_planes, step):
         planes = slice(start, min(start + step, n_planes))
         index = acquisition.pattern_index[planes]
         mask = masks[index[:1]] if (index == index[0]).all() else masks[index]
-        data = uncentre(np.asarray(kspace[planes]))
-        if matrix is not None:
-            data = _mix(matrix, data)
+        data = uncentre(mix(matrix, np.asarray(kspace[planes]), planes))
         block_maps = shared
-        if maps is not None and shared is None:
-            block_maps = _mix(matrix, np.asarray(maps[planes], dtype=kspace.dtype))
+        if maps is None and acquisition.channels > 1:
+            block_maps = _estimated(acquisition, planes, virtual)
+        elif maps is not None and shared is None:
+            count = planes.stop - planes.start
+            chosen = maps[planes] if maps.shape[0] > 1 else np.repeat(maps, count, axis=0)
+            block_maps = mix(matrix, np.asarray(chosen, dtype=kspace.dtype), planes)
         shape = (planes.stop - planes.start, u, v)
         yield planes, Encoding(mask[:, None], shape, kspace.dtype, block_maps), data
+
+
+def _estimated(acquisition: Acquisition, planes: slice, virtual: int) -> Array:
+    """Maps of the planes from their calibration region."""
+    if virtual == 1:
+        shape = (1, 1, *acquisition.shape[1:])
+        return np.ones(shape, acquisition.kspace.dtype)
+    from mrics.encoding.sensitivities import estimate_sensitivities
+
+    return estimate_sensitivities(acquisition, planes)[0][:, 0]
 
 
 def uncentred_masks(acquisition: Acquisition) -> NDArray[np.bool_]:
     """The acquisition's masks with zero frequency at index 0, shape (pattern, u, v or 1)."""
     _, u, v = acquisition.mask.shape
     return np.roll(acquisition.mask, (-(u // 2), -(v // 2)), axis=(-2, -1))
-
-
-def _mix(matrix: Array | None, channels: Array) -> Array:
-    """A channel-mixing matrix applied to (planes, channels, u, v), type kept."""
-    if matrix is None:
-        return channels
-    planes, count, u, v = channels.shape
-    flat = channels.reshape(planes, count, u * v)
-    return np.matmul(matrix.astype(channels.dtype), flat).reshape(planes, len(matrix), u, v)
