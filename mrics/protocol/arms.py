@@ -5,11 +5,14 @@ from __future__ import annotations
 import re
 import unicodedata
 from dataclasses import dataclass, field, replace
+from pathlib import Path
 from typing import Any
 
 from mrics.errors import ProtocolError
 from mrics.protocol.messages import nearest
 from mrics.protocol.sections import Recovery, Sampling, Today
+
+FILE_KEYS = ("file", "table", "training")
 
 
 @dataclass(frozen=True)
@@ -28,8 +31,8 @@ class Arm:
         Name of the sampling entry.
     sampling : dict
         Its keys, as ``mrics.sampling.draw_entry`` takes them.
-    acceleration : float
-        Acceleration asked for.
+    acceleration : float or None
+        Acceleration asked for; None where a pattern file brings its own.
     recovery : str
         Method.
     recovery_name : str
@@ -45,7 +48,7 @@ class Arm:
     today: bool
     sampling_name: str
     sampling: dict[str, Any] = field(hash=False)
-    acceleration: float
+    acceleration: float | None
     recovery: str
     recovery_name: str
     recovery_settings: dict[str, Any] = field(hash=False)
@@ -65,18 +68,37 @@ def expand_arms(
     sampling: tuple[Sampling, ...],
     recovery: tuple[Recovery, ...],
     today: Today | None,
+    folder: Path,
 ) -> tuple[Arm, ...]:
-    """Every arm, today's first, ids unique and independent of the order of other entries."""
+    """Every arm, today's first, ids unique and independent of the order of other entries.
+
+    Files that a sampling entry names are taken relative to ``folder``.
+    """
     arms: list[Arm] = []
     if today is not None:
         entry, today_recovery = today_entry(today, sampling)
         arms.append(_arm(entry, entry.accelerations[0], today_recovery, sampling_name(entry), True))
     for at, entry in enumerate(sampling):
         name = sampling_name(entry, sampling[:at])
-        for acceleration in entry.accelerations:
+        for acceleration in entry.accelerations or (None,):
             for method in recovery:
                 arms.append(_arm(entry, acceleration, method, name, False))
-    return tuple(_unique(arms))
+    return tuple(replace(arm, sampling=_with_folder(arm.sampling, folder)) for arm in _unique(arms))
+
+
+def _first(accelerations: tuple[float, ...]) -> float | None:
+    return accelerations[0] if accelerations else None
+
+
+def _with_folder(keys: dict[str, Any], folder: Path) -> dict[str, Any]:
+    """The keys of a sampling entry with the files they name relative to ``folder``."""
+
+    def placed(value: Any) -> Any:
+        if isinstance(value, tuple):
+            return tuple(placed(item) for item in value)
+        return str(folder / Path(value).expanduser()) if isinstance(value, str) else value
+
+    return {key: placed(value) if key in FILE_KEYS else value for key, value in keys.items()}
 
 
 def today_entry(today: Today, sampling: tuple[Sampling, ...]) -> tuple[Sampling, Recovery]:
@@ -109,7 +131,7 @@ def today_entry(today: Today, sampling: tuple[Sampling, ...]) -> tuple[Sampling,
             nearest(asked, [*names, *PATTERNS, *LAWS]),
         )
     keys.update(today.extra)
-    plain = "steps" in keys or keys.get("pattern") == "full"
+    plain = "steps" in keys or keys.get("pattern") in ("full", "file")
     asked_for = 1.0 if today.acceleration is None and not plain else today.acceleration
     for key, value in (("acceleration", asked_for), ("averages", today.averages)):
         if value is not None:
@@ -121,11 +143,15 @@ def today_entry(today: Today, sampling: tuple[Sampling, ...]) -> tuple[Sampling,
     return entry, Recovery(method=today.recovery, name=None)
 
 
-def _arm(entry: Sampling, acceleration: float, method: Recovery, name: str, today: bool) -> Arm:
+def _arm(
+    entry: Sampling, acceleration: float | None, method: Recovery, name: str, today: bool
+) -> Arm:
     recovery_name = method.name or method.method
-    parts = (name, f"r{acceleration:g}", recovery_name)
-    identity = "-".join(slug(part) for part in (("today", *parts) if today else parts))
-    label = f"{name}, R = {acceleration:g}, {recovery_name}"
+    parts = [name, recovery_name] if acceleration is None else []
+    parts = parts or [name, f"r{acceleration:g}", recovery_name]
+    identity = "-".join(slug(part) for part in (["today", *parts] if today else parts))
+    size = "from file" if acceleration is None else f"R = {acceleration:g}"
+    label = f"{name}, {size}, {recovery_name}"
     return Arm(
         id=identity,
         label=f"today: {label}" if today else label,

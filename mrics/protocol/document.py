@@ -87,7 +87,7 @@ class Protocol:
 
     def arms(self) -> tuple[_arms.Arm, ...]:
         """Every arm to be studied, today's first."""
-        return _arms.expand_arms(self.sampling, self.recovery, self.today)
+        return _arms.expand_arms(self.sampling, self.recovery, self.today, self.path.parent)
 
     def scan_files(self) -> tuple[_files.ScanFiles, ...]:
         """Files of the scans, patterns expanded; raises ProtocolError where one is missing."""
@@ -291,7 +291,7 @@ def _check_arms(protocol: Protocol, fail: Fail) -> None:
     _repeats(protocol, fail)
     for at, entry in enumerate(protocol.sampling):
         _ask_room(protocol, ("sampling", at), _check_sampling, entry)
-        if not entry.accelerations:
+        if not entry.accelerations and entry.extra.get("pattern") != "file":
             fail(
                 "Key 'acceleration' is missing.",
                 ("sampling", at, "acceleration"),

@@ -99,3 +99,16 @@ def test_every_arm_can_be_drawn():
     for arm in from_text(KNEE_3D).arms():
         pattern = draw_entry(arm.sampling, (96, 80), arm.acceleration, 1)
         assert pattern.acceleration == pytest.approx(arm.acceleration, rel=0.2)
+
+
+def test_files_of_an_entry_are_relative_to_the_protocol(tmp_path):
+    own = '[[sampling]]\nname = "own table"\npattern = "file"\nfile = "tables/own.csv"\n'
+    own += '[[sampling]]\nlaw = "energy"\ntraining = ["a.nii", "/data/b.nii"]\nacceleration = 3\n'
+    text = changed(KNEE_3D, "[[recovery]]", own + "[[recovery]]")
+    arms = {arm.id: arm for arm in from_text(text, tmp_path / "p.toml").arms()}
+    table = arms["own-table-wavelet"]
+    assert table.acceleration is None
+    assert table.sampling["file"] == str(tmp_path / "tables" / "own.csv")
+    assert table.label == "own table, from file, wavelet"
+    energy = arms["energy-r3-wavelet"]
+    assert energy.sampling["training"] == (str(tmp_path / "a.nii"), "/data/b.nii")
