@@ -1,0 +1,101 @@
+"""One entry for every recovery: checks, noise level, timing."""
+
+from __future__ import annotations
+
+import time
+from dataclasses import replace
+from typing import Any
+
+import numpy as np
+
+from mrics.encoding.acquisition import Acquisition
+from mrics.errors import RecoveryError
+from mrics.recovery.contract import Recovered
+from mrics.recovery.registry import solver
+from mrics.recovery.settings import check_settings
+
+#: noise level taken where the data's own is 0, relative to the RMS of the calibration samples
+SIGMA_FLOOR = 1e-4
+
+
+def recover(acquisition: Acquisition, method: str = "wavelet", **settings: Any) -> Recovered:
+    """Recover a stack of planes from undersampled k-space.
+
+    Parameters
+    ----------
+    acquisition : Acquisition
+        Undersampled k-space with its pattern and noise level.
+    method : str
+        A name in ``METHODS``.
+    **settings
+        Settings of the method (see ``mrics.recovery.settings``); without any it chooses its own
+        weight.
+
+    Returns
+    -------
+    Recovered
+        ``image`` of shape (plane, u, v) and ``certificate``.
+
+    Raises
+    ------
+    RecoveryError
+        For unknown methods or settings, and for k-space with NaN or Inf.
+
+    Notes
+    -----
+    Every method is equivariant: ``recover(a y, |a| sigma) = a recover(y, sigma)`` for any complex
+    ``a`` other than 0, to rounding.
+    """
+    chosen = check_settings(method, settings)
+    started = time.perf_counter()
+    empty = _survey(acquisition)
+    sigma, note = reference_sigma(acquisition)
+    if empty:
+        sigma, note = 0.0, "all acquired samples are zero; the image is zero"
+    result = solver(method)(acquisition, chosen, sigma)
+    notes = "; ".join(text for text in (result.certificate.note, note) if text)
+    certificate = replace(
+        result.certificate, note=notes, sigma=sigma, wall_s=time.perf_counter() - started
+    )
+    return replace(result, certificate=certificate)
+
+
+def reference_sigma(acquisition: Acquisition) -> tuple[float, str]:
+    """Noise level that weights refer to, and a note where it is not the data's own.
+
+    Where the total sigma is 0 it is 1e-4 times the RMS of the calibration samples (of all
+    acquired samples where there is no calibration region).
+    """
+    if acquisition.sigma > 0:
+        return acquisition.sigma, ""
+    kspace, mask = acquisition.kspace, acquisition.mask
+    region = tuple(
+        slice(n // 2 - c // 2, n // 2 - c // 2 + c) if c else slice(None)
+        for n, c in zip(kspace.shape[2:], (*acquisition.calibration, 0)[:2], strict=True)
+    )
+    energy, count = 0.0, 0
+    for plane in range(kspace.shape[0]):
+        part = np.asarray(kspace[plane][(slice(None), *region)])
+        acquired = np.broadcast_to(mask[acquisition.pattern_index[plane]], kspace.shape[2:])
+        energy += float(np.vdot(part, part).real)
+        count += int(acquired[region].sum()) * kspace.shape[1]
+    floor = SIGMA_FLOOR * float(np.sqrt(energy / max(1, count)))
+    return floor, f"noise level unknown (0): a floor of {SIGMA_FLOOR:g} x the RMS of the samples"
+
+
+def _survey(acquisition: Acquisition) -> bool:
+    """Check the samples plane by plane; True where all are zero."""
+    empty = True
+    for plane in range(acquisition.kspace.shape[0]):
+        samples = np.asarray(acquisition.kspace[plane])
+        if not np.isfinite(samples).all():
+            bad = ~np.isfinite(samples)
+            first = (plane, *(int(i) for i in np.argwhere(bad)[0]))
+            raise RecoveryError(
+                f"K-space holds {int(bad.sum())} NaN or infinite samples in plane {plane}; "
+                f"the first is {samples[first[1:]]} at index {first}.",
+                "kspace, index (plane, channel, u, v)",
+                "Remove or repair these samples before recovery.",
+            )
+        empty = empty and not samples.any()
+    return empty

@@ -1,0 +1,202 @@
+"""Settings of every recovery: frozen, checked when made, cheap to import.
+
+Weights are in units of the total noise sigma. ``check_settings`` is what a protocol uses to judge a
+``[[recovery]]`` entry before any data is read.
+"""
+
+from __future__ import annotations
+
+import difflib
+import math
+from collections.abc import Mapping
+from dataclasses import dataclass, field, fields
+from typing import Any
+
+from mrics.errors import RecoveryError
+
+WAVELETS = (
+    "haar",
+    *(f"db{n}" for n in range(2, 11)),
+    *(f"sym{n}" for n in range(2, 11)),
+)
+
+
+def _number(
+    default: Any,
+    low: float = -math.inf,
+    high: float = math.inf,
+    *,
+    above: bool = False,
+    words: tuple[str, ...] = (),
+    whole: bool = False,
+    optional: bool = False,
+) -> Any:
+    """A number field with its range; ``above`` excludes ``low``; ``words`` are also allowed."""
+    rule = {
+        "kind": "whole number" if whole else "number",
+        "low": low,
+        "high": high,
+        "above": above,
+        "words": words,
+        "optional": optional,
+    }
+    return field(default=default, metadata=rule)
+
+
+def _choice(default: str, choices: tuple[str, ...]) -> Any:
+    """A text field with its allowed values."""
+    return field(default=default, metadata={"kind": "choice", "words": choices})
+
+
+@dataclass(frozen=True)
+class Settings:
+    """Base of all settings; checks every field against its declared range.
+
+    Raises
+    ------
+    RecoveryError
+        Where a value is of the wrong kind or out of range.
+    """
+
+    def __post_init__(self) -> None:
+        for entry in fields(self):
+            _check_value(entry.name, getattr(self, entry.name), entry.metadata)
+
+
+@dataclass(frozen=True)
+class ZeroFilled(Settings):
+    """Zero-filled image: the adjoint, missing samples zero; nothing to set."""
+
+
+@dataclass(frozen=True)
+class LeastSquares(Settings):
+    """Least squares by conjugate gradients.
+
+    Attributes
+    ----------
+    damping : float
+        Tikhonov term, relative to the largest eigenvalue of A^H A; 0 gives the solution of
+        minimum norm.
+    iterations : int
+        Most iterations.
+    tolerance : float
+        Relative residual of the normal equations to stop at.
+    """
+
+    damping: float = _number(0.0, 0.0)
+    iterations: int = _number(100, 1, 100_000, whole=True)
+    tolerance: float = _number(1e-5, 0.0, 1.0, above=True)
+
+
+@dataclass(frozen=True)
+class Wavelet(Settings):
+    """L1 of orthonormal wavelet coefficients.
+
+    Attributes
+    ----------
+    weight : float or "auto"
+        Threshold in units of sigma.
+    wavelet : str
+        Orthogonal wavelet.
+    levels : int or None
+        Levels; None for as many as leave at least 5 samples, at most 4.
+    shift : str
+        "none": one fixed transform, certified. "random": a random shift in every iteration,
+        nearly translation-invariant, without a fixed objective.
+    iterations : int or None
+        Most iterations; None for 300, and for 60 where shifts are random.
+    tolerance : float
+        Duality gap, relative to the objective, to stop at.
+    seed : int
+        Seed of the random shifts.
+    """
+
+    weight: float | str = _number("auto", 0.0, words=("auto",))
+    wavelet: str = _choice("sym4", WAVELETS)
+    levels: int | None = _number(None, 1, 12, whole=True, optional=True)
+    shift: str = _choice("random", ("none", "random"))
+    iterations: int | None = _number(None, 1, 100_000, whole=True, optional=True)
+    tolerance: float = _number(1e-3, 0.0, 1.0, above=True)
+    seed: int = _number(0, 0, whole=True)
+
+
+SETTINGS: dict[str, type[Settings]] = {
+    "zero-filled": ZeroFilled,
+    "least-squares": LeastSquares,
+    "wavelet": Wavelet,
+}
+
+
+def check_settings(method: str, settings: Mapping[str, Any]) -> Settings:
+    """The settings of a method as its dataclass.
+
+    Parameters
+    ----------
+    method : str
+        Registry name.
+    settings : mapping
+        Keys and values as a protocol or a caller gives them, without ``method``.
+
+    Raises
+    ------
+    RecoveryError
+        For an unknown method or key (the nearest one is named) or a value out of range.
+    """
+    if method not in SETTINGS:
+        raise RecoveryError(
+            f"There is no recovery called {method!r}{_nearest(method, SETTINGS)}.",
+            "method",
+            f"Choose one of: {', '.join(sorted(SETTINGS))}.",
+        )
+    kind = SETTINGS[method]
+    known = [entry.name for entry in fields(kind)]
+    for key in settings:
+        if key not in known:
+            raise RecoveryError(
+                f"Recovery {method!r} has no setting {key!r}{_nearest(key, known)}.",
+                key,
+                f"Its settings are: {', '.join(known) or 'none'}.",
+            )
+    return kind(**settings)
+
+
+def _nearest(name: object, known: Any) -> str:
+    close = difflib.get_close_matches(str(name), list(known), 1, 0.5)
+    return f"; did you mean {close[0]!r}?" if close else ""
+
+
+def _check_value(name: str, value: Any, rule: Mapping[str, Any]) -> None:
+    words = rule.get("words", ())
+    if rule.get("optional") and value is None:
+        return
+    if isinstance(value, str) and value in words:
+        return
+    if rule["kind"] == "flag":
+        good = isinstance(value, bool)
+        wanted = "true or false"
+    elif rule["kind"] == "choice":
+        good = False
+        wanted = f"one of {', '.join(map(repr, words))}"
+    else:
+        low, high = rule["low"], rule["high"]
+        whole = rule["kind"] == "whole number"
+        good = (
+            isinstance(value, int if whole else int | float)
+            and not isinstance(value, bool)
+            and math.isfinite(value)
+            and (value > low if rule["above"] else value >= low)
+            and value <= high
+        )
+        wanted = f"a {rule['kind']}"
+        if low > -math.inf:
+            wanted += f" {'above' if rule['above'] else 'of at least'} {low:g}"
+        if high < math.inf:
+            wanted += f" and at most {high:g}"
+        wanted = "".join([wanted, *(f" or {word!r}" for word in words)])
+    if not good:
+        hint = _nearest(value, words) if isinstance(value, str) else ""
+        raise RecoveryError(
+            f"Setting {name} must be {wanted}, got {value!r}{hint}.",
+            name,
+            "Change it or leave it out for the default.",
+        )
