@@ -1,26 +1,53 @@
-"""Which phase-encode positions are acquired: laws, draws, regular patterns."""
+"""Which phase-encode positions are acquired: laws, draws, regular patterns, spread, tables."""
 
 from __future__ import annotations
 
+from importlib import import_module
 from typing import Any
 
 from mrics.sampling.pattern import Pattern
-
-__all__ = ["DRAWS", "LAWS", "PATTERNS", "Pattern", "check_sampling", "draw_entry", "draw_pattern"]
 
 _LAZY = {
     "DRAWS": "vocabulary",
     "LAWS": "laws",
     "PATTERNS": "vocabulary",
+    "Spread": "spread_of_point",
+    "TransformSpread": "spread_of_wavelets",
     "check_sampling": "vocabulary",
     "draw_entry": "draw",
     "draw_pattern": "draw",
+    "entry_keys": "vocabulary",
+    "law_quanta": "table",
+    "read_pattern": "table",
+    "redraw": "draw",
+    "spread": "spread_of_point",
+    "training_energy": "source",
+    "transform_spread": "spread_of_wavelets",
+    "write_table": "table",
 }
+
+__all__ = [
+    "DRAWS",
+    "LAWS",
+    "PATTERNS",
+    "Pattern",
+    "Spread",
+    "TransformSpread",
+    "check_sampling",
+    "draw_entry",
+    "draw_pattern",
+    "entry_keys",
+    "law_quanta",
+    "read_pattern",
+    "redraw",
+    "spread",
+    "training_energy",
+    "transform_spread",
+    "write_table",
+]
 
 
 def __getattr__(name: str) -> Any:
     if name in _LAZY:
-        from importlib import import_module
-
         return getattr(import_module(f"mrics.sampling.{_LAZY[name]}"), name)
     raise AttributeError(f"module 'mrics.sampling' has no attribute {name!r}")

@@ -1,9 +1,10 @@
 """Laws: how densely a random pattern samples each place in k-space.
 
 A law is a function of the normalised radius (or, ``per_axis``, the product over axes of the same
-function of |k| on each) with its parameters. Only its shape matters: the scale is solved for the
-requested count (:mod:`mrics.sampling.probability`). Radius 1 is the outer border of the grid's
-last cell, at the middle of an edge; corners without a shutter lie further out.
+function of |k| on each) with its parameters, or a map of its own: the k-space energy of training
+scans, or a table. Only its shape matters: the scale is solved for the requested count
+(:mod:`mrics.sampling.probability`). Radius 1 is the outer border of the grid's last cell, at the
+middle of an edge; corners without a shutter lie further out.
 """
 
 from __future__ import annotations
@@ -29,10 +30,14 @@ class Parameter:
 
 @dataclass(frozen=True)
 class Law:
-    """A density over normalised radius t in [0, 1], and its parameters."""
+    """A density over normalised radius t in [0, 1], its parameters, and the key of its map.
+
+    A law with a ``source`` takes a map of the grid's shape in place of the radius.
+    """
 
     density: Callable[..., Field]
     parameters: dict[str, Parameter] = field(default_factory=dict)
+    source: str = ""
 
 
 def _uniform(t: Field, _step: float) -> Field:
@@ -51,6 +56,14 @@ def _inverse_square(t: Field, step: float) -> Field:
     return 1 / np.maximum(t, step) ** 2
 
 
+def _energy(energy: Field, _step: float, power: float, floor: float) -> Field:
+    return floor + (1 - floor) * (energy / energy.max()) ** power
+
+
+def _table(table: Field, _step: float) -> Field:
+    return table / table.max()
+
+
 LAWS: dict[str, Law] = {
     "uniform": Law(_uniform),
     "gaussian": Law(_gaussian, {"width": Parameter(0.3, 0.01, 10.0)}),
@@ -60,6 +73,13 @@ LAWS: dict[str, Law] = {
     ),
     # Krahmer & Ward 2014, IEEE Trans Image Process 23:612-622; 1/|k|^2 from |k| = 1 outwards
     "inverse-square": Law(_inverse_square),
+    # mean k-space energy of training scans, to a power: 0.5 is in proportion to amplitude
+    "energy": Law(
+        _energy,
+        {"power": Parameter(0.5, 0.0, 4.0), "floor": Parameter(0.0, 0.0, 1.0)},
+        source="training",
+    ),
+    "table": Law(_table, source="table"),
 }
 
 
@@ -92,8 +112,9 @@ def law_density(
     *,
     elliptical: bool = False,
     per_axis: bool = False,
+    source: Field | None = None,
 ) -> Field:
-    """Density of a law on a grid, largest value 1 or less, any scale.
+    """Density of a law on a grid, any scale.
 
     Parameters
     ----------
@@ -107,9 +128,13 @@ def law_density(
         With the shutter, radius 1 is the end of the law; without it the corner is.
     per_axis : bool
         Product over axes instead of a function of the radius.
+    source : ndarray, optional
+        Map of the law that takes one (see :mod:`mrics.sampling.source`).
     """
     parameters = law_parameters(law, settings)
     function = LAWS[law].density
+    if source is not None:
+        return function(source, 0.0, **parameters)
     if per_axis:
         product = np.ones(shape)
         for axis, t in enumerate(axis_coordinates(shape, 0.5)):
@@ -118,6 +143,7 @@ def law_density(
             step = 1 / (shape[axis] / 2 + 0.5)
             product = product * function(t, step, **parameters).reshape(reshaped)
         return product
+    # the law ends at the shutter, without one at the corner
     reach = 1.0 if elliptical or len(shape) == 1 else float(np.sqrt(2.0))
     step = 1 / (max(shape) / 2 + 0.5)
     return function(radius(shape, 0.5) / reach, step / reach, **parameters)

@@ -5,24 +5,56 @@ from __future__ import annotations
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from mrics.errors import PatternError
 from mrics.sampling.grid import Mask, signed_indices
 
 
-def lattice(shape: tuple[int, ...], steps: tuple[int, ...], shift: int = 0) -> Mask:
+def lattice(shape: tuple[int, ...], steps: tuple[int, ...], shift: int = 0, frame: int = 0) -> Mask:
     """Every ``steps``-th position through zero frequency, partitions shifted from line to line.
 
     On the n-th acquired phase line (n = 0 at k = 0) the acquired partitions are those with
-    k = n * shift modulo the partition step (Breuer et al. 2006, MRM 55:549-556).
+    k = n * shift modulo the partition step (Breuer et al. 2006, MRM 55:549-556). Frame f is moved
+    by f phase lines, and by one partition more after every cycle of lines, so that as many frames
+    as the acceleration cover the grid once.
     """
-    ku = signed_indices(shape[0])
+    ku = signed_indices(shape[0]) - frame
     lines = ku % steps[0] == 0
     if len(shape) == 1:
         return np.asarray(lines)
-    kv = signed_indices(shape[1])
+    kv = signed_indices(shape[1]) - frame // steps[0]
     start = (ku // steps[0]) * shift
     return np.asarray(lines[:, None] & ((kv[None, :] - start[:, None]) % steps[1] == 0))
+
+
+def check_shift(shift: Any) -> int:
+    """The partition shift per acquired line as a whole number."""
+    if not isinstance(shift, int | np.integer) or isinstance(shift, bool):
+        raise PatternError(
+            f"The shift {shift!r} is not a whole number.",
+            "shift of the pattern 'shifted lattice'",
+            "Give how many partitions each acquired line is moved by, such as 1.",
+        )
+    return int(shift)
+
+
+def alias_positions(
+    shape: tuple[int, ...], steps: tuple[int, ...], shift: int = 0
+) -> NDArray[np.float64]:
+    """Where a lattice puts the aliases of a point, in voxels from it (the reciprocal lattice).
+
+    Returns
+    -------
+    ndarray of float64, shape (R, number of axes)
+        One row per alias, the point itself first, each coordinate in [-N/2, N/2).
+    """
+    n = np.array(shape, dtype=float)
+    turns = np.indices(steps).reshape(len(steps), -1).T / np.array(steps)
+    if len(steps) == 2:
+        # a cell of the lattice is spanned by (step_u, shift) and (0, step_v)
+        turns[:, 0] -= shift * turns[:, 1] / steps[0]
+    return ((turns + 0.5) % 1.0 - 0.5) * n
 
 
 def lattice_steps(

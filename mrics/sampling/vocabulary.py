@@ -15,16 +15,21 @@ import numpy as np
 
 from mrics.errors import PatternError
 from mrics.sampling.laws import LAWS, law_parameters
+from mrics.sampling.regular import check_shift
 
-DRAWS: dict[str, tuple[str, ...]] = {
-    "exact-count": (),
-    "bernoulli": (),
-}
+DRAWS = ("exact-count", "bernoulli", "poisson-disc", "low-discrepancy", "jittered")
+# The keys a pattern takes beside the common ones.
 PATTERNS: dict[str, tuple[str, ...]] = {
-    "random": ("law", "draw", "per_axis"),
+    "random": ("law", "draw", "per_axis", "best_of", "best_by", "frame_draws"),
     "full": (),
-    "equispaced": ("steps",),
+    "equispaced": ("steps", "frame_draws"),
+    "shifted lattice": ("steps", "shift", "frame_draws"),
+    "spokes": ("golden_order", "frame_draws"),
+    "spiral": ("golden_order", "turns", "frame_draws"),
+    "file": ("file",),
 }
+FRAME_DRAWS = ("complementary", "independent", "same")
+CRITERIA = ("point-spread", "wavelet-scales")
 COMMON = (
     "name",
     "pattern",
@@ -52,10 +57,16 @@ class Entry:
         Requested R, each at least 1; empty where the entry leaves it to its steps.
     calibration, partial_fourier : int, float or sequence
         As written, checked against the grid when it is drawn.
+    source : object
+        What the law's map is made of (``training``, ``table``), None for laws of the radius.
     elliptical, per_axis : bool
         Shutter; law per axis.
+    best_of, best_by : int, str
+        Candidates per draw, and what ranks them.
+    frame_draws : str
+        What the frames of a series share.
     options : dict
-        Further keys of the pattern or draw, as written.
+        Further keys of the pattern, as written.
     name : str
         Label.
     """
@@ -67,17 +78,23 @@ class Entry:
     accelerations: tuple[float, ...] = ()
     calibration: Any = 0
     partial_fourier: Any = 1.0
+    source: Any = None
     elliptical: bool = False
     per_axis: bool = False
+    best_of: int = 1
+    best_by: str = "point-spread"
+    frame_draws: str = "same"
     options: dict[str, Any] = field(default_factory=dict)
     name: str = ""
 
 
-def entry_keys(pattern: str, law: str = "", draw: str = "") -> tuple[str, ...]:
-    """Every key an entry of this pattern, law and draw may hold, sorted."""
+def entry_keys(pattern: str, law: str = "") -> tuple[str, ...]:
+    """Every key an entry of this pattern and law may hold, sorted."""
     keys = {*COMMON, *PATTERNS[pattern]}
-    if pattern == "random":
-        keys |= {*LAWS[law].parameters, *DRAWS[draw]}
+    if law:
+        keys |= set(LAWS[law].parameters)
+        if LAWS[law].source:
+            keys.add(LAWS[law].source)
     return tuple(sorted(keys))
 
 
@@ -102,24 +119,45 @@ def parse_entry(entry: dict[str, Any]) -> Entry:
     if pattern == "random":
         law = _known(entry.get("law", "power"), LAWS, "law")
         draw = _known(entry.get("draw", "exact-count"), DRAWS, "draw")
-    _check_keys(entry, pattern, law, draw)
-    flags = {}
-    for key in ("elliptical", "per_axis"):
-        flags[key] = _flag(entry, key)
-    used = {*COMMON, "law", "draw", "per_axis"}
-    parameters = LAWS[law].parameters if law else {}
+    _check_keys(entry, pattern, law)
+    sharing = entry.get("frame_draws", "complementary" if law else "same")
     return Entry(
         pattern=pattern,
         law=law,
         draw=draw,
         law_settings=law_parameters(law, entry) if law else {},
+        source=entry.get(LAWS[law].source) if law else None,
         accelerations=_accelerations(entry.get("acceleration")),
         calibration=entry.get("calibration", 0),
         partial_fourier=entry.get("partial_fourier", 1.0),
-        options={k: v for k, v in entry.items() if k not in used and k not in parameters},
+        elliptical=_flag(entry, "elliptical"),
+        per_axis=_flag(entry, "per_axis"),
+        best_of=_whole(entry.get("best_of", 1), "best_of", 1, 100_000),
+        best_by=_known(entry.get("best_by", "point-spread"), CRITERIA, "best_by"),
+        frame_draws=_known(sharing, FRAME_DRAWS, "frame_draws"),
+        options=_options(entry),
         name=str(entry.get("name", "")),
-        **flags,
     )
+
+
+def _options(entry: dict[str, Any]) -> dict[str, Any]:
+    """Keys of regular patterns, those that need no grid checked."""
+    options: dict[str, Any] = {key: entry[key] for key in ("steps", "file") if key in entry}
+    if "shift" in entry:
+        options["shift"] = check_shift(entry["shift"])
+    if "golden_order" in entry:
+        options["golden_order"] = _whole(entry["golden_order"], "golden_order", 1, 100)
+    if "turns" in entry:
+        turns = entry["turns"]
+        number = isinstance(turns, int | float) and not isinstance(turns, bool)
+        if not number or not 0 < turns <= 1000:
+            raise PatternError(
+                f"turns = {turns!r} is not a number above 0 and up to 1000.",
+                "turns of the pattern 'spiral'",
+                "Give how often an arm goes around, such as 8.",
+            )
+        options["turns"] = float(turns)
+    return options
 
 
 def _known(name: Any, table: Iterable[str], key: str) -> str:
@@ -133,14 +171,13 @@ def _known(name: Any, table: Iterable[str], key: str) -> str:
     )
 
 
-def _check_keys(entry: dict[str, Any], pattern: str, law: str, draw: str) -> None:
-    keys = entry_keys(pattern, law, draw)
-    subject = f"the law {law!r} with the draw {draw!r}" if law else f"the pattern {pattern!r}"
+def _check_keys(entry: dict[str, Any], pattern: str, law: str) -> None:
+    keys = entry_keys(pattern, law)
+    subject = f"The law {law!r}" if law else f"The pattern {pattern!r}"
     for key in entry:
         if key not in keys:
             raise PatternError(
-                f"{subject[0].upper()}{subject[1:]} takes no key {key!r}."
-                f"{_nearest(str(key), keys)}",
+                f"{subject} takes no key {key!r}.{_nearest(str(key), keys)}",
                 str(key),
                 f"Its keys are {', '.join(keys)}.",
             )
@@ -158,6 +195,17 @@ def _flag(entry: dict[str, Any], key: str) -> bool:
             f"{key} = {value!r} is neither true nor false.", key, "Write true or false."
         )
     return bool(value)
+
+
+def _whole(value: Any, key: str, low: int, high: int) -> int:
+    whole = isinstance(value, int | np.integer) and not isinstance(value, bool)
+    if not whole or not low <= value <= high:
+        raise PatternError(
+            f"{key} = {value!r} is not a whole number from {low} to {high}.",
+            key,
+            "Give a whole number in that range.",
+        )
+    return int(value)
 
 
 def _accelerations(value: Any) -> tuple[float, ...]:

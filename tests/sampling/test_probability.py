@@ -112,7 +112,7 @@ def test_calibration_is_always_acquired_and_central():
         ({"exponent": -1}, "exponent = -1 is outside 0 ... 20"),
         ({"law": "gaussian", "width": 0}, "width = 0 is outside"),
         ({"exponnt": 2}, "'exponnt'. The nearest is 'exponent'"),
-        ({"law": "gaussian", "exponent": 2}, "'gaussian' .* takes no key 'exponent'"),
+        ({"law": "gaussian", "exponent": 2}, "'gaussian' takes no key 'exponent'"),
         ({"law": "powr"}, "'powr' is not known. The nearest is 'power'"),
         ({"draw": "exact"}, "'exact' is not known. The nearest is 'exact-count'"),
         ({"seed": 1.5}, "seed 1.5"),

@@ -73,7 +73,7 @@ def test_entry_keys_follow_the_pattern():
     check_sampling({"name": "today", "sampling": "equispaced", "acceleration": 2})
     with pytest.raises(PatternError, match="'equispaced' takes no key 'exponent'"):
         check_sampling({"pattern": "equispaced", "exponent": 2})
-    with pytest.raises(PatternError, match="'equispace' is not known. The nearest"):
+    with pytest.raises(PatternError, match=r"'equispace' is not known\. The nearest"):
         check_sampling({"pattern": "equispace"})
 
 
