@@ -2,25 +2,27 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import ndimage
+from scipy import ndimage, special
 
-from mrics.scan.mask import body_mask
+from mrics.scan.mask import body_mask, spatial_magnitude
 from mrics.scan.volume import Scan
 
-# Median of a Rayleigh variable in units of sigma, sqrt(2 ln 2) (Gudbjartsson & Patz 1995).
-RAYLEIGH_MEDIAN = 1.1774100225154747
-# Mean / SD of Rayleigh noise, sqrt(pi/2) / sqrt(2 - pi/2).
+# Mean / SD of Rayleigh noise, sqrt(pi/2) / sqrt(2 - pi/2) (Gudbjartsson & Patz 1995).
 RAYLEIGH_RATIO = 1.9130583802711007
-# Median of |x| of a Gaussian in units of its SD.
-GAUSS_MAD = 0.6744897501960817
-# Air voxels needed before air is believed.
-LEAST_AIR = 500
-_MARGIN = 3
+# How far the ratio of believed Rayleigh air may lie from that, as a share.
+RATIO_SLACK = 0.12
+# Detail below this share of air means that the noise is not white.
+WHITE = 0.75
+LEAST_BLOCKS = 12
+_BLOCK = 8
+_MARGIN = 2
+# Sum of the squared autocorrelations of white noise after [1 -2 1]: 1 + 2 ((4/6)^2 + (1/6)^2).
+_DETAIL_DEPENDENCE = (1 + 2 * (16 / 36 + 1 / 36)) ** 2
 
 
 @dataclass(frozen=True)
@@ -33,16 +35,17 @@ class Noise:
         Standard deviation of the real part of one voxel, in the scan's units (that of one k-space
         sample where noise is white, since the transform is orthonormal).
     method : str
-        "air": from voxels outside the body; "detail": from the finest detail inside it.
-    voxels : int
-        How many voxels took part.
+        "air": from blocks outside the body; "detail": from the finest detail of quiet blocks;
+        "repeat": from the difference of the first two frames.
+    blocks : int
+        How many blocks of 8 x 8 voxels took part.
     ratio : float
-        Mean / SD of the magnitude in air; 1.913 for Rayleigh noise, 0 where there is no air.
+        Mean / SD of the magnitude in quiet air; 1.913 for Rayleigh noise, 0 where there is none.
     """
 
     sigma: float
     method: str
-    voxels: int
+    blocks: int
     ratio: float
 
 
@@ -52,59 +55,152 @@ def scan_sigma(scan: Scan) -> float:
 
 
 def scan_noise(scan: Scan, mask: NDArray[np.bool_] | None = None) -> Noise:
-    """Estimate the noise of a magnitude or complex scan.
+    """Estimate the noise of a magnitude or complex scan from its quiet blocks.
 
-    Where at least 500 voxels of air (more than 3 voxels away from the body, and not exactly zero)
-    are at hand and their magnitude has the mean-to-SD ratio of Rayleigh noise to 12 %, sigma is
-    their median / sqrt(2 ln 2) (Rayleigh median; magnitude and complex scans alike). Values above
-    5 sigma, which ghosts cause, are left out and the median taken again.
+    The volume is cut into blocks of 8 x 8 voxels in the (i, j) plane; blocks with an exact zero
+    are left out (masked air). Signal only ever adds power to a block, so the noise is the lower
+    end of the blocks' mean powers: their mean below the 90 % point of the gamma law that pure
+    noise would follow, corrected for the cut and solved by iteration from the lowest 5 %.
 
-    Masked, filtered, clipped or absent air says nothing; sigma then comes from the finest detail
-    inside the body: real and imaginary part (or the magnitude, where Rician noise of SNR above 3
-    is Gaussian) are filtered by [1 -2 1] along both plane axes and the median modulus is scaled
-    by 1 / (6 x 0.6745) (in the manner of Immerkaer 1996 and Donoho 1995). Fine structure raises
-    this figure and interpolation lowers it.
+    * air: the power of blocks 2 voxels or more outside the body is 2 n sigma^2, with n = 1
+      (Rayleigh) where mean / SD of their magnitudes is 1.913 to 12 %, and n from the central chi
+      law where a magnitude scan has a larger ratio (root-sum-of-squares of channels,
+      Constantinides et al. 1997). A smaller ratio is no noise, and the air is not believed.
+    * detail: blocks filtered by [1 -2 1] along i and j (Immerkaer 1996), which removes edges
+      along either axis; power is then 36 sigma^2 per part. Complex: all blocks. Magnitude:
+      blocks inside the body, where Rician noise is Gaussian at SNR above 3.
+
+    * repeat: where the scan has frames, the power of the difference of the first two (NEMA MS 1,
+      two-image method), which has no structure as far as they show the same contrast.
+
+    These can only err upwards on white noise, so the smallest is taken, unless detail is less
+    than 0.75 of air: then the noise is not white (interpolated or filtered) and air is right.
 
     Parameters
     ----------
     scan : Scan
-        First frame and first channel are used.
+        First channel; first frame, or the first two.
     mask : ndarray of bool, shape (i, j, k), optional
-        Body mask; made by :func:`body_mask` where not given.
+        Body mask; made by :func:`mrics.scan.body_mask` where not given.
     """
+    data = first_volume(scan)
+    mask = body_mask(data) if mask is None else mask
+    magnitude = spatial_magnitude(data)
+    detail = _detail_noise(data, magnitude, mask)
+    if scan.data.ndim == 4 and scan.frames > 1:
+        repeat = _repeat_noise(scan.data[..., 1] - data, magnitude, mask)
+        detail = repeat if 0 < repeat.sigma < detail.sigma else detail
+    air = air_noise(magnitude, mask)
+    if air is None:
+        return detail
+    many = channels_of_ratio(air.ratio)
+    if many is None or (many > 1 and np.iscomplexobj(data)):
+        return replace(detail, ratio=air.ratio)
+    air = replace(air, sigma=air.sigma / float(np.sqrt(many)))
+    if WHITE * air.sigma <= detail.sigma < air.sigma:
+        return replace(detail, ratio=air.ratio)
+    return air
+
+
+def first_volume(scan: Scan) -> NDArray[Any]:
+    """First frame and first channel, shape (i, j, k)."""
     data = scan.data
     while data.ndim > 3:
         data = data[..., 0]
-    mask = body_mask(data) if mask is None else mask
-    air = air_values(data, mask)
-    if air.size >= LEAST_AIR:
-        sigma = float(np.median(air)) / RAYLEIGH_MEDIAN
-        air = air[air < 5 * sigma]
-        spread = float(air.std()) if air.size else 0.0
-        ratio = float(air.mean()) / spread if spread > 0 else 0.0
-        if abs(ratio / RAYLEIGH_RATIO - 1) < 0.12:
-            return Noise(float(np.median(air)) / RAYLEIGH_MEDIAN, "air", air.size, ratio)
-    else:
-        ratio = 0.0
-    detail = _detail(data, mask)
-    return Noise(float(np.median(detail)) / (6 * GAUSS_MAD), "detail", detail.size, ratio)
+    return data
 
 
-def air_values(data: NDArray[Any], mask: NDArray[np.bool_]) -> NDArray[np.float32]:
-    """Non-zero magnitudes outside the body, more than 3 voxels away from it."""
+def air_noise(magnitude: NDArray[Any], mask: NDArray[np.bool_]) -> Noise | None:
+    """Root of half the mean power in quiet air, or None where there is too little air."""
     near = ndimage.binary_dilation(mask, iterations=_MARGIN)
-    air = np.abs(data[~near])
-    return air[air > 0]
+    usable = _block_mean((magnitude > 0) & ~near) == 1
+    if np.count_nonzero(usable) < LEAST_BLOCKS:
+        return None
+    power = _block_mean(np.square(magnitude))[usable]
+    mean = _block_mean(magnitude)[usable]
+    shape = float(_BLOCK**2)
+    level, count = quiet_mean(power / 2, shape)
+    quiet = power / 2 <= level * special.gammaincinv(shape, 0.98) / shape
+    average, square = float(mean[quiet].mean()), float(power[quiet].mean())
+    spread = float(np.sqrt(max(square - average**2, 0.0)))
+    return Noise(float(np.sqrt(level)), "air", count, average / spread if spread > 0 else 0.0)
 
 
-def _detail(data: NDArray[Any], mask: NDArray[np.bool_]) -> NDArray[Any]:
-    inside = ndimage.binary_erosion(mask, iterations=2)
-    inside = inside if inside.any() else mask
+def channels_of_ratio(ratio: float) -> float | None:
+    """Channels whose root sum of squares has this mean / SD in air (central chi law).
+
+    1 where the ratio is Rayleigh's to 12 %, None where it is smaller.
+    """
+    if ratio < (1 - RATIO_SLACK) * RAYLEIGH_RATIO:
+        return None
+    if ratio < (1 + RATIO_SLACK) * RAYLEIGH_RATIO:
+        return 1.0
+    count = np.geomspace(1, 256, 512)
+    mean = np.sqrt(2) * np.exp(special.gammaln(count + 0.5) - special.gammaln(count))
+    return float(np.interp(ratio, mean / np.sqrt(2 * count - mean**2), count))
+
+
+def _detail_noise(data: NDArray[Any], magnitude: NDArray[Any], mask: NDArray[np.bool_]) -> Noise:
     parts = (data.real, data.imag) if np.iscomplexobj(data) else (data,)
-    return np.concatenate([np.abs(_second_difference(part))[inside] for part in parts])
+    power = np.sum([_block_mean(np.square(second_difference(part))) for part in parts], axis=0)
+    shape = len(parts) * _BLOCK**2 / (2 * _DETAIL_DEPENDENCE)
+    chosen = _whole_blocks(magnitude, None if len(parts) == 2 else mask)
+    mean, count = quiet_mean(power[chosen] / (36 * len(parts)), shape)
+    return Noise(float(np.sqrt(mean)), "detail", count, 0.0)
 
 
-def _second_difference(part: NDArray[Any]) -> NDArray[Any]:
+def _repeat_noise(change: NDArray[Any], magnitude: NDArray[Any], mask: NDArray[np.bool_]) -> Noise:
+    parts = 2 if np.iscomplexobj(change) else 1
+    power = _block_mean(np.square(np.abs(change))) / (2 * parts)
+    chosen = _whole_blocks(magnitude, None if parts == 2 else mask)
+    mean, count = quiet_mean(power[chosen], parts * _BLOCK**2 / 2)
+    return Noise(float(np.sqrt(mean)), "repeat", count, 0.0)
+
+
+def _whole_blocks(magnitude: NDArray[Any], mask: NDArray[np.bool_] | None) -> NDArray[np.bool_]:
+    """Blocks without an exact zero, and inside the body where a mask is given."""
+    whole = _block_mean(magnitude > 0) == 1
+    chosen = whole if mask is None else whole & (_block_mean(mask) == 1)
+    if np.count_nonzero(chosen) >= LEAST_BLOCKS:
+        return chosen
+    return whole if whole.any() else np.ones_like(whole)
+
+
+def quiet_mean(values: NDArray[Any], shape: float) -> tuple[float, int]:
+    """Mean of the purest of several noise powers, and how many they are.
+
+    Parameters
+    ----------
+    values : ndarray of float, 1-D
+        Powers of blocks: noise alone, or noise with signal on top.
+    shape : float
+        Shape of the gamma law of pure noise (1 / its relative variance).
+    """
+    cut = special.gammaincinv(shape, 0.9) / shape
+    correction = special.gammainc(shape + 1, cut * shape) / 0.9
+    mean = float(np.quantile(values, 0.05)) * shape / special.gammaincinv(shape, 0.05)
+    kept = values
+    for _ in range(50):
+        kept = values[values < cut * mean]
+        if kept.size == 0:
+            return float(values.min()), 1
+        moved = float(kept.mean(dtype=np.float64)) / correction
+        if abs(moved - mean) <= 1e-6 * mean:
+            break
+        mean = moved
+    return mean, int(kept.size)
+
+
+def second_difference(part: NDArray[Any]) -> NDArray[Any]:
     """[1 -2 1] along both plane axes; the squared weights sum to 36."""
     once = ndimage.correlate1d(part, [1.0, -2.0, 1.0], axis=0, mode="nearest")
     return ndimage.correlate1d(once, [1.0, -2.0, 1.0], axis=1, mode="nearest")
+
+
+def _block_mean(values: NDArray[Any]) -> NDArray[np.float64]:
+    """Mean over blocks of 8 x 8 in the (i, j) plane, shape (i / 8, j / 8, k)."""
+    size = tuple(min(_BLOCK, n) for n in values.shape[:2])
+    count = tuple(n // b for n, b in zip(values.shape[:2], size, strict=True))
+    cut = values[: count[0] * size[0], : count[1] * size[1]]
+    folded = cut.reshape(count[0], size[0], count[1], size[1], values.shape[2])
+    return folded.mean(axis=(1, 3), dtype=np.float64)
