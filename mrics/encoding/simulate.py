@@ -29,6 +29,7 @@ def undersample(
     sensitivities: Array | None = None,
     covariance: Array | None = None,
     sigma_scan: float | None = None,
+    echo_weights: Array | None = None,
 ) -> Acquisition:
     """Undersampled k-space of a fully sampled image.
 
@@ -59,6 +60,9 @@ def undersample(
     sigma_scan : float, optional
         Noise the scan already holds, in the unit of ``sigma``; default: estimated for scans, 0
         for arrays.
+    echo_weights : ndarray, shape of ``pattern.mask``, optional
+        Signal weight of every position, from :func:`mrics.encoding.echo_weights`; noise is not
+        weighted.
 
     Returns
     -------
@@ -78,6 +82,7 @@ def undersample(
         )
     source = _Source(scan_or_array, pattern, axes)
     mask, index = _masks(source, pattern)
+    decay = _decay(source, pattern, echo_weights)
     maps = _fit_sensitivities(source, sensitivities)
     channels = source.channels if maps is None else int(maps.shape[1])
     relative = None
@@ -91,6 +96,8 @@ def undersample(
         if maps is not None:
             images = images * _planes_of(maps, planes, source.planes)
         block = centred_fft(np.ascontiguousarray(images, dtype=source.dtype))
+        if decay is not None:
+            block *= decay[index[planes]][:, None]
         if sigma > 0:
             for row, plane in enumerate(range(planes.start, planes.stop)):
                 block[row] += _noise(sigma, seed, plane, block[row], root)
@@ -200,9 +207,7 @@ def _masks(source: _Source, pattern: Pattern) -> tuple[NDArray[np.bool_], NDArra
                 source.names[axis],
                 "Draw the pattern for the scan's grid.",
             )
-    masks = pattern.mask if pattern.frames else pattern.mask[None]
-    if not source.two_d:
-        masks = masks[:, :, None]
+    masks = _by_frame(source, pattern, pattern.mask)
     frames = np.repeat(np.arange(source.frames), source.frame_planes)
     if not pattern.frames:
         return masks, np.zeros(source.planes, dtype=np.intp)
@@ -213,6 +218,25 @@ def _masks(source: _Source, pattern: Pattern) -> tuple[NDArray[np.bool_], NDArra
             "Draw the pattern with the scan's number of frames.",
         )
     return masks, frames.astype(np.intp)
+
+
+def _by_frame(source: _Source, pattern: Pattern, values: Array) -> Array:
+    """Values of the pattern's positions as (pattern, u, v or 1)."""
+    framed = values if pattern.frames else values[None]
+    return framed if source.two_d else framed[:, :, None]
+
+
+def _decay(source: _Source, pattern: Pattern, weights: Array | None) -> Array | None:
+    if weights is None:
+        return None
+    if weights.shape != pattern.mask.shape:
+        raise AcquisitionError(
+            f"Echo weights of shape {weights.shape} do not fit the pattern of shape "
+            f"{pattern.mask.shape}.",
+            "echo_weights",
+            "Make them of this pattern.",
+        )
+    return _by_frame(source, pattern, weights.astype(source.dtype))
 
 
 def _fit_sensitivities(source: _Source, maps: Array | None) -> Array | None:

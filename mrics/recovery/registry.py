@@ -11,6 +11,10 @@ from mrics.recovery.settings import Settings
 
 #: name -> module of mrics.recovery holding ``solve(acquisition, settings, sigma) -> Recovered``
 METHODS: dict[str, str] = {
+    "homodyne": "partial_fourier",
+    "pocs": "partial_fourier",
+    "kernel": "kernel",
+    "unfold": "unfold",
     "zero-filled": "zero_filled",
     "least-squares": "least_squares",
     "wavelet": "wavelet",

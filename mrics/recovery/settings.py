@@ -120,7 +120,59 @@ class Wavelet(Settings):
     seed: int = _number(0, 0, whole=True)
 
 
+@dataclass(frozen=True)
+class Unfold(Settings):
+    """Unfolding of regular patterns by sensitivities; nothing to set."""
+
+
+@dataclass(frozen=True)
+class Kernel(Settings):
+    """Missing samples of regular patterns from calibrated neighbours.
+
+    Attributes
+    ----------
+    lines : int
+        Nearest lattice lines a missing sample is made of.
+    samples : int
+        Nearest lattice samples on each of them.
+    damping : float
+        Tikhonov term of the calibration, relative to its largest eigenvalue.
+    combine : str
+        "sensitivities" (highest SNR) or "root-sum-of-squares".
+    """
+
+    lines: int = _number(4, 1, 16, whole=True)
+    samples: int = _number(5, 1, 31, whole=True)
+    damping: float = _number(1e-5, 0.0, 1.0)
+    combine: str = _choice("sensitivities", ("sensitivities", "root-sum-of-squares"))
+
+
+@dataclass(frozen=True)
+class Homodyne(Settings):
+    """Partial Fourier in one step; nothing to set."""
+
+
+@dataclass(frozen=True)
+class Pocs(Settings):
+    """Partial Fourier by projections in turn.
+
+    Attributes
+    ----------
+    iterations : int
+        Most iterations.
+    tolerance : float
+        Relative change of the image to stop at.
+    """
+
+    iterations: int = _number(50, 1, 10_000, whole=True)
+    tolerance: float = _number(1e-4, 0.0, 1.0, above=True)
+
+
 SETTINGS: dict[str, type[Settings]] = {
+    "homodyne": Homodyne,
+    "pocs": Pocs,
+    "kernel": Kernel,
+    "unfold": Unfold,
     "zero-filled": ZeroFilled,
     "least-squares": LeastSquares,
     "wavelet": Wavelet,
