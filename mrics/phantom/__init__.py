@@ -1,1 +1,30 @@
-"""The phantom room."""
+"""Invented objects with closed-form or finely sampled k-space, and the sample data made of them."""
+
+from __future__ import annotations
+
+from importlib import import_module
+from typing import Any
+
+_HOMES = {
+    "Ellipse": "ellipses",
+    "Ellipsoid": "ellipses",
+    "Gaussian": "ellipses",
+    "closed_form_kspace": "ellipses",
+    "make_sample_data": "sample",
+    "shepp_logan": "ellipses",
+}
+
+__all__ = [
+    "Ellipse",
+    "Ellipsoid",
+    "Gaussian",
+    "closed_form_kspace",
+    "make_sample_data",
+    "shepp_logan",
+]
+
+
+def __getattr__(name: str) -> Any:
+    if name in _HOMES:
+        return getattr(import_module(f"mrics.phantom.{_HOMES[name]}"), name)
+    raise AttributeError(f"module {__name__!r} has no attribute {name!r}")

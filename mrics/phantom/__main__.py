@@ -1,0 +1,23 @@
+"""``python -m mrics.phantom OUT_DIR``: make the sample data again."""
+
+from __future__ import annotations
+
+import sys
+
+from mrics.caution import RESEARCH_ONLY
+from mrics.phantom.sample import make_sample_data
+
+
+def main(arguments: list[str]) -> int:
+    """Write the sample data to the folder named."""
+    if len(arguments) != 1 or arguments[0].startswith("-"):
+        print("usage: python -m mrics.phantom OUT_DIR", file=sys.stderr)
+        return 2
+    for path in make_sample_data(arguments[0]):
+        print(path)
+    print(RESEARCH_ONLY)
+    return 0
+
+
+if __name__ == "__main__":
+    sys.exit(main(sys.argv[1:]))

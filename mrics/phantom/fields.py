@@ -1,0 +1,71 @@
+"""Smooth random fields on regular grids: textures, warps and shading of the invented objects."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.sparse import csr_array
+
+from mrics.numerics import stream
+
+Array = NDArray[Any]
+
+# Mean over position of the sum of squared cubic B-spline weights: the variance of one axis.
+_SPLINE_VARIANCE = 151.0 / 315.0
+
+
+class RandomField:
+    """A cubic B-spline through independent normal numbers: zero mean, unit variance, C2 smooth.
+
+    Parameters
+    ----------
+    seed : int
+        Seed of the object.
+    name : str
+        What the field is for; with the seed it fixes the field.
+    spacing : sequence of 3 float
+        Distance of lattice points along the three axes in mm: the field varies over about twice
+        that distance.
+    reach : sequence of 3 float
+        The field is defined for coordinates of modulus up to this many mm.
+    """
+
+    def __init__(
+        self, seed: int, name: str, spacing: Sequence[float], reach: Sequence[float]
+    ) -> None:
+        self._spacing = np.asarray(spacing, dtype=np.float64)
+        self._half = np.ceil(np.asarray(reach) / self._spacing).astype(int) + 2
+        lattice = stream(seed, "field", name).standard_normal(tuple(2 * self._half + 1))
+        self._lattice = (lattice / _SPLINE_VARIANCE**1.5).astype(np.float32)
+
+    def on(self, z: Array, y: Array, x: Array) -> Array:
+        """Values on the grid spanned by three coordinate vectors in mm, float32 (z, y, x)."""
+        across, rows_x = self._weights(np.ravel(x), 2)
+        along, rows_y = self._weights(np.ravel(y), 1)
+        down, rows_z = self._weights(np.ravel(z), 0)
+        part = self._lattice[rows_z[0] : rows_z[1], rows_y[0] : rows_y[1], rows_x[0] : rows_x[1]]
+        n_z, n_y, n_x = part.shape
+        # Smallest products first; each sparse product keeps its long axes contiguous.
+        part = down @ part.reshape(n_z, -1)
+        n_z = part.shape[0]
+        part = across @ np.ascontiguousarray(part.reshape(n_z * n_y, n_x).T)
+        n_x = part.shape[0]
+        part = part.reshape(n_x, n_z, n_y).transpose(2, 1, 0).reshape(n_y, -1)
+        return (along @ part).reshape(-1, n_z, n_x).transpose(1, 0, 2)
+
+    def _weights(self, coordinate: Array, axis: int) -> tuple[csr_array, tuple[int, int]]:
+        """Sparse spline weights (sample, row) and the span of lattice rows they act on."""
+        place = coordinate / self._spacing[axis] + self._half[axis]
+        first = np.floor(place).astype(int) - 1
+        low, high = int(first.min()), int(first.max()) + 4
+        rows = first[:, None] + np.arange(4)
+        away = np.abs(place[:, None] - rows)
+        inner = 2.0 / 3.0 - away**2 * (1.0 - away / 2.0)
+        outer = np.clip(2.0 - away, 0.0, None) ** 3 / 6.0
+        weights = np.where(away < 1.0, inner, outer).astype(np.float32)
+        starts = np.arange(0, weights.size + 1, 4)
+        shape = (len(place), high - low)
+        return csr_array((weights.ravel(), (rows - low).ravel(), starts), shape=shape), (low, high)
