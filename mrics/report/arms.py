@@ -10,80 +10,66 @@ import numpy as np
 from mrics.report.folder import StudyFolder
 from mrics.report.image_figures import PanelRow, Window, error_factor, image_window
 from mrics.report.pattern_figures import PatternPicture
+from mrics.report.pictures import ScanPictures
 from mrics.report.summary import first_metric, shown_slices
 from mrics.report.words import metric_value, metric_words
-from mrics.scan.volume import LETTERS
 
 
 @dataclass(frozen=True)
 class ArmPictures:
     """Images of one arm: the scan and draw they come from, and the slices."""
 
-    scan: dict[str, Any]
-    draw: int | None
+    scan: ScanPictures
+    draw: int
     rows: list[PanelRow]
 
 
-def windows(study: StudyFolder) -> dict[str, Window]:
-    """Image window of every scan and one error scale for all, from the slices that are shown."""
-    grey: dict[str, tuple[float, float]] = {}
+def windows(study: StudyFolder, pictures: list[ScanPictures]) -> dict[str, Window]:
+    """Image window of every scan, and one error scale for all from the worst slices."""
+    grey = {}
     ratios = []
-    for scan in study.scans:
-        reference = study.find("reference", scan["id"])
-        if reference is None:
-            continue
-        indices = studied(scan)
-        body = study.find("body", scan["id"])
-        mask = study.planes(body, indices) > 0 if body else None
-        grey[scan["id"]] = image_window(np.abs(study.planes(reference, indices)), mask)
-        width = grey[scan["id"]][1] - grey[scan["id"]][0]
-        for arm in study.arms:
-            stored = study.find("error", scan["id"], arm["id"])
-            chosen = shown_slices(study, arm["id"], scan["id"], stored.draw) if stored else {}
-            if stored and chosen:
-                index = int(chosen["worst"]["index"])
-                error = np.abs(study.planes(stored, [index])[0])
-                inside = error if mask is None else error[mask[indices.index(index)]]
+    for scan in pictures:
+        identity = scan.entry["id"]
+        grey[identity] = image_window(scan.reference, scan.body)
+        width = grey[identity][1] - grey[identity][0]
+        for one in scan.recovered:
+            chosen = shown_slices(study, one.arm, identity, one.draw)
+            at = scan.position(chosen["worst"]) if chosen else None
+            if at is not None:
+                error = np.abs(one.image[at] - scan.reference[at])
+                inside = error[scan.body[at]]
                 ratios.append(float(np.percentile(inside, 97)) / width if inside.size else 0.0)
     factor = error_factor(ratios)
     return {scan: Window(*ends, factor) for scan, ends in grey.items()}
 
 
-def studied(scan: dict[str, Any]) -> list[int]:
-    """Plane numbers of a scan that were studied."""
-    axis = LETTERS.index(scan["plane_axis"])
-    return [int(i) for i in scan.get("planes") or range(scan["shape"][axis])]
-
-
-def arm_pictures(study: StudyFolder, arm: dict[str, Any]) -> ArmPictures | None:
+def arm_pictures(
+    study: StudyFolder, arm: dict[str, Any], pictures: list[ScanPictures]
+) -> ArmPictures | None:
     """Worst and median slice of an arm, on the scan that holds its worst slice if that is stored.
 
     None where no recovered map of the arm is stored.
     """
     key = first_metric(study)
     where = ((arm.get("metrics") or {}).get(key) or {}).get("worst_where") or {}
-    recovered = study.find("recovered", where.get("scan", ""), arm["id"], where.get("draw"))
-    recovered = recovered or study.find("recovered", where.get("scan", ""), arm["id"])
-    recovered = recovered or study.find("recovered", "", arm["id"])
-    if recovered is None:
+    having = [scan for scan in pictures if scan.of_arm(arm["id"])]
+    having.sort(key=lambda scan: scan.entry["id"] != where.get("scan"))
+    if not having:
         return None
-    scan = study.scan(recovered.scan)
-    reference = study.find("reference", scan["id"])
-    chosen = shown_slices(study, arm["id"], scan["id"], recovered.draw)
-    if reference is None or not chosen:
-        return None
+    scan = having[0]
+    drawn = [one for one in scan.recovered if one.arm == arm["id"]]
+    stack = next((one for one in drawn if one.draw == where.get("draw")), drawn[0])
+    chosen = shown_slices(study, arm["id"], scan.entry["id"], stack.draw)
     words = metric_words(key)
     rows: list[PanelRow] = []
-    for reason in dict.fromkeys(("worst", "median")):
-        row = chosen[reason]
-        if rows and row is chosen["worst"]:
+    for reason, row in chosen.items():
+        at = scan.position(row)
+        if at is None or (rows and row is chosen["worst"]):
             continue
-        index, frame = int(row["index"]), int(row.get("frame") or 0)
-        truth = np.abs(study.planes(reference, [index], frame)[0])
-        image = np.abs(study.planes(recovered, [index], frame)[0])
-        title = f"slice {index}, {reason}\n{words.label} {metric_value(key, row[key])}"
+        truth, image = scan.reference[at], stack.image[at]
+        title = f"slice {row['index']}, {reason}\n{words.label} {metric_value(key, row[key])}"
         rows.append(PanelRow(title, truth, image, image - truth))
-    return ArmPictures(scan, recovered.draw, rows)
+    return ArmPictures(scan, stack.draw, rows) if rows else None
 
 
 def pattern_picture(study: StudyFolder, arm: dict[str, Any]) -> PatternPicture | None:

@@ -10,6 +10,7 @@ from mrics.report.charts import against_acceleration, by_slice
 from mrics.report.folder import StudyFolder, open_folder
 from mrics.report.image_figures import Window, panel_figure
 from mrics.report.pattern_figures import largest_side_value, pattern_figure, point_spread
+from mrics.report.pictures import ScanPictures, load_pictures
 from mrics.report.rendering import render, write_page
 from mrics.report.style_figures import svg_uri
 from mrics.report.summary import (
@@ -19,6 +20,7 @@ from mrics.report.summary import (
     range_marks,
     unfinished,
 )
+from mrics.report.viewer_data import viewer_values
 from mrics.report.words import metric_value, metric_words, number
 
 _CHARTED = ("nrmse", "psnr", "ssim", "hfen")
@@ -50,18 +52,20 @@ def write_report(directory: str | Path) -> Path:
 def page_values(study: StudyFolder) -> dict[str, Any]:
     """Everything the template shows."""
     metrics = metrics_of(study)
-    scales = windows(study)
+    pictures = load_pictures(study)
+    scales = windows(study, pictures)
     charted = tuple(m for m in metrics if m.key in _CHARTED)
     today = next((a for a in study.arms if a.get("today")), None)
     return {
         "study": study.results,
         "about": study.results["protocol"],
         "verdict": study.results.get("verdict") or {},
-        "arms": [_arm(study, arm, charted, scales) for arm in study.arms],
+        "arms": [_arm(study, arm, charted, pictures, scales) for arm in study.arms],
         "today": today,
         "metrics": metrics,
         "marks": {m.key: range_marks(study, m) for m in metrics},
         "limits": limits_of(study),
+        "viewer": viewer_values(study, pictures, scales),
         "first_metric": metric_words(first_metric(study)),
         "chart": svg_uri(against_acceleration(study, charted)) if charted else None,
         "chart_text": _chart_text(study, charted),
@@ -76,7 +80,11 @@ def page_values(study: StudyFolder) -> dict[str, Any]:
 
 
 def _arm(
-    study: StudyFolder, arm: dict[str, Any], metrics: Any, scales: dict[str, Window]
+    study: StudyFolder,
+    arm: dict[str, Any],
+    metrics: Any,
+    pictures: list[ScanPictures],
+    scales: dict[str, Window],
 ) -> dict[str, Any]:
     """One arm with its pictures as data URIs."""
     out: dict[str, Any] = {"row": arm, "units": study.units(arm["id"])}
@@ -92,16 +100,14 @@ def _arm(
             f"point spread with its largest side value {100 * peak:.1f} % of the peak at "
             f"{distance} voxels."
         )
-    shown = arm_pictures(study, arm)
+    shown = arm_pictures(study, arm, pictures)
     out["pictures"] = shown
     if shown is not None:
-        view = study.view(shown.scan)
-        figure = panel_figure(
-            shown.rows, scales[shown.scan["id"]], view.row_mm / view.column_mm, view.ends
-        )
+        view, window = shown.scan.view, scales[shown.scan.entry["id"]]
+        figure = panel_figure(shown.rows, window, view.row_mm / view.column_mm, view.ends)
         out["images"] = svg_uri(figure)
-        out["window"] = scales[shown.scan["id"]]
-        out["images_text"] = _images_text(arm, shown, scales[shown.scan["id"]])
+        out["window"] = window
+        out["images_text"] = _images_text(arm, shown, window)
     limited = [x.metric for x in limits_of(study)]
     chosen = [m for m in metrics if m.key in limited] + [m for m in metrics if m.key not in limited]
     chosen = sorted(chosen[:3], key=metrics.index)
@@ -118,9 +124,9 @@ def _arm(
 def _images_text(arm: dict[str, Any], shown: ArmPictures, window: Window) -> str:
     slices = "; ".join(r.title.replace("\n", ", ") for r in shown.rows)
     return (
-        f"Reference, recovered and error images of {arm['label']}, scan {shown.scan['name']}: "
-        f"{slices}. Window {number(window.low)} to {number(window.high)}, error scale "
-        f"±{number(window.error_end)}."
+        f"Reference, recovered and error images of {arm['label']}, scan "
+        f"{shown.scan.entry['name']}: {slices}. Window {number(window.low)} to "
+        f"{number(window.high)}, error scale ±{number(window.error_end)}."
     )
 
 

@@ -63,6 +63,8 @@ def number(value: Any, digits: int = 3) -> str:
     if power < -4 or power > 6:
         return f"{value:.{digits - 1}e}".replace("-", "−")
     text = f"{value:.{max(0, digits - 1 - power)}f}"
+    if value == round(value) and abs(value) >= 1000:
+        text = f"{value:.0f}"
     return text.replace("-", "−")
 
 
@@ -96,16 +98,16 @@ def percent(share: Any, digits: int = 0) -> str:
 
 
 def settings_text(settings: Any) -> str:
-    """Settings of an arm as "key value, key value"."""
+    """Settings of an arm as "key value, key value", without those its row shows anyway."""
     if not isinstance(settings, dict):
         return ""
     parts = []
     for key, value in settings.items():
-        if value is None or value == {} or value == []:
+        if key in ("name", "acceleration") or value is None or value in ({}, []):
             continue
-        shown = number(value, 4) if isinstance(value, float) else value
+        shown = f"{value:g}" if isinstance(value, float) else value
         if isinstance(value, (list, tuple)):
-            shown = " x ".join(str(v) for v in value)
+            shown = " × ".join(str(v) for v in value)
         parts.append(f"{key.replace('_', ' ')} {shown}")
     return ", ".join(parts)
 

@@ -1,0 +1,137 @@
+"""Images as compact blocks of whole numbers inside the page.
+
+Of every scan, reference and recovered images are rounded to one lattice of ``step``; a block holds
+the reference's lattice numbers, the others hold the recovered image's numbers less the reference's.
+So image values read from the page are within step/2 of the stored maps, errors within one step.
+Numbers are 8-bit, or 16-bit as all low bytes followed by all high bytes, compressed by zlib and
+written in base64. Values beyond ``step * 32767`` (at least eight times the reference's largest) are
+cut there.
+"""
+
+from __future__ import annotations
+
+import base64
+import zlib
+from dataclasses import dataclass, field
+
+import numpy as np
+from numpy.typing import NDArray
+
+from mrics.report.pictures import ScanPictures
+
+TEXT_LIMIT = 19_000_000
+"""Characters of base64 that all blocks of a page may take together."""
+
+_LEVELS = (4096, 2048, 1024, 512, 256)
+_LARGEST = 32767
+
+
+@dataclass(frozen=True)
+class Block:
+    """Whole numbers of one stack of slices; a value is ``step * (offset + number)``."""
+
+    text: str
+    bits: int
+    offset: int
+
+
+@dataclass(frozen=True)
+class ScanBlocks:
+    """Blocks of one scan.
+
+    Attributes
+    ----------
+    pictures : ScanPictures
+        What they were made of.
+    positions : list of int
+        Which of its slices they hold.
+    step : float
+        Lattice constant.
+    reference : Block
+    recovered : list of Block
+        In the order of ``pictures.recovered``.
+    """
+
+    pictures: ScanPictures
+    positions: list[int]
+    step: float
+    reference: Block
+    recovered: list[Block] = field(default_factory=list)
+
+
+def pack(scans: list[ScanPictures], text_limit: int = TEXT_LIMIT) -> list[ScanBlocks]:
+    """Blocks of all scans on the finest lattice that fits, with fewer slices if none does."""
+    if not scans:
+        return []
+    levels = next((n for n in _LEVELS if _estimate(scans, n) <= 0.95 * text_limit), _LEVELS[-1])
+    share = 1.0
+    while True:
+        packed = [_pack_scan(scan, levels, share) for scan in scans]
+        size = sum(_size(one) for one in packed)
+        least = all(len(one.positions) <= 2 for one in packed)
+        if size <= text_limit or least:
+            return packed
+        finer = _LEVELS.index(levels)
+        if finer + 1 < len(_LEVELS):
+            levels = _LEVELS[finer + 1]
+        else:
+            share *= 0.95 * text_limit / size
+
+
+def _size(packed: ScanBlocks) -> int:
+    return len(packed.reference.text) + sum(len(b.text) for b in packed.recovered)
+
+
+def _estimate(scans: list[ScanPictures], levels: int) -> float:
+    """Characters that all slices would take, judged by one slice in twelve of every stack."""
+    total = 0.0
+    for scan in scans:
+        count = len(scan.places)
+        some = list(range(count // 24, count, 12)) or [0]
+        step = _step(scan, levels)
+        truth = _lattice(scan.reference[some], step)
+        sizes = [len(_encode(truth).text)]
+        sizes += [len(_encode(_lattice(r.image[some], step) - truth).text) for r in scan.recovered]
+        total += sum(sizes) * count / len(some)
+    return total
+
+
+def _pack_scan(scan: ScanPictures, levels: int, share: float) -> ScanBlocks:
+    positions = _thinned(scan, share)
+    step = _step(scan, levels)
+    truth = _lattice(scan.reference[positions], step)
+    packed = ScanBlocks(scan, positions, step, _encode(truth))
+    for one in scan.recovered:
+        packed.recovered.append(_encode(_lattice(one.image[positions], step) - truth))
+    return packed
+
+
+def _thinned(scan: ScanPictures, share: float) -> list[int]:
+    """The important slices and others spread evenly over those held."""
+    count = len(scan.places)
+    keep = max(min(2, count), int(share * count))
+    if keep >= count:
+        return list(range(count))
+    spread = [int((k + 0.5) * count / keep) for k in range(keep)]
+    wanted = list(dict.fromkeys([*scan.important, *spread]))
+    return sorted(wanted[:keep])
+
+
+def _step(scan: ScanPictures, levels: int) -> float:
+    largest = float(scan.reference.max(initial=0.0))
+    return (largest if largest > 0 else 1.0) / levels
+
+
+def _lattice(image: NDArray[np.float32], step: float) -> NDArray[np.int32]:
+    numbers = np.rint(image / np.float32(step))
+    return np.minimum(numbers, _LARGEST).astype(np.int32)
+
+
+def _encode(numbers: NDArray[np.int32]) -> Block:
+    low, high = int(numbers.min(initial=0)), int(numbers.max(initial=0))
+    shifted = numbers - low
+    bits = 8 if high - low < 256 else 16
+    raw = (shifted & 255).astype(np.uint8).tobytes()
+    if bits == 16:
+        raw += (shifted >> 8).astype(np.uint8).tobytes()
+    return Block(base64.b64encode(zlib.compress(raw, 6)).decode("ascii"), bits, low)

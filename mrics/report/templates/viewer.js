@@ -1,0 +1,211 @@
+// The viewer: one state, drawn again as a whole whenever it changes.
+
+const $ = (id) => document.getElementById(id);
+const stage = $("v-stage");
+const FACTORS = [1, 2, 5, 10, 20, 50, 100];
+
+const state = {
+  scan: 0, arm: "", other: "", draw: 0, slice: 0, mode: "side", turn: 0, edge: 0.5,
+  zoom: 1, centre: [0.5, 0.5], factor: study.factor, metric: study.metric, probe: null,
+  windows: study.scans.map((s) => [...s.window]),
+};
+let panels = [];
+let shape = "";
+let rasters = [];
+let waiting = false;
+
+const scan = () => study.scans[state.scan];
+const armName = (id) => study.arms.find((a) => a.id === id).label;
+const imageOf = (arm) => {
+  const of = scan().images.filter((i) => i.arm === arm);
+  return of.find((i) => i.draw === state.draw) || of[0];
+};
+const errorEnd = () => (scan().window[1] - scan().window[0]) / state.factor;
+
+function plain(value, digits = 3) {
+  if (value === null || value === undefined || Number.isNaN(value)) return "–";
+  const size = Math.abs(value);
+  if (size === 0) return "0";
+  const text = size >= 1e6 || size < 1e-4 ? value.toExponential(digits - 1)
+    : size >= 10 ** digits ? value.toFixed(0) : value.toPrecision(digits);
+  return text.replace("-", "−");
+}
+
+function element(tag, attributes = {}, ...children) {
+  const made = document.createElement(tag);
+  for (const [key, value] of Object.entries(attributes)) {
+    if (key in made && key !== "style") made[key] = value;
+    else made.setAttribute(key, value);
+  }
+  made.append(...children);
+  return made;
+}
+
+function fill(select, options, value) {
+  select.replaceChildren(...options.map(([v, text]) => element("option", { value: v }, text)));
+  select.value = value;
+}
+
+// What each panel shows: [title, kind, first image, second image].
+function plan() {
+  const { arm, other, mode, turn } = state;
+  const name = armName(arm);
+  if (mode === "flip") {
+    const turns = [["reference", "truth"], [name, "image", arm]];
+    if (other) turns.push([armName(other), "image", other]);
+    return [turns[turn % turns.length]];
+  }
+  if (mode === "swipe") return [[`${other ? armName(other) : "reference"} | ${name}`, "swipe", arm, other]];
+  if (mode === "overlay") {
+    const list = [[`${name}, error laid over`, "overlay", arm]];
+    if (other) list.push([`${armName(other)}, error laid over`, "overlay", other]);
+    return list;
+  }
+  const list = [["reference", "truth"], [name, "image", arm]];
+  if (!other) return [...list, [`error ×${state.factor}`, "error", arm]];
+  return [...list, [armName(other), "image", other],
+    [`${armName(other)} less ${name}, ×${state.factor}`, "between", other, arm],
+    [`error of ${name}, ×${state.factor}`, "error", arm],
+    [`error of ${armName(other)}, ×${state.factor}`, "error", other]];
+}
+
+// Canvases are made again only when the number of panels or the grid changes.
+function layPanels(wanted) {
+  const s = scan();
+  const key = `${wanted.length} ${s.rows} ${s.columns} ${state.scan}`;
+  if (key === shape) return;
+  shape = key;
+  rasters = wanted.map(() => new Raster(s.rows, s.columns)).concat(new Raster(s.rows, s.columns));
+  const across = s.columns * s.columnMm;
+  const down = s.rows * s.rowMm;
+  const several = Math.min(3, wanted.length);
+  stage.style.setProperty("--across", several);
+  stage.style.setProperty("--down", Math.ceil(wanted.length / several));
+  stage.style.setProperty("--shape", across / down);
+  const times = Math.max(1, Math.round((wanted.length > 1 ? 640 : 1024) / Math.max(s.rows, s.columns)));
+  panels = wanted.map((_, index) => {
+    const canvas = element("canvas", { width: s.columns * times, height: s.rows * times });
+    canvas.dataset.panel = index;
+    const cross = element("i", { className: "cross", hidden: true });
+    const ends = s.ends.map((letter, i) => element("span", { className: `end e${i}` }, letter));
+    const frame = element("div", { className: "frame" }, canvas, cross, ...ends);
+    frame.style.aspectRatio = `${across} / ${down}`;
+    const title = element("p", { className: "panel-title" });
+    return { canvas, cross, title, box: element("div", { className: "panel" }, title, frame) };
+  });
+  stage.replaceChildren(...panels.map((p) => p.box));
+}
+
+async function draw() {
+  waiting = false;
+  const s = scan();
+  const wanted = plan();
+  const arms = [...new Set(wanted.flatMap(([, , a, b]) => [a, b]).filter(Boolean))];
+  const marks = JSON.stringify([state.scan, state.arm, state.other, state.draw]);
+  const truth = await numbersOf(s.reference);
+  const change = {};
+  for (const arm of arms) change[arm] = await numbersOf(imageOf(arm));
+  if (marks !== JSON.stringify([state.scan, state.arm, state.other, state.draw])) return;
+  layPanels(wanted);
+  const [low, high] = state.windows[state.scan];
+  const levels = greyLevels(s.step, low, high);
+  const start = state.slice * s.rows * s.columns;
+  const rect = viewRect(s.rows, s.columns, state.zoom, state.centre);
+  wanted.forEach(([title, kind, a, b], index) => {
+    const raster = rasters[index];
+    const { canvas } = panels[index];
+    if (kind === "truth") raster.grey(levels, truth, null, start);
+    else if (kind === "image" || kind === "swipe") raster.grey(levels, truth, change[a], start);
+    else if (kind === "error") raster.difference(change[a], null, s.step, errorEnd(), start);
+    else if (kind === "between") raster.difference(change[a], change[b], s.step, errorEnd(), start);
+    else raster.overlay(levels, truth, change[a], s.step, errorEnd(), start);
+    drawRaster(canvas, raster.canvas, rect);
+    if (kind === "swipe") {
+      const left = rasters[wanted.length].grey(levels, truth, b ? change[b] : null, start);
+      drawRaster(canvas, left, rect, 0, state.edge);
+      const context = canvas.getContext("2d");
+      context.fillStyle = "#e69f00";
+      context.fillRect(Math.round(state.edge * canvas.width) - 1, 0, 3, canvas.height);
+    }
+    panels[index].title.textContent = title;
+    canvas.setAttribute("role", "img");
+    canvas.setAttribute("aria-label", `${title}, ${s.name}, ${sliceName(state.slice)}`);
+  });
+  drawScales(low, high);
+  showProbe(truth, change);
+  showTrack();
+  stage.dataset.painted = [s.id, state.slice, state.mode, state.turn].join(" ");
+}
+
+function refresh() {
+  delete stage.dataset.painted;
+  if (waiting) return;
+  waiting = true;
+  requestAnimationFrame(draw);
+}
+
+function sliceName(position) {
+  const { plane, frame } = scan().slices[position];
+  return `${scan().letters[0]} = ${plane}${scan().frames > 1 ? `, frame ${frame}` : ""}`;
+}
+
+function say(text) {
+  $("v-say").textContent = text;
+}
+
+// Bars under the images: grey window and signed error, with their ends written.
+function drawScales(low, high) {
+  const ramp = $("v-error-bar").getContext("2d");
+  for (let i = 0; i < 255; i += 1) {
+    const c = signed[i];
+    const [r, g, b] = little ? [c & 255, c >> 8 & 255, c >> 16 & 255] : [c >>> 24, c >> 16 & 255, c >> 8 & 255];
+    ramp.fillStyle = `rgb(${r},${g},${b})`;
+    ramp.fillRect(i, 0, 1, 10);
+  }
+  $("v-grey-ends").textContent = `${plain(low)} to ${plain(high)}`;
+  $("v-error-ends").textContent = `−${plain(errorEnd())} to +${plain(errorEnd())} (window ×${state.factor})`;
+}
+
+// Values at the read-out point.
+function showProbe(truth, change) {
+  const s = scan();
+  panels.forEach(({ cross }) => { cross.hidden = true; });
+  if (!state.probe) {
+    $("v-read").textContent = `Point at an image to read values. Stored in steps of ${plain(s.step, 2)}.`;
+    return;
+  }
+  const [row, column] = state.probe;
+  const rect = viewRect(s.rows, s.columns, state.zoom, state.centre);
+  for (const { cross } of panels) {
+    cross.hidden = false;
+    cross.style.left = `${100 * (column + 0.5 - rect.left) / rect.width}%`;
+    cross.style.top = `${100 * (row + 0.5 - rect.top) / rect.height}%`;
+  }
+  const at = state.slice * s.rows * s.columns + row * s.columns + column;
+  const index = voxel(row, column);
+  const mm = worldOf(row, column).map((x) => x.toFixed(1).replace("-", "−"));
+  const parts = [`i ${index.i}, j ${index.j}, k ${index.k}`, `${mm.join(", ")} mm`, `reference ${plain(truth[at] * s.step, 4)}`];
+  for (const arm of [state.arm, state.other].filter(Boolean)) {
+    if (!change[arm]) continue;
+    const error = change[arm][at] * s.step;
+    const sign = error > 0 ? "+" : "";
+    parts.push(`${armName(arm)} ${plain((truth[at] + change[arm][at]) * s.step, 4)}, error ${sign}${plain(error, 3)} (${sign}${plain(100 * error / s.largest, 2)} % of the largest)`);
+  }
+  $("v-read").textContent = parts.join("  ·  ");
+}
+
+function voxel(row, column) {
+  const s = scan();
+  const [p, r, c] = s.letters;
+  return {
+    [p]: s.slices[state.slice].plane,
+    [r]: s.flips[0] ? s.rows - 1 - row : row,
+    [c]: s.flips[1] ? s.columns - 1 - column : column,
+  };
+}
+
+function worldOf(row, column) {
+  const m = scan().mm;
+  const v = [scan().slices[state.slice].plane, row, column, 1];
+  return [0, 1, 2].map((r) => m[4 * r] * v[0] + m[4 * r + 1] * v[1] + m[4 * r + 2] * v[2] + m[4 * r + 3]);
+}
