@@ -94,24 +94,46 @@ class Knee:
         -------
         ndarray of float32, shape (component, z, y, x)
         """
-        return _Painter(self, z, y, x, palette).paint()
+        z, y, x = (np.asarray(axis, dtype=np.float64) for axis in (z, y, x))
+        parts = 1 + max(part for part, _ in palette.values())
+        values = np.zeros((parts, len(z), len(y), len(x)), dtype=np.float32)
+        rows, columns = _leg_box(self, z, y, x)
+        if rows.stop > rows.start and columns.stop > columns.start:
+            painter = _Painter(self, z, y[rows], x[columns], palette, values[:, :, rows, columns])
+            painter.paint()
+        return values
+
+
+def _leg_box(knee: Knee, z: Array, y: Array, x: Array) -> tuple[slice, slice]:
+    """Rows and columns that hold the leg, seen on every fourth point, two such points to spare."""
+    step = 4
+    few = (z[:: max(1, len(z) - 1)], y[::step], x[::step])
+    outline = _Painter(knee, *few, {"air": (0, 0.0)}, np.zeros(0)).outline()
+    held = outline.min(axis=0) < 3.0
+    box = []
+    for axis, length in ((1, len(y)), (0, len(x))):
+        found = np.flatnonzero(held.any(axis=axis))
+        low, high = (found[0] - 2, found[-1] + 3) if len(found) else (0, 0)
+        box.append(slice(max(0, low * step), min(length, high * step)))
+    return box[0], box[1]
 
 
 class _Painter:
     """Paints one block, deep structures last; holds the block's coordinates and fields."""
 
-    def __init__(self, knee: Knee, z: Array, y: Array, x: Array, palette: Palette) -> None:
+    def __init__(
+        self, knee: Knee, z: Array, y: Array, x: Array, palette: Palette, values: Array
+    ) -> None:
         self.knee = knee
         self.palette = palette
-        self.axes = (np.asarray(z, float), np.asarray(y, float), np.asarray(x, float))
+        self.axes = (z, y, x)
+        self.values = values
         sides = -1.0 if knee.mirror else 1.0
         bend = [self.noise(f"warp {a}", (26.0, 26.0, 26.0)) for a in "xyz"]
         f4 = np.float32
         self.x = (sides * f4(1) * x[None, None, :] / knee.scale[0]).astype(f4) + f4(0.9) * bend[0]
         self.y = (y[None, :, None] / knee.scale[1]).astype(f4) + f4(0.9) * bend[1]
         self.z = (z[:, None, None] / knee.scale[2]).astype(f4) + f4(0.8) * bend[2]
-        parts = 1 + max(part for part, _ in palette.values())
-        self.values = np.zeros((parts, len(z), len(y), len(x)), dtype=f4)
 
     def noise(self, name: str, spacing: Sequence[float]) -> Array:
         return self.knee.field(name, spacing).on(*self.axes)
@@ -135,18 +157,22 @@ class _Painter:
         ]
         return reduce(np.minimum, near) if near else None
 
-    def paint(self) -> Array:
+    def outline(self) -> Array:
+        """Distance to the skin."""
+        bulge = self.noise("outline", (34.0, 30.0, 30.0))
+        return anatomy.leg(self.x, self.y, self.z, 1.2 * bulge)
+
+    def paint(self) -> None:
         self.outer_layers()
         self.muscles()
         self.tubes()
         self.joint()
         self.lesions()
-        return self.values
 
     def outer_layers(self) -> None:
         """Skin, fat under it with septa, fascia, and the loose fat that fills the rest."""
-        knee, x, y, z = self.knee, self.x, self.y, self.z
-        self.leg = anatomy.leg(x, y, z, 1.2 * self.noise("outline", (34.0, 30.0, 30.0)))
+        knee, x, y = self.knee, self.x, self.y
+        self.leg = self.outline()
         self.lay(fill(self.leg), "skin", 1.0 + 0.06 * self.noise("skin", (2.5, 2.5, 2.5)))
         lobes = self.noise("fat lobes", (4.6, 3.2, 3.2))
         sheet = ramp(self.noise("fat sheet", (12.0, 8.0, 8.0)), -0.4, 1.4)
