@@ -22,7 +22,14 @@ app = typer.Typer(
 
 Force = Annotated[bool, typer.Option("--force", help="Replace what is there.")]
 Quick = Annotated[bool, typer.Option("--quick", help="Few slices, for a first look.")]
-Workers = Annotated[int, typer.Option("--workers", min=1, help="Processes to compute in.")]
+Workers = Annotated[
+    int | None,
+    typer.Option("--workers", min=1, help="Processes (default: as cores and memory allow)."),
+]
+Cluster = Annotated[
+    str | None,
+    typer.Option("--cluster", help="Dask scheduler, tcp://host:port or local, in place of those."),
+]
 ProtocolFile = Annotated[Path, typer.Argument(metavar="PROTOCOL", help="Protocol file (TOML).")]
 StudyFolder = Annotated[Path, typer.Argument(metavar="DIR", help="Folder of a finished study.")]
 
@@ -72,7 +79,7 @@ def demo(
     """
     from mrics.cli.shipped import demo_protocol
 
-    _run(demo_protocol(), out, quick=False, force=False, workers=1)
+    _run(demo_protocol(), out, quick=False, force=False, workers=None)
 
 
 @app.command()
@@ -121,13 +128,14 @@ def run(
     out: Annotated[Path, typer.Option("--out", help="Study folder.")],
     quick: Quick = False,
     force: Force = False,
-    workers: Workers = 1,
+    workers: Workers = None,
+    cluster: Cluster = None,
 ) -> None:
     """Undersample, recover and measure; write results, maps and the report.
 
     Example: mrics run knee.toml --out knee-study
     """
-    _run(protocol, out, quick=quick, force=force, workers=workers)
+    _run(protocol, out, quick=quick, force=force, workers=workers, cluster=cluster)
 
 
 @app.command()

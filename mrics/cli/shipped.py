@@ -7,7 +7,7 @@ from pathlib import Path
 import mrics
 from mrics.errors import StudyError
 
-DEMO = "knee_3d.toml"
+DEMO = "knee_gre3d.toml"
 
 
 def demo_protocol() -> Path:

@@ -14,7 +14,7 @@ from mrics.protocol.arms import slug
 from mrics.sampling import Pattern
 from mrics.scan import Axes, read_header
 from mrics.study.code_version import code_version
-from mrics.study.prepare import PlaneChoice
+from mrics.study.prepare import PlaneChoice, Prepared, prepare
 from mrics.study.units import Noise, Unit, content_key, draw_of, pattern_grid
 
 
@@ -92,6 +92,14 @@ class StudyPlan:
     noise: Noise
     channel_axis: int | None
 
+    def prepared(self, number: int) -> Prepared:
+        """One of the scans, read and made ready."""
+        return prepare(self.scans[number], self.axes, self.choice, self.channel_axis)
+
+    def scan_bytes(self) -> int:
+        """Memory one scan takes as complex64, the largest of them."""
+        return max(8 * math.prod(read_header(scan.path).shape) for scan in self.scans)
+
     def units(self, folder: Path, hashes: Sequence[str]) -> list[Unit]:
         """Every unit, scan by scan so that each scan is read once; ``hashes`` name the scans."""
         study = self.protocol.study
@@ -129,6 +137,7 @@ class StudyPlan:
                             averages_ratio=ratio,
                             folder=folder,
                             keep_maps=draw == 0,
+                            sha256=sha256,
                         )
                     )
         return units

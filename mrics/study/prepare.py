@@ -70,6 +70,10 @@ class Prepared:
         NRMSE that the reference's own noise alone makes against a noise-free image.
     findings : tuple of Finding
         What the scan shows of its history.
+    sensitivities : ndarray of shape (planes, channel, u, v) or None
+        Simulated receive sensitivities of the studied planes.
+    covariance : ndarray of shape (channel, channel) or None
+        Their noise covariance.
     """
 
     scan: Scan
@@ -82,6 +86,8 @@ class Prepared:
     snr: float
     nrmse_floor: float
     findings: tuple[Finding, ...]
+    sensitivities: NDArray[Any] | None = None
+    covariance: NDArray[Any] | None = None
 
     @property
     def frame_planes(self) -> int:

@@ -12,14 +12,15 @@ from typing import Any
 import numpy as np
 
 from mrics.encoding import undersample
-from mrics.numerics import set_threads
+from mrics.errors import StudyError
 from mrics.protocol import Arm, ScanFiles
 from mrics.quality import error_maps, score_planes
 from mrics.recovery import recover
 from mrics.sampling import Pattern, draw_entry
 from mrics.scan import Axes, Scan, write_nifti
-from mrics.study.files import plain, write_json
+from mrics.study.files import plain
 from mrics.study.prepare import PlaneChoice, Prepared, prepare
+from mrics.study.scratch import SCRATCH, read_scratch
 
 
 @dataclass(frozen=True)
@@ -76,6 +77,8 @@ class Unit:
         Study folder.
     keep_maps : bool
         Whether images are written too.
+    sha256 : str
+        Hash of the scan the study was started with.
     """
 
     key: str
@@ -91,11 +94,12 @@ class Unit:
     averages_ratio: float
     folder: Path
     keep_maps: bool
+    sha256: str
 
     @property
-    def result_path(self) -> Path:
-        """Where the unit's result is written."""
-        return self.folder / "units" / f"{self.key}.json"
+    def scratch(self) -> Path:
+        """Where worker processes find the prepared scan."""
+        return self.folder / SCRATCH / self.scan_id
 
 
 def content_key(**parts: object) -> str:
@@ -115,15 +119,26 @@ def draw_of(arm: Arm, shape: tuple[int, ...], seed: int, draw: int, frames: int 
     )
 
 
-def set_worker_threads() -> None:
-    """One compute thread in a worker process: the pool itself fills the cores."""
-    set_threads(1)
-
-
-def run_unit(unit: Unit) -> dict[str, Any]:
-    """Compute a unit, write its maps and then its result file; return the result."""
-    started = time.perf_counter()
+def run_unit_here(unit: Unit) -> dict[str, Any]:
+    """Compute a unit in the process that prepared the scan."""
     scan = prepare(unit.files, unit.axes, unit.choice, unit.channel_axis)
+    if scan.scan.sha256 != unit.sha256:
+        raise StudyError(
+            "The scan changed while the study ran.",
+            unit.files.path.name,
+            "Run the study again; units of scans that did not change are kept.",
+        )
+    return run_unit(unit, scan)
+
+
+def run_unit_shared(unit: Unit) -> dict[str, Any]:
+    """Compute a unit in a worker process, from the scratch files all workers share."""
+    return run_unit(unit, read_scratch(unit.scratch))
+
+
+def run_unit(unit: Unit, scan: Prepared) -> dict[str, Any]:
+    """Compute a unit and write its maps; return the result, ready for the ledger."""
+    started = time.perf_counter()
     grid = pattern_grid(unit.axes, scan.scan.shape)
     frames = scan.scan.frames if scan.scan.frames > 1 else 0
     pattern = draw_of(unit.arm, grid, unit.seed, unit.draw, frames)
@@ -162,7 +177,6 @@ def run_unit(unit: Unit) -> dict[str, Any]:
         "maps": _write_maps(unit, scan, recovered.image, pattern) if unit.keep_maps else [],
         "timing": {"recovery_s": wall_s, "unit_s": time.perf_counter() - started},
     }
-    write_json(unit.result_path, result)
     # The same digits whether a unit was computed now or read back.
     rounded: dict[str, Any] = plain(result)
     return rounded

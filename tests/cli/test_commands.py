@@ -28,13 +28,10 @@ def mrics(*arguments: object, cwd: Path | None = None) -> subprocess.CompletedPr
 def refused(*arguments: object, says: str) -> str:
     """Run a command in this process; it must be refused: status 2, a message, nothing raised."""
     complaint = io.StringIO()
-    with (
-        pytest.MonkeyPatch.context() as patch,
-        contextlib.redirect_stderr(complaint),
-        pytest.raises(SystemExit) as stop,
-    ):
+    with pytest.MonkeyPatch.context() as patch, contextlib.redirect_stderr(complaint):
         patch.setattr(sys, "argv", ["mrics", *map(str, arguments)])
-        main()
+        with pytest.raises(SystemExit) as stop:
+            main()
     text = re.sub(r"\s+", " ", complaint.getvalue())
     assert stop.value.code == 2, text
     assert re.search(says, text), text

@@ -1,0 +1,106 @@
+"""Where units are computed: in this process, in a pool of processes, or on a cluster."""
+
+from __future__ import annotations
+
+import multiprocessing
+import os
+import signal
+from collections.abc import Callable, Iterator
+from concurrent.futures import Executor, Future, ProcessPoolExecutor
+from contextlib import contextmanager
+from pathlib import Path
+from typing import Any
+
+from mrics.errors import StudyError
+from mrics.numerics import set_threads, threads
+
+# A unit holds the reference, k-space, its un-centred block, the image and the maps.
+_COPIES_OF_A_SCAN = 8
+_PROCESS_BYTES = 300 * 2**20
+
+
+class InProcess(Executor):
+    """The executor that computes at once, in this process (planes still use every thread)."""
+
+    def submit(self, fn: Callable[..., Any], /, *args: Any, **kwargs: Any) -> Future[Any]:
+        """Run the call and return its finished future."""
+        future: Future[Any] = Future()
+        try:
+            future.set_result(fn(*args, **kwargs))
+        except Exception as error:
+            future.set_exception(error)
+        return future
+
+
+def pool(workers: int) -> Executor:
+    """A pool of processes with one compute thread each; Ctrl-C is left to the parent."""
+    return ProcessPoolExecutor(
+        workers,
+        mp_context=multiprocessing.get_context("spawn"),
+        initializer=_start_worker,
+    )
+
+
+def _start_worker() -> None:
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
+    set_threads(1)
+
+
+@contextmanager
+def cluster_executor(address: str, timeout_s: float = 10.0) -> Iterator[Executor]:
+    """An executor on a Dask cluster.
+
+    Parameters
+    ----------
+    address : str
+        ``tcp://host:port`` of a scheduler, or ``local`` for one made here with a worker per core.
+    timeout_s : float
+        How long to wait for an answer.
+
+    Raises
+    ------
+    StudyError
+        Where the package ``distributed`` is missing or the address does not answer.
+    """
+    try:
+        from distributed import Client, LocalCluster
+    except ImportError as error:
+        raise StudyError(
+            "The package distributed, which a cluster needs, is not installed.",
+            "--cluster",
+            "Install it with: pip install 'mrics[cluster]'.",
+        ) from error
+    local = None
+    try:
+        if address == "local":
+            local = LocalCluster(n_workers=threads(), threads_per_worker=1, dashboard_address=None)
+        client = Client(local or address, timeout=timeout_s)
+    except (OSError, ValueError) as error:
+        raise StudyError(
+            f"The cluster {address!r} does not answer within {timeout_s:g} s.",
+            "--cluster",
+            "Check the scheduler's address (tcp://host:port) and that it runs.",
+        ) from error
+    try:
+        client.run(set_threads, 1)
+        yield client.get_executor(pure=False)
+    finally:
+        client.close()
+        if local is not None:
+            local.close()
+
+
+def fitting_workers(scan_bytes: int, units: int) -> int:
+    """Processes that the cores, the units and the free memory allow; at least one."""
+    need = _PROCESS_BYTES + _COPIES_OF_A_SCAN * scan_bytes
+    return max(1, min(threads(), units, int(_free_bytes() * 0.8) // need))
+
+
+def _free_bytes() -> int:
+    try:
+        for line in Path("/proc/meminfo").read_text().splitlines():
+            if line.startswith("MemAvailable:"):
+                return int(line.split()[1]) * 1024
+    except OSError:
+        pass
+    return int(os.sysconf("SC_PAGE_SIZE") * os.sysconf("SC_PHYS_PAGES") // 2)

@@ -1,0 +1,158 @@
+"""From units to what results.json and results.csv hold."""
+
+from __future__ import annotations
+
+import csv
+import io
+import os
+import platform
+from collections.abc import Sequence
+from dataclasses import asdict
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+import mrics
+from mrics.caution import RESEARCH_ONLY
+from mrics.scan import write_nifti
+from mrics.study.aggregate import arm_numbers, overall_verdict
+from mrics.study.code_version import code_version
+from mrics.study.files import plain
+from mrics.study.plan import StudyPlan
+
+SCHEMA = 1
+
+
+def scan_record(plan: StudyPlan, number: int) -> dict[str, Any]:
+    """What is known of a scan before any line is left out."""
+    scan = plan.prepared(number)
+    return {
+        "id": plan.scan_ids[number],
+        "name": scan.scan.name,
+        "sha256": scan.scan.sha256,
+        "shape": list(scan.scan.shape),
+        "voxel_mm": list(scan.scan.voxel_mm),
+        "complex_source": scan.scan.complex_source,
+        "plane_axis": scan.axes.plane,
+        "planes": list(scan.planes),
+        "frames": scan.scan.frames,
+        "sigma": scan.sigma,
+        "snr": scan.snr,
+        "sigma_added": plan.noise.added(scan),
+        "data_range": scan.data_range,
+        "nrmse_floor": scan.nrmse_floor,
+        "findings": [asdict(finding) for finding in scan.findings],
+    }
+
+
+def write_references(plan: StudyPlan, folder: Path) -> list[dict[str, Any]]:
+    """Write every scan's reference magnitude and body mask; return their map entries."""
+    written = []
+    for number, scan_id in enumerate(plan.scan_ids):
+        scan = plan.prepared(number)
+        for kind, stack in (
+            ("reference", np.abs(scan.stack).astype(np.float32)),
+            ("body", scan.body.astype(np.uint8)),
+        ):
+            path = folder / "reference" / f"{scan_id}_{kind}.nii.gz"
+            path.parent.mkdir(exist_ok=True)
+            write_nifti(path, scan.to_volume(stack), scan.scan)
+            written.append(
+                {
+                    "kind": kind,
+                    "scan": scan_id,
+                    "arm": None,
+                    "draw": None,
+                    "file": path.relative_to(folder).as_posix(),
+                }
+            )
+    return written
+
+
+def study_results(
+    plan: StudyPlan,
+    records: list[dict[str, Any]],
+    results: list[dict[str, Any]],
+    references: list[dict[str, Any]],
+) -> dict[str, Any]:
+    """Everything but the timings: arm numbers are computed from the units alone."""
+    protocol = plan.protocol
+    by_arm = {row.arm.id: [r for r in results if r["arm"] == row.arm.id] for row in plan.rows}
+    today = next((row.arm.id for row in plan.rows if row.arm.today), None)
+    numbers = arm_numbers(by_arm, protocol.acceptance, today, protocol.study.seed)
+    arms = []
+    for row in plan.rows:
+        units = by_arm[row.arm.id]
+        certificates = [u["certificate"] for u in units]
+        arms.append(
+            {
+                **row.as_dict(),
+                "acceleration": float(np.mean([u["acceleration"] for u in units])),
+                "acceleration_in_shutter": float(
+                    np.mean([u["acceleration_in_shutter"] for u in units])
+                ),
+                "acquired": float(np.mean([u["acquired"] for u in units])),
+                "metrics": numbers[row.arm.id].metrics,
+                "against_today": numbers[row.arm.id].comparisons,
+                "verdict": numbers[row.arm.id].verdict,
+                "certificates": {
+                    "reached": sum(bool(c["reached"]) for c in certificates),
+                    "of": len(certificates),
+                    "certified": all(c["certified"] for c in certificates),
+                    "note": "; ".join(sorted({c["note"] for c in certificates if c["note"]})),
+                },
+            }
+        )
+    maps = references + [entry for r in results for entry in r["maps"]]
+    units_out = [{k: v for k, v in r.items() if k not in ("timing", "maps")} for r in results]
+    return {
+        "mrics": mrics.__version__,
+        "schema": SCHEMA,
+        "caution": RESEARCH_ONLY,
+        "protocol": {
+            "title": protocol.title,
+            "question": protocol.question,
+            "text": protocol.text,
+            "sha256": protocol.sha256,
+            "values": protocol.values(),
+        },
+        "scans": records,
+        "units": units_out,
+        "arms": arms,
+        "verdict": overall_verdict(arms),
+        "maps": maps,
+        "notes": plan.notes(records),
+        "provenance": provenance(protocol.study.seed),
+    }
+
+
+def provenance(seed: int) -> dict[str, Any]:
+    """Versions, seed and kind of machine; no user, host or path."""
+    from importlib.metadata import version
+
+    packages = ("numpy", "scipy", "numba", "nibabel", "PyWavelets")
+    return {
+        "mrics": mrics.__version__,
+        "code": code_version(),
+        "python": platform.python_version(),
+        "packages": {name: version(name) for name in packages},
+        "machine": f"{platform.system()} {platform.machine()}, {os.cpu_count()} cores",
+        "seed": seed,
+    }
+
+
+def slice_table(results: Sequence[dict[str, Any]]) -> str:
+    """One line per unit and slice, with the arm's and unit's numbers beside it."""
+    stream = io.StringIO()
+    scored = list(dict.fromkeys(k for r in results for part in r["slices"] for k in part))[2:]
+    head = ["arm", "scan", "draw", "slice", "frame", "acceleration", "sigma", "weight", *scored]
+    writer = csv.writer(stream, lineterminator="\n")
+    writer.writerow(head)
+    for result in results:
+        for part in result["slices"]:
+            row = [result["arm"], result["scan"], result["draw"], part["index"], part["frame"]]
+            row += [plain(result[k]) for k in ("acceleration", "sigma", "weight")]
+            row += [plain(part.get(name)) for name in scored]
+            writer.writerow(["" if value is None else value for value in row])
+    return stream.getvalue()
