@@ -16,10 +16,10 @@ def lattice(shape: tuple[int, ...], steps: tuple[int, ...], shift: int = 0, fram
 
     On the n-th acquired phase line (n = 0 at k = 0) the acquired partitions are those with
     k = n * shift modulo the partition step (Breuer et al. 2006, MRM 55:549-556). Frame f is moved
-    by f phase lines, and by one partition more after every cycle of lines, so that as many frames
-    as the acceleration cover the grid once.
+    by f phase lines modulo the step, and by one partition more after every cycle of lines, so that
+    as many frames as the acceleration cover the grid once.
     """
-    ku = signed_indices(shape[0]) - frame
+    ku = signed_indices(shape[0]) - frame % steps[0]
     lines = ku % steps[0] == 0
     if len(shape) == 1:
         return np.asarray(lines)

@@ -81,6 +81,12 @@ def training_energy(
     total, count = np.zeros(shape), 0
     for item in scans:
         scan = item if isinstance(item, Scan) else _stack_scan(item, axes)
+        if not scan.data.any():
+            raise PatternError(
+                "A training scan is zero everywhere.",
+                f"training scan {scan.name!r}",
+                "Name another scan.",
+            )
         _refuse_empty_outer(scan, axes)
         stack = axes.to_planes(scan.data.reshape(*scan.shape[:3], -1))
         if stack.shape[1 : 1 + len(shape)] != shape:
@@ -98,8 +104,6 @@ def training_energy(
         count += len(stack)
     if count == 0:
         raise PatternError("There is no training scan.", "training", "Name at least one scan.")
-    if not total.any():
-        raise PatternError("The training scans are all zero.", "training", "Name other scans.")
     return (total / count).astype(np.float32).astype(np.float64)
 
 

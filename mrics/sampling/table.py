@@ -372,7 +372,7 @@ def _mask_axes(
     elif full.ndim == 4 and full.shape[3] == 1 and grid is not None:
         volume = full[..., 0]  # a 3-D mask that is the same at every readout position
         for axis in range(3):
-            first = volume.take(0, axis)
+            first = np.asarray(volume.take(0, axis))
             if first.shape == grid and (volume == np.expand_dims(first, axis)).all():
                 return first, 0
     raise PatternError(
