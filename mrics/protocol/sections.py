@@ -122,6 +122,11 @@ class Sequence(Section):
     order: Literal["linear", "centre-out", "radial-sector"] | None = Field(
         None, description="how positions are dealt to the echoes of a shot"
     )
+    whole_shots: Literal["add", "drop", "idle"] | None = Field(
+        None,
+        description="how the count is made whole shots: add the next most probable positions, "
+        "drop the least probable, or leave echoes idle (default: add; idle for regular patterns)",
+    )
     dummy_shots: Annotated[int, Field(ge=0, le=10000)] = Field(
         0, description="shots played before data are kept"
     )

@@ -24,8 +24,6 @@ class Shot:
         readout; None where the protocol does not tell.
     basis : str
         How ``slice_ms`` was reckoned.
-    centre : int or None
-        Position in the train (from 0) that holds the centre of k-space, where timing fixes it.
     findings : tuple of str
         What was assumed.
     """
@@ -34,7 +32,6 @@ class Shot:
     fixed: bool
     slice_ms: float | None
     basis: str
-    centre: int | None
     findings: tuple[str, ...]
 
 
@@ -85,11 +82,11 @@ def _single(sequence: Sequence) -> Shot:
             "Remove echo_train_length, or choose a turbo-spin-echo, prepared or planar family.",
         )
     if sequence.echo_time_ms is None:
-        return Shot(1, True, None, "", 0, ())
+        return Shot(1, True, None, "", ())
     half = _readout_ms(sequence) / 2
     lasts = sequence.echo_time_ms + half + _inversion(sequence)
     basis = "echo time" + (" and half a readout" if half else "")
-    return Shot(1, True, lasts, basis + _with_inversion(sequence), 0, ())
+    return Shot(1, True, lasts, basis + _with_inversion(sequence), ())
 
 
 def _turbo(sequence: Sequence) -> Shot:
@@ -107,12 +104,10 @@ def _turbo(sequence: Sequence) -> Shot:
             True,
             None,
             "",
-            None,
             ("echo_spacing_ms is not given: whether the echo train fits was not checked.",),
         )
     first, last = spacing, length * spacing
     findings = []
-    centre = None
     if sequence.echo_time_ms is not None:
         echo = sequence.echo_time_ms / spacing
         if not 0.5 <= echo < length + 0.5:
@@ -131,7 +126,7 @@ def _turbo(sequence: Sequence) -> Shot:
             )
     lasts = (length + 0.5) * spacing + _inversion(sequence)
     basis = f"{length} echoes {spacing:g} ms apart" + _with_inversion(sequence)
-    return Shot(length, True, lasts, basis, centre, tuple(findings))
+    return Shot(length, True, lasts, basis, tuple(findings))
 
 
 def _prepared(sequence: Sequence, partitions: int | None) -> Shot:
@@ -154,7 +149,7 @@ def _prepared(sequence: Sequence, partitions: int | None) -> Shot:
     if spacing is None or delay is None:
         missing = "echo_spacing_ms" if spacing is None else "inversion_time_ms"
         findings.append(f"{missing} is not given: whether the train fits was not checked.")
-        return Shot(length, True, None, "", centre, tuple(findings))
+        return Shot(length, True, None, "", tuple(findings))
     before = centre * spacing
     if delay <= before:
         raise _impossible(
@@ -166,7 +161,7 @@ def _prepared(sequence: Sequence, partitions: int | None) -> Shot:
         )
     lasts = delay + (length - centre) * spacing
     basis = f"inversion time and {length - centre} positions {spacing:g} ms apart after it"
-    return Shot(length, True, lasts, basis, centre, tuple(findings))
+    return Shot(length, True, lasts, basis, tuple(findings))
 
 
 def _planar(sequence: Sequence, acquired: int) -> Shot:
@@ -182,7 +177,7 @@ def _planar(sequence: Sequence, acquired: int) -> Shot:
     spacing = sequence.echo_spacing_ms
     if spacing is None:
         findings.append("echo_spacing_ms is not given: whether the train fits was not checked.")
-        return Shot(length, fixed, sequence.echo_time_ms, "echo time", None, tuple(findings))
+        return Shot(length, fixed, sequence.echo_time_ms, "echo time", tuple(findings))
     played = min(length, acquired)
     # Without partial Fourier half the train comes before the centre of k-space.
     before = spacing * (played // 2)
@@ -192,7 +187,6 @@ def _planar(sequence: Sequence, acquired: int) -> Shot:
             fixed,
             played * spacing,
             f"{played} echoes {spacing:g} ms apart",
-            None,
             tuple(findings),
         )
     if sequence.echo_time_ms < before:
@@ -203,7 +197,7 @@ def _planar(sequence: Sequence, acquired: int) -> Shot:
         before = sequence.echo_time_ms
     lasts = sequence.echo_time_ms + max(0.0, played * spacing - before)
     basis = f"echo time and the rest of {played} echoes {spacing:g} ms apart"
-    return Shot(length, fixed, lasts, basis, None, tuple(findings))
+    return Shot(length, fixed, lasts, basis, tuple(findings))
 
 
 def _check_readout(sequence: Sequence) -> None:
