@@ -4,13 +4,13 @@ Of every scan, reference and recovered images are rounded to one lattice of ``st
 the reference's lattice numbers, the others hold the recovered image's numbers less the reference's.
 So image values read from the page are within step/2 of the stored maps, errors within one step.
 Numbers are 8-bit, or 16-bit as all low bytes followed by all high bytes, compressed by zlib and
-written in base64. Values beyond ``step * 32767`` (at least eight times the reference's largest) are
-cut there.
+written in base 85 (four bytes as five digits, most significant first), whose digits need no
+escaping in a page. Values beyond ``step * 32767`` (at least eight times the reference's largest)
+are cut there.
 """
 
 from __future__ import annotations
 
-import base64
 import zlib
 from dataclasses import dataclass, field
 
@@ -19,8 +19,8 @@ from numpy.typing import NDArray
 
 from mrics.report.pictures import ScanPictures
 
-TEXT_LIMIT = 19_000_000
-"""Characters of base64 that all blocks of a page may take together."""
+DIGITS = "".join(chr(c) for c in range(33, 127) if chr(c) not in "\"&'<>\\`{}")
+"""The 85 digits: printable characters without those that mean something in markup or scripts."""
 
 _LEVELS = (4096, 2048, 1024, 512, 256)
 _LARGEST = 32767
@@ -28,9 +28,22 @@ _LARGEST = 32767
 
 @dataclass(frozen=True)
 class Block:
-    """Whole numbers of one stack of slices; a value is ``step * (offset + number)``."""
+    """Whole numbers of one stack of slices; a value is ``step * (offset + number)``.
+
+    Attributes
+    ----------
+    text : str
+        Base-85 text of the compressed numbers.
+    size : int
+        Compressed bytes, without the padding of the text.
+    bits : int
+        8 or 16.
+    offset : int
+        Added to every number.
+    """
 
     text: str
+    size: int
     bits: int
     offset: int
 
@@ -59,8 +72,15 @@ class ScanBlocks:
     recovered: list[Block] = field(default_factory=list)
 
 
-def pack(scans: list[ScanPictures], text_limit: int = TEXT_LIMIT) -> list[ScanBlocks]:
-    """Blocks of all scans on the finest lattice that fits, with fewer slices if none does."""
+def pack(scans: list[ScanPictures], text_limit: int) -> list[ScanBlocks]:
+    """Blocks of all scans on the finest lattice that fits, with fewer slices if none does.
+
+    Parameters
+    ----------
+    scans : list of ScanPictures
+    text_limit : int
+        Characters that all blocks may take together.
+    """
     if not scans:
         return []
     levels = next((n for n in _LEVELS if _estimate(scans, n) <= 0.95 * text_limit), _LEVELS[-1])
@@ -134,4 +154,14 @@ def _encode(numbers: NDArray[np.int32]) -> Block:
     raw = (shifted & 255).astype(np.uint8).tobytes()
     if bits == 16:
         raw += (shifted >> 8).astype(np.uint8).tobytes()
-    return Block(base64.b64encode(zlib.compress(raw, 6)).decode("ascii"), bits, low)
+    compressed = zlib.compress(raw, 6)
+    return Block(text_of(compressed), len(compressed), bits, low)
+
+
+def text_of(data: bytes) -> str:
+    """Bytes in base 85, padded with zero bytes to a multiple of four."""
+    words = np.frombuffer(data + bytes(-len(data) % 4), dtype=">u4").astype(np.uint32)
+    digits = np.empty((len(words), 5), dtype=np.uint8)
+    for place in range(4, -1, -1):
+        words, digits[:, place] = words // 85, words % 85
+    return np.frombuffer(DIGITS.encode(), dtype=np.uint8)[digits].tobytes().decode("ascii")

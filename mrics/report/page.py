@@ -23,6 +23,9 @@ from mrics.report.summary import (
 from mrics.report.viewer_data import viewer_values
 from mrics.report.words import metric_value, metric_words, number
 
+PAGE_LIMIT = 24_000_000
+"""Characters a page may have; images get what figures and tables leave."""
+
 _CHARTED = ("nrmse", "psnr", "ssim", "hfen")
 
 
@@ -56,16 +59,19 @@ def page_values(study: StudyFolder) -> dict[str, Any]:
     scales = windows(study, pictures)
     charted = tuple(m for m in metrics if m.key in _CHARTED)
     today = next((a for a in study.arms if a.get("today")), None)
+    arms = [_arm(study, arm, charted, pictures, scales) for arm in study.arms]
+    drawn = sum(len(v) for arm in arms for v in arm.values() if isinstance(v, str))
+    room = max(PAGE_LIMIT // 4, PAGE_LIMIT - drawn)
     return {
         "study": study.results,
         "about": study.results["protocol"],
         "verdict": study.results.get("verdict") or {},
-        "arms": [_arm(study, arm, charted, pictures, scales) for arm in study.arms],
+        "arms": arms,
         "today": today,
         "metrics": metrics,
         "marks": {m.key: range_marks(study, m) for m in metrics},
         "limits": limits_of(study),
-        "viewer": viewer_values(study, pictures, scales),
+        "viewer": viewer_values(study, pictures, scales, room),
         "first_metric": metric_words(first_metric(study)),
         "chart": svg_uri(against_acceleration(study, charted)) if charted else None,
         "chart_text": _chart_text(study, charted),

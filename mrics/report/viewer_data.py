@@ -5,7 +5,7 @@ from __future__ import annotations
 import base64
 from typing import Any
 
-from mrics.report.blocks import Block, ScanBlocks, pack
+from mrics.report.blocks import DIGITS, Block, ScanBlocks, pack
 from mrics.report.colours import signed_table
 from mrics.report.folder import StudyFolder
 from mrics.report.image_figures import Window
@@ -14,17 +14,25 @@ from mrics.report.summary import first_metric, metrics_of
 
 
 def viewer_values(
-    study: StudyFolder, pictures: list[ScanPictures], windows: dict[str, Window]
+    study: StudyFolder, pictures: list[ScanPictures], windows: dict[str, Window], text_limit: int
 ) -> dict[str, Any] | None:
     """Data and blocks of the viewer, None where no image is stored.
+
+    Parameters
+    ----------
+    study : StudyFolder
+    pictures : list of ScanPictures
+    windows : dict of scan id to Window
+    text_limit : int
+        Characters that the blocks may take.
 
     Returns
     -------
     dict
-        "data" for the JSON block, "blocks" as name to base64 text, "left_out" as sentences on
+        "data" for the JSON block, "blocks" as name to text, "left_out" as sentences on
         slices that the page does not hold.
     """
-    packed = [one for one in pack(pictures) if one.recovered]
+    packed = [one for one in pack(pictures, text_limit) if one.recovered]
     if not packed:
         return None
     blocks: dict[str, str] = {}
@@ -32,7 +40,7 @@ def viewer_values(
     def put(block: Block) -> dict[str, Any]:
         name = f"block-{len(blocks)}"
         blocks[name] = block.text
-        return {"block": name, "bits": block.bits, "offset": block.offset}
+        return {"block": name, "size": block.size, "bits": block.bits, "offset": block.offset}
 
     scans = []
     for one in packed:
@@ -53,6 +61,7 @@ def viewer_values(
         "metric": first_metric(study),
         "chosen": (study.results.get("verdict") or {}).get("arm"),
         "factor": next(iter(windows.values())).factor,
+        "digits": DIGITS,
         "colours": base64.b64encode(signed_table().tobytes()).decode("ascii"),
     }
     return {"data": data, "blocks": blocks, "left_out": _left_out(packed)}

@@ -1,14 +1,19 @@
-// Image blocks: base64 text in the page -> whole numbers, decoded when first needed.
+// Image blocks: base-85 text in the page -> whole numbers, decoded when first needed.
 
 const study = JSON.parse(document.getElementById("study-data").textContent);
 const decoded = new Map();
 
+const digitOf = new Uint8Array(128);
+[...study.digits].forEach((digit, value) => { digitOf[digit.charCodeAt(0)] = value; });
+
 function bytesOf(text) {
-  if (Uint8Array.fromBase64) return Uint8Array.fromBase64(text);
-  const plain = atob(text);
-  const bytes = new Uint8Array(plain.length);
-  for (let i = 0; i < plain.length; i += 1) bytes[i] = plain.charCodeAt(i);
-  return bytes;
+  const words = new DataView(new ArrayBuffer(text.length / 5 * 4));
+  for (let i = 0, at = 0; i < text.length; i += 5, at += 4) {
+    let word = 0;
+    for (let j = 0; j < 5; j += 1) word = word * 85 + digitOf[text.charCodeAt(i + j)];
+    words.setUint32(at, word);
+  }
+  return new Uint8Array(words.buffer);
 }
 
 async function inflate(bytes) {
@@ -17,7 +22,8 @@ async function inflate(bytes) {
 }
 
 async function decode(facts) {
-  const raw = await inflate(bytesOf(document.getElementById(facts.block).textContent));
+  const text = document.getElementById(facts.block).textContent;
+  const raw = await inflate(bytesOf(text).subarray(0, facts.size));
   const count = facts.bits === 8 ? raw.length : raw.length / 2;
   const numbers = new Int16Array(count);
   if (facts.bits === 8) {

@@ -7,7 +7,7 @@ function packed(r, g, b) {
 }
 
 const signed = (() => {
-  const bytes = bytesOf(study.colours);
+  const bytes = Uint8Array.from(atob(study.colours), (c) => c.charCodeAt(0));
   return Uint32Array.from({ length: 255 }, (_, i) => packed(bytes[3 * i], bytes[3 * i + 1], bytes[3 * i + 2]));
 })();
 
