@@ -130,12 +130,17 @@ def run(
     force: Force = False,
     workers: Workers = None,
     cluster: Cluster = None,
+    require_pass: Annotated[
+        bool, typer.Option("--require-pass", help="Exit with status 3 when no arm passes.")
+    ] = False,
 ) -> None:
     """Undersample, recover and measure; write results, maps and the report.
 
     Example: mrics run knee.toml --out knee-study
     """
-    _run(protocol, out, quick=quick, force=force, workers=workers, cluster=cluster)
+    results = _run(protocol, out, quick=quick, force=force, workers=workers, cluster=cluster)
+    if require_pass and results["verdict"]["arm"] is None:
+        raise typer.Exit(3)
 
 
 @app.command()
@@ -149,7 +154,45 @@ def report(folder: StudyFolder) -> None:
     typer.echo(f"report: {write_report(folder)}\n{RESEARCH_ONLY}")
 
 
-def _run(protocol: Path, out: Path, **settings: Any) -> None:
+@app.command()
+def compare(
+    before: Annotated[Path, typer.Argument(metavar="DIR_A", help="Folder of a finished study.")],
+    after: Annotated[Path, typer.Argument(metavar="DIR_B", help="Folder of another.")],
+) -> None:
+    """Two studies side by side: what changed in the protocol, which numbers moved.
+
+    Example: mrics compare knee-study knee-study-2
+    """
+    from mrics.cli.tables import difference_lines
+    from mrics.study import compare_studies
+
+    typer.echo(difference_lines(compare_studies(before, after)))
+
+
+@app.command()
+def inspect(
+    scans: Annotated[list[Path], typer.Argument(metavar="SCAN...", help="NIfTI files.")],
+    phase: Annotated[
+        Path | None, typer.Option("--phase", help="Phase file of a single magnitude scan.")
+    ] = None,
+    imaginary: Annotated[
+        Path | None, typer.Option("--imaginary", help="Imaginary part of a single real scan.")
+    ] = None,
+) -> None:
+    """What was done to a scan before it came here, and what that does to a study.
+
+    Example: mrics inspect knee_mag.nii.gz --phase knee_phase.nii.gz
+    """
+    from mrics.cli.tables import inspection_lines
+    from mrics.scan import Axes, inspect_scan, read_scan
+
+    for path in scans:
+        scan = read_scan(path, phase=phase, imaginary=imaginary)
+        typer.echo(inspection_lines(scan, inspect_scan(scan, Axes())))
+    typer.echo(RESEARCH_ONLY)
+
+
+def _run(protocol: Path, out: Path, **settings: Any) -> dict[str, Any]:
     from mrics.cli.progress import progress_line
     from mrics.cli.tables import verdict_lines
     from mrics.report import run_study
@@ -158,3 +201,4 @@ def _run(protocol: Path, out: Path, **settings: Any) -> None:
         results = run_study(protocol, out, progress=progress, **settings)
     typer.echo(verdict_lines(results))
     typer.echo(f"report:  {out / 'report.html'}\n{RESEARCH_ONLY}")
+    return results

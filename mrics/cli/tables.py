@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 import textwrap
+from collections.abc import Sequence
 from typing import Any
 
 from mrics.protocol import minutes
-from mrics.study import StudyPlan
+from mrics.scan import Finding, Scan
+from mrics.study import Difference, StudyPlan
 
 WIDTH = 100
 
@@ -67,3 +69,54 @@ def verdict_lines(results: dict[str, Any]) -> str:
         for finding in scan["findings"]:
             lines.append(f"warning: {scan['id']}: {finding['what']} ({finding['where']})")
     return "\n".join(lines)
+
+
+def difference_lines(difference: Difference) -> str:
+    """Two studies compared, section by section; sections without content are left out."""
+    lines: list[str] = []
+    for title, changes in (("protocol", difference.changes), ("scans", difference.scans)):
+        if changes:
+            lines.append(f"{title}:")
+            lines += [f"  {c.key}: {_shown(c.before)} -> {_shown(c.after)}" for c in changes]
+    for title, arms in (
+        ("arms only in the first", difference.only_before),
+        ("arms only in the second", difference.only_after),
+    ):
+        if arms:
+            lines.append(f"{title}: {', '.join(arms)}")
+    if difference.verdicts:
+        lines.append("verdicts:")
+        lines += [f"  {arm}: {a} -> {b}" for arm, a, b in difference.verdicts]
+    if difference.moves:
+        lines.append("means that moved:")
+        for move in difference.moves:
+            how = "no interval in one of them"
+            if move.beyond is not None:
+                how = "the intervals do not overlap" if move.beyond else "within the intervals"
+            lines.append(f"  {move.arm}, {move.metric}: {move.before:g} -> {move.after:g}, {how}")
+    return "\n".join(lines) if lines else "no difference"
+
+
+def inspection_lines(scan: Scan, findings: Sequence[Finding]) -> str:
+    """A scan's findings: what, where, how sure, which way it biases a study, what to do."""
+    shape = " x ".join(str(n) for n in scan.shape)
+    lines = [f"{scan.name}: {shape}, {scan.complex_source}"]
+    for finding in findings:
+        parts = [
+            f"{finding.code} ({finding.where}): {finding.what}",
+            f"statistic {finding.statistic:.4g}, threshold {finding.threshold:.4g}",
+            finding.bias,
+            f"what to do: {finding.advice}",
+        ]
+        for number, part in enumerate(parts):
+            indent = "  " if number == 0 else "    "
+            lines += textwrap.wrap(
+                part, WIDTH, initial_indent=indent, subsequent_indent=indent + "  "
+            )
+    if not findings:
+        lines.append("  nothing found")
+    return "\n".join(lines)
+
+
+def _shown(value: Any) -> str:
+    return "none" if value is None else str(value)

@@ -6,13 +6,24 @@ from importlib import import_module
 from typing import Any
 
 _HOME = {
+    "Difference": "compare",
     "PlanRow": "plan",
     "StudyPlan": "plan",
+    "compare_studies": "compare",
+    "load_results": "compare",
     "plan_study": "plan",
     "run_study": "run",
 }
 
-__all__ = ["PlanRow", "StudyPlan", "plan_study", "run_study"]
+__all__ = [
+    "Difference",
+    "PlanRow",
+    "StudyPlan",
+    "compare_studies",
+    "load_results",
+    "plan_study",
+    "run_study",
+]
 
 
 def __getattr__(name: str) -> Any:
