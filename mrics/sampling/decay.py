@@ -9,7 +9,6 @@ from numpy.typing import NDArray
 
 from mrics.errors import PatternError
 from mrics.sampling.grid import Field, Mask, signed_indices
-from mrics.sampling.ordered import squared_radius
 from mrics.sampling.pattern import Pattern
 
 _STEPS = 64
@@ -41,47 +40,33 @@ class DecaySpread:
         return tuple(a / b for a, b in zip(self.width, self.width_without, strict=True))
 
 
-def decay_weights(
+def decay_spread(
     pattern: Pattern, times_ms: NDArray[np.float64], t2_ms: float, frame: int = 0
-) -> Field:
-    """Decay factor of every acquired position, 1 at the centre of k-space, 0 where not acquired.
+) -> DecaySpread:
+    """Width of a point under decay, free of what undersampling itself does to it.
+
+    Positions left out get the time of the nearest acquired one, so that the decay over k-space is
+    seen alone.
 
     Parameters
     ----------
     pattern : Pattern
         With its order.
     times_ms : ndarray of shape (train_length,)
-        Time of every echo.
+        Time of every echo after the excitation.
     t2_ms : float
         T2, or T2* for echo-planar trains.
     frame : int
         Which frame.
-
-    Returns
-    -------
-    ndarray of float64, shape of the grid
-        exp(-(t - t_centre)/T2): contrast at the effective echo time, blur relative to it.
 
     Raises
     ------
     PatternError
         For a pattern without order, or a T2 that is not above 0.
     """
-    time, mask, centre = _times(pattern, times_ms, t2_ms, frame)
-    return np.where(mask, np.exp(-(time - centre) / t2_ms), 0.0)
-
-
-def decay_spread(
-    pattern: Pattern, times_ms: NDArray[np.float64], t2_ms: float, frame: int = 0
-) -> DecaySpread:
-    """Width of a point under decay, free of what undersampling itself does to it.
-
-    Positions left out get the weight of the nearest acquired one, so that the decay over k-space
-    is seen alone. Parameters as :func:`decay_weights`.
-    """
     from scipy.ndimage import distance_transform_edt
 
-    time, mask, _ = _times(pattern, times_ms, t2_ms, frame)
+    time, mask = _times(pattern, times_ms, t2_ms, frame)
     nearest = distance_transform_edt(~mask, return_distances=False, return_indices=True)
     filled = np.exp(-time[tuple(nearest)] / t2_ms)
     flat = np.ones(pattern.grid) if pattern.shutter is None else pattern.shutter.astype(float)
@@ -95,8 +80,8 @@ def decay_spread(
 
 def _times(
     pattern: Pattern, times_ms: NDArray[np.float64], t2_ms: float, frame: int
-) -> tuple[Field, Mask, float]:
-    """Time of every acquired position of a frame, its mask, and the time of the centre."""
+) -> tuple[Field, Mask]:
+    """Time of every acquired position of a frame, and its mask."""
     if pattern.order is None:
         raise PatternError(
             "The pattern has no order of acquisition.", "order", "Order it by order_pattern."
@@ -105,11 +90,9 @@ def _times(
         raise PatternError(f"T2 = {t2_ms!r} ms is not above 0.", "t2_ms", "Give T2 in ms.")
     before = int(pattern.mask[:frame].sum()) if pattern.frames else 0
     mask = pattern.mask[frame] if pattern.frames else pattern.mask
-    positions = np.argwhere(mask)
-    played = times_ms[pattern.order[before : before + len(positions), 1]]
     time = np.zeros(mask.shape)
-    time[mask] = played
-    return time, mask, float(played[squared_radius(positions, pattern.grid).argmin()])
+    time[mask] = times_ms[pattern.order[before : before + int(mask.sum()), 1]]
+    return time, mask
 
 
 def _width(weights: Field, axis: int) -> float:
