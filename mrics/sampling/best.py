@@ -11,9 +11,6 @@ from mrics.numerics import map_blocks
 from mrics.sampling.grid import Field
 from mrics.sampling.realise import Drawn
 from mrics.sampling.spread_of_point import incoherent_peak, point_spread
-from mrics.sampling.spread_of_wavelets import transform_spread
-
-CRITERIA = ("point-spread", "wavelet-scales")
 
 
 def best_of(
@@ -48,6 +45,8 @@ def best_of(
         drawn = draw(index)
         masks = drawn.mask if drawn.mask.ndim > probability.ndim else drawn.mask[None]
         if by == "wavelet-scales":
+            from mrics.sampling.spread_of_wavelets import transform_spread
+
             return drawn, max(transform_spread(mask).worst for mask in masks)
         return drawn, max(incoherent_peak(mask, probability) for mask in masks)
 

@@ -73,6 +73,8 @@ def disc_draw(
             "Use jittered, low-discrepancy or exact-count for 1-D patterns.",
         )
     problem = _Problem.of(quanta, calibration, generator, quanta if law is None else law)
+    if problem.count == 0:
+        return DiscDraw(calibration.copy(), 0.0)
     low, high, best = 0.0, _LARGEST_C, None
     for _ in range(_HALVINGS):
         c = (low + high) / 2

@@ -40,6 +40,7 @@ def draw_pattern(
     acceleration: float = 4,
     calibration: int | tuple[int, ...] = 24,
     seed: int = 0,
+    frames: int = 0,
     **law_settings: Any,
 ) -> Pattern:
     """Draw a sampling pattern.
@@ -59,10 +60,12 @@ def draw_pattern(
         Fully sampled central positions, per axis; 24 is 24 lines in 1-D, 24 x 24 in 2-D.
     seed : int
         The same seed gives the same pattern on any machine.
+    frames : int
+        0 for one pattern, else a pattern per frame.
     **law_settings
         Any further key of a sampling entry: the law's parameters (``exponent``, ``width``, ...),
         ``elliptical``, ``partial_fourier``, ``best_of``, or ``pattern`` for a regular family, which
-        then stands in place of law and draw; ``frames`` for a series.
+        then stands in place of law and draw.
 
     Returns
     -------
@@ -75,7 +78,6 @@ def draw_pattern(
         For values out of range, unknown keys, and accelerations the grid cannot hold; the largest
         or smallest feasible one is named.
     """
-    frames = law_settings.pop("frames", 0)
     entry: dict[str, Any] = {"calibration": calibration, **law_settings}
     if entry.get("pattern", "random") == "random":
         entry |= {"law": law, "draw": draw}

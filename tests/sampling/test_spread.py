@@ -4,7 +4,8 @@ import numpy as np
 import pytest
 import pywt
 
-from mrics.sampling import draw_entry, draw_pattern, spread, transform_spread
+from mrics.errors import PatternError
+from mrics.sampling import draw_entry, draw_pattern, radial_profile, spread, transform_spread
 from mrics.sampling.masks import pattern_of_mask
 from mrics.sampling.regular import alias_positions
 
@@ -179,3 +180,26 @@ def test_coherence_of_fourier_with_spikes_and_with_haar():
     haar = dense(size, "haar", 6)
     assert np.sqrt(size) * np.abs(fourier).max() == pytest.approx(1)
     assert np.sqrt(size) * np.abs(fourier @ haar.T).max() == pytest.approx(np.sqrt(size))
+
+
+@pytest.mark.parametrize(("shape", "frames"), [((128,), 0), ((64, 48), 0), ((64, 48), 3)])
+def test_radial_profile_counts_positions_by_radius(shape, frames):
+    pattern = draw_pattern(shape, acceleration=3, calibration=8, frames=frames, seed=1)
+    profile = radial_profile(pattern, rings=8)
+    p = pattern.probability[0] if frames else pattern.probability
+    free = np.prod(pattern.calibration)
+    assert profile.expected.sum() == pytest.approx(p.sum() - free)
+    sizes = profile.expected / profile.law
+    assert sizes.sum() == pytest.approx(p.size - free)
+    held = pattern.mask.sum() / max(frames, 1) - free
+    assert (profile.found * sizes).sum() == pytest.approx(held)
+    inner = np.abs(np.arange(shape[0]) - shape[0] // 2) / (shape[0] / 2)
+    if len(shape) == 1:
+        ring = (inner > 0.25) & (inner <= 0.375)
+        assert profile.law[2] == pytest.approx(p[ring].mean())
+        assert profile.found[2] == pytest.approx(pattern.mask[ring].mean())
+
+
+def test_regular_patterns_have_no_profile():
+    with pytest.raises(PatternError, match="has no law to compare with"):
+        radial_profile(draw_entry({"pattern": "full"}, (64,)))
