@@ -9,9 +9,18 @@ from pathlib import Path
 from typing import Any
 
 from mrics.errors import MricsError, StudyError
-from mrics.protocol import Arm, Protocol, ScanFiles, Timing, console_difference, scan_time
+from mrics.protocol import (
+    Arm,
+    Protocol,
+    ScanFiles,
+    Timing,
+    console_difference,
+    limit_findings,
+    scan_time,
+)
 from mrics.protocol.arms import slug
 from mrics.sampling import Pattern
+from mrics.sampling.ordered import Ordered
 from mrics.scan import Axes, read_header
 from mrics.study.code_version import code_version
 from mrics.study.prepare import PlaneChoice, Prepared, prepare
@@ -26,15 +35,20 @@ class PlanRow:
     ----------
     arm : Arm
         The arm.
-    pattern : Pattern
-        Its first draw on the first scan's grid.
+    played : Ordered
+        Its first draw on the first scan's grid, in the order the sequence plays it.
     timing : Timing
         Scan time of the arm and of the full scan.
     """
 
     arm: Arm
-    pattern: Pattern
+    played: Ordered
     timing: Timing
+
+    @property
+    def pattern(self) -> Pattern:
+        """The first draw."""
+        return self.played.pattern
 
     @property
     def calibration_share(self) -> float:
@@ -54,6 +68,9 @@ class PlanRow:
             "recovery_settings": self.arm.recovery_settings,
             "acceleration_target": self.arm.acceleration,
             "calibration_share": self.calibration_share,
+            "relative_snr": self.timing.relative_snr,
+            "shots": self.timing.shots,
+            "effective_echo_ms": self.played.centre_ms,
             "scan_time_s": self.timing.scan_time_s,
             "full_scan_time_s": self.timing.full_scan_time_s,
         }
@@ -120,6 +137,7 @@ class StudyPlan:
                         noise=(self.noise.sigma, self.noise.snr, self.noise.percent, ratio),
                         draw=draw,
                         seed=study.seed,
+                        sequence=self._played_by(),
                         code=code_version(),
                     )
                     units.append(
@@ -130,9 +148,9 @@ class StudyPlan:
                             axes=self.axes,
                             choice=self.choice,
                             channel_axis=self.channel_axis,
+                            protocol=self.protocol,
                             arm=row.arm,
                             draw=draw,
-                            seed=study.seed,
                             noise=self.noise,
                             averages_ratio=ratio,
                             folder=folder,
@@ -177,11 +195,30 @@ class StudyPlan:
     def findings(self) -> list[str]:
         """What the timing rests on, each said once, and how it compares with the console."""
         said = [text for row in self.rows for text in row.timing.findings]
+        for row in self.rows:
+            played = (*row.played.findings, *limit_findings(self.protocol.sequence, row.pattern))
+            said += [f"{row.arm.label}: {text}" for text in played]
         today = next((row for row in self.rows if row.arm.today), None)
         if today is not None:
             console = console_difference(self.protocol.sequence, today.timing.scan_time_s)
             said += [console] if console else []
         return list(dict.fromkeys(said))
+
+    def _played_by(self) -> dict[str, Any]:
+        """The keys of the sequence and the study on which order and decay depend."""
+        keys = (
+            "family",
+            "echo_train_length",
+            "echo_spacing_ms",
+            "echo_time_ms",
+            "inversion_time_ms",
+            "order",
+            "whole_shots",
+        )
+        values = {key: getattr(self.protocol.sequence, key) for key in keys}
+        if self.protocol.study.echo_train_decay:
+            values["tissue_t2_ms"] = self.protocol.sequence.tissue_t2_ms
+        return values
 
     def _draws(self, row: PlanRow) -> int:
         """A regular pattern has no luck in it: without added noise one draw says all."""
@@ -231,14 +268,13 @@ def plan_study(protocol: Protocol, *, quick: bool = False) -> StudyPlan:
     for number, (grid, name) in enumerate(grids.items()):
         for arm in arms:
             try:
-                pattern = draw_of(arm, grid, study.seed, 0)
+                played = draw_of(protocol, arm, grid, 0)
             except MricsError as error:
                 where = f"{protocol.path}: arm {arm.label}, grid of {name}"
                 raise type(error)(error.what, f"{where}; {error.where}", error.fix) from error
             if number == 0:
-                rows.append(
-                    PlanRow(arm, pattern, scan_time(protocol, pattern, arm=arm, slices=slices))
-                )
+                timing = scan_time(protocol, played.pattern, arm=arm, slices=slices)
+                rows.append(PlanRow(arm, played, timing))
     return StudyPlan(
         protocol=protocol,
         axes=axes,

@@ -11,12 +11,13 @@ from typing import Any
 
 import numpy as np
 
-from mrics.encoding import undersample
+from mrics.encoding import echo_weights, undersample
 from mrics.errors import StudyError
-from mrics.protocol import Arm, ScanFiles
+from mrics.protocol import Arm, Protocol, ScanFiles, play_pattern
 from mrics.quality import error_maps, score_planes
 from mrics.recovery import recover
 from mrics.sampling import Pattern, draw_entry
+from mrics.sampling.ordered import Ordered
 from mrics.scan import Axes, Scan, write_nifti
 from mrics.study.files import plain
 from mrics.study.prepare import PlaneChoice, Prepared, prepare
@@ -63,12 +64,12 @@ class Unit:
         Label of the scan in the results.
     files, axes, choice, channel_axis
         How the scan is read.
+    protocol : Protocol
+        The protocol: seed, sequence, decay.
     arm : Arm
         The arm.
     draw : int
         Number of the draw.
-    seed : int
-        Seed of the study.
     noise : Noise
         Noise added.
     averages_ratio : float
@@ -87,9 +88,9 @@ class Unit:
     axes: Axes
     choice: PlaneChoice
     channel_axis: int | None
+    protocol: Protocol
     arm: Arm
     draw: int
-    seed: int
     noise: Noise
     averages_ratio: float
     folder: Path
@@ -108,15 +109,23 @@ def content_key(**parts: object) -> str:
     return hashlib.sha256(text.encode()).hexdigest()[:24]
 
 
-def draw_of(arm: Arm, shape: tuple[int, ...], seed: int, draw: int, frames: int = 0) -> Pattern:
-    """Pattern of one draw of an arm.
+def draw_of(
+    protocol: Protocol, arm: Arm, shape: tuple[int, ...], draw: int, frames: int = 0
+) -> Ordered:
+    """One draw of an arm, as the protocol's sequence plays it.
 
     Arms with the same sampling entry and acceleration share their draws, whatever their recovery,
     and so do all scans of one grid: arms are compared on the same patterns.
     """
-    return draw_entry(
-        arm.sampling, shape, arm.acceleration, seed, frames=frames, identity=("draw", draw)
+    drawn = draw_entry(
+        arm.sampling,
+        shape,
+        arm.acceleration,
+        protocol.study.seed,
+        frames=frames,
+        identity=("draw", draw),
     )
+    return play_pattern(protocol, drawn)
 
 
 def run_unit_here(unit: Unit) -> dict[str, Any]:
@@ -141,7 +150,7 @@ def run_unit(unit: Unit, scan: Prepared) -> dict[str, Any]:
     started = time.perf_counter()
     grid = pattern_grid(unit.axes, scan.scan.shape)
     frames = scan.scan.frames if scan.scan.frames > 1 else 0
-    pattern = draw_of(unit.arm, grid, unit.seed, unit.draw, frames)
+    pattern = draw_of(unit.protocol, unit.arm, grid, unit.draw, frames).pattern
     # Fewer averages than the reference: its noise is raised by what the missing averages add.
     fewer = scan.sigma * float(np.sqrt(max(0.0, unit.averages_ratio - 1.0)))
     added = float(np.hypot(unit.noise.added(scan), fewer))
@@ -151,6 +160,7 @@ def run_unit(unit: Unit, scan: Prepared) -> dict[str, Any]:
         sigma=added,
         seed=_noise_seed(unit, scan),
         sigma_scan=scan.sigma,
+        echo_weights=_decay(unit.protocol, pattern),
     )
     recovered = recover(acquisition, method=unit.arm.recovery, **unit.arm.recovery_settings)
     slices = score_planes(recovered.image, scan.stack, scan.body, scan.data_range)
@@ -161,7 +171,7 @@ def run_unit(unit: Unit, scan: Prepared) -> dict[str, Any]:
         "arm": unit.arm.id,
         "scan": unit.scan_id,
         "draw": unit.draw,
-        "seed": unit.seed,
+        "seed": unit.protocol.study.seed,
         "sigma": acquisition.sigma,
         "sigma_added": added,
         "weight": certificate["weight"],
@@ -190,8 +200,16 @@ def pattern_grid(axes: Axes, shape: tuple[int, ...]) -> tuple[int, ...]:
 
 def _noise_seed(unit: Unit, scan: Prepared) -> int:
     """The same noise for every arm of a scan and draw, so that arms compare in pairs."""
-    identity = f"{unit.seed}\x1fnoise\x1f{scan.scan.sha256}\x1f{unit.draw}"
+    identity = f"{unit.protocol.study.seed}\x1fnoise\x1f{scan.scan.sha256}\x1f{unit.draw}"
     return int.from_bytes(hashlib.sha256(identity.encode()).digest()[:8], "little")
+
+
+def _decay(protocol: Protocol, pattern: Pattern) -> Any:
+    """Signal weight of every position by its echo, where the protocol asks for it."""
+    sequence = protocol.sequence
+    if not protocol.study.echo_train_decay or sequence.echo_spacing_ms is None:
+        return None
+    return echo_weights(pattern, sequence.echo_spacing_ms, float(sequence.tissue_t2_ms or 0))
 
 
 def _places(scan: Prepared) -> list[tuple[int, int]]:

@@ -26,7 +26,7 @@ def test_what_changed_and_what_moved(tmp_path: Path) -> None:
     moved = {(m.arm, m.metric) for m in found.moves}
     assert ("power-law-r2-zero-filled", "nrmse") in moved
     same = compare_studies(tmp_path / "a", tmp_path / "a")
-    assert not (same.changes or same.moves or same.verdicts or same.scans)
+    assert (same.changes, same.moves, same.verdicts, same.scans) == ((), (), (), ())
 
 
 def test_intervals_that_do_not_overlap_are_told(tmp_path: Path) -> None:

@@ -120,7 +120,7 @@ def test_the_pattern_image_is_the_pattern(study: tuple[Path, dict[str, Any]]) ->
             m["file"] for m in results["maps"] if (m["kind"], m["arm"]) == ("pattern", row.arm.id)
         )
         mask = nibabel.load(folder / "out" / file).get_fdata()[:, 0, 0] > 0
-        np.testing.assert_array_equal(mask, draw_of(row.arm, (40,), 7, 0).mask)
+        np.testing.assert_array_equal(mask, draw_of(plan.protocol, row.arm, (40,), 0).pattern.mask)
         hashes = {u["pattern_hash"] for u in results["units"] if u["arm"] == row.arm.id}
         assert row.pattern.hash in hashes
 
