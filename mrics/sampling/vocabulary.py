@@ -14,8 +14,9 @@ from typing import Any
 import numpy as np
 
 from mrics.errors import PatternError
+from mrics.sampling.grid import check_calibration, check_partial_fourier
 from mrics.sampling.laws import LAWS, law_parameters
-from mrics.sampling.regular import check_shift
+from mrics.sampling.regular import check_shift, lattice_steps
 
 DRAWS = ("exact-count", "bernoulli", "poisson-disc", "low-discrepancy", "jittered")
 # The keys a pattern takes beside the common ones.
@@ -28,6 +29,7 @@ PATTERNS: dict[str, tuple[str, ...]] = {
     "spiral": ("golden_order", "turns", "frame_draws"),
     "file": ("file",),
 }
+_ANY_SIZE = 1 << 30
 FRAME_DRAWS = ("complementary", "independent", "same")
 CRITERIA = ("point-spread", "wavelet-scales")
 COMMON = (
@@ -106,7 +108,19 @@ def check_sampling(entry: dict[str, Any]) -> None:
     PatternError
         For an unknown pattern, law, draw or key (the nearest is named), or a value out of range.
     """
-    parse_entry(entry)
+    parsed = parse_entry(entry)
+    for key, check in (
+        ("calibration", check_calibration),
+        ("partial_fourier", check_partial_fourier),
+    ):
+        value = entry.get(key, 1)
+        # a grid that nothing is too large for; the real one is asked when the entry is drawn
+        check(value, (_ANY_SIZE,) * (1 if np.isscalar(value) else len(value)))
+    if parsed.pattern in ("equispaced", "shifted lattice"):
+        steps = parsed.options.get("steps")
+        grid = (_ANY_SIZE,) * (1 if steps is None or np.isscalar(steps) else len(steps))
+        for acceleration in parsed.accelerations or ((1.0,) if steps is None else (None,)):
+            lattice_steps(grid, acceleration, steps)
 
 
 def parse_entry(entry: dict[str, Any]) -> Entry:

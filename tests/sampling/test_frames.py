@@ -1,11 +1,15 @@
 """Series of frames: complementary, independent, the same."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from binomial import smallest_p_value
 
 from mrics.errors import PatternError
-from mrics.sampling import DRAWS, draw_entry, draw_pattern
+from mrics.sampling import DRAWS, draw_entry, draw_pattern, radial_profile
+from mrics.sampling.disc import disc_conflicts
+from mrics.sampling.grid import calibration_block
 
 SHAPE = (96, 64)
 
@@ -54,6 +58,26 @@ def test_every_frame_keeps_the_law(draw):
     for frame in range(4):
         hits = np.sum([mask[frame] for mask in masks], axis=0)
         assert smallest_p_value(hits[random], p[random], 200) > 1e-3 / (4 * random.sum())
+
+
+def test_every_frame_keeps_its_distances():
+    pattern = series("poisson-disc", law="uniform")
+    block = calibration_block(SHAPE, (8, 8))
+    for mask, c in zip(pattern.mask, pattern.settings["disc_c"], strict=True):
+        assert disc_conflicts(mask, pattern.probability[0], block, c) == 0
+        assert c / np.sqrt(pattern.probability.min()) > 1
+
+
+@pytest.mark.parametrize("draw", ["poisson-disc", "jittered", "low-discrepancy"])
+def test_later_frames_keep_the_radial_profile(draw):
+    # 7 frames at p up to 1: cycles of every length end within the series
+    patterns = [series(draw, frames=7, acceleration=5, seed=s) for s in range(20)]
+    for frame in (3, 6):
+        alone = [
+            replace(q, mask=q.mask[frame], frames=0, probability=q.probability[frame])
+            for q in patterns
+        ]
+        assert radial_profile(alone).deviation() < 0.1
 
 
 def test_the_same_mask_for_all_frames():

@@ -77,6 +77,42 @@ def test_entry_keys_follow_the_pattern():
         check_sampling({"pattern": "equispace"})
 
 
+@pytest.mark.parametrize(
+    ("entry", "message"),
+    [
+        ({"calibration": "24"}, "calibration size '24'"),
+        ({"calibration": -1}, "calibration size -1"),
+        ({"partial_fourier": [0.75, 0.4]}, "fraction 0.4 is outside"),
+        ({"pattern": "equispaced", "acceleration": 2.5}, "not one whole number"),
+        ({"pattern": "equispaced", "acceleration": [4, 6], "steps": [2, 2]}, "multiply to 4"),
+        ({"pattern": "shifted lattice", "steps": [2, 2], "shift": 0.5}, "shift 0.5 is not a whole"),
+        ({"acceleration": "4"}, "acceleration '4' is not a number"),
+        ({"best_of": "many"}, "best_of = 'many'"),
+        ({"per_axis": 1}, "per_axis = 1 is neither"),
+        ({"pattern": "spokes", "shift": 1}, "'spokes' takes no key 'shift'"),
+        ({"law": "energy", "floor": 2}, "floor = 2 is outside"),
+    ],
+)
+def test_entries_are_checked_without_a_grid(entry, message):
+    with pytest.raises(PatternError, match=message):
+        check_sampling(entry)
+
+
+def test_sound_entries_pass():
+    for entry in (
+        {"name": "a", "law": "power", "exponent": 2, "draw": "poisson-disc", "best_of": 8},
+        {"pattern": "shifted lattice", "steps": [2, 2], "shift": 1, "calibration": [24, 16]},
+        {"pattern": "equispaced", "acceleration": [2, 3], "partial_fourier": 0.75},
+        {"law": "energy", "training": ["a.nii.gz"], "acceleration": 4, "calibration": 24},
+    ):
+        check_sampling(entry)
+
+
+def test_a_shifted_lattice_needs_two_axes():
+    with pytest.raises(PatternError, match="needs a 2-D grid"):
+        draw_pattern((64,), pattern="shifted lattice")
+
+
 def test_an_entry_of_several_accelerations_needs_a_choice():
     with pytest.raises(PatternError, match="gives 2 accelerations where one is needed"):
         draw_entry({"law": "power", "acceleration": [2, 4]}, (64,))
