@@ -1,4 +1,4 @@
-"""The encoding room: the forward model of the scan, its noise, and simulation of fewer lines."""
+"""The encoding room: the forward model of the scan, its noise and channels, simulation."""
 
 from __future__ import annotations
 
@@ -7,20 +7,65 @@ from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from mrics.encoding.acquisition import Acquisition as Acquisition
+    from mrics.encoding.channels import combine_channels as combine_channels
+    from mrics.encoding.channels import compress as compress
+    from mrics.encoding.channels import root_sum_of_squares as root_sum_of_squares
+    from mrics.encoding.channels import singular_values as singular_values
+    from mrics.encoding.echoes import echo_weights as echo_weights
+    from mrics.encoding.lattice import Lattice as Lattice
+    from mrics.encoding.lattice import find_lattice as find_lattice
+    from mrics.encoding.measured import acquisition_from_kspace as acquisition_from_kspace
+    from mrics.encoding.noise import border_covariance as border_covariance
     from mrics.encoding.noise import estimate_sigma as estimate_sigma
+    from mrics.encoding.noise import noise_covariance as noise_covariance
+    from mrics.encoding.noise import whitening as whitening
     from mrics.encoding.operator import Encoding as Encoding
+    from mrics.encoding.sensitivities import estimate_sensitivities as estimate_sensitivities
+    from mrics.encoding.sensitivities import with_sensitivities as with_sensitivities
     from mrics.encoding.simulate import undersample as undersample
     from mrics.encoding.stream import blocks as blocks
 
 _HOMES = {
     "Acquisition": "acquisition",
     "Encoding": "operator",
+    "Lattice": "lattice",
+    "acquisition_from_kspace": "measured",
     "blocks": "stream",
+    "border_covariance": "noise",
+    "combine_channels": "channels",
+    "compress": "channels",
+    "echo_weights": "echoes",
+    "estimate_sensitivities": "sensitivities",
     "estimate_sigma": "noise",
+    "find_lattice": "lattice",
+    "noise_covariance": "noise",
+    "root_sum_of_squares": "channels",
+    "singular_values": "channels",
     "undersample": "simulate",
+    "whitening": "noise",
+    "with_sensitivities": "sensitivities",
 }
 
-__all__ = ["Acquisition", "Encoding", "blocks", "estimate_sigma", "undersample"]
+__all__ = [
+    "Acquisition",
+    "Encoding",
+    "Lattice",
+    "acquisition_from_kspace",
+    "blocks",
+    "border_covariance",
+    "combine_channels",
+    "compress",
+    "echo_weights",
+    "estimate_sensitivities",
+    "estimate_sigma",
+    "find_lattice",
+    "noise_covariance",
+    "root_sum_of_squares",
+    "singular_values",
+    "undersample",
+    "whitening",
+    "with_sensitivities",
+]
 
 
 def __getattr__(name: str) -> Any:

@@ -14,12 +14,17 @@ from numpy.typing import NDArray
 
 from mrics.encoding.acquisition import Acquisition
 from mrics.errors import AcquisitionError
+from mrics.numerics import centred_ifft
 
 Array = NDArray[Any]
 #: median of |n| / sigma for complex white noise (Rayleigh): sqrt(2 ln 2)
 _RAYLEIGH_MEDIAN = float(np.sqrt(2 * np.log(2)))
 _OUTER_SHARE = 0.1
 _LEAST_SAMPLES = 64
+#: a median of so many samples is known to 1.2/sqrt(n) = 5 %, so the lowest is not low by luck
+_LEAST_POOL = 500
+#: border energy of central over outer k-space above which the border is not noise
+_SIGNAL_RATIO = 1.5
 
 
 def relative_covariance(covariance: Array, channels: int) -> Array:
@@ -55,6 +60,117 @@ def relative_covariance(covariance: Array, channels: int) -> Array:
     return psi / scale
 
 
+def noise_covariance(samples: Array) -> Array:
+    """Psi from noise samples taken without signal.
+
+    Parameters
+    ----------
+    samples : ndarray of shape (channel, ...), complex
+        At least one sample more than there are channels. The mean is taken out.
+
+    Returns
+    -------
+    ndarray of shape (channel, channel), complex128
+        E[n n^H]/2; with m samples each real variance is known to sqrt(2/(m - 1)) of itself.
+
+    Raises
+    ------
+    AcquisitionError
+        For real or too few samples, NaN, and covariances that are not positive definite.
+    """
+    if samples.ndim < 2 or not np.iscomplexobj(samples):
+        raise AcquisitionError(
+            f"Noise samples must be complex of shape (channel, samples), got {samples.dtype} of "
+            f"shape {samples.shape}.",
+            "noise",
+            "Give the complex samples of a scan without excitation.",
+        )
+    channels = samples.shape[0]
+    flat = samples.reshape(channels, -1).astype(np.complex128)
+    count = flat.shape[1]
+    if count <= channels:
+        raise AcquisitionError(
+            f"{count} noise samples are too few for {channels} channels: the covariance would not "
+            "be positive definite.",
+            "noise",
+            f"Give at least {channels + 1}, better 1000 or more.",
+        )
+    if not np.isfinite(flat).all():
+        raise AcquisitionError(
+            f"Noise samples hold {int((~np.isfinite(flat)).sum())} NaN or infinite values.",
+            "noise",
+            "Leave them out.",
+        )
+    flat -= flat.mean(axis=1, keepdims=True)
+    psi = flat @ flat.conj().T / (2 * (count - 1))
+    relative_covariance(psi, channels)
+    return psi
+
+
+def border_covariance(acquisition: Acquisition, share: float = 0.06) -> Array:
+    """Psi from the image border along the readout, where the object does not reach.
+
+    The readout is never undersampled, so its two ends are free of folded signal. With a full
+    readout in the plane (1-D patterns) the acquired lines are transformed along v and both ends
+    are taken; in 3-D the first and last planes of each frame.
+
+    Parameters
+    ----------
+    acquisition : Acquisition
+        Multi-channel data.
+    share : float
+        Share of the readout that counts as border, both ends together.
+
+    Raises
+    ------
+    AcquisitionError
+        Where the border holds signal (its energy is not even over k-space), or the stack has no
+        readout axis.
+    """
+    rows_only = acquisition.mask.shape[2] == 1
+    planes, u, v = acquisition.shape
+    three_d = acquisition.axes is not None and acquisition.axes.partition is not None
+    if not rows_only and not three_d:
+        raise AcquisitionError(
+            "A bare stack with a 2-D pattern does not say where its readout ends are.",
+            "axes",
+            "Give noise samples, or the axes of the scan.",
+        )
+    frames = acquisition.volume_shape[3] if len(acquisition.volume_shape) == 4 else 1
+    length = v if rows_only else planes // frames
+    edge = max(1, round(share * length / 2))
+    ends = np.r_[0:edge, length - edge : length]
+    inner, outer = [], []
+    chosen = list(range(planes))
+    if not rows_only:
+        chosen = [f * length + int(e) for f in range(frames) for e in ends]
+    near = np.abs(np.arange(u) - u // 2) <= u // 16
+    if not rows_only:
+        near = near[:, None] & (np.abs(np.arange(v) - v // 2) <= v // 16)[None]
+    for plane in chosen:
+        mask = acquisition.mask[acquisition.pattern_index[plane]]
+        data = np.asarray(acquisition.kspace[plane])
+        if rows_only:
+            data, mask = centred_ifft(data, axes=(-1,))[:, :, ends], mask[:, 0]
+        flat = [data[:, mask & part].reshape(len(data), -1) for part in (near, ~near)]
+        inner.append(flat[0])
+        outer.append(flat[1])
+    low, high = np.concatenate(inner, axis=1), np.concatenate(outer, axis=1)
+    ratio = _mean_energy(low) / max(_mean_energy(high), 1e-300)
+    if ratio > _SIGNAL_RATIO:
+        raise AcquisitionError(
+            f"The border holds signal: its central k-space has {ratio:.3g} times the energy of the "
+            "rest.",
+            f"readout border, {2 * edge} of {length} positions",
+            "Give noise samples, or a smaller share.",
+        )
+    return noise_covariance(np.concatenate([low, high], axis=1))
+
+
+def _mean_energy(samples: Array) -> float:
+    return float((samples.real**2 + samples.imag**2).mean()) if samples.size else 0.0
+
+
 def whitening(covariance: Array) -> Array:
     """Matrix W = L^-1 of the Cholesky factor Psi = L L^H, so that W Psi W^H = I."""
     psi = np.asarray(covariance, dtype=np.complex128)
@@ -63,12 +179,13 @@ def whitening(covariance: Array) -> Array:
 
 
 def estimate_sigma(acquisition: Acquisition) -> float:
-    """Noise level from the outermost measured k-space, robust against what signal is left there.
+    """Noise level from where measured k-space holds least signal.
 
-    The outer tenth of the acquired samples, by distance from the centre, is split into bands of
-    equal count; each gives the median modulus over sqrt(2 ln 2) (Rayleigh median), and the lowest
-    band is taken, since object signal can only add. At most 16 planes spread over the stack are
-    read.
+    Samples are pooled in places where an object may be absent: the outer tenth of the acquired
+    samples in four bands by distance from the centre (each over four groups of neighbouring
+    planes), and, where the readout is full, sixteen stretches of the readout after transforming
+    it. Each pool gives the median modulus over sqrt(2 ln 2) (Rayleigh median); the lowest counts,
+    since signal can only add. At most 16 planes spread over the stack are read.
 
     Parameters
     ----------
@@ -78,8 +195,7 @@ def estimate_sigma(acquisition: Acquisition) -> float:
     Returns
     -------
     float
-        Standard deviation of the real part of one k-space sample, mean over channels in the
-        root-mean-square sense.
+        Standard deviation of the real part of one k-space sample, root mean square over channels.
 
     Raises
     ------
@@ -91,12 +207,10 @@ def estimate_sigma(acquisition: Acquisition) -> float:
     radius = np.hypot(
         (np.arange(u)[:, None] - u // 2) / (u / 2), (np.arange(v)[None, :] - v // 2) / (v / 2)
     )
-    variances = np.zeros(acquisition.channels)
-    bands = 4
-    levels: list[list[list[Array]]] = [[[] for _ in range(bands)] for _ in variances]
-    for plane in chosen:
-        mask = np.broadcast_to(acquisition.mask[acquisition.pattern_index[plane]], (u, v))
-        rows, columns = np.nonzero(mask)
+    pools: dict[tuple[str, int, int], list[Array]] = {}
+    for number, plane in enumerate(chosen):
+        own = acquisition.mask[acquisition.pattern_index[plane]]
+        rows, columns = np.nonzero(np.broadcast_to(own, (u, v)))
         if len(rows) < _LEAST_SAMPLES:
             raise AcquisitionError(
                 f"{len(rows)} acquired samples in plane {plane} are too few to estimate noise.",
@@ -105,11 +219,20 @@ def estimate_sigma(acquisition: Acquisition) -> float:
             )
         outer = np.argsort(radius[rows, columns], kind="stable")
         outer = outer[-max(_LEAST_SAMPLES // 2, int(_OUTER_SHARE * len(rows))) :]
-        for channel in range(acquisition.channels):
-            modulus = np.abs(acquisition.kspace[plane, channel][rows[outer], columns[outer]])
-            for band, part in enumerate(np.array_split(modulus, bands)):
-                levels[channel][band].append(part)
-    for channel, split in enumerate(levels):
-        medians = [float(np.median(np.concatenate(part))) for part in split]
-        variances[channel] = (min(medians) / _RAYLEIGH_MEDIAN) ** 2
-    return float(np.sqrt(variances.mean()))
+        data = np.asarray(acquisition.kspace[plane])
+        modulus = np.abs(data[:, rows[outer], columns[outer]])
+        group = number * 4 // len(chosen)
+        for band, part in enumerate(np.array_split(modulus, 4, axis=1)):
+            pools.setdefault(("outer", group, band), []).append(part)
+        if own.shape[1] == 1:
+            lines = np.abs(centred_ifft(data[:, own[:, 0]], axes=(-1,)))
+            for stretch, part in enumerate(np.array_split(lines, 16, axis=2)):
+                flat = part.reshape(len(part), -1)
+                pools.setdefault(("readout", 0, stretch), []).append(flat)
+    joined = {key: np.concatenate(parts, axis=1) for key, parts in pools.items()}
+    enough = [pool for pool in joined.values() if pool.shape[1] >= _LEAST_POOL]
+    if not enough:
+        outer_pools = [pool for key, pool in joined.items() if key[0] == "outer"]
+        enough = [np.concatenate(outer_pools, axis=1)]
+    medians = np.array([np.median(pool, axis=1) for pool in enough]) / _RAYLEIGH_MEDIAN
+    return float(np.sqrt((medians.min(axis=0) ** 2).mean()))

@@ -2,21 +2,21 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from mrics.encoding.acquisition import Acquisition
+from mrics.encoding.channels import drop_silent
 from mrics.encoding.noise import relative_covariance
+from mrics.encoding.source import Source, by_frame, pattern_masks
 from mrics.errors import AcquisitionError
 from mrics.numerics import centred_fft, stream
 from mrics.sampling.pattern import Pattern
 from mrics.scan.volume import Axes, Scan
 
 Array = NDArray[Any]
-_BLOCK_BYTES = 32 * 2**20
 
 
 def undersample(
@@ -80,8 +80,8 @@ def undersample(
             "sigma",
             "Give the standard deviation of the real part of one k-space sample.",
         )
-    source = _Source(scan_or_array, pattern, axes)
-    mask, index = _masks(source, pattern)
+    source = Source(scan_or_array, pattern, axes)
+    mask, index = pattern_masks(source, pattern)
     decay = _decay(source, pattern, echo_weights)
     maps = _fit_sensitivities(source, sensitivities)
     channels = source.channels if maps is None else int(maps.shape[1])
@@ -104,7 +104,7 @@ def undersample(
         block *= mask[index[planes]][:, None]
         kspace[planes] = block
     total = float(np.hypot(sigma, sigma_scan))
-    return Acquisition(
+    acquisition = Acquisition(
         kspace=kspace,
         mask=mask,
         pattern_index=index,
@@ -117,116 +117,10 @@ def undersample(
         volume_shape=source.volume_shape,
         calibration=pattern.calibration,
     )
+    return drop_silent(acquisition) if source.channels > 1 else acquisition
 
 
-class _Source:
-    """A scan or array as planes, read block by block so that nothing is held twice."""
-
-    def __init__(self, given: Scan | Array, pattern: Pattern, axes: Axes | None) -> None:
-        self.two_d = len(pattern.grid) == 2
-        self.axes = axes
-        if isinstance(given, Scan):
-            self._from_scan(given)
-        else:
-            self._from_array(np.asarray(given), pattern)
-        kind = self._stack.dtype
-        double = kind in (np.dtype(np.float64), np.dtype(np.complex128))
-        self.dtype = np.dtype(np.complex128 if double else np.complex64)
-
-    def _from_scan(self, scan: Scan) -> None:
-        axes = self.axes or Axes("i", "j", "k" if self.two_d else None)
-        if self.two_d and axes.partition is None:
-            raise AcquisitionError(
-                f"A 2-D pattern needs a partition axis; readout is {axes.readout}, phase is "
-                f"{axes.phase} and there is no partition axis.",
-                "partition_axis",
-                "Name the partition axis, or draw a 1-D pattern for 2-D multi-slice.",
-            )
-        self.axes = axes
-        self.frames, self.channels = scan.frames, scan.channels
-        self.volume_shape = scan.shape[:4]
-        # A view (frame, plane, channel, u, v), whatever axes the file has.
-        whole = scan.data.reshape(*scan.shape[:3], self.frames, self.channels)
-        plane, u, v = axes.order
-        self._stack = whole.transpose(3, plane, 4, u, v)
-        kind = "partition" if axes.partition is not None else "readout"
-        self.names = (f"phase axis {axes.u}", f"{kind} axis {axes.v}")
-
-    def _from_array(self, array: Array, pattern: Pattern) -> None:
-        if array.ndim != 3:
-            raise AcquisitionError(
-                f"An array must be a stack (plane, u, v); got {array.ndim} axes, shape "
-                f"{array.shape}.",
-                "axes (plane, u, v)",
-                "Add a leading plane axis to a single image, or pass a scan.",
-            )
-        self.frames, self.channels = max(1, pattern.frames), 1
-        self.volume_shape = array.shape
-        if array.shape[0] % self.frames:
-            raise AcquisitionError(
-                f"{array.shape[0]} planes do not divide into the pattern's {self.frames} frames.",
-                "axis plane",
-                "Give as many planes for every frame, frame by frame.",
-            )
-        self._stack = array.reshape(self.frames, -1, 1, *array.shape[1:])
-        self.names = ("axis u", "axis v")
-
-    @property
-    def frame_planes(self) -> int:
-        """Planes of one frame."""
-        return int(self._stack.shape[1])
-
-    @property
-    def planes(self) -> int:
-        """Planes of all frames."""
-        return self.frames * self.frame_planes
-
-    @property
-    def grid(self) -> tuple[int, int]:
-        """(u, v) of a plane."""
-        return (int(self._stack.shape[3]), int(self._stack.shape[4]))
-
-    def blocks(self, channels: int) -> Iterator[tuple[slice, Array]]:
-        """Slices of planes with images of shape (planes, channels of the file, u, v)."""
-        u, v = self.grid
-        step = max(1, _BLOCK_BYTES // (channels * u * v * self.dtype.itemsize))
-        for frame in range(self.frames):
-            first = frame * self.frame_planes
-            for start in range(0, self.frame_planes, step):
-                stop = min(start + step, self.frame_planes)
-                yield slice(first + start, first + stop), self._stack[frame, start:stop]
-
-
-def _masks(source: _Source, pattern: Pattern) -> tuple[NDArray[np.bool_], NDArray[np.intp]]:
-    """Mask of shape (pattern, u, v or 1) and which of them each plane has."""
-    for axis, count in enumerate(pattern.grid):
-        if count != source.grid[axis]:
-            raise AcquisitionError(
-                f"The pattern has {count} positions along {source.names[axis]}, which has "
-                f"{source.grid[axis]}.",
-                source.names[axis],
-                "Draw the pattern for the scan's grid.",
-            )
-    masks = _by_frame(source, pattern, pattern.mask)
-    frames = np.repeat(np.arange(source.frames), source.frame_planes)
-    if not pattern.frames:
-        return masks, np.zeros(source.planes, dtype=np.intp)
-    if pattern.frames != source.frames:
-        raise AcquisitionError(
-            f"The pattern has {pattern.frames} frames, the scan has {source.frames}.",
-            "frame axis",
-            "Draw the pattern with the scan's number of frames.",
-        )
-    return masks, frames.astype(np.intp)
-
-
-def _by_frame(source: _Source, pattern: Pattern, values: Array) -> Array:
-    """Values of the pattern's positions as (pattern, u, v or 1)."""
-    framed = values if pattern.frames else values[None]
-    return framed if source.two_d else framed[:, :, None]
-
-
-def _decay(source: _Source, pattern: Pattern, weights: Array | None) -> Array | None:
+def _decay(source: Source, pattern: Pattern, weights: Array | None) -> Array | None:
     if weights is None:
         return None
     if weights.shape != pattern.mask.shape:
@@ -236,10 +130,10 @@ def _decay(source: _Source, pattern: Pattern, weights: Array | None) -> Array | 
             "echo_weights",
             "Make them of this pattern.",
         )
-    return _by_frame(source, pattern, weights.astype(source.dtype))
+    return by_frame(source, pattern, weights.astype(source.dtype))
 
 
-def _fit_sensitivities(source: _Source, maps: Array | None) -> Array | None:
+def _fit_sensitivities(source: Source, maps: Array | None) -> Array | None:
     if maps is None:
         return None
     if source.channels > 1:

@@ -7,7 +7,7 @@ from hypothesis import strategies as st
 from scipy.special import j1
 
 from mrics.encoding import blocks, estimate_sigma, undersample
-from mrics.encoding import simulate as simulate_module
+from mrics.encoding import source as source_module
 from mrics.errors import AcquisitionError
 from mrics.sampling.pattern import Pattern
 from mrics.scan.volume import Axes, Scan
@@ -134,7 +134,7 @@ def test_noise_has_the_stated_level_and_survives_the_transform():
 def test_noise_depends_on_neither_blocks_nor_pattern(monkeypatch):
     image = np.zeros((5, 16, 12), np.float32)
     once = undersample(image, full(16), 1.0, 9)
-    monkeypatch.setattr(simulate_module, "_BLOCK_BYTES", 1)
+    monkeypatch.setattr(source_module, "_BLOCK_BYTES", 1)
     again = undersample(image, full(16), 1.0, 9)
     np.testing.assert_array_equal(once.kspace, again.kspace)
     pattern = line_pattern(16)
