@@ -30,8 +30,10 @@ class Acquisition:
         Noise of the scan itself, standard deviation of the real part of one k-space sample.
     sigma_added : float
         Noise that was added in simulation, same unit.
-    sensitivities : ndarray of shape (plane or 1, channel, u, v) or None
-        Receive sensitivities in image space, natural order; None for one uniform channel.
+    sensitivities : array of shape (plane or 1, channel, u, v) or None
+        Receive sensitivities in image space, natural order; one frame's planes may stand for all.
+        Anything that has a shape and gives ndarrays for slices of planes. None for one uniform
+        channel, or for several whose sensitivities are to be estimated.
     covariance : ndarray of shape (channel, channel) or None
         Psi = E[n n^H]/2; None for sigma^2 times identity.
     compression : ndarray of shape (plane or 1, virtual, channel) or None

@@ -52,6 +52,23 @@ def mix(matrix: Array | None, data: Array, planes: slice) -> Array:
     return np.matmul(chosen, flat).reshape(count, chosen.shape[1], a, b)
 
 
+def planes_of(maps: Array, planes: slice) -> Array:
+    """Sensitivities of some planes; ``maps`` may hold one plane for all, or one frame's planes.
+
+    ``maps`` needs only a shape and slicing along planes, so that it may be computed on demand.
+    """
+    count, start = len(maps), planes.start
+    if count == 1:
+        return np.asarray(maps[0:1])
+    parts = []
+    while start < planes.stop:
+        first = start % count
+        last = min(first + planes.stop - start, count)
+        parts.append(np.asarray(maps[first:last]))
+        start += last - first
+    return parts[0] if len(parts) == 1 else np.concatenate(parts)
+
+
 def singular_values(acquisition: Acquisition) -> NDArray[np.float64]:
     """Singular values of the whitened calibration data over all planes, for a report's curve."""
     return np.sqrt(_spectra(acquisition, per_plane=False)[0][0])

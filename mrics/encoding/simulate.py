@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from mrics.encoding.acquisition import Acquisition
-from mrics.encoding.channels import drop_silent
+from mrics.encoding.channels import drop_silent, planes_of
 from mrics.encoding.noise import relative_covariance
 from mrics.encoding.source import Source, by_frame, pattern_masks
 from mrics.errors import AcquisitionError
@@ -51,9 +51,10 @@ def undersample(
     axes : Axes, optional
         How a scan's axes are encoded; default readout i, phase j, and k as partition for a 2-D
         pattern, as slice for a 1-D one.
-    sensitivities : ndarray of shape (plane or 1, channel, u, v), optional
+    sensitivities : array of shape (plane or 1, channel, u, v), optional
         Receive sensitivities, natural order, for one-channel images; planes of all frames, or of
-        one frame for all.
+        one frame for all. Anything that has a shape and gives ndarrays for slices of planes, such
+        as ``Coils.sensitivities``, will do.
     covariance : ndarray of shape (channel, channel), optional
         Noise covariance between channels, Psi = E[n n^H]/2 up to a factor: it is scaled to a mean
         diagonal of ``sigma**2``. Default: no correlation.
@@ -94,7 +95,7 @@ def undersample(
     root = None if relative is None else np.linalg.cholesky(relative)
     for planes, images in source.blocks(channels):
         if maps is not None:
-            images = images * _planes_of(maps, planes, source.planes)
+            images = images * planes_of(maps, planes)
         block = centred_fft(np.ascontiguousarray(images, dtype=source.dtype))
         if decay is not None:
             block *= decay[index[planes]][:, None]
@@ -152,13 +153,7 @@ def _fit_sensitivities(source: Source, maps: Array | None) -> Array | None:
             f"Give sensitivities of shape ({source.planes} or 1, channels, "
             f"{source.grid[0]}, {source.grid[1]}).",
         )
-    if source.frames > 1 and maps.shape[0] == source.frame_planes > 1:
-        return np.concatenate([maps] * source.frames)
     return maps
-
-
-def _planes_of(maps: Array, planes: slice, count: int) -> Array:
-    return maps[planes] if maps.shape[0] == count else maps
 
 
 def _noise(sigma: float, seed: int, plane: int, like: Array, root: Array | None) -> Array:

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from mrics.encoding.acquisition import Acquisition
 from mrics.encoding.calibration import calibration_box
-from mrics.encoding.channels import channel_mixing, mix
+from mrics.encoding.channels import channel_mixing, mix, planes_of
 from mrics.encoding.operator import Encoding
 from mrics.numerics import uncentre
 
@@ -65,8 +65,9 @@ def blocks(
         if maps is None and acquisition.channels > 1:
             block_maps = _estimated(acquisition, planes, virtual)
         elif maps is not None and shared is None:
-            count = planes.stop - planes.start
-            chosen = maps[planes] if maps.shape[0] > 1 else np.repeat(maps, count, axis=0)
+            chosen = planes_of(maps, planes)
+            if len(chosen) == 1:
+                chosen = np.repeat(chosen, planes.stop - planes.start, axis=0)
             block_maps = mix(matrix, np.asarray(chosen, dtype=kspace.dtype), planes)
         shape = (planes.stop - planes.start, u, v)
         yield planes, Encoding(mask[:, None], shape, kspace.dtype, block_maps), data

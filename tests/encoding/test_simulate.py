@@ -241,3 +241,36 @@ def test_refusals_name_the_axis():
     tiny = undersample(np.ones((1, 4, 4)), full(4))
     with pytest.raises(AcquisitionError, match="too few to estimate noise"):
         estimate_sigma(tiny)
+
+
+class OnDemand:
+    """Sensitivities that are only computed for the planes asked for."""
+
+    def __init__(self, maps):
+        self._maps, self.shape, self.ndim = maps, maps.shape, maps.ndim
+        self.asked = []
+
+    def __len__(self):
+        return self.shape[0]
+
+    def __getitem__(self, planes):
+        self.asked.append(planes)
+        return self._maps[planes]
+
+
+def test_sensitivities_may_be_computed_on_demand_and_shared_by_frames():
+    generator = np.random.default_rng(3)
+    maps = generator.standard_normal((3, 2, 8, 6)) + 0j
+    source = scan((6, 8, 3, 2), np.complex128)
+    lazy = OnDemand(maps)
+    acquired = undersample(source, full(8), sensitivities=lazy, sigma_scan=0.0)
+    assert acquired.kspace.shape == (6, 2, 8, 6)
+    stack = Axes("i", "j").to_planes(source.data)
+    seen = 0
+    for planes, encoding, data in blocks(acquired, max_bytes=4 * 2 * 8 * 6 * 16):
+        whole = np.concatenate([maps, maps])[planes]
+        np.testing.assert_array_equal(encoding.sensitivities, whole)
+        np.testing.assert_allclose(encoding.forward(stack[planes]), data, atol=1e-12)
+        seen += len(data)
+    assert seen == 6
+    assert all(part.stop - part.start <= 3 for part in lazy.asked)
