@@ -12,11 +12,12 @@ are cut there.
 from __future__ import annotations
 
 import zlib
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
+from mrics.numerics import map_blocks
 from mrics.report.pictures import ScanPictures
 
 DIGITS = "".join(chr(c) for c in range(33, 127) if chr(c) not in "\"&'<>\\`{}")
@@ -69,7 +70,7 @@ class ScanBlocks:
     positions: list[int]
     step: float
     reference: Block
-    recovered: list[Block] = field(default_factory=list)
+    recovered: list[Block]
 
 
 def pack(scans: list[ScanPictures], text_limit: int) -> list[ScanBlocks]:
@@ -120,10 +121,12 @@ def _pack_scan(scan: ScanPictures, levels: int, share: float) -> ScanBlocks:
     positions = _thinned(scan, share)
     step = _step(scan, levels)
     truth = _lattice(scan.reference[positions], step)
-    packed = ScanBlocks(scan, positions, step, _encode(truth))
-    for one in scan.recovered:
-        packed.recovered.append(_encode(_lattice(one.image[positions], step) - truth))
-    return packed
+
+    def change(image: NDArray[np.float32]) -> Block:
+        return _encode(_lattice(image[positions], step) - truth)
+
+    blocks = map_blocks(change, [one.image for one in scan.recovered])
+    return ScanBlocks(scan, positions, step, _encode(truth), blocks)
 
 
 def _thinned(scan: ScanPictures, share: float) -> list[int]:

@@ -86,11 +86,13 @@ def _with_palette(found: re.Match[str]) -> str:
     from PIL import Image
 
     pixels = np.asarray(Image.open(io.BytesIO(base64.b64decode(found[0]))).convert("RGBA"))
-    colours, numbers = np.unique(pixels.reshape(-1, 4), axis=0, return_inverse=True)
-    if len(colours) > 256 or (colours[:, 3] < 255).any():
+    words = np.ascontiguousarray(pixels).view("<u4")[..., 0]
+    colours, numbers = np.unique(words, return_inverse=True)
+    table = colours.view(np.uint8).reshape(-1, 4)
+    if len(table) > 256 or (table[:, 3] < 255).any():
         return found[0]
-    image = Image.fromarray(numbers.reshape(pixels.shape[:2]).astype(np.uint8), mode="P")
-    image.putpalette(colours[:, :3].tobytes())
+    image = Image.fromarray(numbers.reshape(words.shape).astype(np.uint8), mode="P")
+    image.putpalette(table[:, :3].tobytes())
     stream = io.BytesIO()
     image.save(stream, format="PNG", optimize=True)
     return base64.b64encode(stream.getvalue()).decode("ascii")
