@@ -81,101 +81,141 @@ def gather_map(channel: Any, maps: Any, out: Any, first: Any) -> None:
 
 
 @compiled
-def shrink_step(
-    point: Any,
-    gradient: Any,
-    current: Any,
-    bands: Any,
-    thresholds: Any,
-    step: Any,
-    momentum: Any,
-    sums: Any,
-) -> None:
-    """One proximal gradient step with momentum, all in coefficient space, in place.
+def solve_samples(spectrum: Any, data: Any, mask: Any, symbol: Any) -> tuple[float, float]:
+    """Spectrum = (data + spectrum) / (mask + symbol); ||residual||^2 and Re<residual, data> after.
 
-    new = shrink(point - step * gradient, step * threshold), by modulus;
-    point = new + momentum * (new - current); current = new.
-
-    Parameters
-    ----------
-    point, gradient, current : float array (rows, 2 columns)
-        Where the gradient was taken; the gradient there; the last iterate.
-    bands : int array (n, 4)
-        Row and complex column ranges: first row, last row, first column, last column.
-    thresholds : float array (n,)
-        Threshold of each band; 0 leaves a band unpenalised.
-    sums : float64 array (7,)
-        Filled with: sum of threshold * |point|; largest |gradient| / threshold over penalised
-        bands; ||gradient||^2 and ||point||^2 over unpenalised bands;
-        Re<point - new, new - current>; ||new - current||^2; ||new||^2.
+    ``mask`` is ``(rows, columns)`` or ``(rows, 1)``, and so is ``symbol``, or ``(1, 1)``.
     """
-    one_norm = 0.0
-    excess = 0.0
-    free_gradient = 0.0
-    free_point = 0.0
-    turn = 0.0
-    change = 0.0
-    norm = 0.0
-    zero = point[0, 0] * 0
-    top = np.empty(point.shape[1] // 2, point.dtype)  # running maxima per column vectorise
-    one = np.ones(1, thresholds.dtype)[0]
-    tiny = np.full(1, 1e-36, thresholds.dtype)[0]
-    for band in range(bands.shape[0]):
-        t = thresholds[band]
-        cut = step * t
-        top[:] = zero
-        left, right = 2 * bands[band, 2], 2 * bands[band, 3]
-        for i in range(bands[band, 0], bands[band, 1]):
-            p = point[i, left:right]
-            g = gradient[i, left:right]
-            c = current[i, left:right]
-            row_l1 = zero
-            row_g = zero
-            row_p = zero
-            row_turn = zero
-            row_change = zero
-            row_norm = zero
-            for j in range(len(p) // 2):
-                pr, pi = p[2 * j], p[2 * j + 1]
-                gr, gi = g[2 * j], g[2 * j + 1]
-                cr, ci = c[2 * j], c[2 * j + 1]
-                g2 = gr * gr + gi * gi
-                p2 = pr * pr + pi * pi
-                row_l1 += np.sqrt(p2)
-                row_g += g2
-                row_p += p2
-                top[j] = max(top[j], g2)
-                zr = pr - step * gr
-                zi = pi - step * gi
-                keep = one - min(one, cut / np.sqrt(zr * zr + zi * zi + tiny))
-                nr = keep * zr
-                ni = keep * zi
-                dr = nr - cr
-                di = ni - ci
-                row_turn += (pr - nr) * dr + (pi - ni) * di
-                row_change += dr * dr + di * di
-                row_norm += nr * nr + ni * ni
-                p[2 * j] = nr + momentum * dr
-                p[2 * j + 1] = ni + momentum * di
-                c[2 * j] = nr
-                c[2 * j + 1] = ni
-            if t > 0:
-                one_norm += t * row_l1
-            else:
-                free_gradient += row_g
-                free_point += row_p
-            turn += row_turn
-            change += row_change
-            norm += row_norm
-        if t > 0:
-            excess = max(excess, np.sqrt(top.max()) / t)
-    sums[0] = one_norm
-    sums[1] = excess
-    sums[2] = free_gradient
-    sums[3] = free_point
-    sums[4] = turn
-    sums[5] = change
-    sums[6] = norm
+    rows, width = spectrum.shape
+    square = 0.0
+    product = 0.0
+    one_mask = mask.shape[1] == 1
+    one_symbol = symbol.shape[1] == 1
+    for i in range(rows):
+        r2 = spectrum[0, 0] * 0
+        rd = r2
+        s = spectrum[i]
+        d = data[i]
+        if one_symbol and one_mask:
+            m = mask[i, 0]
+            scale = 1 / (m + symbol[i if symbol.shape[0] > 1 else 0, 0])
+            for j in range(width):
+                x = scale * (d[j] + s[j])
+                r = m * x - d[j]
+                s[j] = x
+                r2 += r * r
+                rd += r * d[j]
+        else:
+            y = symbol[i if symbol.shape[0] > 1 else 0]
+            k = mask[i]
+            m = k[0]
+            t = y[0]
+            for j in range(width // 2):
+                if not one_mask:
+                    m = k[j]
+                if not one_symbol:
+                    t = y[j]
+                scale = 1 / (m + t)
+                re = scale * (d[2 * j] + s[2 * j])
+                im = scale * (d[2 * j + 1] + s[2 * j + 1])
+                s[2 * j] = re
+                s[2 * j + 1] = im
+                re = m * re - d[2 * j]
+                im = m * im - d[2 * j + 1]
+                r2 += re * re + im * im
+                rd += re * d[2 * j] + im * d[2 * j + 1]
+        square += r2
+        product += rd
+    return square, product
+
+
+@compiled
+def split_samples(
+    spectrum: Any, state: Any, data: Any, mask: Any, mu: Any, relax: Any, sums: Any
+) -> None:
+    """One channel's half of the splitting u = F S x, in k-space and in place.
+
+    With V = ``state`` and U = (data + mu V) / (mask + mu) the minimiser of its data term,
+    ``spectrum`` = F S x becomes 2 U' - V' for V' = V + relax * (spectrum - U).
+
+    ``sums`` (4,) gains ||mask F S x - data||^2, and for p = mu (F S x - 2 U + V): ||p||^2 and
+    Re<p, data> over acquired samples, ||p||^2 over the others.
+    """
+    rows, width = spectrum.shape
+    for i in range(rows):
+        r2 = spectrum[0, 0] * 0
+        p2 = r2
+        pd = r2
+        off = r2
+        g = spectrum[i]
+        v = state[i]
+        d = data[i]
+        k = mask[i]
+        m = k[0]
+        for j in range(width // 2):
+            if mask.shape[1] > 1:
+                m = k[j]
+            scale = 1 / (m + mu)
+            for part in range(2):
+                at = 2 * j + part
+                x = g[at]
+                old = v[at]
+                data_here = d[at]
+                u = scale * (data_here + mu * old)
+                p = mu * (x - 2 * u + old)
+                r = m * x - data_here
+                r2 += r * r
+                p2 += m * p * p
+                pd += m * p * data_here
+                off += (1 - m) * p * p
+                new = old + relax * (x - u)
+                v[at] = new
+                g[at] = 2 * scale * (data_here + mu * new) - new
+        sums[0] += r2
+        sums[1] += p2
+        sums[2] += pd
+        sums[3] += off
+
+
+@compiled
+def blend(image: Any, gathered: Any, last: Any, gap: Any, mu: Any, scale: Any) -> None:
+    """Image = scale * (image + mu * (gathered + gap * last)), ``gap`` real (rows, columns)."""
+    rows, width = image.shape
+    for i in range(rows):
+        x, g, o, w = image[i], gathered[i], last[i], gap[i]
+        for j in range(width // 2):
+            x[2 * j] = scale * (x[2 * j] + mu * (g[2 * j] + w[j] * o[2 * j]))
+            x[2 * j + 1] = scale * (x[2 * j + 1] + mu * (g[2 * j + 1] + w[j] * o[2 * j + 1]))
+
+
+@compiled
+def divide_symbol(spectrum: Any, symbol: Any, plus: Any) -> None:
+    """Spectrum /= symbol + plus, ``symbol`` real (rows, columns)."""
+    rows, width = spectrum.shape
+    for i in range(rows):
+        s, t = spectrum[i], symbol[i]
+        for j in range(width // 2):
+            scale = 1 / (t[j] + plus)
+            s[2 * j] *= scale
+            s[2 * j + 1] *= scale
+
+
+@compiled
+def replace_last(image: Any, gap: Any, last: Any) -> float:
+    """Last = image; returns ||gap * (image - last)||^2 of before."""
+    rows, width = image.shape
+    total = 0.0
+    for i in range(rows):
+        x, o, w = image[i], last[i], gap[i]
+        row = image[0, 0] * 0
+        for j in range(width // 2):
+            re = w[j] * (x[2 * j] - o[2 * j])
+            im = w[j] * (x[2 * j + 1] - o[2 * j + 1])
+            row += re * re + im * im
+            o[2 * j] = x[2 * j]
+            o[2 * j + 1] = x[2 * j + 1]
+        total += row
+    return total
 
 
 @compiled

@@ -19,42 +19,50 @@ from mrics.numerics import fft_planes, ifft_planes, map_blocks, threads
 from mrics.recovery import kernels
 
 Array = NDArray[Any]
+#: penalty of the splitting u = F S x with several channels, relative to the largest sum |S|^2
+_CHANNEL_PENALTY = 0.3
 
 
 class PlaneModel:
-    """Least-squares term 1/2 ||M F S x - d||^2 of one plane.
+    """Data term 1/2 ||M F S x - d||^2 of one plane.
 
     Where whole readout lines are acquired the transform along the readout commutes with the
-    pattern: data are brought to (u frequency, v position) once and only u is transformed after.
+    pattern: with ``hybrid`` data are brought to (u frequency, v position) once and only u is
+    transformed in every iteration.
 
     Parameters
     ----------
     shape : tuple of int
         (channel, u, v).
     dtype : complex64 or complex128
-    padded : tuple of int
-        Size of the image buffers given to :meth:`gradient`; at least (u, v).
+    padded : tuple of int, optional
+        Size of :attr:`image`, at least (u, v); what lies outside (u, v) is not seen by the data.
     """
 
     def __init__(
         self, shape: tuple[int, int, int], dtype: Any, padded: tuple[int, int] | None = None
     ) -> None:
         self.dtype = np.dtype(dtype)
-        self.real = self.dtype.type(0).real.dtype
+        self.real = np.dtype(self.dtype.type(0).real.dtype)
         self.channels, self.u, self.v = shape
         self.padded = padded or (self.u, self.v)
         self.image = np.zeros(self.padded, self.dtype)
-        self.channel = np.empty((self.u, self.v), self.dtype)
+        self.flat = self.image.view(self.real)
+        self.inner = self.image[: self.u, : self.v]
+        whole = self.padded == (self.u, self.v)
+        self.work = self.image if whole else np.empty((self.u, self.v), self.dtype)
         self.maps: Array | None = None
         self.bound = 1.0
         self.axes: tuple[int, ...] = (-2, -1)
 
-    def load(self, encoding: Encoding, data: Array, plane: int, unit: float) -> bool:
+    def load(
+        self, encoding: Encoding, data: Array, plane: int, unit: float, hybrid: bool = True
+    ) -> bool:
         """Take up one plane of a block, divided by ``unit``; False where all its data are 0."""
         self.mask = np.ascontiguousarray(
             encoding.mask[plane if encoding.mask.shape[0] > 1 else 0, 0], self.real
         )
-        self.axes = (-2,) if self.mask.shape[1] == 1 else (-2, -1)
+        self.axes = (-2,) if hybrid and self.mask.shape[1] == 1 else (-2, -1)
         self.data = data[plane]
         if not self.data.any():
             return False
@@ -64,64 +72,143 @@ class PlaneModel:
         maps = encoding.sensitivities
         if maps is not None:
             self.maps = maps[plane if maps.shape[0] > 1 else 0]
-            self.bound = float((np.abs(self.maps) ** 2).sum(0).max())
+            energy = (self.maps.real**2 + self.maps.imag**2).sum(0)
+            self.bound = float(energy.max())
+            self._make_channels(energy)
         return True
 
-    def gradient(self) -> tuple[float, float]:
-        """Replace :attr:`image` by A^H (A image - d); return ||A image - d||^2, Re<., d>.
-
-        Outside (u, v) of a padded buffer the gradient is 0.
-        """
-        inner = self.image[: self.u, : self.v]
+    def gradient(self) -> None:
+        """Replace :attr:`image` by A^H (A image - d); 0 outside (u, v)."""
         if self.maps is None:
-            work = self.channel
-            if self.padded == (self.u, self.v):
-                work = self.image
-            else:
-                work[...] = inner
-            square, product = self._residual(work, 0)
-            if work is self.image:
-                return square, product
-            self.image[self.u :] = 0
-            self.image[:, self.v :] = 0
-            inner[...] = work
-            return square, product
-        square = product = 0.0
-        source = self._image_copy()
-        flat = self.image.view(self.real)
-        for c in range(self.channels):
-            maps = self.maps[c].view(self.real)
-            kernels.apply_map(source, maps, self.channel.view(self.real))
-            s, p = self._residual(self.channel, c)
-            square += s
-            product += p
-            kernels.gather_map(self.channel.view(self.real), maps, flat, c == 0)
-        self.image[self.u :] = 0
-        self.image[:, self.v :] = 0
-        return square, product
+            self._enter()
+            spectrum = fft_planes(self.work, overwrite=True, axes=self.axes)
+            kernels.residual(spectrum.view(self.real), self.data[0].view(self.real), self.mask)
+            self._leave(ifft_planes(spectrum, overwrite=True, axes=self.axes))
+        else:
+            self._last[...] = self.image
+            for c in range(self.channels):
+                spectrum = self._channel_spectrum(c, self._last)
+                kernels.residual(spectrum.view(self.real), self.data[c].view(self.real), self.mask)
+                self._gather(c, spectrum, self.flat)
+        self._outside(0)
 
-    def adjoint(self, out: Array) -> None:
-        """A^H d into ``out`` of shape (u, v)."""
+    def start(self) -> None:
+        """Set :attr:`image` to A^H d / bound and make ready for :meth:`solve`."""
         self.image[...] = 0
         self.gradient()
-        np.negative(self.image[: self.u, : self.v], out=out)
+        self.image *= self.real.type(-1 / self.bound)
+        if self.maps is not None:
+            self.mu = self.real.type(_CHANNEL_PENALTY)
+            self._last[...] = self.image
+            self._split(0.0, fill=True)
 
-    def _image_copy(self) -> Array:
-        if not hasattr(self, "_copy"):
-            self._copy = np.empty_like(self.image)
-        self._copy[...] = self.image
-        return self._copy.view(self.real)
+    def solve(self, symbol: Array, relax: float) -> tuple[float, float, float, float]:
+        """Data half of a splitting: :attr:`image` holds rho K^H h on entry, x on return.
 
-    def _residual(self, work: Array, channel: int) -> tuple[float, float]:
-        """Image to A^H residual of one channel, in place."""
-        done = fft_planes(work, overwrite=True, axes=self.axes)
-        square, product = kernels.residual(
-            done.view(self.real), self.data[channel].view(self.real), self.mask
+        One channel: x minimises 1/2 ||A x - d||^2 + rho/2 ||K x - h||^2, by dividing in k-space.
+        Several: the same for one step of the splitting u = F S x (see
+        :func:`kernels.split_samples`), S completed to a multiple of a unitary map by a channel
+        without data, so that x needs a division in k-space again.
+
+        Parameters
+        ----------
+        symbol : ndarray, real, (1, 1) or (u, v)
+            rho K^H K, a number or its values over un-centred k-space.
+        relax : float
+            Over-relaxation of the channel splitting.
+
+        Returns
+        -------
+        tuple of float
+            ||A x - d||^2; for a dual point p of the data term ||p||^2 and Re<p, d>; and a bound
+            on the norm of A^H p + K^H q for the penalty's q = rho (K x - h).
+        """
+        if self.maps is not None:
+            return self._solve_channels(symbol, relax)
+        if self.work is not self.image:
+            self._outside(1 / float(symbol[0, 0]))
+        self._enter()
+        spectrum = fft_planes(self.work, overwrite=True, axes=self.axes)
+        square, product = kernels.solve_samples(
+            spectrum.view(self.real), self.data[0].view(self.real), self.mask, symbol
         )
-        back = ifft_planes(done, overwrite=True, axes=self.axes)
-        if back is not work and not np.shares_memory(back, work):
-            work[...] = back
-        return square, product
+        self._leave(ifft_planes(spectrum, overwrite=True, axes=self.axes))
+        return square, square, product, 0.0
+
+    def _solve_channels(self, symbol: Array, relax: float) -> tuple[float, float, float, float]:
+        real = self.real.type
+        plus = self.mu * real(self.bound)
+        scale = 1 / (plus + symbol[0, 0]) if symbol.size == 1 else real(1)
+        kernels.blend(
+            self.flat, self._gathered, self._last.view(self.real), self._gap, self.mu, scale
+        )
+        if symbol.size > 1:
+            spectrum = fft_planes(self.image, overwrite=True)
+            kernels.divide_symbol(spectrum.view(self.real), symbol, plus)
+            back = ifft_planes(spectrum, overwrite=True)
+            if not same_memory(back, self.image):
+                self.image[...] = back
+        moved = kernels.replace_last(self.flat, self._gap, self._last.view(self.real))
+        square, p_square, product, off = self._split(relax)
+        slack = np.sqrt(self.bound * off) + float(self.mu) * np.sqrt(moved)
+        return square, p_square, product, float(slack)
+
+    def _split(self, relax: float, fill: bool = False) -> tuple[float, float, float, float]:
+        """Channel half of the splitting at ``_last``; refreshes ``_gathered``."""
+        sums = np.zeros(4)
+        for c in range(self.channels):
+            spectrum = self._channel_spectrum(c, self._last)
+            if fill:
+                self._state[c] = spectrum
+            kernels.split_samples(
+                spectrum.view(self.real), self._state[c].view(self.real),
+                self.data[c].view(self.real), self.mask, self.mu, self.real.type(relax), sums,
+            )  # fmt: skip
+            self._gather(c, spectrum, self._gathered)
+        return float(sums[0]), float(sums[1]), float(sums[2]), float(sums[3])
+
+    def _make_channels(self, energy: Array) -> None:
+        if not hasattr(self, "_state"):
+            self._state = np.empty((self.channels, self.u, self.v), self.dtype)
+            self._channel = np.empty((self.u, self.v), self.dtype)
+            self._last = np.zeros(self.padded, self.dtype)
+            self._gathered = np.zeros((self.padded[0], 2 * self.padded[1]), self.real)
+            self._gap = np.empty(self.padded, self.real)
+        self._gap[...] = self.bound
+        self._gap[: self.u, : self.v] -= energy
+
+    def _channel_spectrum(self, channel: int, image: Array) -> Array:
+        assert self.maps is not None
+        kernels.apply_map(
+            image.view(self.real), self.maps[channel].view(self.real),
+            self._channel.view(self.real),
+        )  # fmt: skip
+        return fft_planes(self._channel, overwrite=True, axes=self.axes)
+
+    def _gather(self, channel: int, spectrum: Array, out: Array) -> None:
+        assert self.maps is not None
+        image = ifft_planes(spectrum, overwrite=True, axes=self.axes)
+        kernels.gather_map(
+            image.view(self.real), self.maps[channel].view(self.real), out, channel == 0
+        )
+
+    def _enter(self) -> None:
+        if self.work is not self.image:
+            self.work[...] = self.inner
+
+    def _leave(self, image: Array) -> None:
+        if not same_memory(image, self.image):
+            self.inner[...] = image
+
+    def _outside(self, factor: float) -> None:
+        if self.work is not self.image:
+            self.image[self.u :] *= self.real.type(factor)
+            self.image[: self.u, self.v :] *= self.real.type(factor)
+
+
+def same_memory(one: Array, other: Array) -> bool:
+    """True where two arrays start at the same address (an FFT in place hands back a new view)."""
+    return bool(one.__array_interface__["data"][0] == other.__array_interface__["data"][0])
 
 
 def scale_unit(acquisition: Acquisition) -> float:

@@ -17,6 +17,7 @@ METHODS: dict[str, str] = {
     "unfold": "unfold",
     "zero-filled": "zero_filled",
     "least-squares": "least_squares",
+    "variation": "variation",
     "wavelet": "wavelet",
 }
 

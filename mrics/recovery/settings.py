@@ -111,13 +111,32 @@ class Wavelet(Settings):
         Seed of the random shifts.
     """
 
-    weight: float | str = _number("auto", 0.0, words=("auto",))
+    weight: float | str = _number("auto", 0.0, above=True, words=("auto",))
     wavelet: str = _choice("sym4", WAVELETS)
     levels: int | None = _number(None, 1, 12, whole=True, optional=True)
     shift: str = _choice("random", ("none", "random"))
     iterations: int | None = _number(None, 1, 100_000, whole=True, optional=True)
     tolerance: float = _number(1e-3, 0.0, 1.0, above=True)
     seed: int = _number(0, 0, whole=True)
+
+
+@dataclass(frozen=True)
+class Variation(Settings):
+    """Total variation.
+
+    Attributes
+    ----------
+    weight : float or "auto"
+        Weight in units of sigma.
+    iterations : int or None
+        Most iterations; None for 300.
+    tolerance : float
+        Duality gap, relative to the objective, to stop at.
+    """
+
+    weight: float | str = _number("auto", 0.0, above=True, words=("auto",))
+    iterations: int | None = _number(None, 1, 100_000, whole=True, optional=True)
+    tolerance: float = _number(1e-3, 0.0, 1.0, above=True)
 
 
 @dataclass(frozen=True)
@@ -175,6 +194,7 @@ SETTINGS: dict[str, type[Settings]] = {
     "unfold": Unfold,
     "zero-filled": ZeroFilled,
     "least-squares": LeastSquares,
+    "variation": Variation,
     "wavelet": Wavelet,
 }
 

@@ -14,6 +14,7 @@ VARIANTS = [
     ("least-squares", {}),
     ("wavelet", {}),
     ("wavelet", {"shift": "none"}),
+    ("variation", {}),
 ]
 
 
@@ -26,7 +27,7 @@ def test_every_method_has_settings():
     [
         ("wavlet", {}, r"no recovery called 'wavlet'; did you mean 'wavelet'"),
         ("wavelet", {"wieght": 1}, r"no setting 'wieght'; did you mean 'weight'"),
-        ("wavelet", {"weight": -1.0}, r"weight must be a number of at least 0.*got -1"),
+        ("wavelet", {"weight": -1.0}, r"weight must be a number above 0.*got -1"),
         ("wavelet", {"weight": float("nan")}, r"weight must be a number.*got nan"),
         (
             "wavelet",

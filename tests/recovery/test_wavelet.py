@@ -9,7 +9,7 @@ import pywt
 
 from mrics.encoding import undersample
 from mrics.recovery import recover
-from mrics.recovery.wavelet import levels_for, padded_shape
+from mrics.recovery.penalties import levels_for, padded_shape
 from mrics.sampling import draw_pattern
 
 

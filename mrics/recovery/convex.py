@@ -1,0 +1,85 @@
+"""Running a certified penalty over an acquisition, plane by plane, and its certificate."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from mrics.encoding import Encoding
+from mrics.encoding.acquisition import Acquisition
+from mrics.recovery.contract import Certificate, Recovered
+from mrics.recovery.plane import PlaneModel, each_plane, scale_unit
+from mrics.recovery.splitting import Penalty, PlaneResult, Splitting
+
+Array = NDArray[Any]
+#: iterations allowed where the settings name none
+ITERATIONS = 300
+MakePenalty = Callable[[tuple[int, int], Any], Penalty]
+
+
+def run_planes(
+    acquisition: Acquisition,
+    make: MakePenalty,
+    threshold: float,
+    iterations: int,
+    tolerance: float,
+    hybrid: bool = False,
+) -> tuple[Array, list[PlaneResult]]:
+    """Minimise for every plane with the weight ``threshold`` in the data's unit.
+
+    Parameters
+    ----------
+    make : callable
+        (u, v) and real dtype to a penalty.
+    hybrid : bool
+        The penalty's symbol is a number, so that a full readout needs no transform.
+    """
+    dtype = acquisition.kspace.dtype
+    unit = scale_unit(acquisition)
+    grid = acquisition.shape[1:]
+    image = np.zeros(acquisition.shape, dtype)
+
+    def make_worker() -> Splitting:
+        penalty = make(grid, dtype.type(0).real.dtype)
+        model = PlaneModel((acquisition.channels, *grid), dtype, penalty.padded)
+        return Splitting(model, penalty)
+
+    def one(worker: Splitting, encoding: Encoding, data: Array, i: int, plane: int) -> PlaneResult:
+        if not worker.model.load(encoding, data, i, unit, hybrid):
+            return PlaneResult()
+        result = worker.run(threshold / unit, iterations, tolerance)
+        best = worker.best[: grid[0], : grid[1]]
+        np.multiply(best, worker.model.real.type(unit), out=image[plane])
+        return result.scaled(unit)
+
+    return image, each_plane(acquisition, make_worker, one)
+
+
+def certify(
+    method: str,
+    image: Array,
+    results: list[PlaneResult],
+    tolerance: float,
+    weight: float,
+    rule: str,
+    note: str = "",
+) -> Recovered:
+    """The certificate of the worst plane, objectives summed."""
+    optimality = max(r.optimality for r in results)
+    certificate = Certificate(
+        method,
+        iterations=max(r.iterations for r in results),
+        final_change=max(r.change for r in results),
+        objective=sum(r.objective for r in results),
+        optimality=optimality,
+        tolerance=tolerance,
+        reached=optimality <= tolerance,
+        weight=weight,
+        weight_rule=rule,
+        note=note,
+    )
+    worst = max(results, key=lambda r: r.optimality)
+    return Recovered(image, certificate, worst.history)

@@ -1,0 +1,163 @@
+"""Compiled halves of the splitting that belong to a penalty; conventions of ``kernels``.
+
+With the state v, z = shrink(v) and h = 2 z - v, each kernel takes K x, moves the state,
+v += relax * (K x - z), and leaves rho h of the new state for the next data half.
+"""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+
+from mrics.recovery.kernels import compiled
+
+
+@compiled
+def split_bands(
+    state: Any, coefficients: Any, bands: Any, weights: Any, rho: Any, relax: Any, sums: Any
+) -> None:
+    """Packed wavelet bands, shrunk by modulus with thresholds ``weights / rho``.
+
+    ``coefficients`` hold K x on entry, rho h on return. ``sums`` (6,) is filled with the sum of
+    weight * |K x|; the largest rho |K x - h| / weight over penalised bands; ||rho (K x - h)||^2
+    and ||K x||^2 over the band of weight 0; ||K x - z||^2; ||K x||^2.
+    """
+    one_norm = 0.0
+    excess = 0.0
+    free_dual = 0.0
+    free_point = 0.0
+    change = 0.0
+    norm = 0.0
+    zero = state[0, 0] * 0
+    one = np.ones(1, weights.dtype)[0]
+    tiny = np.full(1, 1e-36, weights.dtype)[0]
+    top = np.empty(state.shape[1] // 2, state.dtype)  # running maxima per column vectorise
+    for band in range(bands.shape[0]):
+        weight = weights[band]
+        cut = weight / rho
+        top[:] = zero
+        left, right = 2 * bands[band, 2], 2 * bands[band, 3]
+        for i in range(bands[band, 0], bands[band, 1]):
+            v = state[i, left:right]
+            c = coefficients[i, left:right]
+            row_norm1 = zero
+            row_dual = zero
+            row_change = zero
+            row_norm = zero
+            for j in range(len(v) // 2):
+                vr, vi = v[2 * j], v[2 * j + 1]
+                cr, ci = c[2 * j], c[2 * j + 1]
+                f = min(one, cut / np.sqrt(vr * vr + vi * vi + tiny))
+                zr, zi = vr - f * vr, vi - f * vi
+                dr, di = cr - zr, ci - zi
+                qr, qi = rho * (dr + f * vr), rho * (di + f * vi)
+                q2 = qr * qr + qi * qi
+                top[j] = max(top[j], q2)
+                c2 = cr * cr + ci * ci
+                row_norm1 += np.sqrt(c2)
+                row_dual += q2
+                row_change += dr * dr + di * di
+                row_norm += c2
+                vr += relax * dr
+                vi += relax * di
+                v[2 * j] = vr
+                v[2 * j + 1] = vi
+                f = min(one, cut / np.sqrt(vr * vr + vi * vi + tiny))
+                h = rho * (one - f - f)
+                c[2 * j] = h * vr
+                c[2 * j + 1] = h * vi
+            if weight > 0:
+                one_norm += weight * row_norm1
+            else:
+                free_dual += row_dual
+                free_point += row_norm
+            change += row_change
+            norm += row_norm
+        if weight > 0:
+            excess = max(excess, np.sqrt(top.max()) / weight)
+    sums[0] = one_norm
+    sums[1] = excess
+    sums[2] = free_dual
+    sums[3] = free_point
+    sums[4] = change
+    sums[5] = norm
+
+
+@compiled
+def split_gradient(state: Any, image: Any, weight: Any, rho: Any, relax: Any, sums: Any) -> None:
+    """Periodic forward differences of a complex plane, shrunk together (isotropic).
+
+    ``state`` is (2, rows, 2 columns); ``image`` holds x on entry and rho K^H h on return.
+    ``sums`` as for :func:`split_bands`.
+    """
+    rows, width = image.shape
+    one_norm = 0.0
+    change = 0.0
+    norm = 0.0
+    zero = image[0, 0] * 0
+    one = np.ones(1, image.dtype)[0]
+    tiny = np.full(1, 1e-36, image.dtype)[0]
+    cut = weight / rho
+    top = np.zeros(width // 2, image.dtype)
+    first = image[0].copy()
+    here = np.empty(width + 2, image.dtype)
+    down = np.empty(width, image.dtype)
+    right = np.empty(width + 2, image.dtype)
+    above = np.zeros(width, image.dtype)
+    for i in range(rows):
+        x = image[i]
+        below = image[i + 1] if i + 1 < rows else first
+        here[:width] = x
+        here[width] = x[0]
+        here[width + 1] = x[1]
+        v = state[0, i]
+        w = state[1, i]
+        row_norm1 = zero
+        row_change = zero
+        row_norm = zero
+        for j in range(width // 2):
+            vr, vi = v[2 * j], v[2 * j + 1]
+            wr, wi = w[2 * j], w[2 * j + 1]
+            xr, xi = here[2 * j], here[2 * j + 1]
+            ar, ai = below[2 * j] - xr, below[2 * j + 1] - xi
+            br, bi = here[2 * j + 2] - xr, here[2 * j + 3] - xi
+            f = min(one, cut / np.sqrt(vr * vr + vi * vi + wr * wr + wi * wi + tiny))
+            pr, pi, sr, si = f * vr, f * vi, f * wr, f * wi
+            dr, di, er, ei = ar - vr + pr, ai - vi + pi, br - wr + sr, bi - wi + si
+            qr, qi, tr, ti = dr + pr, di + pi, er + sr, ei + si
+            top[j] = max(top[j], qr * qr + qi * qi + tr * tr + ti * ti)
+            g2 = ar * ar + ai * ai + br * br + bi * bi
+            row_norm1 += np.sqrt(g2)
+            row_norm += g2
+            row_change += dr * dr + di * di + er * er + ei * ei
+            vr += relax * dr
+            vi += relax * di
+            wr += relax * er
+            wi += relax * ei
+            v[2 * j] = vr
+            v[2 * j + 1] = vi
+            w[2 * j] = wr
+            w[2 * j + 1] = wi
+            f = min(one, cut / np.sqrt(vr * vr + vi * vi + wr * wr + wi * wi + tiny))
+            h = rho * (one - f - f)
+            down[2 * j] = h * vr
+            down[2 * j + 1] = h * vi
+            right[2 * j + 2] = h * wr
+            right[2 * j + 3] = h * wi
+        right[0] = right[width]
+        right[1] = right[width + 1]
+        for j in range(width):
+            x[j] = above[j] - down[j] + right[j] - right[j + 2]
+            above[j] = down[j]
+        one_norm += row_norm1
+        change += row_change
+        norm += row_norm
+    for j in range(width):
+        image[0, j] += above[j]
+    sums[0] = weight * one_norm
+    sums[1] = rho * np.sqrt(top.max()) / weight
+    sums[2] = 0.0
+    sums[3] = 0.0
+    sums[4] = change
+    sums[5] = norm
