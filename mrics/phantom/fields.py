@@ -43,10 +43,12 @@ class RandomField:
 
     def on(self, z: Array, y: Array, x: Array) -> Array:
         """Values on the grid spanned by three coordinate vectors in mm, float32 (z, y, x)."""
-        across, rows_x = self._weights(np.ravel(x), 2)
-        along, rows_y = self._weights(np.ravel(y), 1)
-        down, rows_z = self._weights(np.ravel(z), 0)
-        part = self._lattice[rows_z[0] : rows_z[1], rows_y[0] : rows_y[1], rows_x[0] : rows_x[1]]
+        places = [
+            np.ravel(coordinate) / step + half
+            for coordinate, step, half in zip((z, y, x), self._spacing, self._half, strict=True)
+        ]
+        (down, rows_z), (along, rows_y), (across, rows_x) = map(spline_weights, places)
+        part = self._lattice[rows_z, rows_y, rows_x]
         n_z, n_y, n_x = part.shape
         # Smallest products first; each sparse product keeps its long axes contiguous.
         part = down @ part.reshape(n_z, -1)
@@ -56,16 +58,31 @@ class RandomField:
         part = part.reshape(n_x, n_z, n_y).transpose(2, 1, 0).reshape(n_y, -1)
         return (along @ part).reshape(-1, n_z, n_x).transpose(1, 0, 2)
 
-    def _weights(self, coordinate: Array, axis: int) -> tuple[csr_array, tuple[int, int]]:
-        """Sparse spline weights (sample, row) and the span of lattice rows they act on."""
-        place = coordinate / self._spacing[axis] + self._half[axis]
-        first = np.floor(place).astype(int) - 1
-        low, high = int(first.min()), int(first.max()) + 4
-        rows = first[:, None] + np.arange(4)
-        away = np.abs(place[:, None] - rows)
-        inner = 2.0 / 3.0 - away**2 * (1.0 - away / 2.0)
-        outer = np.clip(2.0 - away, 0.0, None) ** 3 / 6.0
-        weights = np.where(away < 1.0, inner, outer).astype(np.float32)
-        starts = np.arange(0, weights.size + 1, 4)
-        shape = (len(place), high - low)
-        return csr_array((weights.ravel(), (rows - low).ravel(), starts), shape=shape), (low, high)
+
+def spline_weights(place: Array) -> tuple[csr_array, slice]:
+    """Weights of a uniform cubic B-spline.
+
+    Parameters
+    ----------
+    place : ndarray, 1-D
+        Where to evaluate, in units of the lattice step (coefficient n is at n).
+
+    Returns
+    -------
+    weights : csr_array of shape (place, rows), float32
+        Four weights a row, summing to 1.
+    rows : slice
+        Coefficients that the columns stand for.
+    """
+    first = np.floor(place).astype(int) - 1
+    low, high = int(first.min()), int(first.max()) + 4
+    columns = first[:, None] + np.arange(4)
+    away = np.abs(place[:, None] - columns)
+    inner = 2.0 / 3.0 - away**2 * (1.0 - away / 2.0)
+    outer = np.clip(2.0 - away, 0.0, None) ** 3 / 6.0
+    weights = np.where(away < 1.0, inner, outer).astype(np.float32)
+    starts = np.arange(0, weights.size + 1, 4)
+    shape = (len(place), high - low)
+    return csr_array((weights.ravel(), (columns - low).ravel(), starts), shape=shape), slice(
+        low, high
+    )
