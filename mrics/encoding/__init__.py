@@ -11,6 +11,9 @@ if TYPE_CHECKING:
     from mrics.encoding.channels import compress as compress
     from mrics.encoding.channels import root_sum_of_squares as root_sum_of_squares
     from mrics.encoding.channels import singular_values as singular_values
+    from mrics.encoding.coils import Coils as Coils
+    from mrics.encoding.coils import coils_for_scan as coils_for_scan
+    from mrics.encoding.coils import simulate_coils as simulate_coils
     from mrics.encoding.echoes import echo_weights as echo_weights
     from mrics.encoding.lattice import Lattice as Lattice
     from mrics.encoding.lattice import find_lattice as find_lattice
@@ -20,6 +23,8 @@ if TYPE_CHECKING:
     from mrics.encoding.noise import noise_covariance as noise_covariance
     from mrics.encoding.noise import whitening as whitening
     from mrics.encoding.operator import Encoding as Encoding
+    from mrics.encoding.phase import smooth_phase as smooth_phase
+    from mrics.encoding.phase import with_phase as with_phase
     from mrics.encoding.sensitivities import estimate_sensitivities as estimate_sensitivities
     from mrics.encoding.sensitivities import with_sensitivities as with_sensitivities
     from mrics.encoding.simulate import undersample as undersample
@@ -27,11 +32,13 @@ if TYPE_CHECKING:
 
 _HOMES = {
     "Acquisition": "acquisition",
+    "Coils": "coils",
     "Encoding": "operator",
     "Lattice": "lattice",
     "acquisition_from_kspace": "measured",
     "blocks": "stream",
     "border_covariance": "noise",
+    "coils_for_scan": "coils",
     "combine_channels": "channels",
     "compress": "channels",
     "echo_weights": "echoes",
@@ -40,19 +47,24 @@ _HOMES = {
     "find_lattice": "lattice",
     "noise_covariance": "noise",
     "root_sum_of_squares": "channels",
+    "simulate_coils": "coils",
     "singular_values": "channels",
+    "smooth_phase": "phase",
     "undersample": "simulate",
     "whitening": "noise",
+    "with_phase": "phase",
     "with_sensitivities": "sensitivities",
 }
 
 __all__ = [
     "Acquisition",
+    "Coils",
     "Encoding",
     "Lattice",
     "acquisition_from_kspace",
     "blocks",
     "border_covariance",
+    "coils_for_scan",
     "combine_channels",
     "compress",
     "echo_weights",
@@ -61,9 +73,12 @@ __all__ = [
     "find_lattice",
     "noise_covariance",
     "root_sum_of_squares",
+    "simulate_coils",
     "singular_values",
+    "smooth_phase",
     "undersample",
     "whitening",
+    "with_phase",
     "with_sensitivities",
 ]
 
