@@ -59,7 +59,7 @@ def played(
     target: int,
     path: Callable[[float], Path],
     *,
-    angle_order: int = 1,
+    angle_deg: float,
     first: int = 0,
     allowed: Mask,
     calibration: Mask,
@@ -74,8 +74,9 @@ def played(
         Positions wanted, calibration included.
     path : callable
         Positions of a spoke or arm at an angle in degrees.
-    angle_order : int
-        See :func:`golden_angle`.
+    angle_deg : float
+        Turn from one to the next: :func:`golden_angle` for spokes, which come back on themselves
+        after half a turn, twice that for arms.
     first : int
         Number of the first spoke (later frames go on where the frame before ended).
     allowed, calibration : ndarray of bool
@@ -108,7 +109,7 @@ def played(
             f"The largest feasible acceleration is {mask.size / held:.5g}.",
         )
     number = 0
-    for new in _new_positions(path, angle_order, first, mask, allowed.ravel()):
+    for new in _new_positions(path, angle_deg, first, mask, allowed.ravel()):
         if held and held + len(new) - target > target - held:
             break
         mask[new] = True
@@ -128,8 +129,8 @@ def played(
 
 
 def _new_positions(
-    path: Callable[[float], Path], order: int, first: int, mask: NDArray[np.bool_], allowed: Any
+    path: Callable[[float], Path], turn: float, first: int, mask: NDArray[np.bool_], allowed: Any
 ) -> Iterator[Path]:
     for spoke_number in count(first):
-        positions = path((spoke_number * golden_angle(order)) % 360.0)
+        positions = path((spoke_number * turn) % 360.0)
         yield positions[allowed[positions] & ~mask[positions]]

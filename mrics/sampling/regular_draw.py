@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from mrics.errors import PatternError
 from mrics.sampling.grid import Mask
-from mrics.sampling.radial import played, spiral_arm, spoke
+from mrics.sampling.radial import golden_angle, played, spiral_arm, spoke
 from mrics.sampling.regular import lattice, lattice_steps
 from mrics.sampling.vocabulary import Entry
 
@@ -131,6 +131,8 @@ def _radial(
         if entry.pattern == "spokes"
         else partial(spiral_arm, grid, turns=entry.options.get("turns", _TURNS))
     )
+    turn = golden_angle(entry.options.get("golden_order", 1))
+    turn *= 1 if entry.pattern == "spokes" else 2
     target = round(int(np.prod(grid)) / acceleration)
     masks, orders, numbers, first = [], [], [], 0
     for _ in range(max(1, moving_frames)):
@@ -138,7 +140,7 @@ def _radial(
             grid,
             target,
             path,
-            angle_order=entry.options.get("golden_order", 1),
+            angle_deg=turn,
             first=first,
             allowed=shutter,
             calibration=certain,

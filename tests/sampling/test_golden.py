@@ -58,7 +58,7 @@ power low-discrepancy lines 8f9636968c44fdc0
 power low-discrepancy plane e74290fcf7a52b8e
 power poisson-disc plane 6d03a79bca0a0f0d
 shifted lattice 5488a639bb859246
-spiral 10c5772a3846bba2
+spiral 1c8b856b385fa756
 spokes 9e4688df4760f035
 uniform bernoulli lines 43b28a0ce663843d
 uniform bernoulli plane 0c46f89128a102e9

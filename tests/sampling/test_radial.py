@@ -29,6 +29,19 @@ def test_golden_spokes_leave_two_or_three_gaps(number, gaps):
         np.testing.assert_allclose(sorted(found), sorted(gaps), atol=2e-6)
 
 
+def test_golden_arms_leave_two_or_three_gaps_of_the_full_turn():
+    # arms start at one end only: 360/phi = 222.492236 deg, the same theorem on the full circle
+    pattern = draw_pattern((256, 256), pattern="spiral", acceleration=10, calibration=0, turns=0.01)
+    ends = []
+    for shot in range(13):
+        at = np.argwhere(pattern.mask)[pattern.order[:, 0] == shot]
+        far = at[np.argmax(((at - 128) ** 2).sum(axis=1))] - 128
+        ends.append(np.degrees(np.arctan2(far[1], far[0])) % 360)
+    found = np.diff([*np.sort(ends), min(ends) + 360])
+    sizes = np.array([2 * 16.230590, 2 * 10.031056])
+    assert np.abs(found[:, None] - sizes).min(axis=1).max() < 1  # to the rounding of the grid
+
+
 @pytest.mark.parametrize("size", [64, 256])
 def test_radial_nyquist(size):
     # pi/2 N diametral spokes (256: 403): step along the rim at most one position (textbook)
