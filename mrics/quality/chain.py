@@ -1,0 +1,192 @@
+"""One acquisition through one recovery, run again and again with everything but the data frozen.
+
+Noise replicas, point perturbations and inserted features all ask the same question: how does the
+recovered image change when the data change? The first recovery chooses its weight; that weight and
+the noise level are kept for all later ones, and random shifts restart from the same seed, so that
+a difference of two images is due to the data alone.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterable, Iterator
+from dataclasses import fields, replace
+from itertools import islice
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from mrics.encoding import Acquisition
+from mrics.errors import QualityError
+from mrics.numerics import centred_fft, map_blocks
+from mrics.recovery import recover
+from mrics.recovery.settings import check_settings
+
+Array = NDArray[Any]
+Progress = Callable[[int, int], None]
+
+#: recoveries whose image is a linear function of the data, so that no result depends on them
+LINEAR = frozenset({"zero-filled", "least-squares"})
+_BATCH_BYTES = 96 * 2**20
+
+
+class Chain:
+    """A recovery with its settings frozen, and the encoding that changes of an image go through.
+
+    Parameters
+    ----------
+    acquisition : Acquisition
+        The data; choose few planes (:func:`planes_of`) where many runs are asked for.
+    method : str
+        Name of a recovery.
+    settings : dict
+        Its settings; a weight of "auto" is chosen once, on ``acquisition``.
+
+    Attributes
+    ----------
+    base : ndarray of shape (plane, u, v), complex
+        The recovered image.
+    sigma : float
+        Noise level the recovery works with: the data's own, or the floor where that is 0.
+    settings : dict
+        With the weight that was chosen.
+    runs : int
+        Recoveries of the whole stack done so far, the first included.
+    """
+
+    def __init__(self, acquisition: Acquisition, method: str, **settings: Any) -> None:
+        first = recover(acquisition, method, **settings)
+        chosen = first.certificate.weight
+        names = {entry.name for entry in fields(check_settings(method, settings))}
+        self.method = method
+        self.settings = dict(settings)
+        if "weight" in names and chosen is not None:
+            self.settings["weight"] = chosen
+        self.base = first.image
+        self.sigma = float(first.certificate.sigma)
+        self.acquisition = replace(acquisition, sigma_scan=self.sigma, sigma_added=0.0)
+        self.runs = 1
+        # A method with random parts draws them by plane number, so planes must keep theirs.
+        self._batched = "seed" not in names or self.settings.get("shift", "none") == "none"
+        self._root = _noise_root(acquisition)
+
+    @property
+    def linear(self) -> bool:
+        """True where the image is a linear function of the data."""
+        return self.method in LINEAR
+
+    def encode(self, change: Array) -> Array:
+        """K-space change of an image change of shape (plane, u, v), at the acquired samples."""
+        held = self.acquisition
+        images = change[:, None]
+        if held.sensitivities is not None:
+            images = images * held.sensitivities
+        kspace = centred_fft(np.ascontiguousarray(images, dtype=held.kspace.dtype))
+        kspace *= held.mask[held.pattern_index][:, None]
+        return kspace
+
+    def noise(self, generator: np.random.Generator) -> Array:
+        """One realisation of the acquisition's noise at the acquired samples."""
+        held = self.acquisition
+        real = held.kspace.real.dtype
+        parts = generator.standard_normal((*held.kspace.shape, 2), dtype=real.type)
+        noise = parts.view(held.kspace.dtype)[..., 0]
+        if self._root is not None:
+            planes, channels, u, v = noise.shape
+            noise = np.matmul(self._root.astype(noise.dtype), noise.reshape(planes, channels, -1))
+            noise = noise.reshape(planes, channels, u, v)
+        noise *= real.type(self.sigma)
+        noise *= held.mask[held.pattern_index][:, None]
+        return noise
+
+    def images(
+        self, changes: Iterable[Array], *, total: int = 0, progress: Progress | None = None
+    ) -> Iterator[Array]:
+        """Recovered images of the data with each of the k-space changes added.
+
+        Parameters
+        ----------
+        changes : iterable of ndarray of shape (plane, channel, u, v)
+        total : int
+            How many there are, for ``progress``.
+        progress : callable of (done, total), optional
+
+        Yields
+        ------
+        ndarray of shape (plane, u, v)
+        """
+        pending, done = iter(changes), 0
+        size = self._batch_size()
+        while batch := list(islice(pending, size)):
+            for image in self._run(batch):
+                done += 1
+                if progress is not None:
+                    progress(done, total)
+                yield image
+
+    def _batch_size(self) -> int:
+        held = self.acquisition
+        one = held.kspace.nbytes
+        if held.sensitivities is not None and held.sensitivities.shape[0] > 1:
+            one += held.sensitivities.nbytes
+        return max(1, min(32, _BATCH_BYTES // max(1, one)))
+
+    def _run(self, batch: list[Array]) -> list[Array]:
+        held = self.acquisition
+        self.runs += len(batch)
+        if not self._batched:
+            return map_blocks(
+                lambda change: self._recover(replace(held, kspace=held.kspace + change)), batch
+            )
+        maps = held.sensitivities
+        if maps is not None and maps.shape[0] > 1:
+            maps = np.concatenate([maps] * len(batch))
+        joined = replace(
+            held,
+            kspace=np.concatenate([held.kspace + change for change in batch]),
+            pattern_index=np.tile(held.pattern_index, len(batch)),
+            sensitivities=maps,
+            axes=None,
+            volume_shape=(),
+        )
+        images = self._recover(joined)
+        return list(images.reshape(len(batch), *self.base.shape))
+
+    def _recover(self, acquisition: Acquisition) -> Array:
+        return recover(acquisition, self.method, **self.settings).image
+
+
+def planes_of(acquisition: Acquisition, planes: Iterable[int]) -> Acquisition:
+    """An acquisition of some planes of the stack.
+
+    Raises
+    ------
+    QualityError
+        For planes that are not in the stack.
+    """
+    chosen = [int(plane) for plane in planes]
+    count = acquisition.shape[0]
+    outside = [plane for plane in chosen if not 0 <= plane < count]
+    if outside or not chosen:
+        raise QualityError(
+            f"Planes {outside or chosen} are not in a stack of {count}.",
+            "planes",
+            f"Choose from 0 to {count - 1}.",
+        )
+    maps = acquisition.sensitivities
+    return replace(
+        acquisition,
+        kspace=np.ascontiguousarray(acquisition.kspace[chosen]),
+        pattern_index=acquisition.pattern_index[chosen],
+        sensitivities=maps if maps is None or maps.shape[0] == 1 else maps[chosen],
+        axes=None,
+        volume_shape=(len(chosen), *acquisition.shape[1:]),
+    )
+
+
+def _noise_root(acquisition: Acquisition) -> Array | None:
+    if acquisition.covariance is None or acquisition.channels == 1:
+        return None
+    from mrics.encoding.noise import relative_covariance
+
+    return np.linalg.cholesky(relative_covariance(acquisition.covariance, acquisition.channels))
