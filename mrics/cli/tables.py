@@ -65,6 +65,18 @@ def verdict_lines(results: dict[str, Any]) -> str:
                 f"    {certificates['of'] - certificates['reached']} of {certificates['of']} "
                 "recoveries did not reach their tolerance"
             )
+    for search in results.get("searches", []):
+        looks = ", ".join(
+            f"R {d['acceleration']:g} {d['status']} ({d['draws']} draws)"
+            for d in search["decisions"]
+        )
+        best = "none passes" if search["arm"] is None else f"R = {search['acceleration']:g}"
+        lines += textwrap.wrap(
+            f"search {search['family']}: {looks}; fastest that passes: {best}",
+            WIDTH,
+            subsequent_indent="    ",
+        )
+        lines += [f"    {text}" for text in search["findings"]]
     for scan in results["scans"]:
         for finding in scan["findings"]:
             lines.append(f"warning: {scan['id']}: {finding['what']} ({finding['where']})")

@@ -41,6 +41,8 @@ class Arm:
         Settings of the method.
     averages : int or None
         Averages of this arm where they differ from those of ``[sequence]``.
+    search : str
+        Label of the search that may choose this arm; empty for arms that are always run.
     """
 
     id: str
@@ -53,6 +55,7 @@ class Arm:
     recovery_name: str
     recovery_settings: dict[str, Any] = field(hash=False)
     averages: int | None = None
+    search: str = ""
 
 
 def sampling_name(entry: Sampling, others: tuple[Sampling, ...] = ()) -> str:
@@ -163,6 +166,7 @@ def _arm(
         recovery_name=recovery_name,
         recovery_settings=method.extra,
         averages=entry.averages,
+        search=f"{name}, {recovery_name}" if entry.searched and not today else "",
     )
 
 

@@ -290,6 +290,19 @@ def _check_arms(protocol: Protocol, fail: Fail) -> None:
         )
     _repeats(protocol, fail)
     for at, entry in enumerate(protocol.sampling):
+        if entry.searched and not protocol.acceptance:
+            fail(
+                "A search needs something to pass, and there is no acceptance limit.",
+                ("sampling", at, "acceleration"),
+                "Add limits to [acceptance], or list accelerations.",
+            )
+        if entry.searched and entry.search_from >= entry.search_to:
+            fail(
+                f"search_from = {entry.search_from:g} is not below search_to = "
+                f"{entry.search_to:g}.",
+                ("sampling", at, "search_from"),
+                "Give the slowest acceleration first.",
+            )
         _ask_room(protocol, ("sampling", at), _check_sampling, entry)
         if not entry.accelerations and entry.extra.get("pattern") != "file":
             fail(

@@ -39,6 +39,13 @@ def _as_list(value: Any) -> Any:
     return value if isinstance(value, tuple) else (value,)
 
 
+def _asked(value: Any) -> Any:
+    """Accelerations as a tuple; empty for "search"."""
+    if isinstance(value, tuple) and not value:
+        raise ValueError("one value or a list of at least one, or the word search")
+    return () if value == "search" else _as_list(value)
+
+
 def _as_entry(value: Any) -> Any:
     """A bare path where a table of paths may stand."""
     if not isinstance(value, str | dict):
@@ -201,16 +208,31 @@ class Sampling(OpenSection):
     """One ``[[sampling]]`` table; keys of its law, draw or pattern are checked by sampling."""
 
     name: str | None = Field(None, min_length=1, max_length=80, description="label of this entry")
-    acceleration: Annotated[tuple[Acceleration, ...], BeforeValidator(_as_list)] | None = Field(
-        None, description="one acceleration or a list; a lattice with steps needs none"
+    acceleration: Annotated[tuple[Acceleration, ...], BeforeValidator(_asked)] | None = Field(
+        None,
+        description='one acceleration, a list, or "search" for the fastest that passes; a lattice '
+        "with steps needs none",
+    )
+    search_from: Acceleration = Field(1.5, description="slowest acceleration a search looks at")
+    search_to: Acceleration = Field(9.0, description="fastest acceleration a search looks at")
+    search_steps: Annotated[int, Field(ge=2, le=64)] = Field(
+        16, description="accelerations a search chooses from, ends included"
     )
     averages: Annotated[int, Field(ge=1, le=256)] | None = Field(
         None, description="signal averages of these arms (default: those of [sequence])"
     )
 
     @property
+    def searched(self) -> bool:
+        """True where the fastest acceleration that passes is to be found."""
+        return self.acceleration == ()
+
+    @property
     def accelerations(self) -> tuple[float, ...]:
         """What ``acceleration`` says, else what a regular pattern's own keys say, else empty."""
+        if self.searched:
+            step = (self.search_to - self.search_from) / (self.search_steps - 1)
+            return tuple(round(self.search_from + n * step, 4) for n in range(self.search_steps))
         if self.acceleration:
             return self.acceleration
         if self.extra.get("pattern") == "full":

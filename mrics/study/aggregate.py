@@ -36,6 +36,7 @@ def arm_numbers(
     limits: Sequence[Limit],
     today: str | None,
     seed: int,
+    level: float = 0.95,
 ) -> dict[str, ArmNumbers]:
     """Numbers of every arm.
 
@@ -55,7 +56,9 @@ def arm_numbers(
     ]
     summaries: dict[str, dict[str, Summary | None]] = {
         arm: {
-            name: summarise(_records(mine, name), direction=METRICS[name].direction, seed=seed)
+            name: summarise(
+                _records(mine, name), direction=METRICS[name].direction, level=level, seed=seed
+            )
             for name in scored
         }
         for arm, mine in units.items()
@@ -63,7 +66,7 @@ def arm_numbers(
     differences: dict[str, dict[str, Comparison]] = {arm: {} for arm in units}
     if today is not None:
         for name in scored:
-            for arm, comparison in _against_today(units, today, name, seed).items():
+            for arm, comparison in _against_today(units, today, name, seed, level).items():
                 differences[arm][name] = comparison
     metric_of = {limit.key: limit.metric for limit in limits}
     numbers = {}
@@ -74,7 +77,7 @@ def arm_numbers(
             for limit in limits
             if arm != today or limit.kind in ("mean", "worst")
         }
-        judged = verdict(summaries[arm], held, differences[arm])
+        judged = verdict(summaries[arm], held, differences[arm], level=level)
         numbers[arm] = ArmNumbers(
             metrics={name: _placed(summary) for name, summary in summaries[arm].items() if summary},
             comparisons={name: c.as_dict() for name, c in differences[arm].items()},
@@ -133,14 +136,14 @@ def overall_verdict(arms: Sequence[dict[str, Any]]) -> dict[str, Any]:
 
 
 def _against_today(
-    units: dict[str, list[dict[str, Any]]], today: str, name: str, seed: int
+    units: dict[str, list[dict[str, Any]]], today: str, name: str, seed: int, level: float
 ) -> dict[str, Comparison]:
     arms = {arm: _records(mine, name) for arm, mine in units.items() if arm != today}
     arms = {arm: records for arm, records in arms.items() if any(r[3] is not None for r in records)}
     baseline = _records(units[today], name)
     if not arms or not any(r[3] is not None for r in baseline):
         return {}
-    return compare_arms(arms, baseline, seed=seed)
+    return compare_arms(arms, baseline, level=level, seed=seed)
 
 
 def _records(units: Sequence[dict[str, Any]], name: str) -> Records:

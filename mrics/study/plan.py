@@ -39,11 +39,15 @@ class PlanRow:
         Its first draw on the first scan's grid, in the order the sequence plays it.
     timing : Timing
         Scan time of the arm and of the full scan.
+    draws : int
+        Draws the study makes of it: one for a regular pattern without added noise, which has no
+        luck in it.
     """
 
     arm: Arm
     played: Ordered
     timing: Timing
+    draws: int
 
     @property
     def pattern(self) -> Pattern:
@@ -117,18 +121,46 @@ class StudyPlan:
         """Memory one scan takes as complex64, the largest of them."""
         return max(8 * math.prod(read_header(scan.path).shape) for scan in self.scans)
 
-    def units(self, folder: Path, hashes: Sequence[str]) -> list[Unit]:
-        """Every unit, scan by scan so that each scan is read once; ``hashes`` name the scans."""
+    def families(self) -> dict[str, list[PlanRow]]:
+        """Arms that a search chooses from, slowest first, by the search's label."""
+        found: dict[str, list[PlanRow]] = {}
+        for row in self.rows:
+            if row.arm.search:
+                found.setdefault(row.arm.search, []).append(row)
+        return found
+
+    def units(
+        self,
+        folder: Path,
+        hashes: Sequence[str],
+        rows: Sequence[PlanRow],
+        draws: int | None = None,
+    ) -> list[Unit]:
+        """Units of some arms, scan by scan so that each scan is read once.
+
+        Parameters
+        ----------
+        folder : Path
+            Study folder.
+        hashes : sequence of str
+            SHA-256 of every scan.
+        rows : sequence of PlanRow
+            The arms.
+        draws : int, optional
+            Their first draws only.
+        """
         study = self.protocol.study
         units = []
         for scan, scan_id, sha256 in zip(self.scans, self.scan_ids, hashes, strict=True):
-            for row in self.rows:
+            for row in rows:
                 ratio = self._averages_ratio(row.arm)
-                for draw in range(self._draws(row)):
+                for draw in range(row.draws if draws is None else min(draws, row.draws)):
                     key = content_key(
                         scan=sha256,
                         axes=(self.axes.readout, self.axes.phase, self.axes.partition),
                         planes=self.choice.spec,
+                        # Any change in how patterns are drawn, or in files they come from.
+                        first_pattern=row.pattern.hash,
                         channel_axis=self.channel_axis,
                         sampling={k: v for k, v in row.arm.sampling.items() if k != "name"},
                         acceleration=row.arm.acceleration,
@@ -220,11 +252,6 @@ class StudyPlan:
             values["tissue_t2_ms"] = self.protocol.sequence.tissue_t2_ms
         return values
 
-    def _draws(self, row: PlanRow) -> int:
-        """A regular pattern has no luck in it: without added noise one draw says all."""
-        lucky = row.pattern.probability is not None or self.noise != Noise()
-        return self.protocol.study.draws if lucky else 1
-
     def _averages_ratio(self, arm: Arm) -> float:
         sequence = self.protocol.sequence
         reference = self.protocol.study.reference_averages or sequence.averages
@@ -263,26 +290,34 @@ def plan_study(protocol: Protocol, *, quick: bool = False) -> StudyPlan:
     for scan, shape in zip(scans, shapes, strict=True):
         grids.setdefault(pattern_grid(axes, shape), scan.path.name)
     slices = None if axes.partition else shapes[0][axes.order[0]]
-    arms = protocol.arms()
+    noise = Noise(study.sigma_added, study.snr, study.noise_percent)
     rows: list[PlanRow] = []
+    left_out: list[str] = []
     for number, (grid, name) in enumerate(grids.items()):
-        for arm in arms:
+        for arm in protocol.arms():
+            if arm.id in left_out:
+                continue
             try:
                 played = draw_of(protocol, arm, grid, 0)
             except MricsError as error:
+                if arm.search:
+                    # A search chooses among what the grid can hold.
+                    left_out.append(arm.id)
+                    continue
                 where = f"{protocol.path}: arm {arm.label}, grid of {name}"
                 raise type(error)(error.what, f"{where}; {error.where}", error.fix) from error
             if number == 0:
                 timing = scan_time(protocol, played.pattern, arm=arm, slices=slices)
-                rows.append(PlanRow(arm, played, timing))
+                lucky = played.pattern.probability is not None or noise != Noise()
+                rows.append(PlanRow(arm, played, timing, study.draws if lucky else 1))
     return StudyPlan(
         protocol=protocol,
         axes=axes,
         scans=scans,
         scan_ids=_unique_ids(scans),
-        rows=tuple(rows),
+        rows=tuple(row for row in rows if row.arm.id not in left_out),
         choice=choice,
-        noise=Noise(study.sigma_added, study.snr, study.noise_percent),
+        noise=noise,
         channel_axis=protocol.grid.channel_axis,
     )
 

@@ -19,7 +19,7 @@ from mrics.scan import write_nifti
 from mrics.study.aggregate import arm_numbers, overall_verdict
 from mrics.study.code_version import code_version
 from mrics.study.files import plain
-from mrics.study.plan import StudyPlan
+from mrics.study.plan import PlanRow, StudyPlan
 
 SCHEMA = 1
 
@@ -72,17 +72,18 @@ def write_references(plan: StudyPlan, folder: Path) -> list[dict[str, Any]]:
 
 def study_results(
     plan: StudyPlan,
+    rows: Sequence[PlanRow],
     records: list[dict[str, Any]],
     results: list[dict[str, Any]],
     references: list[dict[str, Any]],
 ) -> dict[str, Any]:
     """Everything but the timings: arm numbers are computed from the units alone."""
     protocol = plan.protocol
-    by_arm = {row.arm.id: [r for r in results if r["arm"] == row.arm.id] for row in plan.rows}
-    today = next((row.arm.id for row in plan.rows if row.arm.today), None)
+    by_arm = {row.arm.id: [r for r in results if r["arm"] == row.arm.id] for row in rows}
+    today = next((row.arm.id for row in rows if row.arm.today), None)
     numbers = arm_numbers(by_arm, protocol.acceptance, today, protocol.study.seed)
     arms = []
-    for row in plan.rows:
+    for row in rows:
         units = by_arm[row.arm.id]
         certificates = [u["certificate"] for u in units]
         arms.append(

@@ -6,6 +6,7 @@ import shutil
 import time
 from collections.abc import Callable, Sequence
 from concurrent.futures import BrokenExecutor, Executor, as_completed
+from contextlib import ExitStack
 from pathlib import Path
 from typing import Any
 
@@ -15,9 +16,10 @@ from mrics.study.executors import InProcess, cluster_executor, fitting_workers, 
 from mrics.study.files import plain, write_json, write_text
 from mrics.study.folder import claim_folder
 from mrics.study.ledger import Ledger
-from mrics.study.plan import StudyPlan, plan_study
+from mrics.study.plan import PlanRow, StudyPlan, plan_study
 from mrics.study.results import scan_record, slice_table, study_results, write_references
 from mrics.study.scratch import SCRATCH, ScratchError, write_scratch
+from mrics.study.search import search_family
 from mrics.study.units import Unit, run_unit_here, run_unit_shared
 
 Progress = Callable[[int, int, str], None]
@@ -72,15 +74,27 @@ def run_study(
     folder = Path(out)
     records = [scan_record(plan, number) for number in range(len(plan.scans))]
     claim_folder(folder, protocol, force)
-    with Ledger(folder) as ledger:
-        units = plan.units(folder, [record["sha256"] for record in records])
+    hashes = [record["sha256"] for record in records]
+    with Ledger(folder) as ledger, _Work(plan, folder, ledger, progress, workers, cluster) as work:
         references = write_references(plan, folder)
-        work = _Work(plan, folder, ledger, progress)
-        try:
-            results = work.run(units, workers, cluster)
-        finally:
-            shutil.rmtree(folder / SCRATCH, ignore_errors=True)
-        content = study_results(plan, records, results, references)
+        rows = [row for row in plan.rows if not row.arm.search]
+        results = work.run(plan.units(folder, hashes, rows))
+        found = []
+        for family in plan.families().values():
+            visited: dict[str, list[dict[str, Any]]] = {}
+
+            def looked_at(
+                row: PlanRow, draws: int, visited: dict[str, list[dict[str, Any]]] = visited
+            ) -> list[dict[str, Any]]:
+                visited[row.arm.id] = work.run(plan.units(folder, hashes, [row], draws))
+                return visited[row.arm.id]
+
+            limits, seed = protocol.acceptance, protocol.study.seed
+            found.append(search_family(family, looked_at, limits, _today(plan, results), seed))
+            rows += [row for row in family if row.arm.id in visited]
+            results += [result for row in family for result in visited.get(row.arm.id, [])]
+        content = study_results(plan, rows, records, results, references)
+        content["searches"] = [one.as_dict() for one in found]
         content["timing"] = {
             "study_s": time.perf_counter() - started,
             "units": [{"key": r["key"], **r["timing"]} for r in results],
@@ -91,59 +105,95 @@ def run_study(
     return loaded
 
 
+def _today(
+    plan: StudyPlan, results: list[dict[str, Any]]
+) -> tuple[str, list[dict[str, Any]]] | None:
+    """Today's arm and its results."""
+    for row in plan.rows:
+        if row.arm.today:
+            return row.arm.id, [r for r in results if r["arm"] == row.arm.id]
+    return None
+
+
 class _Work:
     """The units of one run: what the ledger holds already, and the rest through an executor."""
 
     def __init__(
-        self, plan: StudyPlan, folder: Path, ledger: Ledger, progress: Progress | None
+        self,
+        plan: StudyPlan,
+        folder: Path,
+        ledger: Ledger,
+        progress: Progress | None,
+        workers: int | None,
+        cluster: str | None,
     ) -> None:
         self._plan = plan
         self._folder = folder
         self._ledger = ledger
         self._progress = progress
-        self._done: dict[str, dict[str, Any]] = {}
+        self._workers = workers
+        self._cluster = cluster
+        self._resources = ExitStack()
+        self._executor: Executor | None = None
         self._total = 0
+        self._count = 0
+        self._said = False
 
-    def run(
-        self, units: Sequence[Unit], workers: int | None, cluster: str | None
-    ) -> list[dict[str, Any]]:
-        """Results of all units, in their order."""
+    def __enter__(self) -> _Work:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self._resources.close()
+        shutil.rmtree(self._folder / SCRATCH, ignore_errors=True)
+
+    def run(self, units: Sequence[Unit]) -> list[dict[str, Any]]:
+        """Results of the units, in their order: those of the ledger, and the rest computed."""
         kept = self._ledger.finished(unit.key for unit in units)
-        self._done = {u.key: kept[u.key] for u in units if _usable(u, kept.get(u.key))}
-        self._total = len({unit.key for unit in units})
-        if self._progress is not None:
-            self._progress(len(self._done), self._total, "")
-        waiting = {unit.key: unit for unit in units if unit.key not in self._done}
-        self._compute(list(waiting.values()), workers, cluster)
-        return [_labelled(self._done[unit.key], unit) for unit in units]
+        done = {u.key: kept[u.key] for u in units if _usable(u, kept.get(u.key))}
+        self._total += len({unit.key for unit in units})
+        self._count += len(done)
+        if self._progress is not None and not self._said:
+            self._progress(self._count, self._total, "")
+            self._said = True
+        waiting = {unit.key: unit for unit in units if unit.key not in done}
+        done |= self._compute(list(waiting.values()))
+        return [_labelled(done[unit.key], unit) for unit in units]
 
-    def _compute(self, waiting: list[Unit], workers: int | None, cluster: str | None) -> None:
+    def _compute(self, waiting: list[Unit]) -> dict[str, dict[str, Any]]:
+        if not waiting:
+            return {}
+        executor = self._executor or self._open(len(waiting))
+        if not isinstance(executor, InProcess):
+            return self._spread(executor, waiting)
+        done = {}
+        for unit in waiting:
+            done[unit.key] = self._note(unit, executor.submit(run_unit_here, unit).result())
+        return done
+
+    def _open(self, units: int) -> Executor:
+        """The executor of this run, and the scratch its processes share."""
+        workers = self._workers
         if workers is None:
-            workers = fitting_workers(self._plan.scan_bytes(), len(waiting))
-        if cluster is None and (workers == 1 or len(waiting) <= 1):
-            with InProcess() as here:
-                for unit in waiting:
-                    self._note(unit, here.submit(run_unit_here, unit).result())
-            return
-        for number, scan_id in enumerate(self._plan.scan_ids):
-            if any(unit.scan_id == scan_id for unit in waiting):
-                self._write_scratch(number)
-        if cluster is None:
-            with pool(min(workers, len(waiting))) as executor:
-                self._spread(executor, waiting)
-            return
-        with cluster_executor(cluster) as executor:
-            self._spread(executor, waiting)
+            workers = fitting_workers(self._plan.scan_bytes(), units)
+        if self._cluster is None and workers == 1:
+            self._executor = self._resources.enter_context(InProcess())
+            return self._executor
+        for number in range(len(self._plan.scan_ids)):
+            self._write_scratch(number)
+        opened = pool(workers) if self._cluster is None else cluster_executor(self._cluster)
+        self._executor = self._resources.enter_context(opened)
+        return self._executor
 
-    def _spread(self, executor: Executor, waiting: Sequence[Unit]) -> None:
+    def _spread(self, executor: Executor, waiting: Sequence[Unit]) -> dict[str, dict[str, Any]]:
         """Run units on an executor; a damaged scratch is made again, once for every unit."""
         futures = {executor.submit(run_unit_shared, unit): unit for unit in waiting}
         again: list[Unit] = []
+        done: dict[str, dict[str, Any]] = {}
         try:
             for future in as_completed(futures):
                 unit = futures[future]
                 try:
-                    self._note(unit, future.result())
+                    done[unit.key] = self._note(unit, future.result())
                 except ScratchError:
                     again.append(unit)
             for number, scan_id in enumerate(self._plan.scan_ids):
@@ -151,7 +201,8 @@ class _Work:
                 if mine:
                     self._write_scratch(number)
                 for unit in mine:
-                    self._note(unit, executor.submit(run_unit_shared, unit).result())
+                    result = executor.submit(run_unit_shared, unit).result()
+                    done[unit.key] = self._note(unit, result)
         except BrokenExecutor as error:
             raise StudyError(
                 "A worker process was ended from outside (out of memory, or killed).",
@@ -161,17 +212,19 @@ class _Work:
         finally:
             for future in futures:
                 future.cancel()
+        return done
 
     def _write_scratch(self, number: int) -> None:
         scan = self._plan.prepared(number)
         write_scratch(scan, self._folder / SCRATCH / self._plan.scan_ids[number])
 
-    def _note(self, unit: Unit, result: dict[str, Any]) -> None:
+    def _note(self, unit: Unit, result: dict[str, Any]) -> dict[str, Any]:
         self._ledger.commit(unit.key, result)
-        self._done[unit.key] = result
+        self._count += 1
         if self._progress is not None:
             label = f"{unit.arm.label}, {unit.scan_id}, draw {unit.draw}"
-            self._progress(len(self._done), self._total, label)
+            self._progress(self._count, self._total, label)
+        return result
 
 
 def _usable(unit: Unit, result: dict[str, Any] | None) -> bool:

@@ -43,7 +43,15 @@ def test_values_hold_defaults_and_are_plain():
     assert values["sequence"]["dummy_shots"] == 0
     assert values["grid"]["readout_axis"] == "i"
     assert values["sampling"] == [
-        {"name": None, "acceleration": [2.0], "averages": None, "law": "uniform"}
+        {
+            "name": None,
+            "acceleration": [2.0],
+            "search_from": 1.5,
+            "search_to": 9.0,
+            "search_steps": 16,
+            "averages": None,
+            "law": "uniform",
+        }
     ]
 
 
