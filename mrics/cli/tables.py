@@ -59,6 +59,8 @@ def verdict_lines(results: dict[str, Any]) -> str:
             f"  {arm['label'][:width].ljust(width)}  {minutes(arm['scan_time_s']):>6}  "
             f"{arm['verdict']['status']:<9} {scores}"
         )
+        advice = {one["advice"] for one in arm["verdict"]["limits"] if one.get("advice")}
+        lines += [f"    {text}" for text in sorted(advice)]
         certificates = arm["certificates"]
         if certificates["reached"] < certificates["of"]:
             lines.append(

@@ -8,6 +8,10 @@ from typing import Any
 
 from mrics.protocol import Limit, minutes
 from mrics.quality import METRICS, Comparison, Summary, compare_arms, summarise, verdict
+from mrics.quality.acceptance import LimitResult
+from mrics.quality.comparison import UNDECIDED
+from mrics.quality.confidence import draw_means
+from mrics.study.advice import what_would_decide
 
 Records = list[tuple[str, int, tuple[int, int], float | None]]
 
@@ -68,7 +72,7 @@ def arm_numbers(
         for name in scored:
             for arm, comparison in _against_today(units, today, name, seed, level).items():
                 differences[arm][name] = comparison
-    metric_of = {limit.key: limit.metric for limit in limits}
+    by_key = {limit.key: limit for limit in limits}
     numbers = {}
     for arm in units:
         # Today's arm has no difference to itself to hold a margin against.
@@ -84,7 +88,12 @@ def arm_numbers(
             verdict={
                 **judged.as_dict(),
                 "limits": [
-                    {**one.as_dict(), "metric": metric_of[one.key]} for one in judged.limits
+                    {
+                        **one.as_dict(),
+                        "metric": by_key[one.key].metric,
+                        "advice": _advice(units[arm], by_key[one.key], one, level),
+                    }
+                    for one in judged.limits
                 ],
             },
         )
@@ -164,6 +173,16 @@ def _placed(summary: Summary) -> dict[str, Any]:
     index, frame = values["worst_where"]["slice"]
     values["worst_where"] = {**values["worst_where"], "slice": index, "frame": frame}
     return values
+
+
+def _advice(
+    units: Sequence[dict[str, Any]], limit: Limit, result: LimitResult, level: float
+) -> str | None:
+    """What would decide an undecided limit on the mean."""
+    if result.status != UNDECIDED or limit.kind != "mean":
+        return None
+    table = draw_means(_records(units, limit.metric))
+    return what_would_decide(table, result.limit, level)
 
 
 def _listed(arms: Sequence[dict[str, Any]]) -> str:
