@@ -6,6 +6,7 @@ import hashlib
 import tomllib
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
+from datetime import date, time
 from pathlib import Path
 from typing import Any, TypeVar
 
@@ -207,12 +208,14 @@ def _parse(text: str, file: Path) -> dict[str, Any]:
 
 
 def _frozen(value: Any) -> Any:
-    """Lists as tuples, so that a protocol cannot be changed once read."""
+    """Lists as tuples, so that a protocol cannot be changed once read; dates, which no key takes,
+    as text.
+    """
     if isinstance(value, list):
         return tuple(_frozen(item) for item in value)
     if isinstance(value, dict):
         return {key: _frozen(item) for key, item in value.items()}
-    return value
+    return value.isoformat() if isinstance(value, date | time) else value
 
 
 def _validate(

@@ -88,7 +88,7 @@ REFUSED = [
     ("draws = 5", "draws = true", "true is not allowed.*whole number from 1", "study.draws"),
     ("draws = 5", "draws = 0", "draws = 0 is not allowed", "study.draws"),
     ("= 20261201", "= -1", "seed = -1.*whole number from 0", "study.seed"),
-    ("= 20261201", "= 1979-05-27", "seed = .* is not allowed", "study.seed"),
+    ("= 20261201", "= 1979-05-27", "seed = .1979-05-27. is not allowed", "study.seed"),
     ("6.5]", "0.5]", "0.5 is not allowed.*from 1 up to", r"sampling\[1\].acceleration\[3\]"),
     ("[2, 4, 6.5]", "0.99", "0.99 is not allowed.*from 1 up to", r"sampling\[1\].acceleration"),
     ("[2, 4, 6.5]", "[]", "one value or a list of at least one", r"sampling\[1\].acceleration"),
