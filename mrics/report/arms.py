@@ -6,13 +6,15 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
-from mrics.report.folder import StudyFolder
+from mrics.report.folder import StoredMap, StudyFolder
 from mrics.report.image_figures import PanelRow, Window, error_factor, image_window
 from mrics.report.pattern_figures import PatternPicture
 from mrics.report.pictures import ScanPictures
 from mrics.report.summary import first_metric, shown_slices
 from mrics.report.words import metric_value, metric_words
+from mrics.sampling import Pattern
 
 
 @dataclass(frozen=True)
@@ -75,16 +77,27 @@ def arm_pictures(
 def pattern_picture(study: StudyFolder, arm: dict[str, Any]) -> PatternPicture | None:
     """Stored pattern of an arm (first frame where frames differ), None where it is not stored.
 
-    The stored mask has the phase axis first, then the partition axis, then frames.
+    The stored maps have the phase axis first, then the partition axis, then frames.
     """
     stored = study.find("pattern", "", arm["id"])
     if stored is None:
         return None
-    mask = np.asarray(stored.load()[0]) > 0
-    mask = mask[..., 0] if mask.ndim == 4 else mask
-    mask = mask.reshape([n for n in mask.shape if n > 1] or [1])
+    mask = _one_frame(stored)
+    echoes = study.find("order", "", arm["id"])
     grid = (study.results["protocol"].get("values") or {}).get("grid") or {}
-    return PatternPicture(mask, axis_name("phase", grid), axis_name("partition", grid))
+    return PatternPicture(
+        Pattern(mask > 0),
+        axis_name("phase", grid),
+        axis_name("partition", grid),
+        _one_frame(echoes) if echoes else None,
+    )
+
+
+def _one_frame(stored: StoredMap) -> NDArray[np.int64]:
+    """A map on the phase-encode grid, first frame, without its axes of length 1."""
+    values = np.asarray(stored.load()[0])
+    values = values[..., 0] if values.ndim == 4 else values
+    return values.reshape([n for n in values.shape if n > 1] or [1]).astype(np.int64)
 
 
 def axis_name(role: str, grid: dict[str, Any]) -> str:

@@ -9,7 +9,7 @@ from mrics.report.arms import ArmPictures, arm_pictures, pattern_picture, window
 from mrics.report.charts import against_acceleration, by_slice
 from mrics.report.folder import StudyFolder, open_folder
 from mrics.report.image_figures import Window, panel_figure
-from mrics.report.pattern_figures import largest_side_value, pattern_figure, point_spread
+from mrics.report.pattern_figures import pattern_figure
 from mrics.report.pictures import ScanPictures, load_pictures
 from mrics.report.rendering import render, write_page
 from mrics.report.style_figures import svg_uri
@@ -97,15 +97,8 @@ def _arm(
     picture = pattern_picture(study, arm)
     out["pattern"] = None
     if picture is not None:
-        peak, at = largest_side_value(point_spread(picture.mask))
-        distance = " and ".join(f"{d:+d}" for d in at)
         out["pattern"] = svg_uri(pattern_figure(picture))
-        out["pattern_text"] = (
-            f"Sampling pattern of {arm['label']}: {int(picture.mask.sum())} of "
-            f"{picture.mask.size} positions; density by distance from the centre of k-space; "
-            f"point spread with its largest side value {100 * peak:.1f} % of the peak at "
-            f"{distance} voxels."
-        )
+        out["pattern_text"] = picture.sentence
     shown = arm_pictures(study, arm, pictures)
     out["pictures"] = shown
     if shown is not None:

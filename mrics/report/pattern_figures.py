@@ -2,73 +2,83 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from functools import cached_property
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from mrics.numerics import centred_ifft
 from mrics.report.colours import INK, MUTED, SERIES
 from mrics.report.style_figures import figure_style, new_figure
+from mrics.sampling import Pattern, Spread, spread
 
 _FLOOR_DB = -60.0
 
 
 @dataclass(frozen=True)
 class PatternPicture:
-    """A mask as the page draws it.
+    """A pattern as the page draws it (the first frame where frames differ).
 
     Attributes
     ----------
-    mask : ndarray of bool, shape (n,) or (rows, columns)
-        Acquired positions, zero frequency at N//2.
+    pattern : Pattern
+        One frame.
     row_label, column_label : str
-        Names of the axes ("phase (j)").
-    probability : ndarray of float or None
-        Inclusion probability the pattern was drawn from, shape of mask.
+        Names of its axes ("phase (j)").
+    echo : ndarray of int, shape of the mask, or None
+        Echo of the train that acquires each position, from 1; 0 where nothing is acquired.
     """
 
-    mask: NDArray[np.bool_]
+    pattern: Pattern
     row_label: str = "phase"
     column_label: str = "partition"
-    probability: NDArray[np.float64] | None = None
+    echo: NDArray[np.int64] | None = None
+
+    @property
+    def mask(self) -> NDArray[np.bool_]:
+        """Acquired positions."""
+        return self.pattern.mask
 
     @property
     def one_dimensional(self) -> bool:
         """A pattern of lines along one phase axis."""
         return self.mask.ndim == 1
 
+    @cached_property
+    def spread(self) -> Spread:
+        """What the pattern does to a point."""
+        return spread(self.pattern)
 
-def point_spread(mask: NDArray[np.bool_]) -> NDArray[np.float64]:
-    """Size of the point spread of a pattern, peak 1, centre at N//2.
+    @property
+    def sentence(self) -> str:
+        """What the pictures show, in words."""
+        facts = self.spread
+        text = f"{int(self.mask.sum())} of {self.mask.size} positions acquired"
+        if facts.side_lobe > 1e-4:
+            distance = " and ".join(f"{d:+d}" for d in facts.side_lobe_at).replace("-", "−")
+            text += (
+                f"; largest side lobe of the point spread {100 * facts.side_lobe:.1f} % of the "
+                f"peak at {distance} voxels"
+            )
+        if facts.incoherent_peak is not None:
+            text += f"; largest random part {100 * facts.incoherent_peak:.1f} %"
+        return text + "."
 
-    The transform of the mask divided by its sum: how a point looks in the zero-filled image.
-    """
-    spread = np.abs(centred_ifft(mask.astype(complex), tuple(range(-mask.ndim, 0))))
-    return spread / (mask.sum() / np.sqrt(mask.size))
 
-
-def largest_side_value(spread: NDArray[np.float64]) -> tuple[float, tuple[int, ...]]:
-    """Largest value of a point spread away from its main lobe, and its distance in voxels.
-
-    The main lobe is walked down from the centre along every axis to its first rise; what lies
-    outside the box of those half-widths is searched.
-    """
-    centre = tuple(n // 2 for n in spread.shape)
-    outside = np.ones(spread.shape, dtype=bool)
-    box = []
-    for axis, middle in enumerate(centre):
-        line = np.moveaxis(spread, axis, 0)[(slice(None), *np.delete(centre, axis))]
-        upward = line[middle:]
-        rise = np.flatnonzero(np.diff(upward) > 0)
-        width = int(rise[0]) if rise.size else 0
-        box.append(slice(max(0, middle - width), middle + width + 1))
-    outside[tuple(box)] = False
-    if not outside.any():
-        return 0.0, tuple(0 for _ in centre)
-    at = np.unravel_index(np.argmax(np.where(outside, spread, -1.0)), spread.shape)
-    return float(spread[at]), tuple(int(i - c) for i, c in zip(at, centre, strict=True))
+def picture_of(pattern: Pattern, row_label: str, column_label: str) -> PatternPicture:
+    """Picture of a pattern's first frame, with its echoes where it has an order of several."""
+    first = pattern.mask[0] if pattern.frames else pattern.mask
+    probability = pattern.probability
+    if probability is not None and pattern.frames:
+        probability = probability[0]
+    echo = None
+    if pattern.order is not None and pattern.order[:, 1].max(initial=0) > 0:
+        echo = np.zeros(pattern.mask.shape, dtype=np.int64)
+        echo[pattern.mask] = pattern.order[:, 1] + 1
+        echo = echo[0] if pattern.frames else echo
+    single = replace(pattern, mask=first, frames=0, probability=probability, order=None)
+    return PatternPicture(single, row_label, column_label, echo)
 
 
 def radial_density(share: NDArray[Any]) -> tuple[NDArray[Any], NDArray[Any]]:
@@ -94,50 +104,66 @@ def radial_density(share: NDArray[Any]) -> tuple[NDArray[Any], NDArray[Any]]:
     return ((edges[:-1] + edges[1:]) / 2)[keep], (taken[keep] / total[keep])
 
 
-def draw_pattern_panels(axes: Any, picture: PatternPicture, figure: Any) -> None:
-    """Draw positions, density and point spread into three axes."""
-    _positions(axes[0], picture)
-    _density(axes[1], picture)
-    if picture.one_dimensional:
-        _spread_line(axes[2], picture)
-    else:
-        _spread_plane(axes[2], picture, figure)
-
-
 def pattern_figure(picture: PatternPicture) -> Any:
-    """One figure of positions, density and point spread."""
+    """Positions, echoes where they are known, density and point spread, side by side."""
+    count = 3 if picture.echo is None else 4
     with figure_style():
-        figure = new_figure(7.2, 2.5)
-        draw_pattern_panels(figure.subplots(1, 3, width_ratios=(1, 1, 1.15)), picture, figure)
+        figure = new_figure(7.2 if count == 3 else 9.4, 2.5)
+        axes = figure.subplots(
+            1, count, width_ratios=(1, 1, 1.15) if count == 3 else (1, 1.15, 1, 1.15)
+        )
+        _positions(axes[0], picture)
+        if picture.echo is not None:
+            _echoes(axes[1], picture, figure)
+        _density(axes[-2], picture)
+        if picture.one_dimensional:
+            _spread_line(axes[-1], picture)
+        else:
+            _spread_plane(axes[-1], picture, figure)
     return figure
 
 
 def _positions(axes: Any, picture: PatternPicture) -> None:
-    mask = picture.mask
-    shown = np.repeat(mask[:, None], max(8, mask.size // 2), 1) if mask.ndim == 1 else mask
-    rows, columns = shown.shape
+    _show(axes, picture, picture.mask, cmap="gray", vmin=0, vmax=1)
+    axes.set_title("acquired (white)")
+
+
+def _echoes(axes: Any, picture: PatternPicture, figure: Any) -> None:
+    assert picture.echo is not None
+    shown = np.ma.masked_equal(picture.echo, 0)
+    axes.set_facecolor("black")
+    image = _show(axes, picture, shown, cmap="viridis", vmin=1, vmax=int(picture.echo.max()))
+    figure.colorbar(image, ax=axes, shrink=0.9).set_label("echo of the train")
+    axes.set_title("order")
+
+
+def _show(axes: Any, picture: PatternPicture, values: Any, **look: Any) -> Any:
+    """Values on the k-space grid, lines drawn along the readout."""
+    if picture.one_dimensional:
+        values = np.ma.repeat(values[:, None], max(8, values.size // 2), 1)
+    rows, columns = values.shape
     edges = (-(columns // 2) - 0.5, columns - columns // 2 - 0.5)
     heights = (-(rows // 2) - 0.5, rows - rows // 2 - 0.5)
-    axes.imshow(
-        shown, cmap="gray", vmin=0, vmax=1, extent=(*edges, *heights), origin="lower", aspect="auto"
-    )
-    axes.set_title("acquired (white)")
-    axes.set_ylabel(f"{picture.row_label}, index from centre")
+    extent = (*edges, *heights)
+    image = axes.imshow(values, extent=extent, origin="lower", aspect="auto", **look)
+    axes.spines[["top", "right"]].set_visible(True)
+    axes.set_ylabel(f"{picture.row_label}, from centre")
     if picture.one_dimensional:
         axes.set_xticks([])
         axes.set_xlabel("readout, all samples")
     else:
-        axes.set_xlabel(f"{picture.column_label}, index from centre")
+        axes.set_xlabel(f"{picture.column_label}, from centre")
         axes.set_aspect("equal" if 0.4 < rows / columns < 2.5 else "auto")
+    return image
 
 
 def _density(axes: Any, picture: PatternPicture) -> None:
     where, share = radial_density(picture.mask)
     axes.step(where, 100 * share, where="mid", color=SERIES[0], lw=1.3, label="this draw")
-    if picture.probability is not None:
-        where, law = radial_density(picture.probability)
+    if picture.pattern.probability is not None:
+        where, law = radial_density(picture.pattern.probability)
         axes.plot(where, 100 * law, color=INK, lw=1.0, ls="--", label="law")
-        axes.legend(loc="upper right")
+        axes.legend(loc="best", fontsize=7, handlelength=1.5)
     axes.set_ylim(0, 105)
     axes.set_xlim(0, None)
     axes.set_title("density")
@@ -147,39 +173,38 @@ def _density(axes: Any, picture: PatternPicture) -> None:
 
 
 def _spread_line(axes: Any, picture: PatternPicture) -> None:
-    spread = point_spread(picture.mask)
-    distance = np.arange(spread.size) - spread.size // 2
-    axes.plot(distance, _decibel(spread), color=SERIES[0], lw=0.8)
-    peak, at = largest_side_value(spread)
-    axes.plot([at[0]], _decibel(np.array([peak])), "v", color=SERIES[1], ms=6)
+    size = np.abs(picture.spread.psf)
+    distance = np.arange(size.size) - size.size // 2
+    axes.plot(distance, _decibel(size), color=SERIES[0], lw=0.8)
+    if picture.spread.law_psf is not None:
+        axes.plot(distance, _decibel(np.abs(picture.spread.law_psf)), color=INK, lw=0.9, ls="--")
+    peak, at = picture.spread.side_lobe, picture.spread.side_lobe_at
+    if peak > 1e-4:
+        axes.plot([at[0]], _decibel(np.array([peak])), "v", color=SERIES[1], ms=6)
     axes.set_ylim(_FLOOR_DB, 3)
-    axes.set_title(f"point spread, side {100 * peak:.1f} % at {at[0]:+d}".replace("-", "−"))
+    axes.set_title("point spread")
     axes.set_ylabel("dB of the peak")
     axes.set_xlabel(f"voxels along {picture.row_label}")
     axes.grid(axis="y")
 
 
 def _spread_plane(axes: Any, picture: PatternPicture, figure: Any) -> None:
-    spread = point_spread(picture.mask)
-    rows, columns = spread.shape
-    extent = (
-        -(columns // 2) - 0.5,
-        columns - columns // 2 - 0.5,
-        -(rows // 2) - 0.5,
-        rows - rows // 2 - 0.5,
-    )
-    shown = axes.imshow(
-        _decibel(spread), cmap="cividis", vmin=_FLOOR_DB, vmax=0, extent=extent, origin="lower"
-    )
+    size = np.abs(picture.spread.psf)
+    rows, columns = size.shape
+    edges = (-(columns // 2) - 0.5, columns - columns // 2 - 0.5)
+    heights = (-(rows // 2) - 0.5, rows - rows // 2 - 0.5)
+    look = {"cmap": "cividis", "vmin": _FLOOR_DB, "vmax": 0, "origin": "lower"}
+    shown = axes.imshow(_decibel(size), extent=(*edges, *heights), **look)
     axes.set_aspect("equal" if 0.4 < rows / columns < 2.5 else "auto")
     bar = figure.colorbar(shown, ax=axes, shrink=0.9)
     bar.set_label("dB of the peak")
     bar.outline.set_edgecolor(MUTED)
-    peak, at = largest_side_value(spread)
-    axes.set_title(f"point spread, side {100 * peak:.1f} %")
+    peak, at = picture.spread.side_lobe, picture.spread.side_lobe_at
+    axes.set_title("point spread")
     axes.set_ylabel(f"voxels along {picture.row_label}")
     axes.set_xlabel(f"voxels along {picture.column_label}")
-    axes.plot([at[1]], [at[0]], "o", ms=8, mfc="none", mec="white", mew=1.0)
+    if peak > 1e-4:
+        axes.plot([at[1]], [at[0]], "o", ms=8, mfc="none", mec="white", mew=1.0)
 
 
 def _decibel(spread: NDArray[np.float64]) -> NDArray[np.float64]:

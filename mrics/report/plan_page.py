@@ -6,12 +6,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from mrics.report.arms import axis_name
-from mrics.report.pattern_figures import (
-    PatternPicture,
-    largest_side_value,
-    pattern_figure,
-    point_spread,
-)
+from mrics.report.pattern_figures import pattern_figure, picture_of
 from mrics.report.rendering import render, write_page
 from mrics.report.style_figures import svg_uri
 
@@ -56,22 +51,6 @@ def write_plan_page(plan: StudyPlan, path: str | Path) -> Path:
 
 def _picture(row: PlanRow, plan: StudyPlan) -> dict[str, Any]:
     """Pictures of one pattern; arms that differ in recovery alone share them."""
-    pattern = row.pattern
-    first = pattern.mask[0] if pattern.frames else pattern.mask
-    probability = pattern.probability
-    if probability is not None and probability.shape != first.shape:
-        probability = probability[0]
     grid = {"phase_axis": plan.axes.phase, "partition_axis": plan.axes.partition}
-    picture = PatternPicture(
-        first, axis_name("phase", grid), axis_name("partition", grid), probability
-    )
-    peak, at = largest_side_value(point_spread(first))
-    distance = " and ".join(f"{d:+d}" for d in at)
-    return {
-        "pattern": pattern,
-        "figure": svg_uri(pattern_figure(picture)),
-        "text": (
-            f"{int(first.sum())} of {first.size} positions acquired; largest side value of the "
-            f"point spread {100 * peak:.1f} % of the peak at {distance} voxels."
-        ),
-    }
+    picture = picture_of(row.pattern, axis_name("phase", grid), axis_name("partition", grid))
+    return {"figure": svg_uri(pattern_figure(picture)), "text": picture.sentence}
