@@ -74,8 +74,9 @@ def disc_draw(
         )
     problem = _Problem.of(quanta, calibration, generator, quanta if law is None else law)
     if problem.count == 0:
-        return DiscDraw(calibration.copy(), 0.0)
-    low, high, best = 0.0, _LARGEST_C, None
+        return DiscDraw(calibration | problem.certain, 0.0)
+    # certain positions may be neighbours: c up to 1 lets them
+    low, high, best = 0.0, 1.0 if problem.certain.any() else _LARGEST_C, None
     for _ in range(_HALVINGS):
         c = (low + high) / 2
         mask = problem.attempt(c)
@@ -85,7 +86,7 @@ def disc_draw(
             low, best = c, mask
     if best is None or not problem.binds(low):
         raise TooDenseError(
-            f"{problem.count} positions outside the calibration block lie so dense that no "
+            f"{problem.count} random positions outside the calibration block lie so dense that no "
             "distance between them can be kept.",
             "acceleration of the draw 'poisson-disc'",
             "Ask for a larger acceleration, or use the draw 'exact-count'.",
@@ -111,6 +112,7 @@ def _squares(probability: Field, c: float) -> Field:
 @dataclass(frozen=True)
 class _Problem:
     probability: Field
+    certain: Mask
     candidates: np.ndarray
     band: np.ndarray
     quota: np.ndarray
@@ -120,19 +122,20 @@ class _Problem:
     def of(
         cls, quanta: Quanta, calibration: Mask, generator: np.random.Generator, law: Quanta
     ) -> _Problem:
-        free = np.where(calibration, 0, quanta)
+        certain = (quanta == ONE) & ~calibration
+        free = np.where(calibration | certain, 0, quanta)
         offered = np.flatnonzero(bernoulli(np.minimum(free * _OFFERS, ONE), generator))
         candidates = offered[shuffle(offered.size, generator)]
         count = int(free.sum() // ONE)
-        band, quota = _bands(free.ravel(), count, generator)
-        return cls(np.where(calibration, 0, law) / ONE, candidates, band, quota, count)
+        band, quota = _bands(law.ravel(), free.ravel(), count, generator)
+        return cls(np.where(calibration, 0, law) / ONE, certain, candidates, band, quota, count)
 
     def attempt(self, c: float) -> Mask | None:
         """A draw at this c, or None when a band or the total stays short."""
         from mrics.sampling._disc_kernels import throw
 
         square = _squares(self.probability, c)
-        taken = np.zeros(square.shape, dtype=bool)
+        taken = self.certain.copy()
         quota = self.quota.copy()
         short = throw(self.candidates, square, self.band, quota, self.count, taken)
         if short == 0:
@@ -149,11 +152,11 @@ class _Problem:
 
 
 def _bands(
-    free: np.ndarray, count: int, generator: np.random.Generator
+    law: np.ndarray, free: np.ndarray, count: int, generator: np.random.Generator
 ) -> tuple[np.ndarray, np.ndarray]:
-    """Band of every position by level of p, and the positions each band takes."""
+    """Band of every position by level of the law, and the positions each band takes."""
     bands = max(1, min(_BANDS, count // _BAND_POSITIONS))
-    values, level = np.unique(free, return_inverse=True)
+    values, level = np.unique(law, return_inverse=True)
     mass = np.bincount(level.ravel(), weights=free / ONE, minlength=values.size)
     middle = np.cumsum(mass) - mass / 2
     of_level = np.minimum((middle * bands / max(count, 1)).astype(np.int64), bands - 1)

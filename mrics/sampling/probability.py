@@ -68,6 +68,12 @@ def inclusion(
 
 
 def _check_feasible(count: float, fixed: int, free: int, size: int) -> None:
+    if round(count) < 1:
+        raise PatternError(
+            f"The requested acceleration leaves no position of {size}.",
+            "acceleration",
+            f"The largest feasible acceleration is {size}.",
+        )
     if count < fixed:
         raise PatternError(
             f"The calibration region alone holds {fixed} positions, more than the {count:g} that "
@@ -99,7 +105,8 @@ def smallest_feasible(size: int, most: int) -> float:
 def _scaled(density: Field, target: int) -> Quanta:
     """min(ONE, s d) as whole numbers that sum to ``target`` (largest remainders get the rest)."""
     order = np.argsort(-density, kind="stable")
-    falling = density[order] / density[order[0]]
+    # below 1e-200 of the largest all densities are one: their scale must not overflow
+    falling = np.maximum(density[order] / density[order[0]], 1e-200)
     tail = np.cumsum(falling[::-1])[::-1]  # sum of this and all smaller densities
     saturated = np.arange(density.size)
     scale = (target / ONE - saturated) / tail

@@ -8,6 +8,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from mrics.errors import PatternError
 from mrics.numerics import centred_ifft
 from mrics.sampling.grid import Field
 from mrics.sampling.pattern import Pattern
@@ -89,8 +90,19 @@ def spread(pattern: Pattern, energy: Field | None = None, frame: int = 0) -> Spr
         Mean k-space energy of training scans (``training_energy``), for the captured share.
     frame : int
         Which frame.
+
+    Raises
+    ------
+    PatternError
+        For a frame without any acquired position.
     """
     mask = pattern.mask[frame] if pattern.frames else pattern.mask
+    if not mask.any():
+        raise PatternError(
+            "The pattern acquires no position, so a point leaves nothing.",
+            f"frame {frame}",
+            "Draw with another seed, or use an exact-count draw.",
+        )
     psf = point_spread(mask.astype(np.float64))
     law_psf = incoherent = None
     if pattern.probability is not None:

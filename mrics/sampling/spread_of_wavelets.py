@@ -17,6 +17,7 @@ import numpy as np
 import pywt
 from numpy.typing import NDArray
 
+from mrics.errors import PatternError
 from mrics.numerics import centred_fft, centred_ifft
 from mrics.sampling.grid import Field
 
@@ -62,6 +63,11 @@ def transform_spread(
     levels : int, optional
         Levels; by default as many as leave at least 16 samples, at most 4.
 
+    Raises
+    ------
+    PatternError
+        On grids shorter than the wavelet's filter at that level.
+
     Notes
     -----
     Sizes that are no multiple of 2^levels are padded, as in the wavelet recovery: the unknowns are
@@ -69,6 +75,16 @@ def transform_spread(
     """
     if levels is None:
         levels = int(np.clip(np.log2(min(mask.shape) / 16), 1, 4))
+    most = pywt.dwt_max_level(min(mask.shape), pywt.Wavelet(wavelet).dec_len)
+    if levels > most:
+        raise PatternError(
+            f"A grid of {' x '.join(map(str, mask.shape))} is too small for {levels} levels of the "
+            f"wavelet {wavelet}.",
+            "transform point spread",
+            "Use a larger grid, or rank draws by the point spread."
+            if most < 1
+            else f"Ask for at most {most} levels.",
+        )
     atoms = _atoms(mask.shape, wavelet, levels)
     axes = tuple(range(mask.ndim))
     inside = tuple(slice(n) for n in mask.shape)

@@ -40,6 +40,13 @@ def test_count_is_exact_and_no_pair_is_too_close(acceleration, settings):
     assert r.max() > 1, "the rule forbids nothing"
 
 
+def test_certain_positions_are_taken():
+    pattern = disc(3, elliptical=True)
+    assert (pattern.probability == 1).sum() > 16 * 16
+    assert pattern.mask[pattern.probability == 1].all()
+    assert pattern.settings["disc_c"] <= 1
+
+
 def test_conflicts_are_counted():
     pattern = disc(8)
     block = calibration_block(SHAPE, pattern.calibration)
@@ -99,7 +106,9 @@ def test_spacing_is_that_of_a_reference_poisson_disc():
 def test_denser_than_any_distance_allows_names_the_smallest_feasible():
     # Random filling of a square grid with no two neighbours jams at 0.3641 of the positions
     # (random sequential adsorption; Evans 1993, Rev Mod Phys 65:1281, value from memory): 2.746
-    with pytest.raises(PatternError, match="so dense that no distance") as caught:
+    with pytest.raises(
+        PatternError, match=r"random positions .* so dense that no distance"
+    ) as caught:
         disc(1.8, law="uniform", calibration=0)
     least = float(re.search(r"is about ([\d.]+)", caught.value.fix)[1])
     assert 2.6 < least < 2.85

@@ -43,11 +43,11 @@ inverse-square jittered lines 75cffaee292dbce6
 inverse-square jittered plane 738b05af114a4ef9
 inverse-square low-discrepancy lines 4c583edb5b5aa27d
 inverse-square low-discrepancy plane dae16fdabcc307b1
-inverse-square poisson-disc plane 85a106f2f4df685b
+inverse-square poisson-disc plane 7d1aafc2e176c18c
 jittered frames befae8f7c4554ea1
 low-discrepancy frames 879457b995329cbb
 per axis e163e9240bd27b8f
-poisson-disc frames ee861a487493ee39
+poisson-disc frames 9a6ed1ead19b85d6
 power bernoulli lines fb0ca2e354334501
 power bernoulli plane a54e20b6b7c43cea
 power exact-count lines 4106dbf3890dc0bb
@@ -56,7 +56,7 @@ power jittered lines 18472ac1193ff45a
 power jittered plane 0018838b88afd45f
 power low-discrepancy lines 8f9636968c44fdc0
 power low-discrepancy plane e74290fcf7a52b8e
-power poisson-disc plane 6d03a79bca0a0f0d
+power poisson-disc plane d002f9877903798d
 shifted lattice 5488a639bb859246
 spiral 1c8b856b385fa756
 spokes 9e4688df4760f035

@@ -11,12 +11,12 @@ from mrics.sampling.grid import calibration_block
 from mrics.sampling.laws import LAWS, law_density
 from mrics.sampling.probability import ONE, inclusion
 
-GRIDS = [(128,), (257,), (512,), (96, 64), (131, 128)]
+GRIDS = [(128,), (257,), (512,), (128, 192), (131, 129)]
 
 
 @pytest.mark.parametrize("shape", GRIDS)
 @pytest.mark.parametrize("law", [name for name in LAWS if name not in ("energy", "table")])
-@pytest.mark.parametrize("acceleration", [1.5, 2, 3.7, 6])
+@pytest.mark.parametrize("acceleration", [1.5, 2, 3.7, 6, 12])
 def test_count_is_exactly_the_rounded_request(shape, law, acceleration):
     pattern = draw_pattern(shape, law=law, acceleration=acceleration, calibration=9, seed=5)
     count = round(int(np.prod(shape)) / acceleration)
@@ -32,13 +32,13 @@ def test_expected_bernoulli_count_meets_a_fractional_request():
 
 
 @given(
-    values=st.lists(st.floats(1e-6, 1e6), min_size=4, max_size=60),
+    values=st.lists(st.floats(0.01, 100), min_size=4, max_size=60),
     share=st.floats(0.05, 1.0),
 )
 @settings(max_examples=80, deadline=None)
 def test_probabilities_are_the_clipped_scaled_law(values, share):
     density = np.array(values)
-    count = share * density.size
+    count = max(1.0, share * density.size)
     quanta = inclusion(density, count)
     assert abs(quanta.sum() - count * ONE) <= 1
     assert quanta.min() >= 0
@@ -47,7 +47,7 @@ def test_probabilities_are_the_clipped_scaled_law(values, share):
     if free.any():  # below the clip p / density is one number, to the rounding of p
         scale = quanta[free].sum() / density[free].sum()
         np.testing.assert_allclose(quanta[free], scale * density[free], atol=density.size + 1)
-        assert (scale * density[~free] >= ONE - 2 * density.size).all()
+        assert (scale * density[~free] >= ONE * (1 - 1e-3)).all()
 
 
 def test_power_law_has_the_published_mean():
@@ -90,6 +90,17 @@ def test_too_small_acceleration_names_the_smallest_feasible():
         draw_pattern((256, 256), law="uniform", acceleration=1.1, elliptical=True)
     assert "1.275" in caught.value.fix
     draw_pattern((256, 256), law="uniform", acceleration=1.275, elliptical=True)
+
+
+def test_an_acceleration_that_leaves_nothing_is_refused():
+    with pytest.raises(PatternError, match="leaves no position of 64"):
+        draw_pattern((64,), acceleration=200, calibration=0)
+
+
+def test_densities_of_any_size_are_scaled():
+    # a narrow gaussian underflows far out; its smallest densities are below 1e-300
+    pattern = draw_pattern((64, 64), law="gaussian", width=0.02, acceleration=50, calibration=0)
+    assert pattern.mask.sum() == round(64 * 64 / 50)
 
 
 def test_calibration_is_always_acquired_and_central():

@@ -166,6 +166,13 @@ def test_full_sampling_leaves_no_interference():
     assert found.labels == ("detail 1", "approximation")
 
 
+def test_too_small_a_grid_for_the_wavelet():
+    with pytest.raises(PatternError, match="grid of 12 x 40 is too small for 1 levels"):
+        transform_spread(np.ones((12, 40), dtype=bool))
+    with pytest.raises(PatternError, match=r"too small for 6 levels(.|\n)*at most 3 levels"):
+        transform_spread(np.ones((64, 64), dtype=bool), levels=6)
+
+
 def test_low_frequencies_keep_coarse_scales():
     found = transform_spread(draw_pattern((256, 256), acceleration=8, seed=1).mask)
     assert (np.diff(found.kept) > 0).all()
