@@ -123,11 +123,12 @@ def _file_shape(stack: NDArray[Any], axes: Axes) -> tuple[int, ...]:
 
 
 def _refuse_empty_outer(scan: Scan, axes: Axes) -> None:
-    from mrics.scan import inspect_scan
+    from mrics.scan.fitness.view import ScanView
+    from mrics.scan.fitness.zero_fill import zero_filled  # one of many checks, and a fast one
 
-    for finding in inspect_scan(scan, axes):
+    for finding in zero_filled(ScanView(scan, axes)):
         letters = {letter for letter, _ in finding.settings}
-        if finding.code == "zero-filled" and letters & {axes.phase, axes.partition}:
+        if letters & {axes.phase, axes.partition}:
             raise PatternError(
                 f"A training scan cannot give the law. {finding.what}",
                 f"training scan {scan.name!r}, {finding.where}",

@@ -17,6 +17,11 @@ def head():
     return open_volume("G")
 
 
+@pytest.fixture(scope="module")
+def energy(head):
+    return training_energy([read_scan(head)], (109, 91))
+
+
 def test_energy_is_the_mean_k_space_energy(head):
     data = np.asarray(nib.load(head).dataobj, dtype=np.float64)
     scan = read_scan(head)
@@ -31,8 +36,7 @@ def test_energy_is_the_mean_k_space_energy(head):
     np.testing.assert_allclose(training_energy([scan], (109,), Axes("i", "j")), line, rtol=2e-4)
 
 
-def test_energy_law_captures_more_energy_than_uniform(head):
-    energy = training_energy([read_scan(head)], (109, 91))
+def test_energy_law_captures_more_energy_than_uniform(head, energy):
     entry = {"law": "energy", "training": [str(head)], "power": 0.5, "calibration": 0}
     pattern = draw_entry(entry, (109, 91), 6, seed=1)
     assert pattern.mask.sum() == round(109 * 91 / 6)
@@ -42,8 +46,7 @@ def test_energy_law_captures_more_energy_than_uniform(head):
     assert captured > 0.9 > 3 * spread(flat, energy).captured_energy
 
 
-def test_energy_power_and_floor(head):
-    energy = training_energy([read_scan(head)], (109, 91))
+def test_energy_power_and_floor(energy):
     density = law_density((109, 91), "energy", {"power": 0.5, "floor": 0.2}, source=energy)
     np.testing.assert_allclose(density, 0.2 + 0.8 * np.sqrt(energy / energy.max()))
     assert np.ptp(law_density((109, 91), "energy", {"power": 0}, source=energy)) == 0
