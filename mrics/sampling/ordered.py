@@ -74,7 +74,7 @@ class Ordered:
                 f"Effective echo time {reached:g} ms in place of the {self.wanted_ms:g} ms asked "
                 f"for: echo {self.centre_echo + 1} is the nearest."
             )
-        if self.step_radius is not None:
+        if self.step_radius is not None and self.step_radius < 1:
             found.append(
                 f"The first and the last echo meet at {self.step_radius:.2f} k_max: the decay "
                 "steps there, which rings unless T2 is long against the train."
