@@ -143,17 +143,17 @@ def sequence_time(
 
 
 def console_difference(sequence: Sequence, computed_s: float) -> str | None:
-    """What to say where the computed time is more than 2 % from the console's, else None."""
+    """The computed time against the console's, a warning above 2 %; None where none is given."""
     shown_s = sequence.console_scan_time_s
     if shown_s is None:
         return None
     off = computed_s / shown_s - 1
+    said = f"Computed {minutes(computed_s)} against {minutes(shown_s)} on the console ({off:+.1%})."
     if abs(off) <= CONSOLE_TOLERANCE:
-        return None
+        return said
     return (
-        f"Computed {minutes(computed_s)} is {abs(off):.1%} {'above' if off > 0 else 'below'} the "
-        f"{minutes(shown_s)} of console_scan_time_s: check repetition time, averages, acquired "
-        "steps (oversampling, partial Fourier), packages, dummy shots and today's acceleration."
+        f"Warning: {said} Check repetition time, averages, acquired steps (oversampling, partial "
+        "Fourier), packages, dummy shots and today's acceleration."
     )
 
 

@@ -263,11 +263,12 @@ def test_counts_that_do_not_fit(counts, says):
 
 def test_console_time_is_compared():
     played = sequence("gradient-echo-3d", 12, console_scan_time_s=390)
-    assert console_difference(played, 390 * 1.0199) is None
-    said = console_difference(played, 390 * 1.03)
-    assert said is not None
-    assert "6:42 is 3.0% above the 6:30" in said
-    assert "below" in (console_difference(played, 380) or "")
+    near = console_difference(played, 390 * 1.0199)
+    assert near == "Computed 6:38 against 6:30 on the console (+2.0%)."
+    far = console_difference(played, 390 * 1.03) or ""
+    assert far.startswith("Warning: Computed 6:42 against 6:30 on the console (+3.0%).")
+    assert "Check repetition time" in far
+    assert "(-2.6%)" in (console_difference(played, 380) or "")
     assert console_difference(sequence("gradient-echo-3d", 12), 1.0) is None
 
 
