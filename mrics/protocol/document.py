@@ -269,12 +269,13 @@ def _check(protocol: Protocol) -> None:
             ("study", noises[1]),
             "Keep one of them.",
         )
-    if study.echo_train_decay and sequence.tissue_t2_ms is None:
-        fail(
-            "echo_train_decay is asked for, but no T2 is given.",
-            ("study", "echo_train_decay"),
-            "Add tissue_t2_ms to [sequence].",
-        )
+    for key in ("tissue_t2_ms", "echo_spacing_ms", "echo_train_length"):
+        if study.echo_train_decay and getattr(sequence, key) is None:
+            fail(
+                f"echo_train_decay is asked for, but {key} is not given.",
+                ("study", "echo_train_decay"),
+                f"Add {key} to [sequence], or remove echo_train_decay.",
+            )
     _check_arms(protocol, fail)
 
 

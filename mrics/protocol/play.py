@@ -9,6 +9,7 @@ from mrics.protocol.document import Protocol
 from mrics.protocol.messages import within
 from mrics.protocol.sections import Sequence
 from mrics.sampling import Pattern
+from mrics.sampling.decay import decay_spread
 from mrics.sampling.order import order_pattern
 from mrics.sampling.ordered import Ordered, kept_order
 
@@ -49,6 +50,23 @@ def limit_findings(sequence: Sequence, pattern: Pattern) -> tuple[str, ...]:
     if shortest is not None and length < shortest:
         found.append(f"The echo train has {length} echoes; the sequence plays at least {shortest}.")
     return tuple(found)
+
+
+def decay_finding(sequence: Sequence, played: Ordered) -> str | None:
+    """How much the decay along the train widens a point; None without ``tissue_t2_ms`` or times."""
+    if sequence.tissue_t2_ms is None or played.times_ms is None or played.train_length == 1:
+        return None
+    spread = decay_spread(played.pattern, played.times_ms, sequence.tissue_t2_ms)
+    names = ("phase", "partition")
+    wider = " and ".join(
+        f"{times:.2f} times along {name}"
+        for times, name in zip(spread.broadening, names, strict=False)
+    )
+    widths = " x ".join(f"{width:.2f}" for width in spread.width)
+    return (
+        f"A T2 of {sequence.tissue_t2_ms:g} ms widens a point {wider} (half maximum {widths} "
+        f"voxels); its peak is {spread.signal:.0%} of that without decay."
+    )
 
 
 def line_gap(pattern: Pattern) -> int:

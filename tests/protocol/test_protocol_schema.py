@@ -109,7 +109,7 @@ REFUSED = [
     ("draws = 5", "slices = [1, 1]", "list of different plane indices", "study.slices"),
     ("draws = 5", "slices = 0", 'slices = 0 is not allowed.*"all"', "study.slices"),
     ("draws = 5", "snr = 20\nsigma_added = 1", "given 2 times: sigma_added, snr", "study.snr"),
-    ("draws = 5", "echo_train_decay = true", "no T2 is given.*tissue_t2_ms", "study.echo"),
+    ("draws = 5", "echo_train_decay = true", "tissue_t2_ms is not given", "study.echo"),
     ('["knee.nii.gz"]', "[3]", "a path in quotes, or a table", r"study.scans\[1\]"),
     ('["knee.nii.gz"]', "[]", "at least one", "study.scans"),
     ('["knee.nii.gz"]', '[{ phase = "a" }]', "a table with magnitude and phase", "study.scans"),
