@@ -23,6 +23,7 @@ Array = NDArray[Any]
 
 FORMS = ("cylinder", "dome")
 _LATTICE_MM = 4.0  # the field is computed on this lattice and splined between
+_BEYOND = 0.15  # share of the field of view that the lattice reaches past each of its sides
 _CONDUCTOR_MM = 10.0  # wires are rounded off by this: the field of view's corners may touch them
 # Centres of neighbouring loops at 1.5 radii do not couple (Roemer et al. 1990, Magn Reson Med
 # 16:192-225).
@@ -105,8 +106,8 @@ class Coils:
     def on_grid(self, plane_mm: Array, u_mm: Array, v_mm: Array) -> NDArray[np.complex64]:
         """Receive field on the grid spanned by three coordinate vectors, (channel, plane, u, v).
 
-        As :meth:`field_at`, by the splines. Coordinates must lie within a tenth of the field of
-        view's size of it.
+        As :meth:`field_at`, by the splines. Coordinates may reach past each side by 0.15 of the
+        field of view.
         """
         return np.ascontiguousarray(self._splined(plane_mm, u_mm, v_mm).transpose(1, 0, 2, 3))
 
@@ -144,8 +145,8 @@ class Coils:
 
         axes, starts = [], []
         for count, step in zip((self.shape[0], *self.shape[2:]), self.voxel_mm, strict=True):
-            low = -(count // 2) * step - 0.1 * count * step - 3 * _LATTICE_MM
-            high = (count - count // 2) * step + 0.1 * count * step + 3 * _LATTICE_MM
+            low = -(count // 2) * step - _BEYOND * count * step - 3 * _LATTICE_MM
+            high = (count - count // 2) * step + _BEYOND * count * step + 3 * _LATTICE_MM
             axes.append(low + _LATTICE_MM * np.arange(int(np.ceil((high - low) / _LATTICE_MM)) + 1))
             starts.append(low)
         values = np.empty((len(axes[0]), self.channels, 2, len(axes[1]), len(axes[2])), np.float32)

@@ -9,7 +9,11 @@ _HOMES = {
     "Ellipse": "ellipses",
     "Ellipsoid": "ellipses",
     "Gaussian": "ellipses",
+    "WaveMaps": "channels",
+    "channel_kspace": "channels",
     "closed_form_kspace": "ellipses",
+    "fit_waves": "channels",
+    "knee_kspace": "sample",
     "make_sample_data": "sample",
     "shepp_logan": "ellipses",
 }
@@ -18,7 +22,11 @@ __all__ = [
     "Ellipse",
     "Ellipsoid",
     "Gaussian",
+    "WaveMaps",
+    "channel_kspace",
     "closed_form_kspace",
+    "fit_waves",
+    "knee_kspace",
     "make_sample_data",
     "shepp_logan",
 ]

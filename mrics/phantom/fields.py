@@ -37,12 +37,16 @@ class RandomField:
         self, seed: int, name: str, spacing: Sequence[float], reach: Sequence[float]
     ) -> None:
         self._spacing = np.asarray(spacing, dtype=np.float64)
+        self._reach = tuple(float(limit) for limit in reach)
         self._half = np.ceil(np.asarray(reach) / self._spacing).astype(int) + 2
         lattice = stream(seed, "field", name).standard_normal(tuple(2 * self._half + 1))
         self._lattice = (lattice / _SPLINE_VARIANCE**1.5).astype(np.float32)
 
     def on(self, z: Array, y: Array, x: Array) -> Array:
         """Values on the grid spanned by three coordinate vectors in mm, float32 (z, y, x)."""
+        for coordinate, limit in zip((z, y, x), self._reach, strict=True):
+            if np.max(np.abs(coordinate)) > limit + 1e-6:
+                raise ValueError(f"points beyond {limit:g} mm, where the field ends")
         places = [
             np.ravel(coordinate) / step + half
             for coordinate, step, half in zip((z, y, x), self._spacing, self._half, strict=True)

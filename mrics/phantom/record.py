@@ -19,9 +19,11 @@ from numpy.typing import NDArray
 from mrics.numerics import centred_fft, centred_ifft, map_blocks, stream
 from mrics.phantom.knee import Knee
 from mrics.phantom.shapes import ramp
-from mrics.phantom.tissues import TISSUES, EchoTrain, GradientEcho
+from mrics.phantom.tissues import TISSUES, EchoTrain, Excitation
 
 Array = NDArray[Any]
+
+Sensitivity = Callable[[Array, Array, Array], Array]
 
 FAT_SHIFT_HZ = 217.1  # 3.4 ppm at 1.5 T; common practice
 _T2_CLASSES_MS = (12.0, 42.0, 700.0)  # ligament, muscle and cartilage, fluid; fat is its own
@@ -93,10 +95,6 @@ def _phase(knee: Knee, name: str, strength: float, z: Array, y: Array, x: Array)
     return (strength * (slow + 0.45 * waves)).astype(np.float32)
 
 
-def _lit(knee: Knee, name: str, strength: float, z: Array, y: Array, x: Array) -> Array:
-    return _shading(z, y, x) * np.exp(1j * _phase(knee, name, strength, z, y, x))
-
-
 def _finish(kspace: Array, geometry: Geometry, shift_voxels: float, water: Array) -> Array:
     """Shift fat along the readout, add water, cut to the acquired readout and field of view."""
     length = kspace.shape[0]
@@ -111,11 +109,11 @@ def _finish(kspace: Array, geometry: Geometry, shift_voxels: float, water: Array
 def gradient_echo_volume(
     knee: Knee,
     geometry: Geometry,
-    sequence: GradientEcho,
+    sequence: Excitation,
     *,
     factor: tuple[int, int, int] = (2, 2, 4),
     bandwidth_hz: float = 260.0,
-    sensitivity: Callable[[Array, Array, Array], Array] | None = None,
+    sensitivity: Sensitivity | None = None,
 ) -> Array:
     """Noise-free 3-D gradient-echo scan of a knee.
 
@@ -125,38 +123,51 @@ def gradient_echo_volume(
         The object.
     geometry : Geometry
         Acquired grid, ``axes`` "zyx": i readout, j phase, k partition.
-    sequence : GradientEcho
+    sequence : GradientEcho or like
         Contrast.
     factor : tuple of 3 int
         How much finer the object is sampled along i, j, k.
     bandwidth_hz : float
         Readout bandwidth per voxel; fat is displaced by ``FAT_SHIFT_HZ / bandwidth_hz`` voxels.
     sensitivity : callable or None
-        Complex receive field at (z, y, x) vectors in mm, shape (z, y, x); None for the shading and
-        phase of a combined image.
+        Complex receive fields at three vectors of positions along i, j, k (mm from the voxel at
+        index N//2, in the overscanned readout up to an eighth of the field of view past it), shape
+        (channel, i, j, k); None for the shading of one combined image.
 
     Returns
     -------
     ndarray of complex64, shape ``geometry.matrix``
+        With ``sensitivity`` (channel, *geometry.matrix).
     """
     palette = {name: (int(t.fat), sequence.signal(t)) for name, t in TISSUES.items()}
     z = geometry.coordinate(0, factor[0], _OVERSCAN)
     y, x = geometry.coordinate(1, factor[1]), geometry.coordinate(2, factor[2])
     turn = np.exp(-2j * np.pi * FAT_SHIFT_HZ * 1e-3 * sequence.echo_time_ms)
-    light = sensitivity or (lambda *at: _lit(knee, "gre", 1.0, *at))
+    shift = FAT_SHIFT_HZ / bandwidth_hz
+    middle = geometry.offset_mm
 
     def block(rows: Array) -> Array:
-        signal = knee.signal(rows, y, x, palette) * light(rows, y, x)
-        kspace = centred_fft(signal.astype(np.complex64), axes=(2, 3))
-        return _crop(_crop(kspace, 2, geometry.matrix[1]), 3, geometry.matrix[2])
+        """Channels of one block, (channel, component, i, j, k), transformed along j and k."""
+        signal = knee.signal(rows, y, x, palette)
+        signal = signal * np.exp(1j * _phase(knee, "gre", 1.0, rows, y, x))
+        if sensitivity is None:
+            fields = _shading(rows, y, x)[None]
+        else:
+            fields = sensitivity(rows - middle[0], y - middle[1], x - middle[2])
+        parts = []
+        for one in fields:
+            kspace = centred_fft((signal * one).astype(np.complex64), axes=(2, 3))
+            parts.append(_crop(_crop(kspace, 2, geometry.matrix[1]), 3, geometry.matrix[2]))
+        return np.stack(parts)
 
     parts = map_blocks(block, [z[n : n + _BLOCK] for n in range(0, len(z), _BLOCK)])
-    kspace = centred_fft(np.concatenate(parts, axis=1), axes=(1,))
-    kspace = _crop(kspace, 1, len(z) // factor[0])
-    whole = _finish(
-        kspace[1] * np.complex64(turn), geometry, FAT_SHIFT_HZ / bandwidth_hz, kspace[0]
-    )
-    return centred_ifft(whole, axes=(1, 2)).astype(np.complex64)
+    whole = np.concatenate(parts, axis=2)
+    images = []
+    for channel in whole:
+        kspace = _crop(centred_fft(channel, axes=(1,)), 1, len(z) // factor[0])
+        hybrid = _finish(kspace[1] * np.complex64(turn), geometry, shift, kspace[0])
+        images.append(centred_ifft(hybrid, axes=(1, 2)).astype(np.complex64))
+    return images[0] if sensitivity is None else np.stack(images)
 
 
 def echo_train_slices(
@@ -197,7 +208,8 @@ def echo_train_slices(
         signal = np.zeros((len(classes), len(z), len(x)), dtype=np.complex64)
         for n in range(0, len(z), 4 * _BLOCK):
             rows = z[n : n + 4 * _BLOCK]
-            thick = knee.signal(rows, y, x, palette) * _lit(knee, "tse", 0.6, rows, y, x)
+            light = _shading(rows, y, x) * np.exp(1j * _phase(knee, "tse", 0.6, rows, y, x))
+            thick = knee.signal(rows, y, x, palette) * light
             signal[:, n : n + 4 * _BLOCK] = np.einsum("czyx,y->czx", thick, profile)
         kspace = _crop(_crop(centred_fft(signal, axes=(1, 2)), 1, readout), 2, lines)
         kspace *= decay[:, None, :]

@@ -17,10 +17,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from mrics.caution import NIFTI_DESCRIP, RESEARCH_ONLY
-from mrics.numerics import stream
+from mrics.numerics import centred_fft, stream
 from mrics.phantom.knee import Feature, Knee
 from mrics.phantom.record import (
     Geometry,
+    Sensitivity,
     echo_train_slices,
     gradient_echo_volume,
     white_noise,
@@ -121,12 +122,50 @@ GRE = GradientEcho(repetition_time_ms=20.0, echo_time_ms=4.6, flip_degrees=12.0)
 TSE = EchoTrain(repetition_time_ms=2800.0, spacing_ms=9.0, echoes=8)
 
 
+def gradient_echo_grid(subject: Subject) -> Geometry:
+    """Acquired grid of the subject's 3-D scan."""
+    dx, dy, dz = subject.shift_mm
+    return Geometry((112, 128, 56), (1.05, 1.05, 2.0), "zyx", (4.0 + dz, -1.5 + dy, dx))
+
+
 def gradient_echo(subject: Subject) -> tuple[Array, Geometry, float]:
     """The subject's 3-D scan with noise, its grid and its sigma."""
-    dx, dy, dz = subject.shift_mm
-    grid = Geometry((112, 128, 56), (1.05, 1.05, 2.0), "zyx", (4.0 + dz, -1.5 + dy, dx))
+    grid = gradient_echo_grid(subject)
     clean = gradient_echo_volume(subject.knee, grid, GRE)
     return _noisy(clean, subject, "gre3d", 1.0, grid)
+
+
+def knee_kspace(name: str, sensitivity: Sensitivity | None = None) -> Array:
+    """Noise-free k-space of a sample subject's 3-D scan, without inverse crime.
+
+    The object is never rasterised at the grid of the recovery: receive fields multiply it on the
+    fine grid, and k-space is cut from there.
+
+    Parameters
+    ----------
+    name : {"a", "b", "c"}
+        Subject.
+    sensitivity : callable, optional
+        Receive fields at three vectors of positions in mm from the field of view's centre, along
+        readout (head), phase (front) and partition (right), shape (channel, i, j, k): for example
+        ``simulate_coils((112, 128, 56), (1.05, 1.05, 2.0)).on_grid``. One channel with the
+        shading of a combined image if left out.
+
+    Returns
+    -------
+    ndarray of complex64, shape (plane, channel, u, v)
+        Centred, the readout transformed: plane is the readout position, u phase, v partition.
+    """
+    by_name = {subject.name: subject for subject in subjects()}
+    if name not in by_name:
+        raise ValueError(f"subject {name!r} is not one of {', '.join(sorted(by_name))}")
+    subject = by_name[name]
+    images = gradient_echo_volume(
+        subject.knee, gradient_echo_grid(subject), GRE, sensitivity=sensitivity
+    )
+    if sensitivity is None:
+        images = images[None]
+    return centred_fft(np.ascontiguousarray(images.transpose(1, 0, 2, 3)))
 
 
 def echo_train(subject: Subject) -> tuple[Array, Geometry, float]:

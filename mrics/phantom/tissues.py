@@ -8,6 +8,7 @@ else common practice. T2* and proton densities are common practice.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Protocol
 
 import numpy as np
 
@@ -42,6 +43,17 @@ TISSUES: dict[str, Tissue] = {
     "vein": Tissue(0.95, 650.0, 8.0, 60.0),
     "air": Tissue(0.0, 1000.0, 50.0, 50.0),
 }
+
+
+class Excitation(Protocol):
+    """A sequence that gives each tissue one signal at one echo time."""
+
+    @property
+    def echo_time_ms(self) -> float:
+        """Echo time."""
+
+    def signal(self, tissue: Tissue) -> float:
+        """Signal of a tissue."""
 
 
 @dataclass(frozen=True)
