@@ -5,14 +5,27 @@ from __future__ import annotations
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
+    from mrics.report.compare_page import write_compare_page
+    from mrics.report.document import write_document
+    from mrics.report.figure_files import write_figures
     from mrics.report.page import write_report
     from mrics.report.plan_page import write_plan_page
     from mrics.report.run import run_study
 
-__all__ = ["run_study", "write_plan_page", "write_report"]
+__all__ = [
+    "run_study",
+    "write_compare_page",
+    "write_document",
+    "write_figures",
+    "write_plan_page",
+    "write_report",
+]
 
 _HOME = {
     "run_study": "mrics.report.run",
+    "write_compare_page": "mrics.report.compare_page",
+    "write_document": "mrics.report.document",
+    "write_figures": "mrics.report.figure_files",
     "write_plan_page": "mrics.report.plan_page",
     "write_report": "mrics.report.page",
 }

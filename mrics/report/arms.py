@@ -12,8 +12,8 @@ from mrics.report.folder import StoredMap, StudyFolder
 from mrics.report.image_figures import PanelRow, Window, error_factor, image_window
 from mrics.report.pattern_figures import PatternPicture
 from mrics.report.pictures import ScanPictures
-from mrics.report.summary import first_metric, shown_slices
-from mrics.report.words import metric_value, metric_words
+from mrics.report.summary import charted_metrics, first_metric, limits_of, shown_slices
+from mrics.report.words import MetricWords, metric_value, metric_words
 from mrics.sampling import Pattern
 
 
@@ -24,6 +24,61 @@ class ArmPictures:
     scan: ScanPictures
     draw: int
     rows: list[PanelRow]
+
+
+@dataclass(frozen=True)
+class ArmView:
+    """Everything a page, a document or a figure file shows of one arm.
+
+    Attributes
+    ----------
+    row : dict
+        The arm's entry in results.json.
+    pattern : PatternPicture or None
+        None where no pattern of it is stored.
+    pictures : ArmPictures or None
+        None where no images of it are stored.
+    window : Window or None
+        Scale of the images.
+    metrics : tuple of MetricWords
+        Drawn by slice: those with limits first, three at most; empty without finished units.
+    """
+
+    row: dict[str, Any]
+    pattern: PatternPicture | None
+    pictures: ArmPictures | None
+    window: Window | None
+    metrics: tuple[MetricWords, ...]
+
+    @property
+    def aspect(self) -> float:
+        """Voxel height / width of the images."""
+        assert self.pictures is not None
+        view = self.pictures.scan.view
+        return view.row_mm / view.column_mm
+
+
+def arm_views(
+    study: StudyFolder, pictures: list[ScanPictures], scales: dict[str, Window]
+) -> list[ArmView]:
+    """All arms in the order of the protocol."""
+    limited = {limit.metric for limit in limits_of(study)}
+    charted = charted_metrics(study)
+    chosen = sorted(charted, key=lambda m: (m.key not in limited, charted.index(m)))[:3]
+    metrics = tuple(sorted(chosen, key=charted.index))
+    views = []
+    for arm in study.arms:
+        shown = arm_pictures(study, arm, pictures)
+        views.append(
+            ArmView(
+                arm,
+                pattern_picture(study, arm),
+                shown,
+                scales[shown.scan.entry["id"]] if shown else None,
+                metrics if study.units(arm["id"]) else (),
+            )
+        )
+    return views
 
 
 def windows(study: StudyFolder, pictures: list[ScanPictures]) -> dict[str, Window]:

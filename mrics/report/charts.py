@@ -28,6 +28,18 @@ def families(study: StudyFolder) -> dict[str, tuple[str, str]]:
 
 
 def against_acceleration(study: StudyFolder, metrics: tuple[MetricWords, ...]) -> Any:
+    """Figure of :func:`draw_against_acceleration`."""
+    with figure_style():
+        rows = -(-max(1, len(metrics)) // 2)
+        legend_rows = -(-(len(families(study)) + 3) // 2)
+        figure = new_figure(7.2, 2.35 * rows + 0.2 * legend_rows + 0.1)
+        draw_against_acceleration(figure, study, metrics)
+    return figure
+
+
+def draw_against_acceleration(
+    figure: Any, study: StudyFolder, metrics: tuple[MetricWords, ...]
+) -> None:
     """Mean and range of metrics against achieved acceleration, one panel per metric.
 
     Thin bars run from the worst to the best slice of any draw and scan, thick bars are confidence
@@ -36,20 +48,15 @@ def against_acceleration(study: StudyFolder, metrics: tuple[MetricWords, ...]) -
     looks = families(study)
     count = max(1, len(metrics))
     columns = 2 if count > 1 else 1
-    rows = -(-count // columns)
-    with figure_style():
-        legend_rows = -(-(len(looks) + 1) // 2)
-        figure = new_figure(7.2, 2.35 * rows + 0.25 * legend_rows + 0.15)
-        grid = figure.subplots(rows, columns, squeeze=False)
-        for axes, metric in zip(grid.flat, metrics, strict=False):
-            _against_panel(axes, study, metric, looks)
-        for axes in list(grid.flat)[count:]:
-            axes.set_axis_off()
-        for axes in grid.flat[max(0, count - columns) : count]:
-            axes.set_xlabel("acceleration R, achieved")
-        handles, labels = _legend(study, looks)
-        figure.legend(handles, labels, loc="outside lower left", ncols=2, handlelength=1.6)
-    return figure
+    grid = figure.subplots(-(-count // columns), columns, squeeze=False)
+    for axes, metric in zip(grid.flat, metrics, strict=False):
+        _against_panel(axes, study, metric, looks)
+    for axes in list(grid.flat)[count:]:
+        axes.set_axis_off()
+    for axes in grid.flat[max(0, count - columns) : count]:
+        axes.set_xlabel("acceleration R, achieved")
+    handles, labels = _legend(study, looks)
+    figure.legend(handles, labels, loc="outside lower left", ncols=2, handlelength=1.6)
 
 
 def _against_panel(axes: Any, study: StudyFolder, metric: MetricWords, looks: Any) -> None:
@@ -138,23 +145,30 @@ def _legend(study: StudyFolder, looks: dict[str, tuple[str, str]]) -> tuple[list
 
 
 def by_slice(study: StudyFolder, arm: dict[str, Any], metrics: tuple[MetricWords, ...]) -> Any:
+    """Figure of :func:`draw_by_slice`."""
+    with figure_style():
+        figure = new_figure(7.2, 2.3 + 0.22 * -(-max(1, len(study.scans)) // 3))
+        draw_by_slice(figure, study, arm, metrics)
+    return figure
+
+
+def draw_by_slice(
+    figure: Any, study: StudyFolder, arm: dict[str, Any], metrics: tuple[MetricWords, ...]
+) -> None:
     """Metrics of one arm by slice: mean over draws (and frames) as points, range as a band."""
     scans = [s for s in study.scans if study.units(arm["id"], s["id"])]
     letter = scans[0]["plane_axis"] if scans else "?"
-    with figure_style():
-        figure = new_figure(7.2, 2.3 + 0.22 * -(-max(1, len(scans)) // 3))
-        grid = figure.subplots(1, max(1, len(metrics)), squeeze=False)
-        for axes, metric in zip(grid.flat, metrics, strict=False):
-            for position, scan in enumerate(scans):
-                _slice_curve(axes, study.units(arm["id"], scan["id"]), metric.key, position)
-            axes.set_title(metric.axis + _better(metric))
-            axes.set_xlabel(f"slice (index along {letter})")
-            axes.grid(axis="y")
-            axes.xaxis.get_major_locator().set_params(integer=True, nbins=6)
-            draw_limits(axes, drawn_limits(study, metric.key))
-        handles, labels = _scan_legend(scans)
-        figure.legend(handles, labels, loc="outside lower left", ncols=3, handlelength=1.6)
-    return figure
+    grid = figure.subplots(1, max(1, len(metrics)), squeeze=False)
+    for axes, metric in zip(grid.flat, metrics, strict=False):
+        for position, scan in enumerate(scans):
+            _slice_curve(axes, study.units(arm["id"], scan["id"]), metric.key, position)
+        axes.set_title(metric.axis + _better(metric))
+        axes.set_xlabel(f"slice (index along {letter})")
+        axes.grid(axis="y")
+        axes.xaxis.get_major_locator().set_params(integer=True, nbins=6)
+        draw_limits(axes, drawn_limits(study, metric.key))
+    handles, labels = _scan_legend(scans)
+    figure.legend(handles, labels, loc="outside lower left", ncols=3, handlelength=1.6)
 
 
 def _slice_curve(axes: Any, units: list[dict[str, Any]], key: str, position: int) -> None:

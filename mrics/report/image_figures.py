@@ -78,10 +78,28 @@ def error_factor(ratios: list[float]) -> int:
 def panel_figure(
     rows: list[PanelRow], window: Window, aspect: float, ends: tuple[str, str, str, str]
 ) -> Any:
+    """Figure of :func:`draw_panels`."""
+    shape = rows[0].reference.shape
+    panel = min(2.05 * shape[0] * aspect / shape[1], 3.2)
+    with figure_style():
+        figure = new_figure(7.2, len(rows) * (panel + 0.3) + 0.75)
+        draw_panels(figure, rows, window, aspect, ends)
+    return figure
+
+
+def draw_panels(
+    figure: Any,
+    rows: list[PanelRow],
+    window: Window,
+    aspect: float,
+    ends: tuple[str, str, str, str],
+) -> None:
     """Rows of reference | recovered | error with their two scales.
 
     Parameters
     ----------
+    figure : Figure or SubFigure
+        Where to draw.
     rows : list of PanelRow
         Slices to show.
     window : Window
@@ -91,26 +109,21 @@ def panel_figure(
     ends : tuple of str
         What lies left, right, top and bottom of an image.
     """
-    shape = rows[0].reference.shape
-    panel = min(2.05 * shape[0] * aspect / shape[1], 3.2)
-    with figure_style():
-        figure = new_figure(7.2, len(rows) * (panel + 0.3) + 0.75)
-        grid = figure.subplots(len(rows), 3, squeeze=False)
-        for axes, row in zip(grid, rows, strict=True):
-            grey = _row(axes, row, window, aspect)
-            _end_letters(axes[0], ends)
-        for axes, name in zip(grid[0], ("reference", "recovered", "error"), strict=True):
-            axes.set_title(name if name != "error" else f"error ×{window.factor}")
-        scale = {"orientation": "horizontal", "shrink": 0.75, "aspect": 30, "pad": 0.02}
-        bar = figure.colorbar(grey[0], ax=grid[:, :2].ravel().tolist(), **scale)
-        bar.set_label("image value (common window)")
-        error_bar = figure.colorbar(grey[1], ax=grid[:, 2].tolist(), **scale)
-        error_bar.set_label("recovered − reference")
-        error_bar.set_ticks([-window.error_end, 0, window.error_end])
-        error_bar.set_ticklabels([f"−{number(window.error_end)}", "0", number(window.error_end)])
-        for each in (bar, error_bar):
-            each.outline.set_edgecolor(MUTED)
-    return figure
+    grid = figure.subplots(len(rows), 3, squeeze=False)
+    for axes, row in zip(grid, rows, strict=True):
+        grey = _row(axes, row, window, aspect)
+        _end_letters(axes[0], ends)
+    for axes, name in zip(grid[0], ("reference", "recovered", "error"), strict=True):
+        axes.set_title(name if name != "error" else f"error ×{window.factor}")
+    scale = {"orientation": "horizontal", "shrink": 0.75, "aspect": 30, "pad": 0.02}
+    bar = figure.colorbar(grey[0], ax=grid[:, :2].ravel().tolist(), **scale)
+    bar.set_label("image value (common window)")
+    error_bar = figure.colorbar(grey[1], ax=grid[:, 2].tolist(), **scale)
+    error_bar.set_label("recovered − reference")
+    error_bar.set_ticks([-window.error_end, 0, window.error_end])
+    error_bar.set_ticklabels([f"−{number(window.error_end)}", "0", number(window.error_end)])
+    for each in (bar, error_bar):
+        each.outline.set_edgecolor(MUTED)
 
 
 def _row(axes: Any, row: PanelRow, window: Window, aspect: float) -> tuple[Any, Any]:

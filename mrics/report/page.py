@@ -5,28 +5,28 @@ from __future__ import annotations
 from pathlib import Path
 from typing import Any
 
-from mrics.report.arms import ArmPictures, arm_pictures, pattern_picture, windows
+from mrics.report.arms import ArmPictures, ArmView, arm_views, windows
 from mrics.report.charts import against_acceleration, by_slice
 from mrics.report.folder import StudyFolder, open_folder
 from mrics.report.image_figures import Window, panel_figure
 from mrics.report.pattern_figures import pattern_figure
-from mrics.report.pictures import ScanPictures, load_pictures
+from mrics.report.pictures import load_pictures
 from mrics.report.rendering import render, write_page
 from mrics.report.style_figures import svg_uri
 from mrics.report.summary import (
+    charted_metrics,
     first_metric,
     limits_of,
     metrics_of,
     range_marks,
     unfinished,
+    worst_slices,
 )
 from mrics.report.viewer_data import viewer_values
 from mrics.report.words import metric_value, metric_words, number
 
 PAGE_LIMIT = 24_000_000
 """Characters a page may have; images get what figures and tables leave."""
-
-_CHARTED = ("nrmse", "psnr", "ssim", "hfen")
 
 
 def write_report(directory: str | Path) -> Path:
@@ -57,9 +57,9 @@ def page_values(study: StudyFolder) -> dict[str, Any]:
     metrics = metrics_of(study)
     pictures = load_pictures(study)
     scales = windows(study, pictures)
-    charted = tuple(m for m in metrics if m.key in _CHARTED)
+    charted = charted_metrics(study)
     today = next((a for a in study.arms if a.get("today")), None)
-    arms = [_arm(study, arm, charted, pictures, scales) for arm in study.arms]
+    arms = [_arm(study, view) for view in arm_views(study, pictures, scales)]
     drawn = sum(len(v) for arm in arms for v in arm.values() if isinstance(v, str))
     room = max(PAGE_LIMIT // 4, PAGE_LIMIT - drawn)
     return {
@@ -85,36 +85,24 @@ def page_values(study: StudyFolder) -> dict[str, Any]:
     }
 
 
-def _arm(
-    study: StudyFolder,
-    arm: dict[str, Any],
-    metrics: Any,
-    pictures: list[ScanPictures],
-    scales: dict[str, Window],
-) -> dict[str, Any]:
+def _arm(study: StudyFolder, view: ArmView) -> dict[str, Any]:
     """One arm with its pictures as data URIs."""
-    out: dict[str, Any] = {"row": arm, "units": study.units(arm["id"])}
-    picture = pattern_picture(study, arm)
-    out["pattern"] = None
-    if picture is not None:
-        out["pattern"] = svg_uri(pattern_figure(picture))
-        out["pattern_text"] = picture.sentence
-    shown = arm_pictures(study, arm, pictures)
-    out["pictures"] = shown
-    if shown is not None:
-        view, window = shown.scan.view, scales[shown.scan.entry["id"]]
-        figure = panel_figure(shown.rows, window, view.row_mm / view.column_mm, view.ends)
+    out: dict[str, Any] = {"row": view.row, "units": study.units(view.row["id"])}
+    out["pattern"] = out["images"] = out["by_slice"] = None
+    if view.pattern is not None:
+        out["pattern"] = svg_uri(pattern_figure(view.pattern))
+        out["pattern_text"] = view.pattern.sentence
+    shown, window = view.pictures, view.window
+    out["pictures"], out["window"] = shown, window
+    if shown is not None and window is not None:
+        figure = panel_figure(shown.rows, window, view.aspect, shown.scan.view.ends)
         out["images"] = svg_uri(figure)
-        out["window"] = window
-        out["images_text"] = _images_text(arm, shown, window)
-    limited = [x.metric for x in limits_of(study)]
-    chosen = [m for m in metrics if m.key in limited] + [m for m in metrics if m.key not in limited]
-    chosen = sorted(chosen[:3], key=metrics.index)
-    out["by_slice"] = None
-    if out["units"] and chosen:
-        out["by_slice"] = svg_uri(by_slice(study, arm, tuple(chosen)))
+        out["images_text"] = _images_text(view.row, shown, window)
+    out["worst"] = worst_slices(study, view.row["id"])
+    if view.metrics:
+        out["by_slice"] = svg_uri(by_slice(study, view.row, view.metrics))
         out["by_slice_text"] = (
-            f"{', '.join(m.label for m in chosen)} of {arm['label']} by slice, "
+            f"{', '.join(m.label for m in view.metrics)} of {view.row['label']} by slice, "
             "mean and range over draws, one curve for each scan."
         )
     return out

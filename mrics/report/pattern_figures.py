@@ -105,22 +105,25 @@ def radial_density(share: NDArray[Any]) -> tuple[NDArray[Any], NDArray[Any]]:
 
 
 def pattern_figure(picture: PatternPicture) -> Any:
-    """Positions, echoes where they are known, density and point spread, side by side."""
-    count = 3 if picture.echo is None else 4
+    """Figure of :func:`draw_pattern_picture`."""
     with figure_style():
-        figure = new_figure(7.2 if count == 3 else 9.4, 2.5)
-        axes = figure.subplots(
-            1, count, width_ratios=(1, 1, 1.15) if count == 3 else (1, 1.15, 1, 1.15)
-        )
-        _positions(axes[0], picture)
-        if picture.echo is not None:
-            _echoes(axes[1], picture, figure)
-        _density(axes[-2], picture)
-        if picture.one_dimensional:
-            _spread_line(axes[-1], picture)
-        else:
-            _spread_plane(axes[-1], picture, figure)
+        figure = new_figure(7.4 if picture.echo is None else 10.1, 2.5)
+        draw_pattern_picture(figure, picture)
     return figure
+
+
+def draw_pattern_picture(figure: Any, picture: PatternPicture) -> None:
+    """Positions, echoes where they are known, density and point spread, side by side."""
+    widths = (1, 1, 1.15) if picture.echo is None else (1, 1.15, 1, 1.15)
+    axes = figure.subplots(1, len(widths), width_ratios=widths)
+    _positions(axes[0], picture)
+    if picture.echo is not None:
+        _echoes(axes[1], picture, figure)
+    _density(axes[-2], picture)
+    if picture.one_dimensional:
+        _spread_line(axes[-1], picture)
+    else:
+        _spread_plane(axes[-1], picture, figure)
 
 
 def _positions(axes: Any, picture: PatternPicture) -> None:

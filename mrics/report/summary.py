@@ -96,6 +96,12 @@ def metrics_of(study: StudyFolder) -> tuple[MetricWords, ...]:
     return tuple(metric_words(k) for k in ordered)
 
 
+def charted_metrics(study: StudyFolder) -> tuple[MetricWords, ...]:
+    """Metrics that charts show: the four of the first page and those with limits."""
+    limited = {limit.metric for limit in limits_of(study)}
+    return tuple(m for m in metrics_of(study) if m.key in _ORDER or m.key in limited)
+
+
 def first_metric(study: StudyFolder) -> str:
     """The metric that chooses which slices are shown: the first limited one, else NRMSE."""
     shown = [m.key for m in metrics_of(study)]
@@ -188,3 +194,22 @@ def shown_slices(study: StudyFolder, arm: str, scan: str, draw: int | None) -> d
         return {}
     rows.sort(key=lambda s: s[key], reverse=metric_words(key).better == "low")
     return {"worst": rows[0], "median": rows[len(rows) // 2]}
+
+
+def worst_slices(study: StudyFolder, arm: str, count: int = 10) -> list[dict[str, Any]]:
+    """The worst slices of an arm over scans and draws, by :func:`first_metric`.
+
+    Returns
+    -------
+    list of dict
+        Entries of results.json with "scan" and "draw" added, worst first.
+    """
+    key = first_metric(study)
+    rows = [
+        {**row, "scan": unit["scan"], "draw": unit["draw"]}
+        for unit in study.units(arm)
+        for row in unit["slices"]
+        if row.get(key) is not None
+    ]
+    rows.sort(key=lambda r: r[key], reverse=metric_words(key).better == "low")
+    return rows[:count]

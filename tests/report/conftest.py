@@ -19,6 +19,14 @@ def small_study(tmp_path_factory: pytest.TempPathFactory) -> Path:
 
 
 @pytest.fixture(scope="session")
+def tiny_study(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """Two scans, two arms, one draw, three slices: copied by tests that change it."""
+    arms = ((2.0, "zero-filled"), (3.0, "windowed"))
+    plan = StudyPlan(shape=(3, 32, 24), scans=2, draws=1, arms=arms)
+    return build_study(tmp_path_factory.mktemp("tiny"), plan)
+
+
+@pytest.fixture(scope="session")
 def browser() -> Iterator[Any]:
     """One headless browser for all tests."""
     from browsing import open_browser

@@ -285,6 +285,24 @@ function goToRanked(share) {
   if (order.length) goTo(order[Math.floor(share * order.length)]);
 }
 
+// A slice that a table names; the nearest one held where the page holds only some.
+function showSlice({ scan: name, arm, draw, plane, frame }) {
+  const number = study.scans.findIndex((s) => s.id === name);
+  if (number < 0 || !study.scans[number].images.some((i) => i.arm === arm)) {
+    say("No image of this slice is stored.");
+    return;
+  }
+  state.arm = arm;
+  state.draw = Number(draw);
+  $("v-scan").value = number;
+  useScan(number);
+  const far = (s) => Math.abs(s.plane - Number(plane)) + 1e6 * Math.abs(s.frame - Number(frame));
+  const distances = scan().slices.map(far);
+  goTo(distances.indexOf(Math.min(...distances)));
+  $("look").scrollIntoView();
+  stage.focus({ preventScroll: true });
+}
+
 function startViewer() {
   fill($("v-scan"), study.scans.map((s, n) => [n, s.name]), 0);
   fill($("v-metric"), study.metrics.map((m) => [m.key, m.label]), state.metric);
@@ -319,6 +337,9 @@ function startViewer() {
   stage.addEventListener("pointerleave", () => { if (!drag) { state.probe = null; refresh(); } });
   stage.addEventListener("wheel", wheel, { passive: false });
   stage.addEventListener("keydown", key);
+  for (const button of document.querySelectorAll("button.show")) {
+    button.addEventListener("click", () => showSlice(button.dataset));
+  }
   $("viewer").hidden = false;
   useScan(0);
 }
