@@ -3,6 +3,7 @@
 from mrics.numerics.fourier import (
     centred_fft,
     centred_ifft,
+    circular_correlation,
     fft_planes,
     ifft_planes,
     recentre,
@@ -14,6 +15,7 @@ from mrics.numerics.threads import map_blocks, set_threads, threads
 __all__ = [
     "centred_fft",
     "centred_ifft",
+    "circular_correlation",
     "fft_planes",
     "ifft_planes",
     "map_blocks",

@@ -83,3 +83,12 @@ def _times_phase(kspace: Array, axes: tuple[int, ...], conjugate: bool) -> Array
         shape[axis] = -1
         kspace *= (np.conj(phase) if conjugate else phase).reshape(shape)
     return kspace
+
+
+def circular_correlation(first: Array, second: Array, axis: int) -> Array:
+    """Sum over all lines of first[n] second[n - s] along ``axis``, for s = 0 ... N-1 (real)."""
+    others = tuple(a for a in range(first.ndim) if a != axis % first.ndim)
+    length = first.shape[axis]
+    one = scipy.fft.rfft(first, axis=axis, workers=threads())
+    two = scipy.fft.rfft(second, axis=axis, workers=threads())
+    return scipy.fft.irfft((one * np.conj(two)).sum(axis=others), length)

@@ -83,22 +83,35 @@ def scan_noise(scan: Scan, mask: NDArray[np.bool_] | None = None) -> Noise:
     mask : ndarray of bool, shape (i, j, k), optional
         Body mask; made by :func:`mrics.scan.body_mask` where not given.
     """
+    return choose_noise(noise_estimates(scan, mask))
+
+
+def noise_estimates(scan: Scan, mask: NDArray[np.bool_] | None = None) -> dict[str, Noise]:
+    """Every estimate of :func:`scan_noise` that the scan allows, by its method."""
     data = first_volume(scan)
     mask = body_mask(data) if mask is None else mask
     magnitude = spatial_magnitude(data)
-    detail = _detail_noise(data, magnitude, mask)
+    found = {"detail": _detail_noise(data, magnitude, mask)}
     if scan.data.ndim == 4 and scan.frames > 1:
-        repeat = _repeat_noise(scan.data[..., 1] - data, magnitude, mask)
-        detail = repeat if 0 < repeat.sigma < detail.sigma else detail
+        found["repeat"] = _repeat_noise(scan.data[..., 1] - data, magnitude, mask)
     air = air_noise(magnitude, mask)
     if air is None:
-        return detail
+        return found
+    found = {name: replace(noise, ratio=air.ratio) for name, noise in found.items()}
     many = channels_of_ratio(air.ratio)
-    if many is None or (many > 1 and np.iscomplexobj(data)):
-        return replace(detail, ratio=air.ratio)
-    air = replace(air, sigma=air.sigma / float(np.sqrt(many)))
-    if WHITE * air.sigma <= detail.sigma < air.sigma:
-        return replace(detail, ratio=air.ratio)
+    if many is not None and (many == 1 or not np.iscomplexobj(data)):
+        found["air"] = replace(air, sigma=air.sigma / float(np.sqrt(many)))
+    return found
+
+
+def choose_noise(estimates: dict[str, Noise]) -> Noise:
+    """The estimate to believe; see :func:`scan_noise`."""
+    inside = estimates["detail"]
+    repeat, air = estimates.get("repeat"), estimates.get("air")
+    if repeat is not None and 0 < repeat.sigma < inside.sigma:
+        inside = repeat
+    if air is None or WHITE * air.sigma <= inside.sigma < air.sigma:
+        return inside
     return air
 
 
@@ -140,29 +153,44 @@ def channels_of_ratio(ratio: float) -> float | None:
     return float(np.interp(ratio, mean / np.sqrt(2 * count - mean**2), count))
 
 
-def _detail_noise(data: NDArray[Any], magnitude: NDArray[Any], mask: NDArray[np.bool_]) -> Noise:
+def detail_powers(
+    data: NDArray[Any], magnitude: NDArray[Any], mask: NDArray[np.bool_] | None
+) -> tuple[NDArray[np.float64], NDArray[np.bool_], float]:
+    """Noise power of each block by its finest detail, which blocks count, and their gamma shape.
+
+    White noise of SD sigma per part has power sigma^2. Blocks count that hold no exact zero and,
+    where a mask is given, lie inside it.
+    """
     parts = (data.real, data.imag) if np.iscomplexobj(data) else (data,)
     power = np.sum([_block_mean(np.square(second_difference(part))) for part in parts], axis=0)
-    shape = len(parts) * _BLOCK**2 / (2 * _DETAIL_DEPENDENCE)
-    chosen = _whole_blocks(magnitude, None if len(parts) == 2 else mask)
-    mean, count = quiet_mean(power[chosen] / (36 * len(parts)), shape)
+    usable = _block_mean(magnitude > 0) == 1
+    if mask is not None:
+        usable &= _block_mean(mask) == 1
+    return power / (36 * len(parts)), usable, len(parts) * _BLOCK**2 / (2 * _DETAIL_DEPENDENCE)
+
+
+def _detail_noise(data: NDArray[Any], magnitude: NDArray[Any], mask: NDArray[np.bool_]) -> Noise:
+    inside = None if np.iscomplexobj(data) else mask
+    power, usable, shape = detail_powers(data, magnitude, inside)
+    mean, count = quiet_mean(power[_enough(usable, magnitude)], shape)
     return Noise(float(np.sqrt(mean)), "detail", count, 0.0)
 
 
 def _repeat_noise(change: NDArray[Any], magnitude: NDArray[Any], mask: NDArray[np.bool_]) -> Noise:
     parts = 2 if np.iscomplexobj(change) else 1
     power = _block_mean(np.square(np.abs(change))) / (2 * parts)
-    chosen = _whole_blocks(magnitude, None if parts == 2 else mask)
-    mean, count = quiet_mean(power[chosen], parts * _BLOCK**2 / 2)
+    usable = _block_mean(magnitude > 0) == 1
+    if parts == 1:
+        usable &= _block_mean(mask) == 1
+    mean, count = quiet_mean(power[_enough(usable, magnitude)], parts * _BLOCK**2 / 2)
     return Noise(float(np.sqrt(mean)), "repeat", count, 0.0)
 
 
-def _whole_blocks(magnitude: NDArray[Any], mask: NDArray[np.bool_] | None) -> NDArray[np.bool_]:
-    """Blocks without an exact zero, and inside the body where a mask is given."""
+def _enough(usable: NDArray[np.bool_], magnitude: NDArray[Any]) -> NDArray[np.bool_]:
+    """The usable blocks, or all without a zero, or all, where there are too few."""
+    if np.count_nonzero(usable) >= LEAST_BLOCKS:
+        return usable
     whole = _block_mean(magnitude > 0) == 1
-    chosen = whole if mask is None else whole & (_block_mean(mask) == 1)
-    if np.count_nonzero(chosen) >= LEAST_BLOCKS:
-        return chosen
     return whole if whole.any() else np.ones_like(whole)
 
 

@@ -2,61 +2,64 @@
 
 from __future__ import annotations
 
-import numpy as np
-from numpy.typing import NDArray
-
+from mrics.scan.fitness.edges import half_power_place
 from mrics.scan.fitness.finding import Finding
-from mrics.scan.fitness.view import ScanView
+from mrics.scan.fitness.view import DETAIL_DB, PROFILE_DB, ScanView
 from mrics.scan.volume import LETTERS
 
-# Natural logarithm of the power ratio across the edge.
-STEP = 0.7
-_WINDOW = 3
-_LEAST_LENGTH = 32
+# Both sides of a profile must end within this share of the axis of each other.
+SYMMETRY = 0.03
 
 
 def zero_filled(view: ScanView) -> tuple[Finding, ...]:
-    """A step down in the power of k-space along an axis, at the edge of the acquired matrix."""
+    """K-space along an axis ends before the grid does.
+
+    With phase the profile of k-space itself is empty beyond the acquired matrix, on both sides.
+    Taking the magnitude fills it again, but hardly where signal is strong: in tissue the spectrum
+    of detail still falls by 20 dB at the place where the data ended.
+    """
     findings = []
     for axis in view.encoded:
-        length = view.volume.shape[axis]
-        if length < _LEAST_LENGTH:
-            continue
-        power = view.power(axis)
-        centre = length // 2
-        up, last_up = _largest_step(power[centre:])
-        down, last_down = _largest_step(power[centre::-1])
-        if min(up, down) > STEP and abs(last_up - last_down) <= 2:
-            true = last_up + last_down + 1
-            findings.append(_finding(LETTERS[axis], length, true, min(up, down)))
+        found = measured_matrix(view, axis)
+        if found is not None:
+            true, fall, least = found
+            findings.append(_finding(LETTERS[axis], view.volume.shape[axis], true, fall, least))
     return tuple(findings)
 
 
-def _largest_step(power: NDArray[np.float64]) -> tuple[float, int]:
-    """Largest fall of log power from one sample to all further out, beyond the trend before it.
-
-    Returns the fall and the index of the last sample before it.
-    """
-    level = np.log(power + power.max() * 1e-16 + np.finfo(np.float64).tiny)
-    best, last = 0.0, len(level) - 1
-    for k in range(int(0.4 * len(level)), len(level) - _WINDOW):
-        inner = level[k - _WINDOW + 1 : k + 1]
-        step = float(inner.min() - level[k + 1 :].max() - max(inner[0] - inner[-1], 0.0))
-        if step > best:
-            best, last = step, k
-    return best, last
+def measured_matrix(view: ScanView, axis: int) -> tuple[int, float, float] | None:
+    """Samples measured along a zero-filled axis, fall at their end in dB, least fall believed."""
+    return _of_profile(view, axis) or (None if view.has_phase else _of_detail(view, axis))
 
 
-def _finding(letter: str, length: int, true: int, step: float) -> Finding:
+def _of_profile(view: ScanView, axis: int) -> tuple[int, float, float] | None:
+    up, down = view.profile_edges(axis)
+    fall = min(up.fall_db, down.fall_db)
+    length = view.volume.shape[axis]
+    if fall < PROFILE_DB or abs(up.place - down.place) > max(2.0, SYMMETRY * length):
+        return None
+    return int(up.place + down.place) + 1, fall, PROFILE_DB
+
+
+def _of_detail(view: ScanView, axis: int) -> tuple[int, float, float] | None:
+    spectrum = view.detail_spectrum(axis)
+    edge = view.detail_edge(axis)
+    if spectrum is None or edge is None or edge.fall_db < DETAIL_DB:
+        return None
+    share = half_power_place(spectrum, edge)
+    return round(share * view.volume.shape[axis]), edge.fall_db, DETAIL_DB
+
+
+def _finding(letter: str, length: int, true: int, fall: float, least: float) -> Finding:
     return Finding(
         code="zero-filled",
-        what=f"Outer k-space along {letter} is empty: about {true} of {length} samples were "
-        f"measured (power falls by {10 * step / np.log(10):.0f} dB at the edge).",
+        what=f"K-space along {letter} ends at {true} of {length} samples, where power falls by "
+        f"{fall:.0f} dB: the image was interpolated by zero-filling.",
         where=f"axis {letter}",
-        statistic=step,
-        threshold=STEP,
-        bias="A pattern drawn on the padded grid spends samples on k-space that is known to be "
-        "empty, so the acceleration of the measured part is smaller than stated.",
+        statistic=fall,
+        threshold=least,
+        bias="A pattern on the padded grid spends samples on k-space that is known to be empty: "
+        "what is truly measured is accelerated less than stated, and looks better for it.",
         advice=f"Crop k-space along {letter} to {true} samples before the study.",
         remedy="crop_kspace",
         settings=((letter, true),),
