@@ -31,8 +31,13 @@ def _pad_line(line: Any, length: int, radius: int) -> None:
 
 
 @numba.njit(nogil=True, cache=True)
-def ssim_plane(x: Plane, y: Plane, taps: Plane, c1: float, c2: float, out: Plane) -> None:
-    """SSIM map of two planes into ``out``; ``taps`` are the 1-D window weights, odd in number."""
+def ssim_plane(
+    x: Plane, y: Plane, taps: Plane, c1: float, c2: float, out: Plane, contrast: Plane
+) -> None:
+    """SSIM map of two planes into ``out``, its contrast-structure term into ``contrast``.
+
+    ``taps`` are the 1-D window weights, odd in number.
+    """
     rows, columns = x.shape
     radius = taps.size // 2
     lines = np.empty((4, columns + 2 * radius))
@@ -63,9 +68,8 @@ def ssim_plane(x: Plane, y: Plane, taps: Plane, c1: float, c2: float, out: Plane
             product = a * b
             variances = means[2, j] - squares
             covariance = means[3, j] - product
-            out[i, j] = ((2.0 * product + c1) * (2.0 * covariance + c2)) / (
-                (squares + c1) * (variances + c2)
-            )
+            contrast[i, j] = (2.0 * covariance + c2) / (variances + c2)
+            out[i, j] = (2.0 * product + c1) / (squares + c1) * contrast[i, j]
 
 
 @numba.njit(nogil=True, cache=True)

@@ -65,3 +65,13 @@ def as_stack(
 def magnitude(plane: NDArray[Any]) -> NDArray[np.float64]:
     """Magnitude in double precision (of negative real values too)."""
     return np.abs(plane).astype(np.float64, copy=False)
+
+
+def largest(reference: NDArray[Any], mask: NDArray[np.bool_] | None) -> float:
+    """Largest magnitude in the mask over the whole stack."""
+    if mask is None:
+        return max(float(np.abs(plane).max()) for plane in reference)
+    return max(
+        float(np.abs(plane).max(where=inside, initial=0.0))
+        for plane, inside in zip(reference, mask, strict=True)
+    )

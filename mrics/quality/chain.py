@@ -11,6 +11,7 @@ from __future__ import annotations
 from collections.abc import Callable, Iterable, Iterator
 from dataclasses import fields, replace
 from itertools import islice
+from time import perf_counter
 from typing import Any
 
 import numpy as np
@@ -52,10 +53,14 @@ class Chain:
         With the weight that was chosen.
     runs : int
         Recoveries of the whole stack done so far, the first included.
+    seconds : float
+        Wall time spent in recoveries so far.
     """
 
     def __init__(self, acquisition: Acquisition, method: str, **settings: Any) -> None:
+        started = perf_counter()
         first = recover(acquisition, method, **settings)
+        self.seconds = perf_counter() - started
         chosen = first.certificate.weight
         names = {entry.name for entry in fields(check_settings(method, settings))}
         self.method = method
@@ -134,10 +139,13 @@ class Chain:
     def _run(self, batch: list[Array]) -> list[Array]:
         held = self.acquisition
         self.runs += len(batch)
+        started = perf_counter()
         if not self._batched:
-            return map_blocks(
+            separate = map_blocks(
                 lambda change: self._recover(replace(held, kspace=held.kspace + change)), batch
             )
+            self.seconds += perf_counter() - started
+            return separate
         maps = held.sensitivities
         if maps is not None and maps.shape[0] > 1:
             maps = np.concatenate([maps] * len(batch))
@@ -150,6 +158,7 @@ class Chain:
             volume_shape=(),
         )
         images = self._recover(joined)
+        self.seconds += perf_counter() - started
         return list(images.reshape(len(batch), *self.base.shape))
 
     def _recover(self, acquisition: Acquisition) -> Array:

@@ -105,6 +105,121 @@ METRICS: MappingProxyType[str, Metric] = MappingProxyType(
             "complex NRMSE",
             "As NRMSE, with errors of phase counted too.",
         ),
+        "ms_ssim": Metric(
+            "higher",
+            "Wang, Simoncelli, Bovik 2003: product over up to 5 scales of the mean "
+            "contrast-structure term of SSIM, with SSIM at the coarsest; means over the mask",
+            "1",
+            "MS-SSIM",
+            "As SSIM, judged from fine to coarse detail.",
+        ),
+        "gmsd": Metric(
+            "lower",
+            "Xue et al. 2014: standard deviation over the mask of the similarity "
+            "(2 g h + c) / (g^2 + h^2 + c) of the gradient magnitudes at half resolution, "
+            "c = 170 / 255^2 L^2",
+            "1",
+            "gradient deviation",
+            "How unevenly edges are kept; 0 is identical.",
+        ),
+        "nrmse_patch": Metric(
+            "lower",
+            "largest RMS error of a 16 x 16 patch over the RMS of the reference in the mask",
+            "1",
+            "NRMSE, worst patch",
+            "Size of the error in the worst small region.",
+        ),
+        "ssim_patch": Metric(
+            "higher",
+            "lowest mean SSIM of a 16 x 16 patch",
+            "1",
+            "SSIM, worst patch",
+            "Likeness in the worst small region.",
+        ),
+        "error_measured": Metric(
+            "lower",
+            "||P (x - y)|| / ||y||, P what the acquisition determines (one channel: the projector "
+            "on the measured samples)",
+            "1",
+            "error in measured part",
+            "Error in what was measured: noise, and detail the recovery smoothed away.",
+        ),
+        "error_missing": Metric(
+            "lower",
+            "norm of (1 - beta) b over ||y||, b the unmeasured part of the reference and beta the "
+            "share of it in the recovered image, per wavelet band and window",
+            "1",
+            "missing detail",
+            "Unmeasured detail of the reference that the image does not show.",
+        ),
+        "error_invented": Metric(
+            "lower",
+            "norm of a - beta b over ||y||, a the unmeasured part of the recovered image: what has "
+            "nothing of the reference in it",
+            "1",
+            "invented detail",
+            "Unmeasured detail the image shows that is not in the reference.",
+        ),
+        "noise_ratio": Metric(
+            "lower",
+            "median over the mask of the replicas' standard deviation over that of full sampling "
+            "(Robson et al. 2008)",
+            "1",
+            "noise against the full scan",
+            "Noise compared with the full scan, which takes R times as long.",
+        ),
+        "noise_gain": Metric(
+            "lower",
+            "noise ratio / sqrt(R)",
+            "1",
+            "noise gain",
+            "Noise compared with a full scan of equal acquisition time.",
+        ),
+        "resolution_u_mm": Metric(
+            "lower",
+            "median full width at half maximum along the phase axis of the response to a small "
+            "point (Chan and Haldar 2021)",
+            "mm",
+            "resolution along phase",
+            "How wide a point becomes along the phase axis.",
+        ),
+        "resolution_v_mm": Metric(
+            "lower",
+            "the same along the other in-plane axis (partition in 3-D, readout in 2-D)",
+            "mm",
+            "resolution along the other axis",
+            "How wide a point becomes along the other axis.",
+        ),
+        "edge_blur": Metric(
+            "lower",
+            "median of the 10 to 90 % rise of edges over that of the same edges in the reference",
+            "1",
+            "edge blur",
+            "How much wider edges became; 1 is unchanged.",
+        ),
+        "feature_retention": Metric(
+            "higher",
+            "Re <f, d> / <f, f> of an inserted feature f and the recovered one d, mean over sites, "
+            "of the feature that is kept least",
+            "1",
+            "feature retention",
+            "Share of a small feature's contrast that survives; 1 is all of it.",
+        ),
+        "observer_auc": Metric(
+            "higher",
+            "area under the ROC curve of a channelised Hotelling observer of recovered images for "
+            "a small feature in an anatomical background",
+            "1",
+            "observer AUC",
+            "How often an observer tells an image with the feature from one without.",
+        ),
+        "observer_efficiency": Metric(
+            "higher",
+            "(d' of that observer / d' of the ideal observer on the k-space samples)^2",
+            "1",
+            "observer efficiency",
+            "Share of what the data hold on the feature that the image shows.",
+        ),
     }
 )
 

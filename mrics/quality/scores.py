@@ -22,7 +22,7 @@ from numpy.typing import NDArray
 
 from mrics.errors import QualityError
 from mrics.numerics import map_blocks
-from mrics.quality._inputs import as_stack, magnitude
+from mrics.quality._inputs import as_stack, largest, magnitude
 from mrics.quality.detail import log_filter
 from mrics.quality.similarity import ssim_map
 
@@ -65,7 +65,7 @@ def score(
         that is zero all over the mask.
     """
     stack, ref, inside = as_stack(image, reference, mask)
-    data_range = _largest(ref, inside)
+    data_range = largest(ref, inside)
     if data_range == 0.0:
         raise QualityError(
             "The reference is zero all over the mask, so no relative score can be made.",
@@ -107,25 +107,16 @@ def score_planes(
         As for :func:`score`, and for a data range that is not positive.
     """
     stack, ref, inside = as_stack(image, reference, mask)
-    largest = _largest(ref, inside) if data_range is None else float(data_range)
-    if not largest > 0.0:
+    span = largest(ref, inside) if data_range is None else float(data_range)
+    if not span > 0.0:
         raise QualityError(
-            f"The data range is {largest:g}; it must be positive.",
+            f"The data range is {span:g}; it must be positive.",
             "data_range" if data_range is not None else "reference",
             "Give the largest magnitude of the reference inside the body.",
         )
     both_complex = np.iscomplexobj(stack) and np.iscomplexobj(ref)
-    sums = _plane_sums(stack, ref, inside, largest)
-    return [_scores(one, largest, both_complex) for one in sums]
-
-
-def _largest(reference: NDArray[Any], mask: NDArray[np.bool_] | None) -> float:
-    if mask is None:
-        return max(float(np.abs(plane).max()) for plane in reference)
-    return max(
-        float(np.abs(plane).max(where=inside, initial=0.0))
-        for plane, inside in zip(reference, mask, strict=True)
-    )
+    sums = _plane_sums(stack, ref, inside, span)
+    return [_scores(one, span, both_complex) for one in sums]
 
 
 def _plane_sums(

@@ -34,9 +34,16 @@ def ssim_map(
     Wang, Bovik, Sheikh, Simoncelli 2004, IEEE Trans Image Process 13:600-612,
     doi:10.1109/TIP.2003.819861.
     """
+    return ssim_terms(image, reference, data_range)[0]
+
+
+def ssim_terms(
+    image: NDArray[np.float64], reference: NDArray[np.float64], data_range: float
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """The SSIM map and its contrast-structure term (SSIM without the luminance term)."""
     from mrics.quality._filters import ssim_plane
 
-    out = np.empty(image.shape)
+    out, contrast = np.empty(image.shape), np.empty(image.shape)
     ssim_plane(
         np.ascontiguousarray(image, dtype=np.float64),
         np.ascontiguousarray(reference, dtype=np.float64),
@@ -44,5 +51,6 @@ def ssim_map(
         (K1 * data_range) ** 2,
         (K2 * data_range) ** 2,
         out,
+        contrast,
     )
-    return out
+    return out, contrast
