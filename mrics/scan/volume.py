@@ -106,9 +106,11 @@ class Scan:
     sha256 : str
         Hash of the file's bytes (of all files of a pair).
     complex_source : str
-        "magnitude", "magnitude+phase", "real+imaginary" or "complex".
+        "magnitude", "magnitude+phase", "real+imaginary", "complex" or "invented phase".
     header : nibabel header or None
         The source's header, from which written images take shape-independent fields.
+    remedies : tuple of str
+        What was done to the data since it was read, one sentence each.
     """
 
     data: NDArray[Any]
@@ -118,6 +120,7 @@ class Scan:
     sha256: str = ""
     complex_source: str = "complex"
     header: Any = field(default=None, repr=False, compare=False)
+    remedies: tuple[str, ...] = ()
 
     @property
     def shape(self) -> tuple[int, ...]:

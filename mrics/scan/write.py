@@ -12,10 +12,9 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from mrics.caution import NIFTI_DESCRIP
 from mrics.errors import ScanError
 from mrics.scan.volume import Scan
-
-DESCRIPTION = b"mrics research only"
 
 
 def write_nifti(path: str | Path, data: NDArray[Any], like: Scan) -> Path:
@@ -93,7 +92,7 @@ def _header(data: NDArray[Any], like: Scan) -> Any:
     if qform:
         header.set_qform(like.affine, qform, strip_shears=True)
     header["xyzt_units"] = 2 | time_units
-    header["descrip"] = DESCRIPTION
+    header["descrip"] = NIFTI_DESCRIP.encode()
     header["vox_offset"] = 352
     header["magic"] = b"n+1"
     return header

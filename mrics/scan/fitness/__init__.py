@@ -1,6 +1,6 @@
 """Is this scan fit to be a reference? Findings about what was done to it."""
 
 from mrics.scan.fitness.finding import Finding
-from mrics.scan.fitness.inspect import CHECKS, inspect_scan
+from mrics.scan.fitness.inspect import CHECKS, Inspection, inspect_fully, inspect_scan
 
-__all__ = ["CHECKS", "Finding", "inspect_scan"]
+__all__ = ["CHECKS", "Finding", "Inspection", "inspect_fully", "inspect_scan"]

@@ -19,7 +19,10 @@ ROLL_OFF_DB = 1.8
 # Linear interpolation halfway between voxels correlates neighbours by 0.5 and no others.
 _MOST_LINEAR = 0.54
 _FLAT = 0.07
-_UNFILTERED = "Export without image filter; else restrict the study to the flat part of k-space and add noise."
+_UNFILTERED = (
+    "Export without image filter; else restrict the study to the flat part of k-space and "
+    "add noise."
+)
 
 
 def smoothed_noise(view: ScanView) -> tuple[Finding, ...]:
