@@ -115,11 +115,20 @@ class StudyPlan:
 
     def prepared(self, number: int) -> Prepared:
         """One of the scans, read and made ready."""
-        return prepare(self.scans[number], self.axes, self.choice, self.channel_axis)
+        protocol = self.protocol
+        return prepare(
+            self.scans[number],
+            self.axes,
+            self.choice,
+            self.channel_axis,
+            protocol.coils,
+            protocol.study.seed,
+        )
 
     def scan_bytes(self) -> int:
-        """Memory one scan takes as complex64, the largest of them."""
-        return max(8 * math.prod(read_header(scan.path).shape) for scan in self.scans)
+        """Memory one scan takes as complex64 with its channels, the largest of them."""
+        channels = self.protocol.coils.number if self.protocol.coils else 1
+        return max(8 * channels * math.prod(read_header(s.path).shape) for s in self.scans)
 
     def families(self) -> dict[str, list[PlanRow]]:
         """Arms that a search chooses from, slowest first, by the search's label."""
@@ -170,6 +179,7 @@ class StudyPlan:
                         draw=draw,
                         seed=study.seed,
                         sequence=self._played_by(),
+                        coils=self.protocol.values()["coils"],
                         code=code_version(),
                     )
                     units.append(
@@ -218,11 +228,32 @@ class StudyPlan:
                 + ", ".join(f"{r['id']} {len(r['planes'])}" for r in few)
                 + "."
             )
-        notes.append(
-            "One receive channel is simulated: the image is taken as the combined image of the "
-            "array."
-        )
+        notes.append(self._channel_note(records))
         return notes
+
+    def _channel_note(self, records: Sequence[dict[str, Any]]) -> str:
+        coils = self.protocol.coils
+        if any(record["channels"] > 1 for record in records):
+            return (
+                "Receive channels are those of the scan. Every arm estimates sensitivities from "
+                "its own calibration region; an arm without one is given those of the full scan. "
+                "Scores compare magnitudes."
+            )
+        if coils is None:
+            return (
+                "One receive channel: the image is taken as the combined image of the array, so "
+                "parallel imaging has nothing to work with."
+            )
+        note = (
+            f"The receive array is simulated: {coils.number} circular loops in {coils.rows} row(s) "
+            f"{coils.standoff_mm:g} mm off the field of view, noise correlation "
+            f"{coils.correlation:g} between neighbours. Every arm estimates sensitivities from its "
+            "own calibration region; an arm without one is given the true ones. Scores compare "
+            "magnitudes."
+        )
+        if coils.phase > 0 and any("simulated phase" in r["complex_source"] for r in records):
+            note += f" A smooth random phase of {coils.phase:g} rad was put on magnitude scans."
+        return note
 
     def findings(self) -> list[str]:
         """What the timing rests on, each said once, and how it compares with the console."""

@@ -2,16 +2,24 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import lru_cache
-from typing import Any
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
+from mrics.encoding import estimate_sensitivities, root_sum_of_squares, undersample
+from mrics.encoding.coils import coils_for_scan
+from mrics.encoding.phase import with_phase
 from mrics.errors import StudyError
 from mrics.protocol import ScanFiles
+from mrics.protocol.sections import Coils as CoilSection
+from mrics.recovery import recover
+from mrics.sampling import Pattern
 from mrics.scan import Axes, Finding, Scan, body_mask, inspect_scan, read_scan, scan_sigma
+
+_REFERENCE_CALIBRATION = 24
 
 
 @dataclass(frozen=True)
@@ -71,9 +79,12 @@ class Prepared:
     findings : tuple of Finding
         What the scan shows of its history.
     sensitivities : ndarray of shape (planes, channel, u, v) or None
-        Simulated receive sensitivities of the studied planes.
+        Receive sensitivities of the studied planes: simulated ones, or for a multi-channel scan
+        those estimated from the full scan. None for one channel.
     covariance : ndarray of shape (channel, channel) or None
-        Their noise covariance.
+        Noise covariance of simulated channels.
+    channel_data : ndarray or None
+        The studied planes of a multi-channel scan, in file axes.
     """
 
     scan: Scan
@@ -88,6 +99,7 @@ class Prepared:
     findings: tuple[Finding, ...]
     sensitivities: NDArray[Any] | None = None
     covariance: NDArray[Any] | None = None
+    channel_data: NDArray[Any] | None = None
 
     @property
     def frame_planes(self) -> int:
@@ -105,9 +117,17 @@ class Prepared:
 
 @lru_cache(maxsize=1)
 def prepare(
-    files: ScanFiles, axes: Axes, choice: PlaneChoice, channel_axis: int | None = None
+    files: ScanFiles,
+    axes: Axes,
+    choice: PlaneChoice,
+    channel_axis: int | None = None,
+    coils: CoilSection | None = None,
+    seed: int = 0,
 ) -> Prepared:
     """Read a scan and take from it what its units need; the last one is kept.
+
+    ``coils`` puts a simulated receive array (and, on magnitude scans, a smooth phase of that seed)
+    on a scan of one channel.
 
     Raises
     ------
@@ -119,7 +139,14 @@ def prepare(
     scan = read_scan(
         files.path, phase=files.phase, imaginary=files.imaginary, channel_axis=channel_axis
     )
-    volume = body_mask(scan.data)
+    findings = tuple(inspect_scan(scan, axes))
+    sigma = float(scan_sigma(scan))
+    if coils is not None and coils.phase > 0 and scan.magnitude_only:
+        scan = with_phase(scan, coils.phase, seed)
+    combined = scan.data if scan.channels == 1 else root_sum_of_squares(scan.data, axis=4)
+    if combined.ndim == 4 and scan.frames == 1:
+        combined = combined[..., 0]
+    volume = body_mask(combined)
     body_planes = axes.to_planes(volume)
     planes = choice.indices(body_planes)
     if not planes:
@@ -127,28 +154,86 @@ def prepare(
             "No plane of the scan holds body.", files.path.name, "Check the scan and its axes."
         )
     per_frame = body_planes[list(planes)]
-    body = np.ascontiguousarray(np.tile(per_frame, (scan.frames, 1, 1)))
-    whole = axes.to_planes(scan.data)
+    whole = axes.to_planes(combined)
     pick = [f * len(body_planes) + p for f in range(scan.frames) for p in planes]
-    stack = np.ascontiguousarray(whole[pick])
+    light = _light(whole, body_planes)
+    voxels = int(volume.sum()) * scan.frames
+    prepared = Prepared(
+        scan=scan,
+        axes=axes,
+        planes=planes,
+        stack=np.ascontiguousarray(whole[pick]),
+        body=np.ascontiguousarray(np.tile(per_frame, (scan.frames, 1, 1))),
+        data_range=light.largest,
+        sigma=sigma,
+        snr=light.total / voxels / sigma if sigma > 0 else float("inf"),
+        nrmse_floor=sigma * (voxels / light.energy) ** 0.5 if light.energy > 0 else 0.0,
+        findings=findings,
+    )
+    if scan.channels > 1:
+        return _with_own_channels(prepared)
+    if coils is not None:
+        return _with_simulated_channels(prepared, coils)
+    return prepared
+
+
+class _Light(NamedTuple):
+    """Magnitude inside the body: largest, sum, sum of squares."""
+
+    largest: float
+    total: float
+    energy: float
+
+
+def _light(whole: NDArray[Any], body: NDArray[np.bool_]) -> _Light:
     largest, total, energy = 0.0, 0.0, 0.0
     for index, plane in enumerate(whole):
-        inside = np.abs(plane[body_planes[index % len(body_planes)]])
+        inside = np.abs(plane[body[index % len(body)]])
         if inside.size:
             largest = max(largest, float(inside.max()))
             total += float(inside.sum(dtype=np.float64))
             energy += float(np.square(inside, dtype=np.float64).sum())
-    voxels = int(volume.sum()) * scan.frames
-    sigma = float(scan_sigma(scan))
-    return Prepared(
-        scan=scan,
-        axes=axes,
-        planes=planes,
-        stack=stack,
-        body=body,
-        data_range=largest,
-        sigma=sigma,
-        snr=total / voxels / sigma if sigma > 0 else float("inf"),
-        nrmse_floor=sigma * (voxels / energy) ** 0.5 if energy > 0 else 0.0,
-        findings=tuple(inspect_scan(scan, axes)),
+    return _Light(largest, total, energy)
+
+
+def _with_simulated_channels(prepared: Prepared, coils: CoilSection) -> Prepared:
+    array = coils_for_scan(
+        prepared.scan,
+        prepared.axes,
+        number=coils.number,
+        rows=coils.rows,
+        radius_mm=coils.radius_mm,
+        standoff_mm=coils.standoff_mm,
+        correlation=coils.correlation,
+    )
+    return replace(
+        prepared,
+        sensitivities=array.sensitivities[list(prepared.planes)],
+        covariance=array.covariance,
+    )
+
+
+def _with_own_channels(prepared: Prepared) -> Prepared:
+    """The reference of a multi-channel scan: its channels combined by sensitivities of its own.
+
+    The sensitivities come from the centre of the full scan, the combination is the one every
+    multi-channel recovery makes, so that arms and reference differ by what was left out alone.
+    """
+    axis = prepared.axes.order[0]
+    data = np.take(prepared.scan.data, prepared.planes, axis=axis)
+    subset = replace(prepared.scan, data=data)
+    shape = tuple(data.shape[a] for a in prepared.axes.order[1:])
+    grid = shape if prepared.axes.partition is not None else shape[:1]
+    centre = tuple(min(_REFERENCE_CALIBRATION, n) for n in grid)
+    full = Pattern(np.ones(grid, dtype=bool), calibration=centre)
+    acquisition = undersample(subset, full, axes=prepared.axes, sigma_scan=prepared.sigma)
+    maps = estimate_sensitivities(acquisition)[0][:, 0]
+    known = replace(acquisition, sensitivities=maps, covariance=None)
+    image = recover(known, method="zero-filled").image
+    return replace(
+        prepared,
+        stack=image,
+        data_range=float(np.abs(image[prepared.body]).max()),
+        sensitivities=maps,
+        channel_data=data,
     )

@@ -37,6 +37,7 @@ def scan_record(plan: StudyPlan, number: int) -> dict[str, Any]:
         "plane_axis": scan.axes.plane,
         "planes": list(scan.planes),
         "frames": scan.scan.frames,
+        "channels": scan.scan.channels,
         "sigma": scan.sigma,
         "snr": scan.snr,
         "sigma_added": plan.noise.added(scan),

@@ -5,13 +5,15 @@ from __future__ import annotations
 import hashlib
 import json
 import time
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
 import numpy as np
+from threadpoolctl import threadpool_limits
 
-from mrics.encoding import echo_weights, undersample
+from mrics.encoding import Acquisition, echo_weights, undersample
+from mrics.encoding.sensitivities import KERNEL
 from mrics.errors import StudyError
 from mrics.protocol import Arm, Protocol, ScanFiles, play_pattern
 from mrics.quality import error_maps, score_planes
@@ -124,13 +126,21 @@ def draw_of(
         protocol.study.seed,
         frames=frames,
         identity=("draw", draw),
+        axes=protocol.axes(),
     )
     return play_pattern(protocol, drawn)
 
 
 def run_unit_here(unit: Unit) -> dict[str, Any]:
     """Compute a unit in the process that prepared the scan."""
-    scan = prepare(unit.files, unit.axes, unit.choice, unit.channel_axis)
+    scan = prepare(
+        unit.files,
+        unit.axes,
+        unit.choice,
+        unit.channel_axis,
+        unit.protocol.coils,
+        unit.protocol.study.seed,
+    )
     if scan.scan.sha256 != unit.sha256:
         raise StudyError(
             "The scan changed while the study ran.",
@@ -146,7 +156,16 @@ def run_unit_shared(unit: Unit) -> dict[str, Any]:
 
 
 def run_unit(unit: Unit, scan: Prepared) -> dict[str, Any]:
-    """Compute a unit and write its maps; return the result, ready for the ledger."""
+    """Compute a unit and write its maps; return the result, ready for the ledger.
+
+    Linear algebra runs on one thread: planes are what is spread over threads and processes, and
+    sums then have one order, so that a unit gives the same bits wherever it runs.
+    """
+    with threadpool_limits(1, user_api="blas"):
+        return _computed(unit, scan)
+
+
+def _computed(unit: Unit, scan: Prepared) -> dict[str, Any]:
     started = time.perf_counter()
     grid = pattern_grid(unit.axes, scan.scan.shape)
     frames = scan.scan.frames if scan.scan.frames > 1 else 0
@@ -154,16 +173,13 @@ def run_unit(unit: Unit, scan: Prepared) -> dict[str, Any]:
     # Fewer averages than the reference: its noise is raised by what the missing averages add.
     fewer = scan.sigma * float(np.sqrt(max(0.0, unit.averages_ratio - 1.0)))
     added = float(np.hypot(unit.noise.added(scan), fewer))
-    acquisition = undersample(
-        scan.stack,
-        pattern,
-        sigma=added,
-        seed=_noise_seed(unit, scan),
-        sigma_scan=scan.sigma,
-        echo_weights=_decay(unit.protocol, pattern),
-    )
+    acquisition = _acquire(unit, scan, pattern, added)
     recovered = recover(acquisition, method=unit.arm.recovery, **unit.arm.recovery_settings)
-    slices = score_planes(recovered.image, scan.stack, scan.body, scan.data_range)
+    image = recovered.image
+    if scan.sensitivities is not None:
+        # The phase of estimated sensitivities is free: magnitudes alone compare.
+        image = np.abs(image)
+    slices = score_planes(image, scan.stack, scan.body, scan.data_range)
     certificate = recovered.certificate.as_dict()
     wall_s = certificate.pop("wall_s")
     result: dict[str, Any] = {
@@ -184,7 +200,7 @@ def run_unit(unit: Unit, scan: Prepared) -> dict[str, Any]:
             {"index": index, "frame": frame, **values}
             for (frame, index), values in zip(_places(scan), slices, strict=True)
         ],
-        "maps": _write_maps(unit, scan, recovered.image, pattern) if unit.keep_maps else [],
+        "maps": _write_maps(unit, scan, image, pattern) if unit.keep_maps else [],
         "timing": {"recovery_s": wall_s, "unit_s": time.perf_counter() - started},
     }
     # The same digits whether a unit was computed now or read back.
@@ -202,6 +218,29 @@ def _noise_seed(unit: Unit, scan: Prepared) -> int:
     """The same noise for every arm of a scan and draw, so that arms compare in pairs."""
     identity = f"{unit.protocol.study.seed}\x1fnoise\x1f{scan.scan.sha256}\x1f{unit.draw}"
     return int.from_bytes(hashlib.sha256(identity.encode()).digest()[:8], "little")
+
+
+def _acquire(unit: Unit, scan: Prepared, pattern: Pattern, added: float) -> Acquisition:
+    """The scan undersampled; sensitivities are estimated from its calibration where it has one."""
+    source: Any = scan.stack
+    if scan.channel_data is not None:
+        source = replace(scan.scan, data=scan.channel_data)
+    acquisition = undersample(
+        source,
+        pattern,
+        sigma=added,
+        seed=_noise_seed(unit, scan),
+        axes=unit.axes if scan.channel_data is not None else None,
+        sensitivities=scan.sensitivities if scan.channel_data is None else None,
+        covariance=scan.covariance,
+        sigma_scan=scan.sigma,
+        echo_weights=_decay(unit.protocol, pattern),
+    )
+    if scan.sensitivities is None:
+        return acquisition
+    # Known sensitivities would flatter an arm that has to estimate them from its own lines.
+    own = len(pattern.calibration) == len(pattern.grid) and min(pattern.calibration) >= KERNEL
+    return replace(acquisition, sensitivities=None if own else scan.sensitivities)
 
 
 def _decay(protocol: Protocol, pattern: Pattern) -> Any:
