@@ -178,7 +178,7 @@ class _Painter:
         sheet = ramp(self.noise("fat sheet", (12.0, 8.0, 8.0)), -0.4, 1.4)
         septa = ramp(np.abs(lobes), 0.20, 0.0) * sheet
         shade = 1.0 + 0.045 * self.noise("fat shade", (9.0, 7.0, 7.0))
-        self.fat_look = (shade * (1.0 - 0.24 * septa)).astype(np.float32)
+        self.fat_look = (shade * (1.0 - 0.32 * septa)).astype(np.float32)
         self.lay(fill(self.leg + 1.6), "fat", self.fat_look)
         back = 1.0 + 0.55 * ramp(y, 0, -45) + 0.5 * ramp(x, 0, -40) - 0.55 * ramp(y, 25, 45)
         depth = knee.fat_mm * back + 0.9 * self.noise("fat depth", (22.0, 16.0, 16.0))
@@ -204,7 +204,7 @@ class _Painter:
         belly = np.maximum(between, self.fascia + 0.8)
         cells = self.noise("fascicle", (26.0, 2.1, 2.1)) * 0.75
         cells += self.noise("bundle", (34.0, 4.6, 4.6)) * 0.75
-        strands = ramp(np.abs(cells), 0.24, 0.06)
+        strands = ramp(np.abs(cells), 0.30, 0.05)
         tone = np.linspace(-0.05, 0.05, len(anatomy.MUSCLES), dtype=np.float32)[owner]
         look = (
             1.0 + tone + 0.055 * self.noise("fibre", (8.0, 1.3, 1.3)) - 0.10 * ramp(cells, 0.4, 2)
@@ -212,7 +212,7 @@ class _Painter:
         share = fill(belly)
         self.lay(fill(np.abs(belly) - 0.3), "ligament")
         self.lay(share, "muscle", look)
-        marbling = 0.32 * ramp(self.noise("marbling", (18.0, 8.0, 8.0)), -0.6, 1.6) + 0.15
+        marbling = 0.45 * ramp(self.noise("marbling", (18.0, 8.0, 8.0)), -0.8, 1.6) + 0.22
         self.lay(share * strands * marbling, "fat")
 
     def tubes(self) -> None:
@@ -232,6 +232,7 @@ class _Painter:
             distance = self.tube(nodes)
             if distance is not None:
                 distance = distance + 0.25 * self.noise("wall", (6.0, 5.0, 5.0))
+                distance = np.maximum(distance, self.leg + 2.6)
                 self.lay(fill(np.abs(distance) - 0.35), "ligament")
                 self.lay(fill(distance), kind, 1.0 - 0.10 * ramp(distance, -1.6, 0.0))
 
