@@ -9,8 +9,8 @@ import numpy as np
 from mrics.report.colours import FAIL, INK, MARKERS, MUTED, SERIES
 from mrics.report.folder import StudyFolder
 from mrics.report.style_figures import figure_style, new_figure
-from mrics.report.summary import Limit, drawn_limits, limits_of
-from mrics.report.words import MetricWords
+from mrics.report.summary import Limit, drawn_limits, exact_arms, limits_of
+from mrics.report.words import MetricWords, metric_value
 
 
 def family_of(arm: dict[str, Any]) -> str:
@@ -63,6 +63,7 @@ def _against_panel(axes: Any, study: StudyFolder, metric: MetricWords, looks: An
     reached = [float(a["acceleration"]) for a in study.arms if a.get("acceleration")]
     step = 0.012 * (np.log(max(reached) / min(reached)) or 0.5) if reached else 0.01
     order = list(looks)
+    beside = exact_arms(study) if len(exact_arms(study)) < len(study.arms) else set()
     curves: dict[str, list[tuple[float, float]]] = {}
     for arm in study.arms:
         row = (arm.get("metrics") or {}).get(metric.key)
@@ -81,6 +82,8 @@ def _against_panel(axes: Any, study: StudyFolder, metric: MetricWords, looks: An
         )
         if arm.get("today"):
             axes.plot([where], [row["mean"]], "o", ms=11, mfc="none", mec=INK, mew=1.2, zorder=3)
+        if arm["id"] in beside:
+            continue
         curves.setdefault(family, []).append((where, row["mean"]))
     for family, points in curves.items():
         points.sort()
@@ -89,7 +92,29 @@ def _against_panel(axes: Any, study: StudyFolder, metric: MetricWords, looks: An
     _plain_ticks(axes, reached)
     axes.set_title(metric.axis + _better(metric))
     axes.grid(axis="y")
+    if beside:
+        _scale_without(axes, study, metric.key, beside)
     draw_limits(axes, drawn_limits(study, metric.key))
+
+
+def _scale_without(axes: Any, study: StudyFolder, key: str, beside: set[str]) -> None:
+    """Scale by the arms that lose something; exact ones beyond it are written at its edge."""
+    rows = {a["id"]: (a["metrics"].get(key), a) for a in study.arms if a.get("metrics")}
+    shown = [r for i, (r, _) in rows.items() if i not in beside and r and r["mean"] is not None]
+    if not shown:
+        return
+    low, high = min(r["min"] for r in shown), max(r["max"] for r in shown)
+    pad = 0.08 * (high - low or abs(high) or 1.0)
+    axes.set_ylim(low - pad, high + pad)
+    for identity in beside:
+        row, arm = rows[identity]
+        if not row or low - pad <= row["mean"] <= high + pad:
+            continue
+        above = row["mean"] > high
+        where = (float(arm["acceleration"]), 1.0 if above else 0.0)
+        text = f" {metric_value(key, row['mean'])} {'↑' if above else '↓'}"
+        look = {"fontsize": 8, "va": "top" if above else "bottom", "color": MUTED}
+        axes.text(*where, text, transform=axes.get_xaxis_transform(), **look)
 
 
 def _better(metric: MetricWords) -> str:
@@ -103,7 +128,7 @@ def _plain_ticks(axes: Any, reached: list[float]) -> None:
     low, high = (min(reached), max(reached)) if reached else (1.0, 2.0)
     pad = max((high / low) ** 0.08, 1.04)
     axes.set_xlim(low / pad, high * pad)
-    candidates = [1, 1.5, 2, 3, 4, 5, 6, 8, 10, 12, 16, 20, 30, 40, 60]
+    candidates = [1, 1.5, 2, 2.5, 3, 4, 5, 6, 8, 10, 12, 16, 20, 30, 40, 60]
     inside = [c for c in candidates if low / pad <= c <= high * pad] or [round(low, 1)]
     axes.xaxis.set_major_locator(FixedLocator(inside))
     axes.xaxis.set_major_formatter(FuncFormatter(lambda x, _: f"{x:g}"))

@@ -63,15 +63,17 @@ def image_window(reference: NDArray[Any], body: NDArray[np.bool_] | None) -> tup
 
 
 def error_factor(ratios: list[float]) -> int:
-    """The largest factor of 1, 2, 5, 10, ... that keeps every typical error below full colour.
+    """The largest factor of 1, 2, 5, 10, ... that keeps the errors of half the arms in range.
 
     Parameters
     ----------
     ratios : list of float
-        97th percentile of |error| in the body / window width, one per arm and scan.
+        99th percentile of |error| in the body / window width, one per arm and scan; exact
+        recoveries (0) do not count.
     """
-    largest = max(ratios, default=0.0)
-    fitting = [f for f in _FACTORS if largest * f <= 1.0]
+    counted = [r for r in ratios if r > 1e-6]
+    typical = float(np.median(counted)) if counted else 1.0
+    fitting = [f for f in _FACTORS if typical * f <= 1.0]
     return fitting[-1] if fitting else 1
 
 

@@ -111,20 +111,27 @@ def first_metric(study: StudyFolder) -> str:
     return "nrmse" if "nrmse" in shown or not shown else shown[0]
 
 
+def exact_arms(study: StudyFolder) -> set[str]:
+    """Arms that give the reference back to rounding (the full scan): scales leave them out."""
+    return {a["id"] for a in study.arms if _has(a, "nrmse") and a["metrics"]["nrmse"]["max"] < 1e-4}
+
+
 def range_marks(study: StudyFolder, metric: MetricWords) -> dict[str, RangeMark]:
     """Range marks of one metric for every arm that has it, on one scale."""
     from mrics.report.words import metric_value
 
     rows = {a["id"]: a["metrics"][metric.key] for a in study.arms if _has(a, metric.key)}
     limits = drawn_limits(study, metric.key)
-    values = [v for r in rows.values() for v in (r["min"], r["max"])] + [x.value for x in limits]
+    beside = exact_arms(study)
+    counted = [r for i, r in rows.items() if i not in beside] or list(rows.values())
+    values = [v for r in counted for v in (r["min"], r["max"])] + [x.value for x in limits]
     if not values:
         return {}
     low, high = min(values), max(values)
     span = (high - low) or abs(high) or 1.0
 
     def place(value: float) -> float:
-        return round(3 + 94 * (value - low) / span, 2)
+        return round(min(99.0, max(1.0, 3 + 94 * (value - low) / span)), 2)
 
     out = {}
     for arm in study.arms:

@@ -72,8 +72,8 @@ def metric_value(key: str, value: Any) -> str:
     """A metric's value: PSNR to 0.1 dB, similarities to 3 places, errors to 3 digits."""
     if value is None:
         return "–"
-    if key == "psnr":
-        return number(value, 3)
+    if metric_words(key).better == "low" and 0 < abs(float(value)) < 1e-4:
+        return "<0.0001"
     if key.endswith("ssim") and abs(float(value)) <= 1:
         return f"{float(value):.3f}".replace("-", "−")
     return number(value, 3)

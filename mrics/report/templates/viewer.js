@@ -64,7 +64,7 @@ function plan() {
   const list = [["reference", "truth"], [name, "image", arm]];
   if (!other) return [...list, [`error ×${state.factor}`, "error", arm]];
   return [...list, [armName(other), "image", other],
-    [`${armName(other)} less ${name}, ×${state.factor}`, "between", other, arm],
+    [`second arm less first, ×${state.factor}`, "between", other, arm],
     [`error of ${name}, ×${state.factor}`, "error", arm],
     [`error of ${armName(other)}, ×${state.factor}`, "error", other]];
 }
