@@ -14,6 +14,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from mrics.encoding.layout import covariance, cylinder, dome
 from mrics.encoding.loops import loop_field
 from mrics.errors import AcquisitionError
 from mrics.phantom.fields import spline_weights
@@ -25,9 +26,6 @@ FORMS = ("cylinder", "dome")
 _LATTICE_MM = 4.0  # the field is computed on this lattice and splined between
 _BEYOND = 0.15  # share of the field of view that the lattice reaches past each of its sides
 _CONDUCTOR_MM = 10.0  # wires are rounded off by this: the field of view's corners may touch them
-# Centres of neighbouring loops at 1.5 radii do not couple (Roemer et al. 1990, Magn Reson Med
-# 16:192-225).
-_OVERLAP = 1.5
 
 
 @dataclass(frozen=True)
@@ -287,9 +285,9 @@ def simulate_coils(
     half = extent / 2.0 + standoff_mm
     across = [axis for axis in range(3) if axis != bore]
     if form == "cylinder":
-        centres, normals, size = _cylinder(number, rows, half[across], radius_mm)
+        centres, normals, size = cylinder(number, rows, half[across], radius_mm)
     else:
-        centres, normals, size = _dome(number, half[[*across, bore]], radius_mm)
+        centres, normals, size = dome(number, half[[*across, bore]], radius_mm)
     turned_centres, turned_normals = np.empty_like(centres), np.empty_like(normals)
     for target, source in ((turned_centres, centres), (turned_normals, normals)):
         target[:, across], target[:, bore] = source[:, :2], source[:, 2]
@@ -300,7 +298,7 @@ def simulate_coils(
         normals=turned_normals,
         radius_mm=size,
         bore=bore,
-        covariance=_covariance(turned_centres, correlation),
+        covariance=covariance(turned_centres, correlation),
         settings={
             "form": form,
             "number": number,
@@ -362,61 +360,3 @@ def _check(
             raise AcquisitionError(
                 f"Coils cannot be simulated with {what}.", "coils", f"Give {allowed}."
             )
-
-
-def _cylinder(
-    number: int, rows: int, half: Array, radius: float | None
-) -> tuple[Array, Array, float]:
-    """Centres and inward normals (across, across, along) and the loops' radius."""
-    counts = [number // rows + (row < number % rows) for row in range(rows)]
-    fine = np.linspace(0.0, 2.0 * np.pi, 4097)
-    steps = np.hypot(*np.diff([half[0] * np.cos(fine), half[1] * np.sin(fine)], axis=1))
-    length = np.concatenate([[0.0], np.cumsum(steps)])
-    size = radius or min(length[-1] / max(counts) / _OVERLAP, float(min(half)))
-    centres = []
-    for row, count in enumerate(counts):
-        along = (row - (rows - 1) / 2.0) * _OVERLAP * size
-        place = (np.arange(count) + 0.5 * (row % 2)) / count * length[-1]
-        angle = np.interp(place, length, fine)
-        ring = [half[0] * np.cos(angle), half[1] * np.sin(angle), np.full(count, along)]
-        centres.append(np.stack(ring, axis=1))
-    points = np.concatenate(centres)
-    normals = -points / np.array([half[0] ** 2, half[1] ** 2, np.inf])
-    return points, normals / np.linalg.norm(normals, axis=1, keepdims=True), float(size)
-
-
-def _dome(number: int, half: Array, radius: float | None) -> tuple[Array, Array, float]:
-    """Loops spread evenly over half an ellipsoid (golden-angle spiral), pole along the bore."""
-    height = 1.0 - (np.arange(number) + 0.5) / number
-    angle = np.arange(number) * np.pi * (3.0 - np.sqrt(5.0))
-    ring = np.sqrt(1.0 - height**2)
-    unit = np.stack([ring * np.cos(angle), ring * np.sin(angle), height], axis=1)
-    mean = float(np.mean(half))
-    # Hexagonal packing: each loop's cell of the half sphere is sqrt(3)/2 pitch^2.
-    pitch = np.sqrt(2.0 * np.pi * mean**2 / number / (np.sqrt(3.0) / 2.0))
-    points = unit * half
-    normals = -points / half**2
-    normals /= np.linalg.norm(normals, axis=1, keepdims=True)
-    return points, normals, float(radius or min(pitch / _OVERLAP, min(half)))
-
-
-def _covariance(centres: Array, correlation: float) -> NDArray[np.float64]:
-    """Identity plus ``correlation`` between each loop and those about as near as its nearest."""
-    count = len(centres)
-    psi = np.eye(count)
-    if correlation == 0 or count == 1:
-        return psi
-    apart = np.linalg.norm(centres[:, None] - centres[None], axis=-1)
-    np.fill_diagonal(apart, np.inf)
-    near = apart <= 1.2 * apart.min(axis=1, keepdims=True)
-    neighbours = (near | near.T).astype(float)
-    psi += correlation * neighbours
-    if np.linalg.eigvalsh(psi)[0] < 1e-6:
-        largest = -1.0 / float(np.linalg.eigvalsh(neighbours)[0])
-        raise AcquisitionError(
-            f"A correlation of {correlation:g} between neighbours gives a covariance that is not "
-            "positive definite.",
-            "coils, correlation",
-            f"Give less than {np.floor(1000 * largest) / 1000:g} for this array.",
-        )
-    return psi

@@ -17,6 +17,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
+from mrics.errors import MricsError
 from mrics.phantom.ellipses import ClosedForm
 
 Array = NDArray[Any]
@@ -81,14 +82,20 @@ def fit_waves(
     maps : WaveMaps
     error : float
         RMS misfit relative to the RMS of ``values``.
+
+    Raises
+    ------
+    MricsError
+        Where there are fewer points than waves.
     """
     values = np.asarray(values, dtype=np.complex128)
     points = np.asarray(points, dtype=np.float64)
     waves = _waves(points, extent, order)
     if len(points) < waves.shape[1]:
-        raise ValueError(
-            f"{len(points)} points cannot fix {waves.shape[1]} waves; give more points or a lower "
-            "order"
+        raise MricsError(
+            f"{len(points)} points cannot fix {waves.shape[1]} waves.",
+            "points, order",
+            "Give more points or a lower order.",
         )
     # Waves over twice the field of view are nearly dependent on it: small singular values are cut.
     solution = np.linalg.lstsq(waves, values.T, rcond=1e-10)[0]

@@ -9,6 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.sparse import csr_array
 
+from mrics.errors import MricsError
 from mrics.numerics import stream
 
 Array = NDArray[Any]
@@ -44,9 +45,13 @@ class RandomField:
 
     def on(self, z: Array, y: Array, x: Array) -> Array:
         """Values on the grid spanned by three coordinate vectors in mm, float32 (z, y, x)."""
-        for coordinate, limit in zip((z, y, x), self._reach, strict=True):
+        for axis, (coordinate, limit) in enumerate(zip((z, y, x), self._reach, strict=True)):
             if np.max(np.abs(coordinate)) > limit + 1e-6:
-                raise ValueError(f"points beyond {limit:g} mm, where the field ends")
+                raise MricsError(
+                    f"Points reach {np.max(np.abs(coordinate)):g} mm, the object {limit:g} mm.",
+                    f"axis {'zyx'[axis]}",
+                    "Choose a field of view within the object.",
+                )
         places = [
             np.ravel(coordinate) / step + half
             for coordinate, step, half in zip((z, y, x), self._spacing, self._half, strict=True)

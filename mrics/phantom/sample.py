@@ -17,6 +17,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from mrics.caution import NIFTI_DESCRIP, RESEARCH_ONLY
+from mrics.errors import MricsError
 from mrics.numerics import centred_fft, stream
 from mrics.phantom.knee import Feature, Knee
 from mrics.phantom.record import (
@@ -158,7 +159,11 @@ def knee_kspace(name: str, sensitivity: Sensitivity | None = None) -> Array:
     """
     by_name = {subject.name: subject for subject in subjects()}
     if name not in by_name:
-        raise ValueError(f"subject {name!r} is not one of {', '.join(sorted(by_name))}")
+        raise MricsError(
+            f"Subject {name!r} is not one of {', '.join(sorted(by_name))}.",
+            "name",
+            "Name one of them.",
+        )
     subject = by_name[name]
     images = gradient_echo_volume(
         subject.knee, gradient_echo_grid(subject), GRE, sensitivity=sensitivity
@@ -203,7 +208,14 @@ def make_sample_data(out_dir: str | os.PathLike[str]) -> list[Path]:
         counts with ``scl_slope``, ``features.json`` and ``SHA256SUMS``.
     """
     folder = Path(out_dir)
-    folder.mkdir(parents=True, exist_ok=True)
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+    except OSError as error:
+        raise MricsError(
+            f"Folder {folder} cannot be made: {error.strerror}.",
+            str(folder),
+            "Name a folder that may be written to.",
+        ) from error
     written: list[Path] = []
     known: dict[str, Any] = {"caution": RESEARCH_ONLY, "subjects": {}}
     for subject in subjects():

@@ -8,6 +8,7 @@ import numpy as np
 import pytest
 
 from mrics.encoding import simulate_coils
+from mrics.errors import MricsError
 from mrics.numerics import centred_fft
 from mrics.phantom import knee_kspace
 from mrics.phantom.knee import Knee
@@ -134,13 +135,13 @@ def test_affine_puts_the_offset_at_the_middle_voxel() -> None:
 
 
 def test_unknown_subject_is_refused() -> None:
-    with pytest.raises(ValueError, match="subject 'z' is not one of a, b, c"):
+    with pytest.raises(MricsError, match="Subject 'z' is not one of a, b, c"):
         knee_kspace("z")
 
 
 def test_points_beyond_the_textures_are_refused() -> None:
     palette = dict.fromkeys(TISSUES, (0, 1.0))
-    with pytest.raises(ValueError, match="beyond 62 mm"):
+    with pytest.raises(MricsError, match="Points reach 80 mm, the object 62 mm"):
         Knee(99).signal(np.zeros(1), np.zeros(1), np.array([80.0]), palette)
 
 

@@ -12,9 +12,11 @@ import nibabel as nib
 import numpy as np
 import pytest
 
+from mrics.errors import MricsError
 from mrics.numerics import centred_fft
+from mrics.phantom.__main__ import main
 from mrics.phantom.record import white_noise
-from mrics.phantom.sample import gradient_echo, subjects, to_counts, write_pair
+from mrics.phantom.sample import gradient_echo, make_sample_data, subjects, to_counts, write_pair
 from mrics.phantom.tissues import TISSUES
 
 FOLDER = Path(__file__).resolve().parents[2] / "sample_data"
@@ -155,3 +157,15 @@ def test_subject_list_is_three_knees_of_both_sides() -> None:
     assert [s.name for s in subjects()] == ["a", "b", "c"]
     assert {s.knee.mirror for s in subjects()} == {False, True}
     assert len(subjects()[0].knee.features) == 10
+
+
+def test_folder_that_cannot_be_made_is_refused(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    blocked = tmp_path / "file"
+    blocked.write_text("")
+    with pytest.raises(MricsError, match="cannot be made"):
+        make_sample_data(blocked)
+    assert main([str(blocked)]) == 2
+    assert "cannot be made" in capsys.readouterr().err
+    assert main([]) == 2
