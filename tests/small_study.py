@@ -55,11 +55,16 @@ def small_object(seed: int, shape: tuple[int, int, int] = (44, 40, 5)) -> NDArra
     return (image + noise).astype(np.complex64)
 
 
-def write_small_study(folder: Path, scans: int = 2, protocol: str = PROTOCOL) -> Path:
+def write_small_study(
+    folder: Path,
+    scans: int = 2,
+    protocol: str = PROTOCOL,
+    shape: tuple[int, int, int] = (44, 40, 5),
+) -> Path:
     """Write the scans and the protocol; return the protocol's path."""
     folder.mkdir(parents=True, exist_ok=True)
     for number in range(scans):
-        image = nibabel.Nifti1Image(small_object(number), AFFINE)
+        image = nibabel.Nifti1Image(small_object(number, shape), AFFINE)
         image.header.set_xyzt_units("mm", "sec")
         nibabel.save(image, folder / f"object_{number}.nii.gz")
     path = folder / "protocol.toml"

@@ -144,29 +144,118 @@ def run(
 
 
 @app.command()
-def report(folder: StudyFolder) -> None:
+def report(
+    folder: StudyFolder,
+    pdf: Annotated[bool, typer.Option("--pdf", help="Also write a PDF for printing.")] = False,
+    figures: Annotated[
+        bool, typer.Option("--figures", help="Also write every figure as PNG and SVG.")
+    ] = False,
+) -> None:
     """Draw the page again from results.json and the stored maps.
 
-    Example: mrics report knee-study
+    Example: mrics report knee-study --pdf
     """
-    from mrics.report import write_report
+    from mrics.report import write_document, write_figures, write_report
 
-    typer.echo(f"report: {write_report(folder)}\n{RESEARCH_ONLY}")
+    typer.echo(f"report: {write_report(folder)}")
+    if pdf:
+        typer.echo(f"pdf: {write_document(folder)}")
+    if figures:
+        typer.echo(f"figures: {len(write_figures(folder))} files in {folder / 'figures'}")
+    typer.echo(RESEARCH_ONLY)
 
 
 @app.command()
 def compare(
     before: Annotated[Path, typer.Argument(metavar="DIR_A", help="Folder of a finished study.")],
     after: Annotated[Path, typer.Argument(metavar="DIR_B", help="Folder of another.")],
+    page: Annotated[Path | None, typer.Option("--page", help="Also write a page here.")] = None,
 ) -> None:
     """Two studies side by side: what changed in the protocol, which numbers moved.
 
     Example: mrics compare knee-study knee-study-2
     """
     from mrics.cli.tables import difference_lines
+    from mrics.report import write_compare_page
     from mrics.study import compare_studies
 
     typer.echo(difference_lines(compare_studies(before, after)))
+    if page is not None:
+        typer.echo(f"page: {write_compare_page(before, after, page)}")
+    typer.echo(RESEARCH_ONLY)
+
+
+@app.command()
+def export(
+    protocol: ProtocolFile,
+    arm: Annotated[str, typer.Option("--arm", help="Id of the arm, as in results.json.")],
+    out: Annotated[Path, typer.Option("--out", help="Folder to write to.")],
+    draw: Annotated[int, typer.Option("--draw", min=0, help="Number of the draw.")] = 0,
+    study: Annotated[
+        Path | None,
+        typer.Option("--study", help="Finished study that gets a row for exactly this draw."),
+    ] = None,
+) -> None:
+    """Sampling table of one draw: CSV and JSON in playing order, NIfTI mask, picture.
+
+    Example: mrics export knee.toml --arm power-law-r3-wavelet --draw 1 --out table
+    """
+    from mrics.protocol import load_protocol
+    from mrics.report import export_table
+
+    exported, sheet = export_table(load_protocol(protocol), arm, draw, out, study)
+    for path in (*exported.files, sheet):
+        typer.echo(path)
+    typer.echo(f"table hash: {exported.played.pattern.hash}\n{RESEARCH_ONLY}")
+
+
+@app.command()
+def recover(
+    kspace: Annotated[Path, typer.Argument(metavar="KSPACE", help=".npy or complex NIfTI.")],
+    pattern: Annotated[Path, typer.Option("--pattern", help="Table or mask that was played.")],
+    out: Annotated[Path, typer.Option("--out", help="Image to write (.nii.gz).")],
+    method: Annotated[str, typer.Option("--method", help="Recovery method.")] = "wavelet",
+    settings: Annotated[
+        list[str] | None, typer.Option("--set", help="Setting of the method, key=value.")
+    ] = None,
+    noise: Annotated[
+        Path | None, typer.Option("--noise", help="Noise samples, .npy (channel, ...).")
+    ] = None,
+    channel_axis: Annotated[
+        int | None, typer.Option("--channel-axis", min=0, help="Axis of receive channels, from 0.")
+    ] = None,
+    axes: Annotated[
+        str | None,
+        typer.Option("--axes", help="File axes of readout, phase (and partition), e.g. ij or ijk."),
+    ] = None,
+    readout_transformed: Annotated[
+        bool, typer.Option("--readout-transformed", help="3-D readout is in image space already.")
+    ] = False,
+    like: Annotated[
+        Path | None, typer.Option("--like", help="NIfTI whose position the image takes.")
+    ] = None,
+) -> None:
+    """Recover measured, undersampled k-space; write the image and its certificate.
+
+    Example: mrics recover k.npy --pattern table.csv --channel-axis 1 --out image.nii.gz
+    """
+    from mrics.cli.tables import certificate_lines
+    from mrics.cli.writing import read_axes, read_settings
+    from mrics.study import recover_measured
+
+    content = recover_measured(
+        kspace,
+        pattern,
+        out,
+        method=method,
+        settings=read_settings(settings or []),
+        noise=noise,
+        channel_axis=channel_axis,
+        axes=read_axes(axes),
+        readout_transformed=readout_transformed,
+        like=like,
+    )
+    typer.echo(f"image: {out}\n{certificate_lines(content)}\n{RESEARCH_ONLY}")
 
 
 @app.command()

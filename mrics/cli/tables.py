@@ -132,5 +132,23 @@ def inspection_lines(scan: Scan, findings: Sequence[Finding]) -> str:
     return "\n".join(lines)
 
 
+def certificate_lines(content: dict[str, Any]) -> str:
+    """A recovery's certificate in a few lines."""
+    one = content["certificate"]
+    reached = "reached" if one["reached"] else "NOT reached"
+    lines = [
+        f"method: {one['method']}, {one['iterations']} iterations",
+        f"data: {content['channels']} channel(s), R = {content['acceleration']:.3g}",
+        f"noise: sigma {content['sigma']:.4g}",
+    ]
+    if one["weight"] is not None:
+        lines.append(f"weight: {one['weight']:.4g} sigma ({one['weight_rule']})")
+    if one["optimality"] is not None:
+        lines.append(f"optimality: {one['optimality']:.3g}, {one['tolerance']:.3g} {reached}")
+    if one["note"]:
+        lines.append(f"note: {one['note']}")
+    return "\n".join(lines)
+
+
 def _shown(value: Any) -> str:
     return "none" if value is None else str(value)

@@ -7,12 +7,14 @@ from typing import TYPE_CHECKING, Any
 if TYPE_CHECKING:
     from mrics.report.compare_page import write_compare_page
     from mrics.report.document import write_document
+    from mrics.report.export import export_table
     from mrics.report.figure_files import write_figures
     from mrics.report.page import write_report
     from mrics.report.plan_page import write_plan_page
     from mrics.report.run import run_study
 
 __all__ = [
+    "export_table",
     "run_study",
     "write_compare_page",
     "write_document",
@@ -22,6 +24,7 @@ __all__ = [
 ]
 
 _HOME = {
+    "export_table": "mrics.report.export",
     "run_study": "mrics.report.run",
     "write_compare_page": "mrics.report.compare_page",
     "write_document": "mrics.report.document",

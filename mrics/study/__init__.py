@@ -7,21 +7,29 @@ from typing import Any
 
 _HOME = {
     "Difference": "compare",
+    "Exported": "export",
     "PlanRow": "plan",
     "StudyPlan": "plan",
+    "add_exported_row": "export",
     "compare_studies": "compare",
+    "export_draw": "export",
     "load_results": "compare",
     "plan_study": "plan",
+    "recover_measured": "measured",
     "run_study": "run",
 }
 
 __all__ = [
     "Difference",
+    "Exported",
     "PlanRow",
     "StudyPlan",
+    "add_exported_row",
     "compare_studies",
+    "export_draw",
     "load_results",
     "plan_study",
+    "recover_measured",
     "run_study",
 ]
 

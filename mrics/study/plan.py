@@ -236,8 +236,8 @@ class StudyPlan:
         if any(record["channels"] > 1 for record in records):
             return (
                 "Receive channels are those of the scan. Every arm estimates sensitivities from "
-                "its own calibration region; an arm without one is given those of the full scan. "
-                "Scores compare magnitudes."
+                "its own calibration region; an arm with fewer than 12 lines of it is given those "
+                "of the full scan. Scores compare magnitudes."
             )
         if coils is None:
             return (
@@ -248,8 +248,9 @@ class StudyPlan:
             f"The receive array is simulated: {coils.number} circular loops in {coils.rows} row(s) "
             f"{coils.standoff_mm:g} mm off the field of view, noise correlation "
             f"{coils.correlation:g} between neighbours. Every arm estimates sensitivities from its "
-            "own calibration region; an arm without one is given the true ones. Scores compare "
-            "magnitudes."
+            "own calibration region; an arm with fewer than 12 lines of it is given the true ones. "
+            "Scores compare magnitudes. The noise of the scan itself reaches all loops alike, so "
+            "noise gain shows only in noise that is added."
         )
         if coils.phase > 0 and any("simulated phase" in r["complex_source"] for r in records):
             note += f" A smooth random phase of {coils.phase:g} rad was put on magnitude scans."

@@ -239,7 +239,8 @@ def _acquire(unit: Unit, scan: Prepared, pattern: Pattern, added: float) -> Acqu
     if scan.sensitivities is None:
         return acquisition
     # Known sensitivities would flatter an arm that has to estimate them from its own lines.
-    own = len(pattern.calibration) == len(pattern.grid) and min(pattern.calibration) >= KERNEL
+    least = 2 * KERNEL
+    own = len(pattern.calibration) == len(pattern.grid) and min(pattern.calibration) >= least
     return replace(acquisition, sensitivities=None if own else scan.sensitivities)
 
 
