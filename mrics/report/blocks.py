@@ -99,6 +99,13 @@ def pack(scans: list[ScanPictures], text_limit: int) -> list[ScanBlocks]:
             share *= 0.95 * text_limit / size
 
 
+def pack_map(values: NDArray[np.float32], top: float) -> Block:
+    """A map of a measure in 8 bits: 1 to 255 for 0 to ``top``, 0 where there is no value."""
+    with np.errstate(invalid="ignore"):
+        numbers = 1 + np.rint(254 * np.clip(values / top, 0.0, 1.0))
+    return _encode(np.where(np.isfinite(values), numbers, 0).astype(np.int32))
+
+
 def _size(packed: ScanBlocks) -> int:
     return len(packed.reference.text) + sum(len(b.text) for b in packed.recovered)
 

@@ -69,6 +69,7 @@ def page_values(study: StudyFolder) -> dict[str, Any]:
         "arms": arms,
         "today": today,
         "metrics": metrics,
+        "charted": charted,
         "marks": {m.key: range_marks(study, m) for m in metrics},
         "limits": limits_of(study),
         "viewer": viewer_values(study, pictures, scales, room),

@@ -20,6 +20,8 @@ from mrics.scan.volume import LETTERS
 PIXEL_LIMIT = 40_000_000
 """Largest number of image values held at once (four bytes each)."""
 
+_MAIN = ("reference", "recovered", "error", "body", "pattern", "order")
+
 Place = tuple[int, int]
 
 
@@ -30,6 +32,16 @@ class RecoveredStack:
     arm: str
     draw: int
     image: NDArray[np.float32]
+
+
+@dataclass(frozen=True)
+class FurtherMap:
+    """Another stored map of an arm, scan and draw, NaN where it has no value."""
+
+    kind: str
+    arm: str
+    draw: int
+    stored: StoredMap
 
 
 @dataclass(frozen=True)
@@ -52,6 +64,8 @@ class ScanPictures:
     body : ndarray of bool, same shape
     recovered : list of RecoveredStack
         In the order of the arms.
+    further : list of FurtherMap
+        Maps of quality measures; read when they are packed.
     """
 
     entry: dict[str, Any]
@@ -62,6 +76,7 @@ class ScanPictures:
     reference: NDArray[np.float32]
     body: NDArray[np.bool_]
     recovered: list[RecoveredStack] = field(default_factory=list)
+    further: list[FurtherMap] = field(default_factory=list)
 
     def of_arm(self, arm: str) -> RecoveredStack | None:
         """First stored draw of an arm."""
@@ -108,6 +123,11 @@ def load_pictures(study: StudyFolder, pixel_limit: int = PIXEL_LIMIT) -> list[Sc
         for one in stored:
             image = _magnitude(study, one, places)
             pictures.recovered.append(RecoveredStack(one.arm, int(one.draw or 0), image))
+        shown = {(one.arm, one.draw) for one in pictures.recovered}
+        for one in study.maps:
+            key = (one.arm, int(one.draw or 0))
+            if one.scan == scan["id"] and one.present and one.kind not in _MAIN and key in shown:
+                pictures.further.append(FurtherMap(one.kind, *key, one))
         out.append(pictures)
     return out
 
@@ -150,11 +170,20 @@ def _pixels(scan: dict[str, Any]) -> int:
     return int(np.prod([n for a, n in enumerate(scan["shape"][:3]) if a != plane]))
 
 
+def load_further(
+    study: StudyFolder, further: FurtherMap, places: list[Place]
+) -> NDArray[np.float32]:
+    """Values of a further map at slices, NaN where there is none."""
+    return _slices_of(study, further.stored, places)
+
+
 def _magnitude(study: StudyFolder, stored: StoredMap, places: list[Place]) -> NDArray[np.float32]:
     """Magnitudes of a map at the slices; values that are not finite count as 0."""
-    frames = dict.fromkeys(frame for frame, _ in places)
-    parts = {
-        frame: study.planes(stored, [i for f, i in places if f == frame], frame) for frame in frames
-    }
-    stack = np.abs(np.concatenate([parts[frame] for frame in frames])).astype(np.float32)
+    stack = _slices_of(study, stored, places)
     return np.nan_to_num(stack, copy=False, nan=0.0, posinf=0.0, neginf=0.0)
+
+
+def _slices_of(study: StudyFolder, stored: StoredMap, places: list[Place]) -> NDArray[np.float32]:
+    frames = dict.fromkeys(frame for frame, _ in places)
+    parts = [study.planes(stored, [i for f, i in places if f == frame], frame) for frame in frames]
+    return np.abs(np.concatenate(parts)).astype(np.float32)

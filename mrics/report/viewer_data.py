@@ -5,12 +5,17 @@ from __future__ import annotations
 import base64
 from typing import Any
 
-from mrics.report.blocks import DIGITS, Block, ScanBlocks, pack
-from mrics.report.colours import signed_table
+import numpy as np
+
+from mrics.report.blocks import DIGITS, Block, ScanBlocks, pack, pack_map
+from mrics.report.colours import one_signed_table, signed_table
 from mrics.report.folder import StudyFolder
 from mrics.report.image_figures import Window
-from mrics.report.pictures import ScanPictures
+from mrics.report.pictures import FurtherMap, ScanPictures, load_further
 from mrics.report.summary import first_metric, metrics_of
+from mrics.report.words import map_words
+
+_LEAST_CHARACTERS = 0.25
 
 
 def viewer_values(
@@ -46,9 +51,14 @@ def viewer_values(
     for one in packed:
         scans.append(_scan(study, one, windows[one.pictures.entry["id"]]) | {"images": []})
         scans[-1]["reference"] = put(one.reference)
+        scans[-1]["maps"] = []
         for stack, block in zip(one.pictures.recovered, one.recovered, strict=True):
             facts = put(block) | {"arm": stack.arm, "draw": stack.draw}
             scans[-1]["images"].append(facts)
+    room = text_limit - sum(len(text) for text in blocks.values())
+    maps, too_large = _further_maps(study, packed, room)
+    for number, facts, block in maps:
+        scans[number]["maps"].append(facts | put(block))
     data = {
         "scans": scans,
         "arms": [
@@ -63,8 +73,63 @@ def viewer_values(
         "factor": next(iter(windows.values())).factor,
         "digits": DIGITS,
         "colours": base64.b64encode(signed_table().tobytes()).decode("ascii"),
+        "ramp": base64.b64encode(one_signed_table().tobytes()).decode("ascii"),
     }
-    return {"data": data, "blocks": blocks, "left_out": _left_out(packed)}
+    return {"data": data, "blocks": blocks, "left_out": [*_left_out(packed), *too_large]}
+
+
+def _further_maps(
+    study: StudyFolder, packed: list[ScanBlocks], room: int
+) -> tuple[list[tuple[int, dict[str, Any], Block]], list[str]]:
+    """Maps of quality measures, kind by kind as long as they fit.
+
+    Returns
+    -------
+    tuple
+        (number of the scan, facts, block) of every map taken, and sentences on kinds left out.
+    """
+    taken: list[tuple[int, dict[str, Any], Block]] = []
+    left_out = []
+    for kind in dict.fromkeys(f.kind for one in packed for f in one.pictures.further):
+        found = [
+            (number, one, f)
+            for number, one in enumerate(packed)
+            for f in one.pictures.further
+            if f.kind == kind
+        ]
+        voxels = sum(one.pictures.reference[0].size * len(one.positions) for _, one, _ in found)
+        made = _one_kind(study, found) if _LEAST_CHARACTERS * voxels <= room else []
+        size = sum(len(block.text) for _, _, block in made)
+        if not made or size > room:
+            left_out.append(
+                f"Left out for want of room: {map_words(kind)}; it is in the study's stored maps."
+            )
+            continue
+        room -= size
+        taken += made
+    return taken, left_out
+
+
+def _one_kind(
+    study: StudyFolder, found: list[tuple[int, ScanBlocks, FurtherMap]]
+) -> list[tuple[int, dict[str, Any], Block]]:
+    """Blocks of one kind of map, on one scale for all arms of a scan."""
+    loaded: list[tuple[int, FurtherMap, Any]] = []
+    tops: dict[int, float] = {}
+    for number, one, further in found:
+        places = [one.pictures.places[p] for p in one.positions]
+        values = load_further(study, further, places)
+        finite = values[np.isfinite(values)]
+        top = float(np.percentile(finite, 99.9)) if finite.size else 0.0
+        tops[number] = max(tops.get(number, 0.0), top)
+        loaded.append((number, further, values))
+    out = []
+    for number, further, values in loaded:
+        top = tops[number] or 1.0
+        facts = {"kind": further.kind, "label": map_words(further.kind), "top": top}
+        facts |= {"arm": further.arm, "draw": further.draw}
+        out.append((number, facts, pack_map(values, top)))
+    return out
 
 
 def _scan(study: StudyFolder, packed: ScanBlocks, window: Window) -> dict[str, Any]:

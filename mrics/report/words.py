@@ -50,6 +50,23 @@ def metric_words(key: str) -> MetricWords:
     return MetricWords(key, known.label, unit, better, known.plain, known.definition)
 
 
+_MAPS = {
+    "error_complex": "size of the complex error",
+    "missing": "missing detail",
+    "invented": "invented detail",
+    "noise_ratio": "noise against the full scan",
+    "noise_gain": "noise gain",
+    "resolution_u_mm": "resolution along phase (mm)",
+    "resolution_v_mm": "resolution along the other axis (mm)",
+    "coding_residual": "coding residual",
+}
+
+
+def map_words(kind: str) -> str:
+    """Written name of a stored map."""
+    return _MAPS.get(kind, kind.replace("_", " "))
+
+
 def number(value: Any, digits: int = 3) -> str:
     """A number with ``digits`` significant digits, "-" for none, without exponent where it fits."""
     if value is None or (isinstance(value, float) and math.isnan(value)):

@@ -80,7 +80,9 @@ class Page:
         return self.browser.find_element("css selector", selector)
 
     def errors(self) -> list[str]:
-        return [entry["message"] for entry in self.browser.get_log("browser")]
+        """Errors the browser's console shows (not its advice on speed)."""
+        log = self.browser.get_log("browser")
+        return [entry["message"] for entry in log if entry["level"] == "SEVERE"]
 
     def painted(self) -> str:
         """Wait until the viewer has drawn its present state; "scan slice mode turn"."""

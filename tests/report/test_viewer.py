@@ -12,7 +12,7 @@ from browsing import Page
 from study_building import StudyPlan, build_study, read_results
 
 from mrics.report import write_report
-from mrics.report.colours import signed_table
+from mrics.report.colours import one_signed_table, signed_table
 
 pytestmark = pytest.mark.browser
 
@@ -344,3 +344,35 @@ def test_one_slice_and_extreme_values(browser: Any, tmp_path: Path, scale: float
     seen = page.pixels(0, *expected.shape)
     assert close(seen, grey_of(expected, scan["step"], *scan["window"]))
     assert page.keys(UP, "w", "m").split()[1] == "0"
+
+
+def test_further_maps_are_shown_on_one_scale_with_gaps(browser: Any, tmp_path: Path) -> None:
+    plan = StudyPlan(
+        shape=(3, 32, 24), scans=1, draws=1, arms=((2.0, "windowed"), (3.0, "windowed"))
+    )
+    folder = build_study(tmp_path, plan)
+    results = read_results(folder)
+    gain = np.random.default_rng(1).uniform(1, 3, (3, 32, 24)).astype(np.float32)
+    gain[0] = np.nan
+    for arm, scale in zip(results["arms"], (1.0, 0.5), strict=True):
+        name = f"maps/noise_gain-{arm['id']}.nii"
+        affine = nibabel.load(folder / results["maps"][0]["file"]).affine
+        nibabel.save(nibabel.Nifti1Image(gain * np.float32(scale), affine), folder / name)
+        where = {"scan": "scan-1", "arm": arm["id"], "draw": 0, "file": name}
+        results["maps"].append({"kind": "noise_gain"} | where)
+    (folder / "results.json").write_text(json.dumps(results))
+    page = Page(browser, write_report(folder))
+    table = one_signed_table().astype(int)
+    top = facts(page)["scans"][0]["maps"][0]["top"]
+    assert top == pytest.approx(np.percentile(gain[1:], 99.9), rel=0.01)
+    page.choose("#v-map", "noise_gain")
+    for arm, scale in zip(results["arms"], (1.0, 0.5), strict=True):
+        page.choose("#v-arm", arm["id"])
+        page.keys(HOME, UP)
+        number = 1 + np.rint(254 * np.clip(gain[1].T[::-1] * scale / top, 0, 1)).astype(int)
+        seen = page.pixels(3, *number.shape).astype(int)
+        assert np.abs(seen - table[number]).max() <= 4
+    page.keys(HOME)
+    gap = page.pixels(3, 24, 32).reshape(-1, 3)
+    assert len(np.unique(gap, axis=0)) == 1
+    assert page.errors() == []

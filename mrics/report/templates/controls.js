@@ -128,6 +128,10 @@ function useScan(number) {
   state.draw = draws.includes(state.draw) ? state.draw : draws[0];
   fill($("v-draw"), draws.map((d) => [d, d]), state.draw);
   $("v-draw-label").hidden = draws.length < 2;
+  const kinds = [...new Map(s.maps.map((m) => [m.kind, m.label]))];
+  if (!kinds.some(([kind]) => kind === state.map)) state.map = "";
+  fill($("v-map"), [["", "none"], ...kinds], state.map);
+  $("v-map-label").hidden = kinds.length === 0;
   $("v-slice").max = s.slices.length - 1;
   $("v-slice").disabled = s.slices.length < 2;
   const [low, high] = state.windows[number];
@@ -312,6 +316,7 @@ function startViewer() {
   on("v-arm", "change", (e) => { state.arm = e.target.value; refresh(); });
   on("v-other", "change", (e) => { state.other = e.target.value; state.turn = 0; refresh(); });
   on("v-draw", "change", (e) => { state.draw = Number(e.target.value); refresh(); });
+  on("v-map", "change", (e) => { state.map = e.target.value; refresh(); });
   on("v-metric", "change", (e) => { state.metric = e.target.value; refresh(); });
   on("v-slice", "input", (e) => goTo(Number(e.target.value), false));
   on("v-worst", "click", () => goToRanked(0));

@@ -4,6 +4,7 @@ for (const table of document.querySelectorAll("table.sortable")) {
   const heads = [...table.tHead.rows[0].cells];
   const body = table.tBodies[0];
   heads.forEach((head, column) => {
+    if (head.tagName !== "TH") return;
     const button = document.createElement("button");
     button.type = "button";
     button.className = "sort";

@@ -11,6 +11,14 @@ const signed = (() => {
   return Uint32Array.from({ length: 255 }, (_, i) => packed(bytes[3 * i], bytes[3 * i + 1], bytes[3 * i + 2]));
 })();
 
+// Colours of measures: entry 0 (grey) where there is no value, then cividis.
+const measureColours = (() => {
+  const bytes = Uint8Array.from(atob(study.ramp), (c) => c.charCodeAt(0));
+  const colours = Uint32Array.from({ length: 256 }, (_, i) => packed(bytes[3 * i], bytes[3 * i + 1], bytes[3 * i + 2]));
+  colours[0] = packed(70, 74, 78);
+  return colours;
+})();
+
 const BLUE = [86, 180, 233];
 const ORANGE = [240, 150, 30];
 
@@ -57,6 +65,12 @@ class Raster {
       const d = change[start + i] - (less ? less[start + i] : 0);
       this.pixels[i] = signed[Math.max(0, Math.min(254, Math.round(127 + d * scale)))];
     }
+    return this.finish();
+  }
+
+  // A measure of quality, its numbers from 0 (none) to 255.
+  measure(numbers, start) {
+    for (let i = 0; i < this.pixels.length; i += 1) this.pixels[i] = measureColours[numbers[start + i]];
     return this.finish();
   }
 

@@ -6,7 +6,7 @@ const FACTORS = [1, 2, 5, 10, 20, 50, 100];
 
 const state = {
   scan: 0, arm: "", other: "", draw: 0, slice: 0, mode: "side", turn: 0, edge: 0.5,
-  zoom: 1, centre: [0.5, 0.5], factor: study.factor, metric: study.metric, probe: null,
+  zoom: 1, centre: [0.5, 0.5], factor: study.factor, metric: study.metric, map: "", probe: null,
   windows: study.scans.map((s) => [...s.window]),
 };
 let panels = [];
@@ -19,6 +19,10 @@ const armName = (id) => study.arms.find((a) => a.id === id).label;
 const imageOf = (arm) => {
   const of = scan().images.filter((i) => i.arm === arm);
   return of.find((i) => i.draw === state.draw) || of[0];
+};
+const mapOf = (arm) => {
+  const of = scan().maps.filter((m) => m.kind === state.map && m.arm === arm);
+  return of.find((m) => m.draw === state.draw) || of[0];
 };
 const errorEnd = () => (scan().window[1] - scan().window[0]) / state.factor;
 
@@ -61,12 +65,18 @@ function plan() {
     if (other) list.push([`${armName(other)}, error laid over`, "overlay", other]);
     return list;
   }
-  const list = [["reference", "truth"], [name, "image", arm]];
-  if (!other) return [...list, [`error ×${state.factor}`, "error", arm]];
-  return [...list, [armName(other), "image", other],
-    [`second arm less first, ×${state.factor}`, "between", other, arm],
-    [`error of ${name}, ×${state.factor}`, "error", arm],
-    [`error of ${armName(other)}, ×${state.factor}`, "error", other]];
+  const list = [["reference", "truth"], [other ? `first: ${name}` : name, "image", arm]];
+  const measures = [arm, other].filter((a) => a && mapOf(a)).map((a) => {
+    const whose = other ? `${a === arm ? "first" : "second"}: ` : "";
+    return [`${whose}${mapOf(a).label}, 0 to ${plain(mapOf(a).top)}`, "measure", a];
+  });
+  const scale = `×${state.factor}`;
+  if (!other) return [...list, [`error ${scale}`, "error", arm], ...measures];
+  return [...list, [`second: ${armName(other)}`, "image", other],
+    [`second less first, ${scale}`, "between", other, arm],
+    [`first: error ${scale}`, "error", arm],
+    [`second: error ${scale}`, "error", other],
+    ...measures];
 }
 
 // Canvases are made again only when the number of panels or the grid changes.
@@ -78,7 +88,7 @@ function layPanels(wanted) {
   rasters = wanted.map(() => new Raster(s.rows, s.columns)).concat(new Raster(s.rows, s.columns));
   const across = s.columns * s.columnMm;
   const down = s.rows * s.rowMm;
-  const several = Math.min(3, wanted.length);
+  const several = wanted.length % 4 === 0 ? 4 : Math.min(3, wanted.length);
   stage.style.setProperty("--across", several);
   stage.style.setProperty("--down", Math.ceil(wanted.length / several));
   stage.style.setProperty("--shape", across / down);
@@ -101,11 +111,14 @@ async function draw() {
   const s = scan();
   const wanted = plan();
   const arms = [...new Set(wanted.flatMap(([, , a, b]) => [a, b]).filter(Boolean))];
-  const marks = JSON.stringify([state.scan, state.arm, state.other, state.draw]);
+  const choice = () => JSON.stringify([state.scan, state.arm, state.other, state.draw, state.map]);
+  const marks = choice();
   const truth = await numbersOf(s.reference);
   const change = {};
   for (const arm of arms) change[arm] = await numbersOf(imageOf(arm));
-  if (marks !== JSON.stringify([state.scan, state.arm, state.other, state.draw])) return;
+  const measured = {};
+  for (const arm of arms) if (mapOf(arm)) measured[arm] = await numbersOf(mapOf(arm));
+  if (marks !== choice()) return;
   layPanels(wanted);
   const [low, high] = state.windows[state.scan];
   const levels = greyLevels(s.step, low, high);
@@ -116,6 +129,7 @@ async function draw() {
     const { canvas } = panels[index];
     if (kind === "truth") raster.grey(levels, truth, null, start);
     else if (kind === "image" || kind === "swipe") raster.grey(levels, truth, change[a], start);
+    else if (kind === "measure") raster.measure(measured[a], start);
     else if (kind === "error") raster.difference(change[a], null, s.step, errorEnd(), start);
     else if (kind === "between") raster.difference(change[a], change[b], s.step, errorEnd(), start);
     else raster.overlay(levels, truth, change[a], s.step, errorEnd(), start);
@@ -132,7 +146,7 @@ async function draw() {
     canvas.setAttribute("aria-label", `${title}, ${s.name}, ${sliceName(state.slice)}`);
   });
   drawScales(low, high);
-  showProbe(truth, change);
+  showProbe(truth, change, measured);
   showTrack();
   stage.dataset.painted = [s.id, state.slice, state.mode, state.turn].join(" ");
 }
@@ -162,12 +176,21 @@ function drawScales(low, high) {
     ramp.fillStyle = `rgb(${r},${g},${b})`;
     ramp.fillRect(i, 0, 1, 10);
   }
+  const bar = $("v-map-bar");
+  bar.parentElement.hidden = !mapOf(state.arm);
+  if (mapOf(state.arm)) {
+    const context = bar.getContext("2d");
+    const image = context.createImageData(255, 1);
+    new Uint32Array(image.data.buffer).set(measureColours.subarray(1));
+    for (let row = 0; row < bar.height; row += 1) context.putImageData(image, 0, row);
+    $("v-map-ends").textContent = `0 to ${plain(mapOf(state.arm).top)}, grey: no value`;
+  }
   $("v-grey-ends").textContent = `${plain(low)} to ${plain(high)}`;
   $("v-error-ends").textContent = `−${plain(errorEnd())} to +${plain(errorEnd())} (window ×${state.factor})`;
 }
 
 // Values at the read-out point.
-function showProbe(truth, change) {
+function showProbe(truth, change, measured) {
   const s = scan();
   panels.forEach(({ cross }) => { cross.hidden = true; });
   if (!state.probe) {
@@ -190,6 +213,11 @@ function showProbe(truth, change) {
     const error = change[arm][at] * s.step;
     const sign = error > 0 ? "+" : "";
     parts.push(`${armName(arm)} ${plain((truth[at] + change[arm][at]) * s.step, 4)}, error ${sign}${plain(error, 3)} (${sign}${plain(100 * error / s.largest, 2)} % of the largest)`);
+    if (measured[arm]) {
+      const number = measured[arm][at];
+      const value = number ? plain((number - 1) / 254 * mapOf(arm).top, 3) : "no value";
+      parts.push(`${mapOf(arm).label} ${value}`);
+    }
   }
   $("v-read").textContent = parts.join("  ·  ");
 }
