@@ -274,16 +274,25 @@ def _write_maps(
         dtype = np.complex64 if np.iscomplexobj(stack) else np.float32
         write_nifti(path, scan.to_volume(stack.astype(dtype, copy=False)), scan.scan)
         written.append(_entry(unit, kind, path))
-    path = folder / f"{unit.scan_id}_draw{unit.draw}_pattern.nii.gz"
-    mask = pattern.mask
-    if pattern.frames:
-        mask = np.moveaxis(mask, 0, -1)
-    shape = (*pattern.grid, *(1,) * (3 - len(pattern.grid)))
-    volume = mask.reshape(*shape, *mask.shape[len(pattern.grid) :]).astype(np.uint8)
-    # The phase-encode grid has no place in the patient: unit voxels at the origin.
-    write_nifti(path, volume, Scan(volume, np.eye(4), (1.0, 1.0, 1.0)))
-    written.append(_entry(unit, "pattern", path))
+    for kind, values in _grid_maps(pattern).items():
+        path = folder / f"{unit.scan_id}_draw{unit.draw}_{kind}.nii.gz"
+        if pattern.frames:
+            values = np.moveaxis(values, 0, -1)
+        shape = (*pattern.grid, *(1,) * (3 - len(pattern.grid)))
+        volume = values.reshape(*shape, *values.shape[len(pattern.grid) :])
+        # The phase-encode grid has no place in the patient: unit voxels at the origin.
+        write_nifti(path, volume, Scan(volume, np.eye(4), (1.0, 1.0, 1.0)))
+        written.append(_entry(unit, kind, path))
     return written
+
+
+def _grid_maps(pattern: Pattern) -> dict[str, Any]:
+    """The mask, and the echo (from 1) that acquires each position where a shot has several."""
+    maps: dict[str, Any] = {"pattern": pattern.mask.astype(np.uint8)}
+    if pattern.order is not None and pattern.order[:, 1].max(initial=0) > 0:
+        maps["order"] = np.zeros(pattern.mask.shape, dtype=np.int16)
+        maps["order"][pattern.mask] = pattern.order[:, 1] + 1
+    return maps
 
 
 def _entry(unit: Unit, kind: str, path: Path) -> dict[str, str | int]:
