@@ -29,8 +29,9 @@ class ScanFiles:
 
     @property
     def name(self) -> str:
-        """File name without ending, the scan's label."""
-        return re.sub(r"\.nii(\.gz)?$", "", self.path.name)
+        """File name without ending and without the part of a pair it holds: the scan's label."""
+        plain = re.sub(r"\.nii(\.gz)?$", "", self.path.name)
+        return re.sub(r"_part-(mag|phase|real|imag)(?=_|$)", "", plain)
 
 
 def expand(entries: tuple[ScanEntry, ...], folder: Path, where: str) -> tuple[ScanFiles, ...]:

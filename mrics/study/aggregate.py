@@ -91,7 +91,9 @@ def arm_numbers(
                     {
                         **one.as_dict(),
                         "metric": by_key[one.key].metric,
-                        "advice": _advice(units[arm], by_key[one.key], one, level),
+                        "advice": _advice(units[arm], by_key[one.key], one, level)
+                        if judged.status == UNDECIDED
+                        else None,
                     }
                     for one in judged.limits
                 ],

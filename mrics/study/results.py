@@ -29,7 +29,7 @@ def scan_record(plan: StudyPlan, number: int) -> dict[str, Any]:
     scan = plan.prepared(number)
     return {
         "id": plan.scan_ids[number],
-        "name": scan.scan.name,
+        "name": plan.scans[number].name,
         "sha256": scan.scan.sha256,
         "shape": list(scan.scan.shape),
         "voxel_mm": list(scan.scan.voxel_mm),
