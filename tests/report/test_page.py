@@ -200,3 +200,25 @@ def test_map_outside_the_folder_is_refused(own_study: Path) -> None:
     change(own_study, maps=maps)
     with pytest.raises(ReportError, match="outside the study folder"):
         write_report(own_study)
+
+
+def test_search_is_told_look_by_look(own_study: Path) -> None:
+    arm = read_results(own_study)["arms"][1]
+    looks = [
+        {"acceleration": 4.0, "arm": arm["id"], "draws": 3, "level": 0.975, "status": "fail"},
+        {"acceleration": 3.0, "arm": arm["id"], "draws": 5, "level": 0.975, "status": "pass"},
+    ]
+    search = {
+        "family": "power law, windowed",
+        "arm": arm["id"],
+        "acceleration": 3.0,
+        "candidates": 16,
+        "decisions": looks,
+        "findings": ["R = 5 passed although R = 4 failed."],
+    }
+    change(own_study, searches=[search])
+    page = write_report(own_study).read_text()
+    assert "R = 3.00 is the fastest that passes" in page
+    assert "2 looks at 16 accelerations" in page
+    assert "97.5 %" in page
+    assert "R = 5 passed although R = 4 failed." in page
