@@ -8,7 +8,7 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from datetime import date, time
 from pathlib import Path
-from typing import Any, TypeVar
+from typing import TYPE_CHECKING, Any, TypeVar
 
 from pydantic import ValidationError
 
@@ -31,8 +31,11 @@ from mrics.protocol.sections import (
 )
 from mrics.scan.volume import Axes
 
+if TYPE_CHECKING:
+    from mrics.quality.measures import Measures
+
 LARGEST_FILE = 1_000_000
-TABLES = ("protocol", "sequence", "grid", "today", "acceptance", "study", "coils")
+TABLES = ("protocol", "sequence", "grid", "today", "acceptance", "quality", "study", "coils")
 LISTS = ("sampling", "recovery")
 Fail = Callable[[str, Location, str], None]
 AnySection = TypeVar("AnySection", Section, OpenSection)
@@ -53,6 +56,8 @@ class Protocol:
         file has none, ``sampling`` and ``recovery`` are tuples.
     acceptance : tuple of Limit
         The acceptance limits.
+    quality : mapping or None
+        The ``[quality]`` table as it stands: measures beside the scores.
     """
 
     path: Path
@@ -66,6 +71,7 @@ class Protocol:
     recovery: tuple[Recovery, ...]
     acceptance: tuple[Limit, ...]
     coils: Coils | None
+    quality: Mapping[str, Any] | None = None
 
     @property
     def title(self) -> str:
@@ -96,6 +102,12 @@ class Protocol:
             self.study.scans, self.path.parent, place(self.path, self.text, ("study", "scans"))
         )
 
+    def measures(self) -> Measures | None:
+        """Which measures beside the scores are taken; None where ``[quality]`` is not given."""
+        from mrics.quality.measures import measures_from
+
+        return None if self.quality is None else measures_from(self.quality)
+
     def values(self) -> dict[str, Any]:
         """Every key with its value, defaults included, as plain data for a results file."""
         return {
@@ -108,6 +120,7 @@ class Protocol:
             "acceptance": {limit.key: limit.value for limit in self.acceptance},
             "study": self.study.model_dump(),
             "coils": self.coils.model_dump() if self.coils else None,
+            "quality": None if self.quality is None else dict(self.quality),
         }
 
 
@@ -186,6 +199,7 @@ def from_text(text: str, path: str | Path = "protocol.toml") -> Protocol:
         recovery=tuple(section(Recovery, "recovery", n) for n in range(_count(raw, "recovery"))),
         acceptance=read_limits(raw.get("acceptance", {}), file, text),
         coils=section(Coils, "coils", needed=False),
+        quality=raw.get("quality"),
     )
     _check(protocol)
     return protocol
@@ -276,6 +290,7 @@ def _check(protocol: Protocol) -> None:
                 ("study", "echo_train_decay"),
                 f"Add {key} to [sequence], or remove echo_train_decay.",
             )
+    _ask_room(protocol, ("quality",), Protocol.measures, protocol)
     _check_arms(protocol, fail)
 
 
@@ -365,7 +380,7 @@ def _check_today(protocol: Protocol) -> None:
 
 
 def _ask_room(
-    protocol: Protocol, location: Location, check: Callable[[Any], None], subject: Any
+    protocol: Protocol, location: Location, check: Callable[[Any], object], subject: Any
 ) -> None:
     """Run another room's check and put file, line and key before what it says."""
     try:

@@ -53,19 +53,25 @@ def limit_findings(sequence: Sequence, pattern: Pattern) -> tuple[str, ...]:
 
 
 def decay_finding(sequence: Sequence, played: Ordered) -> str | None:
-    """How much the decay along the train widens a point; None without ``tissue_t2_ms`` or times."""
+    """What the decay along the train does to a point; None without ``tissue_t2_ms`` or times."""
     if sequence.tissue_t2_ms is None or played.times_ms is None or played.train_length == 1:
         return None
     spread = decay_spread(played.pattern, played.times_ms, sequence.tissue_t2_ms)
-    names = ("phase", "partition")
-    wider = " and ".join(
-        f"{times:.2f} times along {name}"
-        for times, name in zip(spread.broadening, names, strict=False)
+    axes = "; ".join(
+        f"along {name} {before:.2f} to {width:.2f} voxels wide, largest side lobe {low:.0%} to "
+        f"{high:.0%}"
+        for name, before, width, low, high in zip(
+            ("phase", "partition"),
+            spread.width_without,
+            spread.width,
+            spread.side_lobe_without,
+            spread.side_lobe,
+            strict=False,
+        )
     )
-    widths = " x ".join(f"{width:.2f}" for width in spread.width)
     return (
-        f"A T2 of {sequence.tissue_t2_ms:g} ms widens a point {wider} (half maximum {widths} "
-        f"voxels); its peak is {spread.signal:.0%} of that without decay."
+        f"A T2 of {sequence.tissue_t2_ms:g} ms along the train changes a point {axes}; its peak "
+        f"is {spread.signal:.0%} of that without decay."
     )
 
 

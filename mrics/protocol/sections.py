@@ -251,6 +251,9 @@ class Recovery(OpenSection):
 class Coils(Section):
     """``[coils]``: receive array simulated for scans that hold one image."""
 
+    form: Literal["cylinder", "dome"] = Field(
+        "cylinder", description="loops around the field of view, or closed over one end of it"
+    )
     number: Annotated[int, Field(ge=1, le=256)] = Field(8, description="loops in the array")
     rows: Annotated[int, Field(ge=1, le=64)] = Field(1, description="rows along the bore")
     radius_mm: Annotated[float, Field(gt=0, le=1000)] | None = Field(

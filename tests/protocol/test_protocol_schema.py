@@ -168,3 +168,11 @@ def test_byte_order_mark_is_no_error(tmp_path):
     file = tmp_path / "knee.toml"
     file.write_bytes(b"\xef\xbb\xbf" + KNEE_3D.encode())
     assert load_protocol(file).text == KNEE_3D
+
+
+def test_a_simulated_array():
+    coils = from_text(KNEE_3D + '\n[coils]\nnumber = 12\nform = "dome"\nphase = 1.5\n').coils
+    assert coils is not None
+    assert (coils.number, coils.form, coils.phase, coils.rows) == (12, "dome", 1.5, 1)
+    with pytest.raises(ProtocolError, match="one of 'cylinder', 'dome'"):
+        from_text(KNEE_3D + '\n[coils]\nform = "bird cage"\n')

@@ -39,6 +39,8 @@ def test_widths_of_linear_and_centre_out_trains(ratio, linear, outward, signal):
         assert found.width[0] == pytest.approx(width, abs=1e-3)
         # Without decay: the sinc of full k-space, 1.206709 voxels (root of sinc = 1/2).
         assert found.width_without[0] == pytest.approx(1.206709, abs=1e-4)
+        # Its first side lobe, 0.217234 of the peak (extremum of the sinc).
+        assert found.side_lobe_without[0] == pytest.approx(0.217234, abs=5e-4)
         assert found.broadening[0] == pytest.approx(width / 1.206709, abs=1e-3)
         assert found.signal == pytest.approx(signal, abs=1e-3)
 
@@ -70,6 +72,8 @@ def test_undersampling_alone_does_not_broaden():
     found = decay_spread(played.pattern, played.times_ms, 60.0)
     # Elliptical k-space, 2 J1(x)/x: its magnitude is 1.410170 voxels wide (root of jinc = 1/2).
     assert found.width_without == pytest.approx((1.410170, 1.410170), rel=0.02)
+    # Its side lobe is 0.132279 of the peak (extremum of the jinc).
+    assert found.side_lobe_without == pytest.approx((0.132279, 0.132279), rel=0.05)
     assert found.broadening[0] == pytest.approx(found.broadening[1], rel=0.05)
     assert min(found.broadening) > 1.05
 
@@ -80,6 +84,20 @@ def test_linear_order_blurs_along_the_phase_axis_alone():
     u, v = decay_spread(played.pattern, played.times_ms, 60.0).broadening
     assert u > 1.1
     assert v == pytest.approx(1.0, abs=1e-9)
+
+
+def test_first_echoes_at_the_rim_raise_side_lobes():
+    # Centre on a middle echo: the outermost bands come first and weigh most, as a high-pass does.
+    pattern = Pattern(np.ones(128, dtype=bool), calibration=(0,))
+    outward, middle = (
+        order_pattern(
+            pattern, train_length=16, scheme="centre-out", spacing_ms=5.0, echo_time_ms=time
+        )
+        for time in (5.0, 35.0)
+    )
+    plain = decay_spread(outward.pattern, outward.times_ms, 50.0)
+    rimmed = decay_spread(middle.pattern, middle.times_ms, 50.0)
+    assert plain.side_lobe[0] < plain.side_lobe_without[0] < rimmed.side_lobe[0]
 
 
 def test_every_frame_has_its_own_spread():
