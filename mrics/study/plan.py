@@ -15,6 +15,7 @@ from mrics.protocol import (
     ScanFiles,
     Timing,
     console_difference,
+    decay_finding,
     limit_findings,
     scan_time,
 )
@@ -180,6 +181,7 @@ class StudyPlan:
                         seed=study.seed,
                         sequence=self._played_by(),
                         coils=self.protocol.values()["coils"],
+                        quality=self.protocol.values()["quality"],
                         code=code_version(),
                     )
                     units.append(
@@ -245,7 +247,8 @@ class StudyPlan:
                 "parallel imaging has nothing to work with."
             )
         note = (
-            f"The receive array is simulated: {coils.number} circular loops in {coils.rows} row(s) "
+            f"The receive array is simulated: {coils.number} circular loops on a "
+            f"{coils.form} in {coils.rows} row(s) "
             f"{coils.standoff_mm:g} mm off the field of view, noise correlation "
             f"{coils.correlation:g} between neighbours. Every arm estimates sensitivities from its "
             "own calibration region; an arm with fewer than 12 lines of it is given the true ones. "
@@ -261,7 +264,8 @@ class StudyPlan:
         said = [text for row in self.rows for text in row.timing.findings]
         for row in self.rows:
             played = (*row.played.findings, *limit_findings(self.protocol.sequence, row.pattern))
-            said += [f"{row.arm.label}: {text}" for text in played]
+            decay = decay_finding(self.protocol.sequence, row.played)
+            said += [f"{row.arm.label}: {text}" for text in (*played, *([decay] if decay else []))]
         today = next((row for row in self.rows if row.arm.today), None)
         if today is not None:
             console = console_difference(self.protocol.sequence, today.timing.scan_time_s)

@@ -205,6 +205,7 @@ def _with_simulated_channels(prepared: Prepared, coils: CoilSection) -> Prepared
         radius_mm=coils.radius_mm,
         standoff_mm=coils.standoff_mm,
         correlation=coils.correlation,
+        form=coils.form,
     )
     return replace(
         prepared,
