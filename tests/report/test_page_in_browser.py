@@ -3,6 +3,7 @@
 import base64
 import json
 import re
+import shutil
 from pathlib import Path
 from typing import Any
 
@@ -10,11 +11,14 @@ import pytest
 from browsing import Page
 from study_building import StudyPlan, build_study, read_results
 
-from mrics.report import write_report
+from mrics.protocol import load_protocol
+from mrics.report import write_compare_page, write_plan_page, write_report
+from mrics.study import plan_study
 
 pytestmark = pytest.mark.browser
 
 AXE = Path(__file__).parent / "vendor" / "axe.min.js"  # axe-core 4.14.1 (npm), MPL-2.0
+PROTOCOL = Path(__file__).parents[2] / "protocols" / "knee_tse2d.toml"
 MM = 96 / 25.4
 
 
@@ -118,24 +122,42 @@ def test_markup_in_names_stays_text(browser: Any, tmp_path: Path) -> None:
     assert bad in page.script("return document.querySelector('.panel:nth-child(2) p').textContent")
 
 
-@pytest.mark.parametrize("scheme", ["light", "dark"])
-def test_accessibility_by_axe(page: Page, scheme: str) -> None:
-    """No fault of any weight by axe-core's WCAG 2.1 A and AA rules, folded parts opened."""
-    page.cdp(
-        "Emulation.setEmulatedMedia",
-        media="",
-        features=[{"name": "prefers-color-scheme", "value": scheme}],
-    )
+def faults(page: Page) -> Any:
+    """What axe-core finds by the WCAG 2.1 A and AA rules and its own, folded parts opened."""
     page.script("document.querySelectorAll('details').forEach((d) => { d.open = true; })")
     page.script(AXE.read_text())
-    found = page.browser.execute_async_script(
+    return page.browser.execute_async_script(
         "const done = arguments[arguments.length - 1];"
         "const rules = ['wcag2a', 'wcag2aa', 'wcag21a', 'wcag21aa', 'best-practice'];"
         "axe.run(document, {runOnly: rules})"
         ".then((r) => done(r.violations.map((v) => [v.id, v.impact, v.nodes.length, "
         "v.nodes[0].html.slice(0, 160)])))"
     )
-    assert found == []
+
+
+@pytest.mark.parametrize("scheme", ["light", "dark"])
+def test_no_accessibility_fault_by_axe(page: Page, scheme: str) -> None:
+    features = [{"name": "prefers-color-scheme", "value": scheme}]
+    page.cdp("Emulation.setEmulatedMedia", media="", features=features)
+    assert faults(page) == []
+
+
+def test_no_accessibility_fault_beside_the_report(
+    browser: Any, tiny_study: Path, tmp_path: Path
+) -> None:
+    """The page of two studies and the page of a plan."""
+    other = Path(shutil.copytree(tiny_study, tmp_path / "second"))
+    results = read_results(other)
+    results["arms"][1]["metrics"]["ssim"]["mean"] += 0.01
+    results["arms"][0]["verdict"]["status"] = "undecided"
+    (other / "results.json").write_text(json.dumps(results))
+    compared = write_compare_page(tiny_study, other, tmp_path / "compare.html")
+    planned = tmp_path / "plan.html"
+    write_plan_page(plan_study(load_protocol(PROTOCOL)), planned)
+    for path in (compared, planned):
+        page = Page(browser, path)
+        assert page.errors() == []
+        assert faults(page) == []
 
 
 def test_a_thousand_slices_scroll_in_the_page(browser: Any, tmp_path: Path) -> None:
