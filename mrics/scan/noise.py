@@ -116,11 +116,11 @@ def choose_noise(estimates: dict[str, Noise]) -> Noise:
 
 
 def first_volume(scan: Scan) -> NDArray[Any]:
-    """First frame and first channel, shape (i, j, k)."""
+    """First frame and channel, shape (i, j, k); real where no imaginary part differs from 0."""
     data = scan.data
     while data.ndim > 3:
         data = data[..., 0]
-    return data
+    return data if np.iscomplexobj(data) and data.imag.any() else data.real
 
 
 def air_noise(magnitude: NDArray[Any], mask: NDArray[np.bool_]) -> Noise | None:

@@ -14,9 +14,9 @@ from mrics.scan.fitness.view import ScanView
 from mrics.scan.volume import LETTERS
 
 # Amplitude of a ghost as a share of the body.
-GHOST = 0.025
-# Times the mean over all shifts: smooth leakage into air is the same at every shift.
-PEAK = 5.0
+GHOST = 0.03
+# Times the median over all shifts: smooth leakage into air is the same at every shift.
+PEAK = 1.4
 # Share of a border plane that lies in the body.
 BORDER = 0.02
 _NEAREST = 0.25

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from mrics.scan.fitness.finding import Finding
+from mrics.scan.fitness.levels import coarse_levels
 from mrics.scan.fitness.view import ScanView
 from mrics.scan.noise import RATIO_SLACK, RAYLEIGH_RATIO, channels_of_ratio
 
@@ -11,8 +12,8 @@ def root_sum_of_squares(view: ScanView) -> tuple[Finding, ...]:
     """Air of a magnitude scan whose mean / SD is that of a chi law of several channels."""
     ratio = view.noise.ratio
     threshold = (1 + RATIO_SLACK) * RAYLEIGH_RATIO
-    if ratio <= threshold or view.has_phase:
-        return ()
+    if ratio <= threshold or view.has_phase or coarse_levels(view):
+        return ()  # rounding to few levels narrows air too
     channels = channels_of_ratio(ratio)
     return (
         Finding(

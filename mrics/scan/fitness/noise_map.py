@@ -13,16 +13,18 @@ from mrics.scan.noise import detail_powers, quiet_mean
 SPREAD = 1.6
 # Share of the variance of log sigma that a quadratic surface explains.
 SMOOTH = 0.85
-_CELLS = (5, 5, 2)
+_CELLS = 8
+_DEEP = 24
 _LEAST_CELLS = 14
-_LEAST_BLOCKS = 40
-_LEAST_QUIET = 12
+_LEAST_BLOCKS = 24
+_LEAST_QUIET = 8
 # Share of a cell's blocks that must be quiet: in the others anatomy is mistaken for noise.
 _QUIET_SHARE = 0.35
 
 
 def noise_varies(view: ScanView) -> tuple[Finding, ...]:
-    """Sigma of the quiet blocks in each of 5 x 5 x 2 cells, compared over the volume.
+    """Sigma of the quiet blocks in each of 8 x 8 cells of the plane (and two along k in deep
+    volumes), compared over the volume.
 
     A smooth surface (a quadratic explains 85 % of log sigma) is what dividing by a receive
     sensitivity leaves; anything else is what unfolding after parallel imaging leaves (the
@@ -43,9 +45,10 @@ def _cells(view: ScanView) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Sigma of each cell with enough blocks, and the cell's place in -1 ... 1."""
     mask = None if view.has_phase else view.mask
     powers, usable, shape = detail_powers(view.volume, view.magnitude, mask)
-    splits = [np.array_split(np.arange(n), c) for n, c in zip(powers.shape, _CELLS, strict=True)]
+    cells = (_CELLS, _CELLS, 2 if powers.shape[2] >= _DEEP else 1)
+    splits = [np.array_split(np.arange(n), c) for n, c in zip(powers.shape, cells, strict=True)]
     sigma, place = [], []
-    for index in np.ndindex(*_CELLS):
+    for index in np.ndindex(*cells):
         box = np.ix_(*(splits[axis][index[axis]] for axis in range(3)))
         values = powers[box][usable[box]]
         if len(values) < _LEAST_BLOCKS:
@@ -53,13 +56,15 @@ def _cells(view: ScanView) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         level, quiet = quiet_mean(values, shape)
         if quiet >= max(_LEAST_QUIET, _QUIET_SHARE * len(values)) and level > 0:
             sigma.append(np.sqrt(level))
-            place.append([2 * i / (c - 1) - 1 for i, c in zip(index, _CELLS, strict=True)])
+            place.append([2 * i / max(c - 1, 1) - 1 for i, c in zip(index, cells, strict=True)])
     return np.array(sigma), np.array(place)
 
 
 def _explained(values: NDArray[np.float64], place: NDArray[np.float64]) -> float:
     x, y, z = place.T
     terms = np.stack([np.ones_like(x), x, y, z, x * x, y * y, x * y, x * z, y * z], axis=1)
+    if len(values) < 2 * terms.shape[1]:
+        return 0.0
     fit, *_ = np.linalg.lstsq(terms, values, rcond=None)
     rest = values - terms @ fit
     return float(1 - rest.var() / values.var())

@@ -19,7 +19,7 @@ from mrics.scan.fitness.spectrum import (
     noise_correlation,
 )
 from mrics.scan.mask import body_mask
-from mrics.scan.noise import Noise, choose_noise, noise_estimates
+from mrics.scan.noise import Noise, choose_noise, first_volume, noise_estimates
 from mrics.scan.volume import LETTERS, Axes, Scan
 
 _T = TypeVar("_T")
@@ -59,10 +59,7 @@ class ScanView:
     def __init__(self, scan: Scan, axes: Axes) -> None:
         self.scan = scan
         self.axes = axes
-        volume = scan.data
-        while volume.ndim > 3:
-            volume = volume[..., 0]
-        self.volume: NDArray[Any] = volume
+        self.volume: NDArray[Any] = first_volume(scan)
         self.results: dict[tuple[str, int], Any] = {}
 
     @property
@@ -91,10 +88,10 @@ class ScanView:
         """The noise estimate to believe."""
         return choose_noise(self.noise_estimates)
 
-    @cached_property
+    @property
     def has_phase(self) -> bool:
         """Whether any imaginary part differs from zero."""
-        return bool(np.iscomplexobj(self.volume) and self.volume.imag.any())
+        return bool(np.iscomplexobj(self.volume))
 
     @_once
     def power(self, axis: int) -> NDArray[np.float64]:
