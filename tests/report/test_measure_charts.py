@@ -12,9 +12,15 @@ from mrics.encoding import undersample
 from mrics.quality import Measures, measure
 from mrics.quality.features import Feature
 from mrics.recovery import recover
-from mrics.report import write_figures, write_report
+from mrics.report import write_report
 from mrics.report.folder import open_folder
-from mrics.report.measure_charts import kept_features, spectral_curves
+from mrics.report.measure_charts import (
+    feature_figure,
+    kept_features,
+    spectral_curves,
+    spectral_figure,
+)
+from mrics.report.words import number
 from mrics.sampling import draw_pattern
 
 
@@ -27,8 +33,8 @@ def measured(tiny_study: Path, tmp_path_factory: pytest.TempPathFactory) -> Path
     wanted = Measures(
         features=(Feature(size_mm=3.0), Feature(size_mm=5.0)), feature_sites=4, planes=2
     )
-    for number, arm in enumerate(results["arms"]):
-        pattern = draw_pattern((48, 48), acceleration=2 + number, calibration=8, seed=1)
+    for place, arm in enumerate(results["arms"]):
+        pattern = draw_pattern((48, 48), acceleration=2 + place, calibration=8, seed=1)
         acquisition = undersample(stack, pattern, sigma=0.01)
         image = recover(acquisition, method="zero-filled").image
         found = measure(
@@ -51,9 +57,16 @@ def test_curves_and_cells_are_those_of_the_units(measured: Path) -> None:
         )
 
 
-def test_page_and_files_hold_both_charts(measured: Path) -> None:
+def test_page_holds_both_charts_and_their_numbers(measured: Path) -> None:
     page = write_report(measured).read_text()
     assert "Small features that survive" in page
     assert "Error by fineness of detail" in page
-    names = {path.name for path in write_figures(measured)}
-    assert {"features.svg", "features.png", "spectral.svg", "spectral.png"} <= names
+    for cells in kept_features(open_folder(measured)).values():
+        for value in cells.values():
+            assert f">{number(value)}</td>" in page
+
+
+def test_study_without_measures_has_no_such_chart(tiny_study: Path) -> None:
+    study = open_folder(tiny_study)
+    assert feature_figure(study) is None
+    assert spectral_figure(study) is None

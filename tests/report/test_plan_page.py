@@ -11,6 +11,7 @@ from mrics.errors import ReportError
 from mrics.protocol import load_protocol
 from mrics.report import write_plan_page
 from mrics.report.pattern_figures import picture_of, radial_density
+from mrics.report.rendering import write_page
 from mrics.report.words import clock
 from mrics.sampling import draw_pattern
 from mrics.study import StudyPlan, plan_study
@@ -35,9 +36,9 @@ def test_every_arm_stands_with_its_times_and_its_pattern(plan: StudyPlan, tmp_pa
     assert not re.search(r"(src|href)=\"(?!data:|#)", page)
 
 
-def test_plan_page_that_cannot_be_written(plan: StudyPlan, tmp_path: Path) -> None:
+def test_page_that_cannot_be_written_is_named(tmp_path: Path) -> None:
     with pytest.raises(ReportError, match=r"plan\.html cannot be written"):
-        write_plan_page(plan, tmp_path / "nowhere" / "plan.html")
+        write_page(tmp_path / "nowhere" / "plan.html", "text")
 
 
 def test_echoes_lie_where_they_are_acquired(plan: StudyPlan) -> None:
