@@ -16,7 +16,7 @@ import numpy as np
 import mrics
 from mrics.caution import RESEARCH_ONLY
 from mrics.scan import write_nifti
-from mrics.study.aggregate import arm_numbers, overall_verdict
+from mrics.study.aggregate import ArmNumbers, arm_numbers, overall_verdict
 from mrics.study.code_version import code_version
 from mrics.study.files import plain
 from mrics.study.plan import PlanRow, StudyPlan
@@ -81,31 +81,16 @@ def study_results(
     """Everything but the timings: arm numbers are computed from the units alone."""
     protocol = plan.protocol
     by_arm = {row.arm.id: [r for r in results if r["arm"] == row.arm.id] for row in rows}
-    today = next((row.arm.id for row in rows if row.arm.today), None)
-    numbers = arm_numbers(by_arm, protocol.acceptance, today, protocol.study.seed)
-    arms = []
-    for row in rows:
-        units = by_arm[row.arm.id]
-        certificates = [u["certificate"] for u in units]
-        arms.append(
-            {
-                **row.as_dict(),
-                "acceleration": float(np.mean([u["acceleration"] for u in units])),
-                "acceleration_in_shutter": float(
-                    np.mean([u["acceleration_in_shutter"] for u in units])
-                ),
-                "acquired": float(np.mean([u["acquired"] for u in units])),
-                "metrics": numbers[row.arm.id].metrics,
-                "against_today": numbers[row.arm.id].comparisons,
-                "verdict": numbers[row.arm.id].verdict,
-                "certificates": {
-                    "reached": sum(bool(c["reached"]) for c in certificates),
-                    "of": len(certificates),
-                    "certified": all(c["certified"] for c in certificates),
-                    "note": "; ".join(sorted({c["note"] for c in certificates if c["note"]})),
-                },
-            }
-        )
+    finished = {arm: units for arm, units in by_arm.items() if units}
+    today = next((row.arm.id for row in rows if row.arm.today and row.arm.id in finished), None)
+    # Before today's arm has finished, no difference to it can be judged.
+    waits = today is None and any(row.arm.today for row in plan.rows)
+    limits = [x for x in protocol.acceptance if not waits or x.kind in ("mean", "worst")]
+    numbers = arm_numbers(finished, limits, today, protocol.study.seed)
+    arms = [
+        {**row.as_dict(), **_arm_record(row, by_arm[row.arm.id], numbers.get(row.arm.id))}
+        for row in rows
+    ]
     maps = references + [entry for r in results for entry in r["maps"]]
     units_out = [{k: v for k, v in r.items() if k not in ("timing", "maps")} for r in results]
     return {
@@ -126,6 +111,41 @@ def study_results(
         "maps": maps,
         "notes": plan.notes(records),
         "provenance": provenance(protocol.study.seed),
+    }
+
+
+def _arm_record(
+    row: PlanRow, units: list[dict[str, Any]], numbers: ArmNumbers | None
+) -> dict[str, Any]:
+    """Numbers of one arm; an arm of an interrupted run without any unit has those of its plan."""
+    if numbers is None:
+        return {
+            "acceleration": row.pattern.acceleration,
+            "acceleration_in_shutter": row.pattern.acceleration_in_shutter,
+            "acquired": float(row.pattern.acquired),
+            "metrics": {},
+            "against_today": {},
+            "verdict": {
+                "status": "undecided",
+                "limits": [],
+                "confidence": "No unit of an arm is finished.",
+            },
+            "certificates": {"reached": 0, "of": 0, "certified": True, "note": ""},
+        }
+    certificates = [u["certificate"] for u in units]
+    return {
+        "acceleration": float(np.mean([u["acceleration"] for u in units])),
+        "acceleration_in_shutter": float(np.mean([u["acceleration_in_shutter"] for u in units])),
+        "acquired": float(np.mean([u["acquired"] for u in units])),
+        "metrics": numbers.metrics,
+        "against_today": numbers.comparisons,
+        "verdict": numbers.verdict,
+        "certificates": {
+            "reached": sum(bool(c["reached"]) for c in certificates),
+            "of": len(certificates),
+            "certified": all(c["certified"] for c in certificates),
+            "note": "; ".join(sorted({c["note"] for c in certificates if c["note"]})),
+        },
     }
 
 

@@ -6,11 +6,11 @@ import shutil
 import time
 from collections.abc import Callable, Sequence
 from concurrent.futures import BrokenExecutor, Executor, as_completed
-from contextlib import ExitStack
+from contextlib import ExitStack, suppress
 from pathlib import Path
 from typing import Any
 
-from mrics.errors import StudyError
+from mrics.errors import MricsError, StudyError
 from mrics.protocol import Protocol, load_protocol
 from mrics.study.executors import InProcess, cluster_executor, fitting_workers, pool
 from mrics.study.files import plain, write_json, write_text
@@ -78,31 +78,62 @@ def run_study(
     with Ledger(folder) as ledger, _Work(plan, folder, ledger, progress, workers, cluster) as work:
         references = write_references(plan, folder)
         rows = [row for row in plan.rows if not row.arm.search]
-        results = work.run(plan.units(folder, hashes, rows))
-        found = []
-        for family in plan.families().values():
-            visited: dict[str, list[dict[str, Any]]] = {}
+        try:
+            results = work.run(plan.units(folder, hashes, rows))
+            found = []
+            for family in plan.families().values():
+                visited: dict[str, list[dict[str, Any]]] = {}
 
-            def looked_at(
-                row: PlanRow, draws: int, visited: dict[str, list[dict[str, Any]]] = visited
-            ) -> list[dict[str, Any]]:
-                visited[row.arm.id] = work.run(plan.units(folder, hashes, [row], draws))
-                return visited[row.arm.id]
+                def looked_at(
+                    row: PlanRow, draws: int, visited: dict[str, list[dict[str, Any]]] = visited
+                ) -> list[dict[str, Any]]:
+                    visited[row.arm.id] = work.run(plan.units(folder, hashes, [row], draws))
+                    return visited[row.arm.id]
 
-            limits, seed = protocol.acceptance, protocol.study.seed
-            found.append(search_family(family, looked_at, limits, _today(plan, results), seed))
-            rows += [row for row in family if row.arm.id in visited]
-            results += [result for row in family for result in visited.get(row.arm.id, [])]
+                limits, seed = protocol.acceptance, protocol.study.seed
+                found.append(search_family(family, looked_at, limits, _today(plan, results), seed))
+                rows += [row for row in family if row.arm.id in visited]
+                results += [result for row in family for result in visited.get(row.arm.id, [])]
+        except BaseException:
+            # What is finished can be looked at; the cause is what the caller hears of.
+            with suppress(OSError, MricsError):
+                _write_partial(folder, plan, work, records, references, started)
+            raise
         content = study_results(plan, rows, records, results, references)
         content["searches"] = [one.as_dict() for one in found]
-        content["timing"] = {
-            "study_s": time.perf_counter() - started,
-            "units": [{"key": r["key"], **r["timing"]} for r in results],
-        }
-        write_json(folder / "results.json", content)
-        write_text(folder / "results.csv", slice_table(results))
+        _write(folder, content, results, started)
     loaded: dict[str, Any] = plain(content)
     return loaded
+
+
+def _write_partial(
+    folder: Path,
+    plan: StudyPlan,
+    work: _Work,
+    records: list[dict[str, Any]],
+    references: list[dict[str, Any]],
+    started: float,
+) -> None:
+    """Results of the units that an interrupted run has finished, with how many were asked for."""
+    done = work.finished()
+    if done:
+        asked = {unit.arm.id for unit in work.asked}
+        rows = [row for row in plan.rows if row.arm.id in asked]
+        content = study_results(plan, rows, records, done, references)
+        content |= {"searches": [], "units_planned": len(work.asked)}
+        _write(folder, content, done, started)
+
+
+def _write(
+    folder: Path, content: dict[str, Any], results: list[dict[str, Any]], started: float
+) -> None:
+    """Write results.json and results.csv; times stand apart from what is compared."""
+    content["timing"] = {
+        "study_s": time.perf_counter() - started,
+        "units": [{"key": r["key"], **r["timing"]} for r in results],
+    }
+    write_json(folder / "results.json", content)
+    write_text(folder / "results.csv", slice_table(results))
 
 
 def _today(
@@ -135,6 +166,7 @@ class _Work:
         self._cluster = cluster
         self._resources = ExitStack()
         self._executor: Executor | None = None
+        self.asked: list[Unit] = []
         self._total = 0
         self._count = 0
         self._said = False
@@ -148,6 +180,8 @@ class _Work:
 
     def run(self, units: Sequence[Unit]) -> list[dict[str, Any]]:
         """Results of the units, in their order: those of the ledger, and the rest computed."""
+        known = {(u.arm.id, u.key) for u in self.asked}
+        self.asked += [u for u in units if (u.arm.id, u.key) not in known]
         kept = self._ledger.finished(unit.key for unit in units)
         done = {u.key: kept[u.key] for u in units if _usable(u, kept.get(u.key))}
         self._total += len({unit.key for unit in units})
@@ -158,6 +192,11 @@ class _Work:
         waiting = {unit.key: unit for unit in units if unit.key not in done}
         done |= self._compute(list(waiting.values()))
         return [_labelled(done[unit.key], unit) for unit in units]
+
+    def finished(self) -> list[dict[str, Any]]:
+        """Results of those of the units asked for that are finished, in their order."""
+        kept = self._ledger.finished(unit.key for unit in self.asked)
+        return [_labelled(kept[u.key], u) for u in self.asked if _usable(u, kept.get(u.key))]
 
     def _compute(self, waiting: list[Unit]) -> dict[str, dict[str, Any]]:
         if not waiting:
