@@ -110,7 +110,7 @@ def _features(entry: Any) -> list[Feature]:
         _known(key, known, f"[quality] features.{key}")
     rest = {key: value for key, value in entry.items() if key not in ("size_mm", "contrast")}
     sizes, contrasts = (
-        value if isinstance(value, list) else [value]
+        list(value) if isinstance(value, list | tuple) else [value]
         for value in (
             entry.get("size_mm", Feature.size_mm),
             entry.get("contrast", Feature.contrast),

@@ -16,12 +16,14 @@ from mrics.encoding import Acquisition, echo_weights, undersample
 from mrics.encoding.sensitivities import KERNEL
 from mrics.errors import StudyError
 from mrics.protocol import Arm, Protocol, ScanFiles, play_pattern
-from mrics.quality import error_maps, score_planes
+from mrics.quality import score_planes
+from mrics.quality.measuring import Measured, measure
 from mrics.recovery import recover
 from mrics.sampling import Pattern, draw_entry
 from mrics.sampling.ordered import Ordered
-from mrics.scan import Axes, Scan, write_nifti
+from mrics.scan import Axes
 from mrics.study.files import plain
+from mrics.study.maps import write_maps
 from mrics.study.prepare import PlaneChoice, Prepared, prepare
 from mrics.study.scratch import SCRATCH, read_scratch
 
@@ -180,6 +182,9 @@ def _computed(unit: Unit, scan: Prepared) -> dict[str, Any]:
         # The phase of estimated sensitivities is free: magnitudes alone compare.
         image = np.abs(image)
     slices = score_planes(image, scan.stack, scan.body, scan.data_range)
+    measured = _measure(unit, scan, acquisition, recovered.image)
+    if measured is not None:
+        slices = [{**one, **more} for one, more in zip(slices, measured.by_plane, strict=True)]
     certificate = recovered.certificate.as_dict()
     wall_s = certificate.pop("wall_s")
     result: dict[str, Any] = {
@@ -200,12 +205,54 @@ def _computed(unit: Unit, scan: Prepared) -> dict[str, Any]:
             {"index": index, "frame": frame, **values}
             for (frame, index), values in zip(_places(scan), slices, strict=True)
         ],
-        "maps": _write_maps(unit, scan, image, pattern) if unit.keep_maps else [],
-        "timing": {"recovery_s": wall_s, "unit_s": time.perf_counter() - started},
+        "measures": None if measured is None else measured.tables,
+        "maps": [],
+        "timing": {"recovery_s": wall_s},
     }
+    if unit.keep_maps:
+        further = {
+            name: values
+            for name, values in recovered.extras.items()
+            if isinstance(values, np.ndarray) and values.shape == scan.stack.shape
+        }
+        further |= {} if measured is None else measured.maps
+        result["maps"] = write_maps(
+            unit.folder, (unit.arm.id, unit.scan_id, unit.draw), scan, image, pattern, further
+        )
+    if measured is not None:
+        result["timing"]["measures_s"] = measured.seconds
+    result["timing"]["unit_s"] = time.perf_counter() - started
     # The same digits whether a unit was computed now or read back.
     rounded: dict[str, Any] = plain(result)
     return rounded
+
+
+def _measure(unit: Unit, scan: Prepared, acquisition: Acquisition, image: Any) -> Measured | None:
+    """The further measures the protocol asks for; those that recover again on the first draw."""
+    wanted = unit.protocol.measures()
+    if wanted is None:
+        return None
+    if unit.draw > 0:
+        wanted = replace(
+            wanted, noise_replicas=0, resolution_runs=0, features=(), observer_images=0
+        )
+    if scan.sensitivities is not None:
+        # The parts of the error refer to one phase, which estimated sensitivities leave free.
+        wanted = replace(wanted, error_split=False)
+    mm = scan.scan.voxel_mm
+    plane, u, v = (mm[axis] for axis in unit.axes.order)
+    return measure(
+        acquisition,
+        image if scan.sensitivities is None else np.abs(image),
+        scan.stack,
+        (plane, u, v),
+        method=unit.arm.recovery,
+        settings=unit.arm.recovery_settings,
+        measures=wanted,
+        mask=scan.body,
+        data_range=scan.data_range,
+        seed=unit.protocol.study.seed,
+    )
 
 
 def pattern_grid(axes: Axes, shape: tuple[int, ...]) -> tuple[int, ...]:
@@ -254,52 +301,3 @@ def _decay(protocol: Protocol, pattern: Pattern) -> Any:
 
 def _places(scan: Prepared) -> list[tuple[int, int]]:
     return [(frame, index) for frame in range(scan.scan.frames) for index in scan.planes]
-
-
-def _write_maps(
-    unit: Unit, scan: Prepared, image: Any, pattern: Pattern
-) -> list[dict[str, str | int]]:
-    folder = unit.folder / "arms" / unit.arm.id
-    folder.mkdir(parents=True, exist_ok=True)
-    signed, complex_error = error_maps(image, scan.stack)
-    arrays: dict[str, Any] = {
-        "recovered": image if np.iscomplexobj(scan.stack) else np.abs(image),
-        "error": signed,
-    }
-    if complex_error is not None and np.iscomplexobj(scan.stack):
-        arrays["error_complex"] = complex_error
-    written: list[dict[str, str | int]] = []
-    for kind, stack in arrays.items():
-        path = folder / f"{unit.scan_id}_draw{unit.draw}_{kind}.nii.gz"
-        dtype = np.complex64 if np.iscomplexobj(stack) else np.float32
-        write_nifti(path, scan.to_volume(stack.astype(dtype, copy=False)), scan.scan)
-        written.append(_entry(unit, kind, path))
-    for kind, values in _grid_maps(pattern).items():
-        path = folder / f"{unit.scan_id}_draw{unit.draw}_{kind}.nii.gz"
-        if pattern.frames:
-            values = np.moveaxis(values, 0, -1)
-        shape = (*pattern.grid, *(1,) * (3 - len(pattern.grid)))
-        volume = values.reshape(*shape, *values.shape[len(pattern.grid) :])
-        # The phase-encode grid has no place in the patient: unit voxels at the origin.
-        write_nifti(path, volume, Scan(volume, np.eye(4), (1.0, 1.0, 1.0)))
-        written.append(_entry(unit, kind, path))
-    return written
-
-
-def _grid_maps(pattern: Pattern) -> dict[str, Any]:
-    """The mask, and the echo (from 1) that acquires each position where a shot has several."""
-    maps: dict[str, Any] = {"pattern": pattern.mask.astype(np.uint8)}
-    if pattern.order is not None and pattern.order[:, 1].max(initial=0) > 0:
-        maps["order"] = np.zeros(pattern.mask.shape, dtype=np.int16)
-        maps["order"][pattern.mask] = pattern.order[:, 1] + 1
-    return maps
-
-
-def _entry(unit: Unit, kind: str, path: Path) -> dict[str, str | int]:
-    return {
-        "kind": kind,
-        "scan": unit.scan_id,
-        "arm": unit.arm.id,
-        "draw": unit.draw,
-        "file": path.relative_to(unit.folder).as_posix(),
-    }
