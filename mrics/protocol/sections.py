@@ -132,7 +132,8 @@ class Sequence(Section):
     whole_shots: Literal["add", "drop", "idle"] | None = Field(
         None,
         description="how the count is made whole shots: add the next most probable positions, "
-        "drop the least probable, or leave echoes idle (default: add; idle for regular patterns)",
+        "drop the least probable, or leave echoes idle (default: add; drop for poisson-disc; idle "
+        "for regular patterns)",
     )
     dummy_shots: Annotated[int, Field(ge=0, le=10000)] = Field(
         0, description="shots played before data are kept"

@@ -95,7 +95,7 @@ def windows(study: StudyFolder, pictures: list[ScanPictures]) -> dict[str, Windo
             if at is not None:
                 error = np.abs(one.image[at] - scan.reference[at])
                 inside = error[scan.body[at]]
-                ratios.append(float(np.percentile(inside, 99)) / width if inside.size else 0.0)
+                ratios.append(float(np.percentile(inside, 97)) / width if inside.size else 0.0)
     factor = error_factor(ratios)
     return {scan: Window(*ends, factor) for scan, ends in grey.items()}
 

@@ -215,8 +215,8 @@ def open_folder(directory: str | Path) -> StudyFolder:
         raise ReportError(
             f"{folder} holds no results.json.",
             str(path),
-            "Give the folder that `mrics run PROTOCOL --out DIR` wrote; a run that was killed is gone "
-            "on with by the same command, and finished units are kept.",
+            "Give the folder that `mrics run PROTOCOL --out DIR` wrote; the same command goes on "
+            "with a run that was killed, and finished units are kept.",
         )
     try:
         results = json.loads(path.read_text(encoding="utf-8"))

@@ -68,7 +68,7 @@ def error_factor(ratios: list[float]) -> int:
     Parameters
     ----------
     ratios : list of float
-        99th percentile of |error| in the body / window width, one per arm and scan; exact
+        97th percentile of |error| in the body / window width, one per arm and scan; exact
         recoveries (0) do not count.
     """
     counted = [r for r in ratios if r > 1e-6]

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 from mrics.report.arms import axis_name
 from mrics.report.pattern_figures import pattern_figure, picture_of
 from mrics.report.rendering import render, write_page
+from mrics.report.spread_figures import spread_facts, spread_figure
 from mrics.report.style_figures import svg_uri
 
 if TYPE_CHECKING:
@@ -53,4 +54,9 @@ def _picture(row: PlanRow, plan: StudyPlan) -> dict[str, Any]:
     """Pictures of one pattern; arms that differ in recovery alone share them."""
     grid = {"phase_axis": plan.axes.phase, "partition_axis": plan.axes.partition}
     picture = picture_of(row.pattern, axis_name("phase", grid), axis_name("partition", grid))
-    return {"figure": svg_uri(pattern_figure(picture)), "text": picture.sentence}
+    return {
+        "figure": svg_uri(pattern_figure(picture)),
+        "text": picture.sentence,
+        "detail": svg_uri(spread_figure(picture, row.played)),
+        "facts": spread_facts(picture, row.played),
+    }

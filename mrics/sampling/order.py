@@ -60,7 +60,8 @@ def order_pattern(
     whole_shots : str, optional
         How the count is made whole shots: "add" the next most probable positions, "drop" the
         least probable ones, or leave echoes "idle" and the pattern as drawn. Default: "add" for
-        random patterns, "idle" for regular ones, whose lattice it keeps.
+        random patterns ("drop" for Poisson-disc, whose distances it keeps), "idle" for regular
+        ones, whose lattice it keeps.
 
     Raises
     ------
@@ -69,7 +70,7 @@ def order_pattern(
         fit the pattern, or positions that cannot be dropped.
     """
     _check(pattern, train_length, scheme, spacing_ms, whole_shots)
-    rule = whole_shots or ("add" if pattern.probability is not None else "idle")
+    rule = whole_shots or _usual_rule(pattern)
     rounded = fill_shots(pattern, train_length, rule)
     masks = rounded.mask if pattern.frames else rounded.mask[None]
     wanted = _wanted_echo(train_length, spacing_ms, echo_time_ms, first_ms)
@@ -107,6 +108,14 @@ def order_pattern(
         echo_jumps=echo_jumps,
         shot_jumps=shot_jumps,
     )
+
+
+def _usual_rule(pattern: Pattern) -> str:
+    """Add positions to random patterns, none to regular ones, and keep the distances of discs."""
+    if pattern.probability is None:
+        return "idle"
+    # A position added to a Poisson-disc pattern may lie too close to another; none dropped does.
+    return "drop" if pattern.settings.get("draw") == "poisson-disc" else "add"
 
 
 def _check(

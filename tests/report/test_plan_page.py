@@ -31,7 +31,9 @@ def test_every_arm_stands_with_its_times_and_its_pattern(plan: StudyPlan, tmp_pa
         assert f">{row.pattern.acquired}</td>" in page
         assert f">{clock(row.timing.scan_time_s)}</td>" in page
     different = {row.pattern.hash for row in plan.rows}
-    assert page.count("<img ") == len(different) < len(plan.rows)
+    assert page.count("<figure id=") == len(different) < len(plan.rows)
+    assert page.count("Spread and order in detail") == len(different)
+    assert "largest side lobe / peak" in page
     assert page.count(RESEARCH_ONLY) == 2
     assert not re.search(r"(src|href)=\"(?!data:|#)", page)
 

@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from mrics.errors import PatternError
-from mrics.sampling import Pattern, draw_entry
+from mrics.sampling import Pattern, draw_entry, draw_pattern
 from mrics.sampling.order import SCHEMES, order_pattern
 from mrics.sampling.ordered import kept_order, squared_radius
 
@@ -290,3 +290,11 @@ def test_bad_input(plane, keys, says):
 def test_sectors_need_two_axes(line):
     with pytest.raises(PatternError, match="'radial-sector' needs a 2-D pattern"):
         order_pattern(line, train_length=8, scheme="radial-sector")
+
+
+def test_whole_shots_keep_the_distances_of_poisson_discs():
+    pattern = draw_pattern((64, 48), draw="poisson-disc", acceleration=4, calibration=8, seed=2)
+    played = order_pattern(pattern, train_length=25, scheme="radial-sector").pattern
+    assert played.settings["whole_shots"] == "drop"
+    assert not (played.mask & ~pattern.mask).any()
+    assert played.acquired % 25 == 0

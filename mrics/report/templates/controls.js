@@ -289,6 +289,20 @@ function goToRanked(share) {
   if (order.length) goTo(order[Math.floor(share * order.length)]);
 }
 
+// Some maps are measured in few slices: go to the nearest one that has values.
+async function showMeasured() {
+  refresh();
+  const facts = mapOf(state.arm);
+  if (!facts) return;
+  const numbers = await numbersOf(facts);
+  const size = scan().rows * scan().columns;
+  const filled = scan().slices
+    .map((_, i) => i)
+    .filter((i) => numbers.subarray(i * size, (i + 1) * size).some((n) => n > 0));
+  if (!filled.length || filled.includes(state.slice)) return;
+  goTo(filled.reduce((a, b) => (Math.abs(b - state.slice) < Math.abs(a - state.slice) ? b : a)));
+}
+
 // A slice that a table names; the nearest one held where the page holds only some.
 function showSlice({ scan: name, arm, draw, plane, frame }) {
   const number = study.scans.findIndex((s) => s.id === name);
@@ -316,7 +330,7 @@ function startViewer() {
   on("v-arm", "change", (e) => { state.arm = e.target.value; refresh(); });
   on("v-other", "change", (e) => { state.other = e.target.value; state.turn = 0; refresh(); });
   on("v-draw", "change", (e) => { state.draw = Number(e.target.value); refresh(); });
-  on("v-map", "change", (e) => { state.map = e.target.value; refresh(); });
+  on("v-map", "change", (e) => { state.map = e.target.value; showMeasured(); });
   on("v-metric", "change", (e) => { state.metric = e.target.value; refresh(); });
   on("v-slice", "input", (e) => goTo(Number(e.target.value), false));
   on("v-worst", "click", () => goToRanked(0));

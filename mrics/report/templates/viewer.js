@@ -141,7 +141,9 @@ async function draw() {
       context.fillStyle = "#e69f00";
       context.fillRect(Math.round(state.edge * canvas.width) - 1, 0, 3, canvas.height);
     }
-    panels[index].title.textContent = title;
+    const plane = (numbers) => numbers.subarray(start, start + s.rows * s.columns);
+    const empty = kind === "measure" && !plane(measured[a]).some((n) => n > 0);
+    panels[index].title.textContent = empty ? `not measured in this slice: ${title}` : title;
     canvas.setAttribute("role", "img");
     canvas.setAttribute("aria-label", `${title}, ${s.name}, ${sliceName(state.slice)}`);
   });
