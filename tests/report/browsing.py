@@ -6,6 +6,7 @@ import base64
 import os
 import shutil
 import tempfile
+from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
@@ -90,6 +91,12 @@ class Page:
 
         find = "return document.getElementById('v-stage').dataset.painted || ''"
         return str(WebDriverWait(self.browser, 20, 0.02).until(lambda _: self.script(find)))
+
+    def wait_for(self, condition: Callable[[], bool]) -> None:
+        """Wait until something holds; fail after 20 s."""
+        from selenium.webdriver.support.ui import WebDriverWait
+
+        WebDriverWait(self.browser, 20, 0.02).until(lambda _: condition())
 
     def keys(self, *keys: str) -> str:
         """Press keys in the stage, wait for the drawing."""

@@ -365,7 +365,9 @@ def test_further_maps_are_shown_on_one_scale_with_gaps(browser: Any, tmp_path: P
     table = one_signed_table().astype(int)
     top = facts(page)["scans"][0]["maps"][0]["top"]
     assert top == pytest.approx(np.percentile(gain[1:], 99.9), rel=0.01)
+    page.keys(HOME)
     page.choose("#v-map", "noise_gain")
+    page.wait_for(lambda: page.painted().split()[1] == "1")
     for arm, scale in zip(results["arms"], (1.0, 0.5), strict=True):
         page.choose("#v-arm", arm["id"])
         page.keys(HOME, UP)
