@@ -17,6 +17,12 @@ from mrics.report.charts import draw_against_acceleration, draw_by_slice
 from mrics.report.colours import FAIL, INK, MUTED
 from mrics.report.folder import StudyFolder, open_folder
 from mrics.report.image_figures import draw_panels
+from mrics.report.measure_charts import (
+    draw_features,
+    draw_spectral,
+    kept_features,
+    spectral_curves,
+)
 from mrics.report.pattern_figures import draw_pattern_picture
 from mrics.report.pictures import load_pictures
 from mrics.report.style_figures import figure_style
@@ -100,6 +106,8 @@ def _pages(study: StudyFolder) -> Iterator[Callable[[Any], None]]:
     charted = charted_metrics(study)
     if charted:
         yield partial(_chart_page, study=study, metrics=charted)
+    if kept_features(study) or spectral_curves(study):
+        yield partial(_measures_page, study=study)
     for view in arm_views(study, pictures, windows(study, pictures)):
         yield partial(_arm_page, study=study, view=view)
     yield from _text_pages(list(_appendix(study)))
@@ -183,6 +191,19 @@ def _chart_page(figure: Any, study: StudyFolder, metrics: Any) -> None:
     height = min(0.84, 0.2 * rows + 0.08)
     (area,) = _bands(figure, 0.91, 0.91 - height)
     draw_against_acceleration(area, study, metrics)
+
+
+def _measures_page(figure: Any, study: StudyFolder) -> None:
+    upper, lower = _bands(figure, 0.91, 0.53, 0.47, 0.08)
+    head: Any = {"fontsize": 13, "weight": "bold", "va": "top"}
+    if kept_features(study):
+        figure.text(
+            _LEFT, _TOP, "Small features that survive", fontsize=13, weight="bold", va="top"
+        )
+        draw_features(upper, study)
+    if spectral_curves(study):
+        figure.text(_LEFT, 0.5, "Error by fineness of detail", **head)
+        draw_spectral(lower, study)
 
 
 def _arm_page(figure: Any, study: StudyFolder, view: ArmView) -> None:

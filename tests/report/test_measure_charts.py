@@ -1,6 +1,7 @@
 """Charts of kept features and of error by frequency, from measures taken by the quality room."""
 
 import json
+import re
 import shutil
 from pathlib import Path
 
@@ -12,7 +13,7 @@ from mrics.encoding import undersample
 from mrics.quality import Measures, measure
 from mrics.quality.features import Feature
 from mrics.recovery import recover
-from mrics.report import write_report
+from mrics.report import write_document, write_report
 from mrics.report.folder import open_folder
 from mrics.report.measure_charts import (
     feature_figure,
@@ -64,6 +65,14 @@ def test_page_holds_both_charts_and_their_numbers(measured: Path) -> None:
     for cells in kept_features(open_folder(measured)).values():
         for value in cells.values():
             assert f">{number(value)}</td>" in page
+
+
+def test_document_has_a_page_of_them(measured: Path, tiny_study: Path) -> None:
+    pages = [
+        len(re.findall(rb"/Type\s*/Page\b(?!s)", write_document(folder).read_bytes()))
+        for folder in (measured, tiny_study)
+    ]
+    assert pages[0] == pages[1] + 1
 
 
 def test_study_without_measures_has_no_such_chart(tiny_study: Path) -> None:
