@@ -267,18 +267,54 @@ def inspect(
     imaginary: Annotated[
         Path | None, typer.Option("--imaginary", help="Imaginary part of a single real scan.")
     ] = None,
+    axes: Annotated[
+        str, typer.Option("--axes", help="File axes of readout, phase (and partition).")
+    ] = "ij",
+    remedied: Annotated[
+        Path | None, typer.Option("--remedied", help="Also write the scan with its remedies here.")
+    ] = None,
 ) -> None:
     """What was done to a scan before it came here, and what that does to a study.
 
     Example: mrics inspect knee_mag.nii.gz --phase knee_phase.nii.gz
     """
     from mrics.cli.tables import inspection_lines
-    from mrics.scan import Axes, inspect_scan, read_scan
+    from mrics.cli.writing import read_axes, write_remedied
+    from mrics.scan import read_scan
+    from mrics.scan.fitness import inspect_fully
 
     for path in scans:
         scan = read_scan(path, phase=phase, imaginary=imaginary)
-        typer.echo(inspection_lines(scan, inspect_scan(scan, Axes())))
+        inspection = inspect_fully(scan, read_axes(axes))
+        typer.echo(inspection_lines(scan, inspection))
+        if remedied is not None:
+            told = write_remedied(scan, inspection, remedied)
+            typer.echo(f"written: {remedied} ({'; '.join(told) or 'nothing to remedy'})")
+            break
     typer.echo(RESEARCH_ONLY)
+
+
+@app.command()
+def optimism(
+    protocol: ProtocolFile,
+    out: Annotated[Path, typer.Option("--out", help="Folder for both studies.")],
+    quick: Quick = False,
+    workers: Workers = None,
+) -> None:
+    """The same study on the scans as they are and on the scans remedied, and the difference.
+
+    Example: mrics optimism knee.toml --out knee-optimism
+    """
+    from mrics.cli.progress import progress_line
+    from mrics.cli.tables import optimism_lines
+    from mrics.protocol import load_protocol
+    from mrics.study import optimism as compare_with_remedied
+
+    with progress_line() as progress:
+        rows = compare_with_remedied(
+            load_protocol(protocol), out, quick=quick, workers=workers, progress=progress
+        )
+    typer.echo(f"{optimism_lines(rows)}\n{RESEARCH_ONLY}")
 
 
 def _run(protocol: Path, out: Path, **settings: Any) -> dict[str, Any]:

@@ -7,8 +7,10 @@ from collections.abc import Sequence
 from typing import Any
 
 from mrics.protocol import minutes
-from mrics.scan import Finding, Scan
+from mrics.scan import Scan
+from mrics.scan.fitness import Inspection
 from mrics.study import Difference, StudyPlan
+from mrics.study.as_is import Optimism
 
 WIDTH = 100
 
@@ -111,11 +113,12 @@ def difference_lines(difference: Difference) -> str:
     return "\n".join(lines) if lines else "no difference"
 
 
-def inspection_lines(scan: Scan, findings: Sequence[Finding]) -> str:
+def inspection_lines(scan: Scan, inspection: Inspection) -> str:
     """A scan's findings: what, where, how sure, which way it biases a study, what to do."""
     shape = " x ".join(str(n) for n in scan.shape)
-    lines = [f"{scan.name}: {shape}, {scan.complex_source}"]
-    for finding in findings:
+    noise = f"SNR {inspection.snr:.3g} (sigma {inspection.noise.sigma:.3g})"
+    lines = [f"{scan.name}: {shape}, {scan.complex_source}, {noise}"]
+    for finding in inspection.findings:
         parts = [
             f"{finding.code} ({finding.where}): {finding.what}",
             f"statistic {finding.statistic:.4g}, threshold {finding.threshold:.4g}",
@@ -123,13 +126,29 @@ def inspection_lines(scan: Scan, findings: Sequence[Finding]) -> str:
             f"what to do: {finding.advice}",
         ]
         for number, part in enumerate(parts):
-            indent = "  " if number == 0 else "    "
-            lines += textwrap.wrap(
-                part, WIDTH, initial_indent=indent, subsequent_indent=indent + "  "
-            )
-    if not findings:
+            lines += _wrapped(part, "  " if number == 0 else "    ")
+    if not inspection.findings:
         lines.append("  nothing found")
+    for text in inspection.cannot_be_told:
+        lines += _wrapped(f"cannot be told: {text}", "  ")
     return "\n".join(lines)
+
+
+def optimism_lines(rows: Sequence[Optimism]) -> str:
+    """Scans as they are against scans remedied, a line per arm and metric."""
+    lines = ["arm, metric: as is, remedied, difference [95 % interval]"]
+    for row in rows:
+        interval = "" if row.low is None else f" [{row.low:.4g}, {row.high:.4g}]"
+        side = "flattered" if row.flatters else "not flattered"
+        lines.append(
+            f"{row.arm}, {row.metric}: {row.as_is:.4g}, {row.remedied:.4g}, "
+            f"{row.difference:+.4g}{interval}, {side}"
+        )
+    return "\n".join(lines)
+
+
+def _wrapped(text: str, indent: str) -> list[str]:
+    return textwrap.wrap(text, WIDTH, initial_indent=indent, subsequent_indent=indent + "  ")
 
 
 def certificate_lines(content: dict[str, Any]) -> str:

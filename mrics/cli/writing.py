@@ -8,7 +8,9 @@ from pathlib import Path
 from typing import Any
 
 from mrics.errors import RecoveryError, StudyError
-from mrics.scan import Axes
+from mrics.scan import Axes, Scan, write_nifti
+from mrics.scan.fitness import Inspection
+from mrics.scan.remedies import remedied
 from mrics.study.files import write_text
 
 
@@ -55,3 +57,10 @@ def read_axes(letters: str | None) -> Axes | None:
             "Give readout and phase, and the partition for 3-D: for example ij or ijk.",
         )
     return Axes(letters[0], letters[1], letters[2] if len(letters) == 3 else None)
+
+
+def write_remedied(scan: Scan, inspection: Inspection, path: Path) -> tuple[str, ...]:
+    """Write the scan with the remedies its findings ask for; say which."""
+    after = remedied(scan, inspection.findings, sigma=inspection.noise.sigma)
+    write_nifti(path, after.data, after)
+    return tuple(after.remedies)
