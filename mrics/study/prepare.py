@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
+from collections import OrderedDict
 from dataclasses import dataclass, replace
-from functools import lru_cache
 from typing import Any, NamedTuple
 
 import numpy as np
@@ -115,7 +115,11 @@ class Prepared:
         return self.axes.from_planes(whole.reshape(-1, *stack.shape[1:]), shape)
 
 
-@lru_cache(maxsize=1)
+# Prepared scans of this process, most recently used last; small ones are kept side by side.
+_kept: OrderedDict[tuple[object, ...], Prepared] = OrderedDict()
+_KEPT_BYTES = 256 * 2**20
+
+
 def prepare(
     files: ScanFiles,
     axes: Axes,
@@ -124,10 +128,10 @@ def prepare(
     coils: CoilSection | None = None,
     seed: int = 0,
 ) -> Prepared:
-    """Read a scan and take from it what its units need; the last one is kept.
+    """Read a scan and take from it what its units need; kept until others need the room.
 
-    ``coils`` puts a simulated receive array (and, on magnitude scans, a smooth phase of that seed)
-    on a scan of one channel.
+    A file that changed since is read again. ``coils`` puts a simulated receive array (and, on
+    magnitude scans, a smooth phase of that seed) on a scan of one channel.
 
     Raises
     ------
@@ -136,6 +140,42 @@ def prepare(
     StudyError
         Where no plane holds body, or a named slice does not exist.
     """
+    key = (files, axes, choice, channel_axis, coils, seed, _signature(files))
+    if key in _kept:
+        _kept.move_to_end(key)
+        return _kept[key]
+    prepared = _prepare(files, axes, choice, channel_axis, coils, seed)
+    _kept[key] = prepared
+    while len(_kept) > 1 and sum(_size(one) for one in _kept.values()) > _KEPT_BYTES:
+        _kept.popitem(last=False)
+    return prepared
+
+
+def _signature(files: ScanFiles) -> tuple[object, ...]:
+    """Size and time of change of the files; a missing one is told apart when it is read."""
+    found: list[object] = []
+    for path in (files.path, files.phase, files.imaginary):
+        if path is not None and path.exists():
+            state = path.stat()
+            found += [state.st_size, state.st_mtime_ns]
+        else:
+            found.append(None)
+    return tuple(found)
+
+
+def _size(prepared: Prepared) -> int:
+    arrays = (prepared.scan.data, prepared.stack, prepared.body, prepared.sensitivities)
+    return sum(array.nbytes for array in arrays if array is not None)
+
+
+def _prepare(
+    files: ScanFiles,
+    axes: Axes,
+    choice: PlaneChoice,
+    channel_axis: int | None,
+    coils: CoilSection | None,
+    seed: int,
+) -> Prepared:
     scan = read_scan(
         files.path, phase=files.phase, imaginary=files.imaginary, channel_axis=channel_axis
     )
