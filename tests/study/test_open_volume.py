@@ -11,22 +11,22 @@ from mrics.report import run_study
 PROTOCOL = """\
 [protocol]
 title = "Head, T1, open volume"
-question = "What do half and a third of the lines cost?"
+question = "What do half and a third of the positions cost?"
 [sequence]
-family = "gradient-echo-2d"
-repetition_time_ms = 300.0
+family = "gradient-echo-3d"
+repetition_time_ms = 10.0
 echo_time_ms = 4.0
-slice_time_ms = 10.0
 [grid]
-readout_axis = "j"
+readout_axis = "k"
 phase_axis = "i"
+partition_axis = "j"
 [[sampling]]
 name = "power law"
 law = "power"
-exponent = 2.0
+exponent = 3.0
 draw = "exact-count"
 acceleration = [2, 3]
-calibration = 14
+calibration = 16
 [[recovery]]
 method = "zero-filled"
 [[recovery]]
