@@ -117,8 +117,9 @@ def recover_sparse(
         largest = np.abs(first).max(axis=0, initial=0.0)
         limit = np.where(limit > 0, limit, 1e-7 * largest)
         top = bound if bound is not None else _bound(pair, first)
+        problem = _Problem(*pair, columns, limit, largest, top, np.zeros_like(first))
         solve = _l1 if method == "l1" else _lca
-        found = solve(pair, columns, limit, largest, top, first, iterations, tolerance)
+        found = solve(problem, iterations, tolerance)
     x = found.x if np.asarray(data).ndim > 1 else found.x[:, 0]
     return SparseResult(x, found.iterations, found.gap, found.reached, found.weight)
 
@@ -126,61 +127,63 @@ def recover_sparse(
 Pair = tuple[Operator, Operator]
 
 
-def _l1(
-    pair: Pair,
-    data: Array,
-    weights: Array,
-    largest: Array,
-    bound: float,
-    first: Array,
-    iterations: int,
-    tolerance: float,
-) -> SparseResult:
+@dataclass(frozen=True)
+class _Problem:
+    """The L1 objective of every column, with what its solvers share."""
+
+    forward: Operator
+    adjoint: Operator
+    data: Array
+    weights: Array
+    largest: Array
+    bound: float
+    zero: Array
+
+    def gap(self, x: Array) -> Array:
+        return lasso_gap(self.forward, self.adjoint, self.data, x, self.weights)
+
+
+def _l1(problem: _Problem, iterations: int, tolerance: float) -> SparseResult:
     """Down from the weight that gives zero, each solution the start of the next."""
-    x = np.zeros_like(first)
-    done = 0
-    current = np.maximum(weights, _FALL * largest)
+    weights, x, done = problem.weights, problem.zero, 0
+    current = np.maximum(weights, _FALL * problem.largest)
     while True:
         last = bool((current <= weights).all())
         x, ran, gap = proximal_gradient(
-            *pair, data, current, bound, x, iterations - done, tolerance if last else 1e-2
+            problem.forward,
+            problem.adjoint,
+            problem.data,
+            current,
+            problem.bound,
+            x,
+            iterations - done,
+            tolerance if last else 1e-2,
         )
         done += ran
         if last or done >= iterations:
             break
         current = np.maximum(weights, _FALL * current)
     if not last:
-        gap = lasso_gap(*pair, data, x, weights)
+        gap = problem.gap(x)
     return SparseResult(x, done, gap, bool((gap <= tolerance).all()), weights)
 
 
-def _lca(
-    pair: Pair,
-    data: Array,
-    weights: Array,
-    largest: Array,
-    bound: float,
-    first: Array,
-    iterations: int,
-    tolerance: float,
-) -> SparseResult:
+def _lca(problem: _Problem, iterations: int, tolerance: float) -> SparseResult:
     """Euler steps dt / tau = 1 / bound, at which the dynamics contract."""
-    forward, adjoint = pair
-    rate = 1.0 / max(1.0, bound)
-    state = np.zeros_like(first)
-    active = np.zeros_like(first)
-    gap = np.full(data.shape[1], np.inf)
+    rate = 1.0 / max(1.0, problem.bound)
+    state, active = problem.zero.copy(), problem.zero
+    gap = np.full(problem.data.shape[1], np.inf)
     done = 0
     while done < iterations:
         done += 1
-        drive = adjoint(data - forward(active))
+        drive = problem.adjoint(problem.data - problem.forward(active))
         state += rate * (drive + active - state)
-        active = shrink(state, weights)
+        active = shrink(state, problem.weights)
         if done % 10 == 0 or done == iterations:
-            gap = lasso_gap(forward, adjoint, data, active, weights)
+            gap = problem.gap(active)
             if (gap <= tolerance).all():
                 break
-    return SparseResult(active, done, gap, bool((gap <= tolerance).all()), weights)
+    return SparseResult(active, done, gap, bool((gap <= tolerance).all()), problem.weights)
 
 
 def _minimum_norm(pair: Pair, data: Array, iterations: int, tolerance: float) -> SparseResult:

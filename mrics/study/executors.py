@@ -3,16 +3,15 @@
 from __future__ import annotations
 
 import multiprocessing
-import os
 import signal
 from collections.abc import Callable, Iterator
 from concurrent.futures import Executor, Future, ProcessPoolExecutor
 from contextlib import contextmanager
-from pathlib import Path
 from typing import Any
 
 from mrics.errors import StudyError
 from mrics.numerics import set_threads, threads
+from mrics.numerics.memory import available_memory
 
 # A unit holds the reference, k-space, its un-centred block, the image and the maps.
 _COPIES_OF_A_SCAN = 8
@@ -93,14 +92,4 @@ def cluster_executor(address: str, timeout_s: float = 10.0) -> Iterator[Executor
 def fitting_workers(scan_bytes: int, units: int) -> int:
     """Processes that the cores, the units and the free memory allow; at least one."""
     need = _PROCESS_BYTES + _COPIES_OF_A_SCAN * scan_bytes
-    return max(1, min(threads(), units, int(_free_bytes() * 0.8) // need))
-
-
-def _free_bytes() -> int:
-    try:
-        for line in Path("/proc/meminfo").read_text().splitlines():
-            if line.startswith("MemAvailable:"):
-                return int(line.split()[1]) * 1024
-    except OSError:
-        pass
-    return int(os.sysconf("SC_PAGE_SIZE") * os.sysconf("SC_PHYS_PAGES") // 2)
+    return max(1, min(threads(), units, int(available_memory() * 0.8) // need))
