@@ -20,7 +20,7 @@ from mrics.recovery import kernels
 
 Array = NDArray[Any]
 #: penalty of the splitting u = F S x with several channels, relative to the largest sum |S|^2
-_CHANNEL_PENALTY = 0.3
+_CHANNEL_PENALTY = 0.1
 
 
 class PlaneModel:

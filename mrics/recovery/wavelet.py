@@ -9,8 +9,12 @@ padded plane (synthesis form):
 Complex coefficients are shrunk by modulus; the coarsest approximation is not shrunk. Where the
 plane needs no padding this equals the analysis form.
 
+Full cycle spinning (``shift="full"``), certified: the penalty is the mean of the plain one over all
+shifts of the plane (Coifman & Donoho 1995), which is the weighted L1 norm of the undecimated
+bands (see ``frame``); the unknown is the image itself, on planes of any size.
+
 Random shifts (``shift="random"``): the transform is moved by a random shift in every iteration
-(translation-invariant denoising, Coifman & Donoho 1995, spread over the iterations). There is no
+(cycle spinning spread over the iterations). There is no
 fixed objective, so it is not certified.
 """
 
@@ -28,10 +32,11 @@ from mrics.numerics.wavelets import PlaneWavelet
 from mrics.recovery import kernels
 from mrics.recovery.contract import Certificate, Recovered
 from mrics.recovery.convex import ITERATIONS, certify, run_planes
+from mrics.recovery.frame import FrameWavelet
 from mrics.recovery.penalties import OrthonormalWavelet, bands_of, levels_for, padded_shape
 from mrics.recovery.plane import PlaneModel, each_plane, scale_unit
 from mrics.recovery.settings import Wavelet
-from mrics.recovery.splitting import PlaneResult
+from mrics.recovery.splitting import Penalty, PlaneResult
 
 Array = NDArray[Any]
 #: iterations of the shifting variant, and over how many its change is averaged
@@ -48,15 +53,22 @@ def solve(acquisition: Acquisition, settings: Wavelet, sigma: float) -> Recovere
     if settings.shift == "random":
         return _shifting(acquisition, settings, weight, rule, weight * sigma)
     levels = settings.levels or levels_for(acquisition.shape[1:])
+    full = settings.shift == "full"
+    kind = FrameWavelet if full else OrthonormalWavelet
+
+    def make(grid: tuple[int, int], real: Any) -> Penalty:
+        return kind(grid, real, settings.wavelet, levels)
+
     image, results = run_planes(
         acquisition,
-        lambda grid, real: OrthonormalWavelet(grid, real, settings.wavelet, levels),
+        make,
         weight * sigma,
         settings.iterations or ITERATIONS,
         settings.tolerance,
-        hybrid=True,
+        hybrid=not full,
     )
-    return certify("wavelet", image, results, settings.tolerance, weight, rule)
+    note = "full cycle spinning" if full else ""
+    return certify("wavelet", image, results, settings.tolerance, weight, rule, note)
 
 
 def _shifting(

@@ -14,6 +14,7 @@ VARIANTS = [
     ("least-squares", {}),
     ("wavelet", {}),
     ("wavelet", {"shift": "none"}),
+    ("wavelet", {"shift": "full", "tolerance": 1e-2}),
     ("variation", {}),
 ]
 
