@@ -101,8 +101,9 @@ class Wavelet(Settings):
     levels : int or None
         Levels; None for as many as leave at least 5 samples, at most 4.
     shift : str
-        "none": one fixed transform, certified. "random": a random shift in every iteration,
-        nearly translation-invariant, without a fixed objective.
+        "none": one fixed transform, certified. "full": the mean over all shifts,
+        translation-invariant, certified. "random": a random shift in every iteration, nearly
+        translation-invariant and fast, without a fixed objective.
     iterations : int or None
         Most iterations; None for 300, and for 60 where shifts are random.
     tolerance : float
@@ -114,7 +115,7 @@ class Wavelet(Settings):
     weight: float | str = _number("auto", 0.0, above=True, words=("auto",))
     wavelet: str = _choice("sym4", WAVELETS)
     levels: int | None = _number(None, 1, 12, whole=True, optional=True)
-    shift: str = _choice("random", ("none", "random"))
+    shift: str = _choice("random", ("none", "random", "full"))
     iterations: int | None = _number(None, 1, 100_000, whole=True, optional=True)
     tolerance: float = _number(1e-3, 0.0, 1.0, above=True)
     seed: int = _number(0, 0, whole=True)
