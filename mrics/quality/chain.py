@@ -27,7 +27,7 @@ Array = NDArray[Any]
 Progress = Callable[[int, int], None]
 
 #: recoveries whose image is a linear function of the data, so that no result depends on them
-LINEAR = frozenset({"zero-filled", "least-squares"})
+LINEAR = frozenset({"zero-filled", "least-squares", "unfold"})
 _BATCH_BYTES = 96 * 2**20
 
 
@@ -62,7 +62,8 @@ class Chain:
         first = recover(acquisition, method, **settings)
         self.seconds = perf_counter() - started
         chosen = first.certificate.weight
-        names = {entry.name for entry in fields(check_settings(method, settings))}
+        checked = check_settings(method, settings)
+        names = {entry.name for entry in fields(checked)}
         self.method = method
         self.settings = dict(settings)
         if "weight" in names and chosen is not None:
@@ -72,7 +73,7 @@ class Chain:
         self.acquisition = replace(acquisition, sigma_scan=self.sigma, sigma_added=0.0)
         self.runs = 1
         # A method with random parts draws them by plane number, so planes must keep theirs.
-        self._batched = "seed" not in names or self.settings.get("shift", "none") == "none"
+        self._batched = "seed" not in names or getattr(checked, "shift", "random") != "random"
         self._root = _noise_root(acquisition)
 
     @property

@@ -146,6 +146,8 @@ def _find(
     reach: float,
 ) -> Array:
     """Strongest edges, a profile's length apart, whose profile has flat ends and one rise."""
+    from scipy.ndimage import maximum_filter
+
     smooth = smoothed(np.abs(reference).astype(np.float64), 0.7)
     slope_u, slope_v = (
         np.gradient(smooth, step, axis=axis) for axis, step in ((1, voxel_mm[0]), (2, voxel_mm[1]))
@@ -156,11 +158,12 @@ def _find(
     margin = [int(np.ceil(reach / step)) + 1 for step in voxel_mm]
     allowed = np.zeros(strength.shape, dtype=bool)
     allowed[:, margin[0] : -margin[0], margin[1] : -margin[1]] = True
-    strength = np.where(allowed, strength, 0.0)
+    crest = allowed & (strength > 0.0) & (strength == maximum_filter(strength, (1, 5, 5)))
+    candidates = np.argwhere(crest)
+    order = np.argsort(strength[crest], kind="stable")[::-1]
     found: list[Array] = []
-    for at in np.argsort(strength, axis=None)[::-1][: 400 * count]:
-        plane, u, v = (int(i) for i in np.unravel_index(at, strength.shape))
-        if strength[plane, u, v] <= 0.0 or len(found) == count:
+    for plane, u, v in candidates[order]:
+        if len(found) == count:
             break
         edge = np.array(
             [plane, u, v, np.rad2deg(np.arctan2(slope_v[plane, u, v], slope_u[plane, u, v]))]

@@ -1,0 +1,160 @@
+"""All measures of a unit together, and the table that asks for them."""
+
+import json
+
+import numpy as np
+import pytest
+from chains import acquire, body, phantom
+
+from mrics.errors import QualityError
+from mrics.quality import METRICS, Measures, measure, measures_from
+from mrics.quality.features import Feature
+from mrics.quality.measuring import choose_planes
+from mrics.recovery import recover
+
+MM = (3.0, 1.0, 1.0)
+SHAPE = (4, 128, 120)
+EVERYTHING = {
+    "edges": True,
+    "noise_replicas": 4,
+    "resolution_runs": 2,
+    "features": [{"shape": "disc", "size_mm": [2, 4], "contrast": [20]}],
+    "feature_sites": 4,
+    "observer_images": 80,
+    "observer_contrast": 8.0,
+}
+
+
+@pytest.fixture(scope="module")
+def measured():
+    image = phantom(SHAPE, dtype=np.complex64)
+    held = acquire(image, sigma=0.05)
+    seen = []
+    result = measure(
+        held,
+        recover(held, "zero-filled").image,
+        image,
+        MM,
+        method="zero-filled",
+        measures=measures_from(EVERYTHING),
+        mask=body(SHAPE),
+        progress=lambda *step: seen.append(step),
+    )
+    return result, seen
+
+
+def test_every_value_has_a_metric(measured):
+    result, _ = measured
+    assert len(result.by_plane) == SHAPE[0]
+    names = {name for plane in result.by_plane for name in plane}
+    plain = {"nrmse", "psnr", "ssim", "hfen", "nrmse_complex"}
+    assert names == set(METRICS) - plain
+    assert len(result.planes) == 2
+    for plane in result.planes:
+        assert {"noise_gain", "resolution_u_mm"} <= set(result.by_plane[plane])
+
+
+def test_values_are_those_of_the_single_measures(measured):
+    result, _ = measured
+    first = result.by_plane[result.planes[0]]
+    # SD sigma sqrt(M / N), 4 replicas of about 2000 voxels.
+    assert first["noise_ratio"] == pytest.approx(np.sqrt(1 / 3), rel=0.1)
+    assert first["noise_gain"] == pytest.approx(first["noise_ratio"] / np.sqrt(3), rel=0.02)
+    assert first["resolution_v_mm"] == pytest.approx(1.2067, rel=0.02)
+    assert 0.2 < first["feature_retention"] < 1.0
+    assert first["error_invented"] < 1e-6
+
+
+def test_tables_are_plain_json(measured):
+    result, _ = measured
+    text = json.dumps(result.tables, allow_nan=False)
+    assert {"noise", "resolution", "features", "smallest_kept_mm", "observer", "spectral"} <= set(
+        json.loads(text)
+    )
+    rows = result.tables["features"]
+    assert [row["size_mm"] is not None for row in rows] == [True, True]
+    assert rows[0]["retained"] < rows[1]["retained"]
+
+
+def test_maps_lie_on_the_whole_stack(measured):
+    result, _ = measured
+    assert set(result.maps) == {
+        "missing",
+        "invented",
+        "noise_ratio",
+        "resolution_u_mm",
+        "resolution_v_mm",
+    }
+    for name, values in result.maps.items():
+        assert values.shape == SHAPE
+        assert values.dtype == np.float32
+        if name not in ("missing", "invented"):
+            assert np.isnan(values[0]).all() == (0 not in result.planes)
+
+
+def test_progress_names_the_measure(measured):
+    _, seen = measured
+    names = [step[0] for step in seen]
+    assert list(dict.fromkeys(names)) == ["noise gain", "resolution", "features", "observer"]
+    assert seen[3] == ("noise gain", 4, 4)
+
+
+def test_scores_alone_run_no_recovery():
+    image = phantom((2, 40, 40))
+    held = acquire(image)
+    result = measure(held, recover(held, "zero-filled").image, image, MM, method="zero-filled")
+    assert result.planes == ()
+    assert result.recovery_seconds == 0.0
+    assert "ms_ssim" in result.by_plane[0]
+
+
+def test_labels_give_regions():
+    image = phantom((2, 40, 40))
+    held = acquire(image)
+    labels = np.zeros(image.shape, int)
+    labels[:, 10:20, 10:20] = 3
+    result = measure(
+        held, recover(held, "zero-filled").image, image, MM, method="zero-filled", labels=labels
+    )
+    assert result.tables["regions"][0]["label"] == 3
+
+
+def test_planes_are_spread_over_the_body():
+    mask = np.zeros((20, 8, 8), bool)
+    mask[5:15] = True
+    chosen = choose_planes(mask, mask, Measures(planes=3), MM)
+    assert len(chosen) == 3
+    assert min(chosen) >= 5
+    assert max(chosen) < 15
+    block = choose_planes(mask, mask, Measures(features=(Feature("sphere", 6.0),)), MM)
+    assert block == tuple(range(block[0], block[0] + 11))
+    with pytest.raises(QualityError, match="sphere reaches over 11 planes, the stack has 4"):
+        choose_planes(mask[:4], mask[:4], Measures(features=(Feature("sphere", 6.0),)), MM)
+
+
+def test_combinations_of_features():
+    found = measures_from(
+        {"features": [{"size_mm": [1, 2], "contrast": [10, -20]}, {"shape": "line"}]}
+    )
+    assert len(found.features) == 5
+    assert found.features[1] == Feature("disc", 1.0, -20.0)
+    assert found.recoveries == 6
+    assert Measures().recoveries == 0
+
+
+@pytest.mark.parametrize(
+    ("table", "message"),
+    [
+        ({"nois_replicas": 3}, r"'nois_replicas'(.|\n)*'noise_replicas'"),
+        ({"noise_replicas": 1}, "noise_replicas = 1 is not allowed"),
+        ({"planes": 0}, "planes = 0 is not allowed"),
+        ({"edges": 1}, "edges = 1 is not allowed"),
+        ({"perturbation_sigma": -1}, "perturbation_sigma = -1 is not allowed"),
+        ({"features": [{"diameter": 3}]}, r"'diameter'(.|\n)*features\.diameter"),
+        ({"features": [3]}, "features = 3 is not allowed"),
+        ({"features": [{"size_mm": ["x"]}]}, r"features\.size_mm = 'x'"),
+    ],
+)
+def test_bad_tables(table, message):
+    with pytest.raises(QualityError, match=message):
+        measures_from(table)
