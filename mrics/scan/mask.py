@@ -13,8 +13,8 @@ from mrics.scan.volume import Scan
 
 # Share of the mean tissue magnitude below which a voxel counts as air.
 TISSUE_SHARE = 0.12
-# Times the median of air: after the 3 x 3 x 3 mean, air exceeds 1.45 in 2 of 10^4 voxels.
-AIR_FACTOR = 1.45
+# Times the median of air: after the 3 x 3 x 3 mean, air exceeds 1.5 in 5 of 10^5 voxels.
+AIR_FACTOR = 1.5
 # A dark class brighter than this share of the bright one is tissue: the volume has no air.
 AIR_SHARE = 0.35
 _BINS = 512
@@ -26,7 +26,7 @@ def body_mask(volume: Scan | NDArray[Any]) -> NDArray[np.bool_]:
     The magnitude (root sum of squares over channels, mean over frames) is smoothed by a
     3 x 3 x 3 mean and split by Otsu's criterion on its square root. Voxels above 0.12 x the mean
     of the bright class and, where the dark class is air (its median below 0.35 x that mean), above
-    1.45 x its median are kept; of these, the
+    1.5 x its median are kept; of these, the
     connected parts of at least 1 % of the largest; holes are filled in three dimensions and in
     every plane along each axis.
 

@@ -5,7 +5,6 @@ from __future__ import annotations
 from typing import Any
 
 import numpy as np
-from numpy.typing import NDArray
 from scipy import ndimage
 
 from mrics.numerics import circular_correlation
@@ -13,66 +12,60 @@ from mrics.scan.fitness.finding import Finding
 from mrics.scan.fitness.view import ScanView
 from mrics.scan.volume import LETTERS
 
-# Amplitude of a ghost as a share of the body.
-GHOST = 0.03
-# Times the median over all shifts: smooth leakage into air is the same at every shift.
-PEAK = 1.4
+# Amplitude of a ghost as a share of the body, and how many standard errors its square must be.
+GHOST = 0.025
+CERTAIN = 6.0
 # Share of a border plane that lies in the body.
 BORDER = 0.02
 _NEAREST = 0.25
+_SMOOTH = 7
 _MOST_PLANES = 48
 
 
 def ghosting(view: ScanView) -> tuple[Finding, ...]:
-    """Power in air that follows the body shifted along a phase-encoding axis.
+    """Texture in air that follows the body's, shifted along a phase-encoding axis.
 
-    For every shift, the power in air above 2 sigma^2 is regressed on the body's power that many
-    voxels away; the slope is the square of the ghost's amplitude. Shifts below a quarter of the
-    axis are left out (ringing and blur).
+    The squared magnitude is freed of its mean over 7 voxels along the axis. For every shift, what
+    is left in air is regressed on what is left in the body that many voxels away; the slope is
+    the square of the ghost's amplitude. Smooth leakage of signal into air has no such texture.
+    Shifts below a quarter of the axis are left out (ringing and blur).
     """
     findings = []
     for letter in (view.axes.phase, view.axes.partition):
         if letter is None:
             continue
-        found = _ghost(view, LETTERS.index(letter))
-        if found is not None:
-            findings.append(_ghost_finding(letter, *found))
+        found = ghost_amplitude(view, LETTERS.index(letter))
+        if found is not None and found[0] > GHOST and found[2] > CERTAIN:
+            findings.append(_ghost_finding(letter, *found[:2]))
     return tuple(findings)
 
 
-def _ghost(view: ScanView, axis: int) -> tuple[float, int] | None:
-    near = ndimage.binary_dilation(view.mask, iterations=4)
+def ghost_amplitude(view: ScanView, axis: int) -> tuple[float, int, float] | None:
+    """Strongest ghost along an axis: amplitude, shift in voxels, slope / standard error."""
+    near = ndimage.binary_dilation(view.mask, iterations=3)
     across = 2 if axis != 2 else 0
     step = max(1, view.volume.shape[across] // _MOST_PLANES)
     index: list[Any] = [slice(None)] * 3
     index[across] = slice(None, None, step)
-    magnitude = view.magnitude[tuple(index)].astype(np.float64)
-    body = np.where(view.mask[tuple(index)], magnitude**2, 0.0)
-    air = ~near[tuple(index)] & (magnitude > 0)
-    sigma = view.noise.sigma
-    above = np.where(air, magnitude**2 - 2 * sigma**2, 0.0)
-    slope = _slopes(above, body, air, axis)
-    if slope is None:
-        return None
-    at = int(np.argmax(slope))
-    typical = float(np.median(slope[slope != 0])) if slope.any() else 0.0
-    amplitude = float(np.sqrt(max(slope[at], 0.0)))
-    if amplitude < GHOST or slope[at] < PEAK * typical:
-        return None
-    return amplitude, at
-
-
-def _slopes(
-    above: NDArray[np.float64], body: NDArray[np.float64], air: NDArray[np.bool_], axis: int
-) -> NDArray[np.float64] | None:
+    power = view.magnitude[tuple(index)].astype(np.float64) ** 2
+    texture = power - ndimage.uniform_filter1d(power, _SMOOTH, axis=axis, mode="wrap")
+    air = ndimage.minimum_filter1d(
+        ~near[tuple(index)] & (power > 0), _SMOOTH, axis=axis, mode="wrap"
+    )
+    body = np.where(view.mask[tuple(index)], texture, 0.0)
+    left = np.where(air, texture, 0.0)
     weight = circular_correlation(air.astype(np.float64), body**2, axis)
-    if weight.max() <= 0:
-        return None
-    product = circular_correlation(above, body, axis)
-    length = above.shape[axis]
+    length = power.shape[axis]
     shift = np.minimum(np.arange(length), length - np.arange(length))
     enough = (weight > 0.02 * float((body**2).sum())) & (shift >= _NEAREST * length)
-    return np.where(enough, product / np.where(enough, weight, 1.0), 0.0)
+    if not enough.any():
+        return None
+    slope = circular_correlation(left, body, axis)[enough] / weight[enough]
+    at = int(np.flatnonzero(enough)[np.argmax(slope)])
+    best = float(slope.max())
+    spread = circular_correlation(left**2, body**2, axis)[at]
+    error = float(np.sqrt(max(spread, 1e-300)) / weight[at])
+    return float(np.sqrt(max(best, 0.0))), at, best / error
 
 
 def _ghost_finding(letter: str, amplitude: float, shift: int) -> Finding:

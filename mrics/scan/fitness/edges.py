@@ -33,6 +33,11 @@ class Edge:
     slope_db: float = 0.0
 
 
+def _decibels(power: NDArray[np.float64]) -> NDArray[np.float64]:
+    """10 log10, with a floor 160 dB below the largest."""
+    return 10 * np.log10(power + 1e-16 * power.max() + np.finfo(np.float64).tiny)
+
+
 def profile_edge(power: NDArray[np.float64]) -> Edge:
     """Largest fall from one sample of a one-sided k-space profile to all samples further out.
 
@@ -40,7 +45,7 @@ def profile_edge(power: NDArray[np.float64]) -> Edge:
     samples before it, less their own decline, so that a smooth taper to nothing is no edge.
     Searched from 0.15 of the half axis on.
     """
-    level = 10 * np.log10(power + power.max() * 1e-16 + np.finfo(np.float64).tiny)
+    level = _decibels(power)
     outer = np.maximum.accumulate(level[::-1])[::-1]
     best = Edge(0.0, float(len(level) - 1))
     for last in range(max(_WINDOW, int(0.15 * len(level))), len(level) - _WINDOW):
@@ -58,7 +63,7 @@ def spectrum_edge(spectrum: LineSpectrum, lowest: float, highest: float) -> Edge
     windows are four samples wide. The trend taken off is the mean of both windows' slopes, a
     little more than a convex decline falls between them.
     """
-    level = 10 * np.log10(spectrum.power + 1e-12 * spectrum.power.max())
+    level = _decibels(spectrum.power)
     best = Edge(0.0, 1.0)
     for at in range(_SIDE, len(level) - _GUARD - 1):
         if not lowest <= spectrum.frequency[at] <= highest:
@@ -88,7 +93,7 @@ def roll_off(power: NDArray[np.float64]) -> float | None:
         return None
     centre, reach = length // 2, (length - 1) // 2
     folded = (power[centre : centre + reach + 1] + power[centre - reach : centre + 1][::-1]) / 2
-    level = 10 * np.log10(folded + 1e-16 * folded.max())
+    level = _decibels(folded)
     frequency = np.arange(reach + 1) / (length / 2)
     before = (frequency > 0.72) & (frequency < 0.9)
     end = frequency > min(0.955, 1 - 5 / length)
@@ -101,7 +106,7 @@ def half_power_place(spectrum: LineSpectrum, edge: Edge) -> float:
 
     A sharp end of the spectrum, smeared by the symmetric window, has half power at its place.
     """
-    level = 10 * np.log10(spectrum.power + 1e-12 * spectrum.power.max())
+    level = _decibels(spectrum.power)
     at = int(np.argmin(np.abs(spectrum.frequency - edge.place)))
     inner = np.arange(max(2, at - _GUARD - _SIDE), at - _GUARD + 1)
     trend = np.polyfit(inner, level[inner], 1)

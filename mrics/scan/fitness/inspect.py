@@ -12,11 +12,13 @@ from mrics.scan.fitness.compression import block_compression
 from mrics.scan.fitness.finding import Finding
 from mrics.scan.fitness.frames import identical_frames
 from mrics.scan.fitness.levels import clipped, coarse_levels
+from mrics.scan.fitness.negative import negative_values
 from mrics.scan.fitness.noise_level import low_snr, noise_disagrees, signal, template_like
 from mrics.scan.fitness.noise_map import noise_varies
 from mrics.scan.fitness.partial import partial_fourier
 from mrics.scan.fitness.phase import magnitude_only
 from mrics.scan.fitness.smoothing import smoothed_noise
+from mrics.scan.fitness.spectrum import LEAST_BLOCKS
 from mrics.scan.fitness.view import ScanView
 from mrics.scan.fitness.zero_fill import zero_filled
 from mrics.scan.noise import Noise
@@ -26,6 +28,7 @@ CHECKS: tuple[Callable[[ScanView], tuple[Finding, ...]], ...] = (
     zero_filled,
     partial_fourier,
     smoothed_noise,
+    negative_values,
     exact_zeros,
     noise_varies,
     clipped,
@@ -111,8 +114,8 @@ def _cannot_be_told(view: ScanView) -> tuple[str, ...]:
     for axis in range(3):
         if view.correlation(axis) is None:
             told.append(
-                f"Filtering and interpolation along {LETTERS[axis]}: fewer than 100 quiet blocks "
-                "of 8 x 8 voxels show noise alone."
+                f"Filtering and interpolation along {LETTERS[axis]}: fewer than {LEAST_BLOCKS} "
+                "blocks of 8 x 8 voxels show noise alone."
             )
     if "air" not in view.noise_estimates:
         told.append("Root-sum-of-squares and ghosts: there is no air with noise in it.")

@@ -10,7 +10,7 @@ from mrics.scan.fitness.view import ScanView
 from mrics.scan.noise import detail_powers, quiet_mean
 
 # Ratio of the 90 % to the 10 % point of sigma over the cells.
-SPREAD = 1.6
+SPREAD = 1.75
 # Share of the variance of log sigma that a quadratic surface explains.
 SMOOTH = 0.85
 _CELLS = 8
@@ -20,6 +20,7 @@ _LEAST_BLOCKS = 24
 _LEAST_QUIET = 8
 # Share of a cell's blocks that must be quiet: in the others anatomy is mistaken for noise.
 _QUIET_SHARE = 0.35
+_QUIET_SHARE_MAGNITUDE = 0.55
 
 
 def noise_varies(view: ScanView) -> tuple[Finding, ...]:
@@ -47,6 +48,7 @@ def _cells(view: ScanView) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     powers, usable, shape = detail_powers(view.volume, view.magnitude, mask)
     cells = (_CELLS, _CELLS, 2 if powers.shape[2] >= _DEEP else 1)
     splits = [np.array_split(np.arange(n), c) for n, c in zip(powers.shape, cells, strict=True)]
+    share = _QUIET_SHARE if view.has_phase else _QUIET_SHARE_MAGNITUDE
     sigma, place = [], []
     for index in np.ndindex(*cells):
         box = np.ix_(*(splits[axis][index[axis]] for axis in range(3)))
@@ -54,7 +56,7 @@ def _cells(view: ScanView) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         if len(values) < _LEAST_BLOCKS:
             continue
         level, quiet = quiet_mean(values, shape)
-        if quiet >= max(_LEAST_QUIET, _QUIET_SHARE * len(values)) and level > 0:
+        if quiet >= max(_LEAST_QUIET, share * len(values)) and level > 0:
             sigma.append(np.sqrt(level))
             place.append([2 * i / max(c - 1, 1) - 1 for i, c in zip(index, cells, strict=True)])
     return np.array(sigma), np.array(place)

@@ -14,6 +14,8 @@ from mrics.scan.volume import LETTERS
 
 # rho(1) - rho(2) - rho(3) of noise above which it counts as correlated.
 EXCESS = 0.08
+# Added to it, over the root of the number of blocks: three standard errors.
+EXCESS_ERROR = 0.6
 # Fall of the ends of k-space below the trend before them, dB.
 ROLL_OFF_DB = 1.8
 # Linear interpolation halfway between voxels correlates neighbours by 0.5 and no others.
@@ -39,12 +41,17 @@ def smoothed_noise(view: ScanView) -> tuple[Finding, ...]:
             continue  # an empty part of k-space correlates noise too
         correlation = view.correlation(axis)
         fall = roll_off(view.power(axis)) if axis in view.encoded else None
-        if correlation is not None and correlation.excess > EXCESS:
+        if correlation is not None and correlation.excess > least_excess(correlation):
             make = _resampled if _is_linear(correlation) else _filtered
             findings.append(make(LETTERS[axis], correlation))
         elif fall is not None and fall > ROLL_OFF_DB:
             findings.append(_rolled_off(LETTERS[axis], fall))
     return tuple(findings)
+
+
+def least_excess(correlation: Correlation) -> float:
+    """Excess above which noise counts as correlated."""
+    return EXCESS + EXCESS_ERROR / float(np.sqrt(correlation.blocks))
 
 
 def _is_linear(correlation: Correlation) -> bool:
@@ -69,7 +76,7 @@ def _resampled(letter: str, correlation: Correlation) -> Finding:
         f"interpolation {linear_shift(correlation.lags[1]):.1f} voxel between samples.",
         where=f"axis {letter}",
         statistic=correlation.excess,
-        threshold=EXCESS,
+        threshold=least_excess(correlation),
         bias="Interpolation took fine detail and noise away: less is left to lose, so "
         "undersampling looks better than on measured data.",
         advice="Use the scan before registration, rotation or reslicing; else add noise and judge "
@@ -86,7 +93,7 @@ def _filtered(letter: str, correlation: Correlation) -> Finding:
         "smoothed.",
         where=f"axis {letter}",
         statistic=correlation.excess,
-        threshold=EXCESS,
+        threshold=least_excess(correlation),
         bias="Outer k-space is weak, so leaving it out costs little: patterns that skip it look "
         "better than they are.",
         advice=_UNFILTERED,

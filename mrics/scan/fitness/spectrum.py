@@ -14,6 +14,7 @@ from mrics.scan.noise import quiet_mean
 
 _MOST_SEGMENTS = 6000
 _LEAST_SEGMENTS = 150
+LEAST_BLOCKS = 300
 _KAISER = 7.0
 _BLOCK = 8
 _MOST_VOXELS = 3_000_000
@@ -105,14 +106,26 @@ class Correlation:
     blocks: int
 
     @property
-    def excess(self) -> float:
-        """rho(1) - rho(2) - rho(3): 0 for white noise, and near or below it for leftover anatomy.
+    def anatomy(self) -> float:
+        """What leftover anatomy adds to rho(1): it decays slowly, so later lags tell.
 
-        Anatomy that survives the filter decays slowly with distance, so it cancels; linear
-        interpolation by 0.2 voxel gives 0.23, a Hamming window 0.47, zero-filling by 1.25 gives
-        0.27.
+        The larger of rho(2) + rho(3) and of the geometric continuation rho(2)^2 / rho(3), which
+        fine fibres along the axis follow (at most 2.2 rho(2)).
         """
-        return float(self.lags[1] - self.lags[2] - self.lags[3])
+        second, third = float(self.lags[2]), float(self.lags[3])
+        linear = second + third
+        if second <= 0 or third <= 0:
+            return linear
+        return max(linear, min(second**2 / third, 2.2 * second))
+
+    @property
+    def excess(self) -> float:
+        """rho(1) less :attr:`anatomy`: near or below 0 for white noise.
+
+        Linear interpolation by 0.2 voxel gives 0.23, a Hamming window 0.47, zero-filling by 1.25
+        gives 0.27.
+        """
+        return float(self.lags[1]) - self.anatomy
 
 
 def noise_correlation(
@@ -125,7 +138,7 @@ def noise_correlation(
     as it is. Of blocks of 8 x 8 voxels inside ``region`` the quiet ones are kept, as in
     :func:`mrics.scan.noise.scan_noise`.
 
-    Returns None where fewer than 100 quiet blocks remain.
+    Returns None where fewer than 300 quiet blocks remain.
     """
     across = 1 - axis if axis < 2 else 0
     third = next(a for a in range(3) if a not in (axis, across))
@@ -136,14 +149,14 @@ def noise_correlation(
         values = ndimage.correlate1d(values, _CROSS, axis=filtered, mode="nearest")
     blocks = _blocks(values.transpose(axis, across, third))
     kept = blocks[_blocks(inside.transpose(axis, across, third)).all(axis=(1, 2))]
-    if len(kept) < 100:
+    if len(kept) < LEAST_BLOCKS:
         return None
     parts = 2 if np.iscomplexobj(volume) else 1
     power = np.square(np.abs(kept)).mean(axis=(1, 2), dtype=np.float64)
     shape = parts * _BLOCK**2 / (2 * _CROSS_DEPENDENCE)
     level, _ = quiet_mean(power, shape)
     quiet = kept[power < 1.6 * level]
-    if len(quiet) < 100:
+    if len(quiet) < LEAST_BLOCKS:
         return None
     total = np.square(np.abs(quiet)).mean(dtype=np.float64)
     lags = [1.0]
