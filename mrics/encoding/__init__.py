@@ -23,8 +23,6 @@ if TYPE_CHECKING:
     from mrics.encoding.noise import noise_covariance as noise_covariance
     from mrics.encoding.noise import whitening as whitening
     from mrics.encoding.operator import Encoding as Encoding
-    from mrics.encoding.phase import smooth_phase as smooth_phase
-    from mrics.encoding.phase import with_phase as with_phase
     from mrics.encoding.sensitivities import estimate_sensitivities as estimate_sensitivities
     from mrics.encoding.sensitivities import with_sensitivities as with_sensitivities
     from mrics.encoding.simulate import undersample as undersample
@@ -49,10 +47,8 @@ _HOMES = {
     "root_sum_of_squares": "channels",
     "simulate_coils": "coils",
     "singular_values": "channels",
-    "smooth_phase": "phase",
     "undersample": "simulate",
     "whitening": "noise",
-    "with_phase": "phase",
     "with_sensitivities": "sensitivities",
 }
 
@@ -75,10 +71,8 @@ __all__ = [
     "root_sum_of_squares",
     "simulate_coils",
     "singular_values",
-    "smooth_phase",
     "undersample",
     "whitening",
-    "with_phase",
     "with_sensitivities",
 ]
 

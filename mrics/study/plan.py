@@ -23,6 +23,7 @@ from mrics.protocol.arms import slug
 from mrics.sampling import Pattern
 from mrics.sampling.ordered import Ordered
 from mrics.scan import Axes, read_header
+from mrics.scan.remedies import INVENTED
 from mrics.study.code_version import code_version
 from mrics.study.prepare import PlaneChoice, Prepared, prepare
 from mrics.study.units import Noise, Unit, content_key, draw_of, pattern_grid
@@ -255,7 +256,7 @@ class StudyPlan:
             "Scores compare magnitudes. The noise of the scan itself reaches all loops alike, so "
             "noise gain shows only in noise that is added."
         )
-        if coils.phase > 0 and any("simulated phase" in r["complex_source"] for r in records):
+        if coils.phase > 0 and any(r["complex_source"] == INVENTED for r in records):
             note += f" A smooth random phase of {coils.phase:g} rad was put on magnitude scans."
         return note
 

@@ -11,13 +11,13 @@ from numpy.typing import NDArray
 
 from mrics.encoding import estimate_sensitivities, root_sum_of_squares, undersample
 from mrics.encoding.coils import coils_for_scan
-from mrics.encoding.phase import with_phase
 from mrics.errors import StudyError
 from mrics.protocol import ScanFiles
 from mrics.protocol.sections import Coils as CoilSection
 from mrics.recovery import recover
 from mrics.sampling import Pattern
 from mrics.scan import Axes, Finding, Scan, body_mask, inspect_scan, read_scan, scan_sigma
+from mrics.scan.remedies import add_phase
 
 _REFERENCE_CALIBRATION = 24
 
@@ -111,7 +111,7 @@ class Prepared:
         frames = self.scan.frames
         whole = np.zeros((frames, self.frame_planes, *stack.shape[1:]), dtype=stack.dtype)
         whole[:, list(self.planes)] = stack.reshape(frames, len(self.planes), *stack.shape[1:])
-        shape = self.scan.shape[:4] if self.scan.data.ndim > 3 else self.scan.shape
+        shape = self.scan.shape[:4] if frames > 1 else self.scan.shape[:3]
         return self.axes.from_planes(whole.reshape(-1, *stack.shape[1:]), shape)
 
 
@@ -182,7 +182,7 @@ def _prepare(
     findings = tuple(inspect_scan(scan, axes))
     sigma = float(scan_sigma(scan))
     if coils is not None and coils.phase > 0 and scan.magnitude_only:
-        scan = with_phase(scan, coils.phase, seed)
+        scan = add_phase(scan, strength_rad=coils.phase, seed=seed)
     combined = scan.data if scan.channels == 1 else root_sum_of_squares(scan.data, axis=4)
     if combined.ndim == 4 and scan.frames == 1:
         combined = combined[..., 0]
