@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from pathlib import Path
 
+from mrics.caution import RESEARCH_ONLY
 from mrics.protocol import Protocol
 from mrics.report.arms import axis_name
 from mrics.report.pattern_figures import pattern_figure, picture_of
@@ -40,9 +41,8 @@ def export_table(
     }
     names = axis_name("phase", grid), axis_name("partition", grid)
     figure = pattern_figure(picture_of(exported.played.pattern, *names))
-    figure.suptitle(
-        f"{exported.label}, draw {draw}\n{exported.played.pattern.hash[:16]}", fontsize=8
-    )
+    table = exported.played.pattern.hash[:16]
+    figure.suptitle(f"{exported.label}, draw {draw}, table {table}\n{RESEARCH_ONLY}", fontsize=8)
     sheet = Path(out) / f"{arm}_draw{draw}.png"
     figure.savefig(sheet, dpi=200)
     if study is not None:

@@ -6,6 +6,7 @@ from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
 
+from mrics.caution import RESEARCH_ONLY
 from mrics.errors import ReportError
 from mrics.report.arms import arm_views, windows
 from mrics.report.charts import against_acceleration, by_slice
@@ -45,10 +46,11 @@ def write_figures(directory: str | Path) -> tuple[Path, ...]:
     try:
         folder.mkdir(exist_ok=True)
         for name, figure in _figures(study):
+            figure.text(0.0, -0.01, RESEARCH_ONLY, fontsize=6, va="top")
             for ending, look in ((".png", {"dpi": _DPI}), (".svg", {"metadata": {"Date": None}})):
                 path = folder / f"{name}{ending}"
                 with figure_style():
-                    figure.savefig(path, **look)
+                    figure.savefig(path, bbox_inches="tight", **look)
                 written.append(path)
     except OSError as problem:
         raise ReportError(

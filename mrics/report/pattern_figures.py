@@ -28,12 +28,15 @@ class PatternPicture:
         Names of its axes ("phase (j)").
     echo : ndarray of int, shape of the mask, or None
         Echo of the train that acquires each position, from 1; 0 where nothing is acquired.
+    energy : ndarray of float64, shape of the mask, or None
+        Mean k-space energy of training scans, for the share of it that is captured.
     """
 
     pattern: Pattern
     row_label: str = "phase"
     column_label: str = "partition"
     echo: NDArray[np.int64] | None = None
+    energy: NDArray[np.float64] | None = None
 
     @property
     def mask(self) -> NDArray[np.bool_]:
@@ -48,7 +51,7 @@ class PatternPicture:
     @cached_property
     def spread(self) -> Spread:
         """What the pattern does to a point."""
-        return spread(self.pattern)
+        return spread(self.pattern, self.energy)
 
     @property
     def sentence(self) -> str:
@@ -66,7 +69,12 @@ class PatternPicture:
         return text + "."
 
 
-def picture_of(pattern: Pattern, row_label: str, column_label: str) -> PatternPicture:
+def picture_of(
+    pattern: Pattern,
+    row_label: str,
+    column_label: str,
+    energy: NDArray[np.float64] | None = None,
+) -> PatternPicture:
     """Picture of a pattern's first frame, with its echoes where it has an order of several."""
     first = pattern.mask[0] if pattern.frames else pattern.mask
     probability = pattern.probability
@@ -78,7 +86,7 @@ def picture_of(pattern: Pattern, row_label: str, column_label: str) -> PatternPi
         echo[pattern.mask] = pattern.order[:, 1] + 1
         echo = echo[0] if pattern.frames else echo
     single = replace(pattern, mask=first, frames=0, probability=probability, order=None)
-    return PatternPicture(single, row_label, column_label, echo)
+    return PatternPicture(single, row_label, column_label, echo, energy)
 
 
 def radial_density(share: NDArray[Any]) -> tuple[NDArray[Any], NDArray[Any]]:

@@ -10,6 +10,7 @@ from mrics.report.pattern_figures import pattern_figure, picture_of
 from mrics.report.rendering import render, write_page
 from mrics.report.spread_figures import spread_facts, spread_figure
 from mrics.report.style_figures import svg_uri
+from mrics.sampling.source import law_source
 
 if TYPE_CHECKING:
     from mrics.study import PlanRow, StudyPlan
@@ -53,7 +54,11 @@ def write_plan_page(plan: StudyPlan, path: str | Path) -> Path:
 def _picture(row: PlanRow, plan: StudyPlan) -> dict[str, Any]:
     """Pictures of one pattern; arms that differ in recovery alone share them."""
     grid = {"phase_axis": plan.axes.phase, "partition_axis": plan.axes.partition}
-    picture = picture_of(row.pattern, axis_name("phase", grid), axis_name("partition", grid))
+    energy = None
+    if row.arm.sampling.get("training"):
+        energy = law_source("energy", row.arm.sampling["training"], row.pattern.grid, plan.axes)
+    names = axis_name("phase", grid), axis_name("partition", grid)
+    picture = picture_of(row.pattern, *names, energy)
     return {
         "figure": svg_uri(pattern_figure(picture)),
         "text": picture.sentence,
