@@ -12,7 +12,7 @@ from mrics.errors import QualityError
 from mrics.numerics import centred_fft, centred_ifft
 
 Array = NDArray[Any]
-_TILE = 64
+_TILES = (64, 48, 32, 24)
 _BINS = 24
 
 
@@ -70,11 +70,11 @@ def fit_spectrum(
 ) -> Spectrum:
     """Radial power spectrum of training images.
 
-    Tiles of 64 x 64 voxels (the whole plane where it is smaller) are taken at half-tile steps,
-    those at least half inside the mask; mean removed, Hann window, power divided by the window's
-    energy. The power of noise, 2 sigma^2, is taken off, and a power law is fitted to the radial
-    means in double logarithm, between two cycles per tile and 90 % of the lower Nyquist frequency.
-    Below one cycle per tile the law is flat.
+    Tiles of 64 x 64 voxels (smaller ones where no such tile fits the body) are taken about half a
+    tile apart, those at least half inside the mask; mean removed, Hann window, power divided by the
+    window's energy. The power of noise, 2 sigma^2, is taken off, and a power law is fitted to the
+    radial means in double logarithm, between two cycles per tile and 90 % of the lower Nyquist
+    frequency. Below one cycle per tile the law is flat.
 
     Parameters
     ----------
@@ -97,19 +97,18 @@ def fit_spectrum(
             "mask",
             "Give a mask on the images' grid.",
         )
-    size = (min(_TILE, images.shape[1]), min(_TILE, images.shape[2]))
+    boxes: list[tuple[Any, ...]] = []
+    for tile_size in _TILES:
+        size = (min(tile_size, images.shape[1]), min(tile_size, images.shape[2]))
+        boxes = _boxes(images.shape, size, mask)
+        if boxes:
+            break
     window = np.outer(np.hanning(size[0] + 2)[1:-1], np.hanning(size[1] + 2)[1:-1])
-    power, count = np.zeros(size), 0
-    for plane in range(images.shape[0]):
-        for u in range(0, images.shape[1] - size[0] + 1, max(1, size[0] // 2)):
-            for v in range(0, images.shape[2] - size[1] + 1, max(1, size[1] // 2)):
-                box = (plane, slice(u, u + size[0]), slice(v, v + size[1]))
-                if mask is not None and mask[box].mean() < 0.5:
-                    continue
-                tile = images[box].astype(np.complex128)
-                tile = (tile - (tile * window).sum() / window.sum()) * window
-                power += np.abs(centred_fft(tile)) ** 2 * (tile.size / (window**2).sum())
-                count += 1
+    power, count = np.zeros(size), len(boxes)
+    for box in boxes:
+        tile = images[box].astype(np.complex128)
+        tile = (tile - (tile * window).sum() / window.sum()) * window
+        power += np.abs(centred_fft(tile)) ** 2 * (tile.size / (window**2).sum())
     frequency = radial_frequency(size, voxel_mm)
     lowest = max(1.0 / (n * step) for n, step in zip(size, voxel_mm, strict=True))
     highest = 0.45 / max(voxel_mm)
@@ -133,3 +132,21 @@ def fit_spectrum(
     exponent = max(0.0, float(-slope))
     at_corner = float(np.exp(offset) * lowest**-exponent)
     return Spectrum(level=0.5 * at_corner, corner=float(lowest), exponent=exponent)
+
+
+def _boxes(
+    shape: tuple[int, ...], size: tuple[int, int], mask: NDArray[np.bool_] | None
+) -> list[tuple[Any, ...]]:
+    """Tiles about half a tile apart that are at least half inside the mask."""
+    starts = [
+        np.linspace(0, n - own, -(-2 * (n - own) // own) + 1).round().astype(int)
+        for n, own in zip(shape[1:], size, strict=True)
+    ]
+    found = []
+    for plane in range(shape[0]):
+        for u in starts[0]:
+            for v in starts[1]:
+                box = (plane, slice(u, u + size[0]), slice(v, v + size[1]))
+                if mask is None or mask[box].mean() >= 0.5:
+                    found.append(box)
+    return found
