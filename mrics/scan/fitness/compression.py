@@ -12,9 +12,9 @@ from mrics.scan.fitness.view import ScanView
 
 # 1 - smallest / second smallest detail level over the 64 positions of the grid.
 FALL = 0.2
-_PLANES = 6
+_PLANES = 5
 _LEAST_BLOCKS = 150
-_MOST_BLOCKS = 4000
+_MOST_BLOCKS = 1500
 
 
 def block_compression(view: ScanView) -> tuple[Finding, ...]:
@@ -24,9 +24,7 @@ def block_compression(view: ScanView) -> tuple[Finding, ...]:
     ones to zero. The lower 15 % point of their modulus over all blocks is compared between the 64
     positions of the grid; without compression it is the same everywhere.
     """
-    parts = [view.magnitude]
-    if view.has_phase:
-        parts += [view.volume.real, view.volume.imag]
+    parts = [view.magnitude, view.volume.real] if view.has_phase else [view.magnitude]
     fall, at = max(_fall(part) for part in parts)
     if fall <= FALL:
         return ()
@@ -50,15 +48,16 @@ def _fall(part: NDArray[Any]) -> tuple[float, tuple[int, int]]:
         return 0.0, (0, 0)
     depth = part.shape[2]
     chosen = np.unique(np.linspace(depth // 4, max(depth - depth // 4 - 1, 0), _PLANES).astype(int))
-    planes = part[:, :, chosen].transpose(2, 0, 1)
-    fine = _fine_cosines()
+    planes = part[:, :, chosen].transpose(2, 0, 1).astype(np.float32)
+    fine = _fine_cosines().astype(np.float32)
     levels = np.full((8, 8), np.inf)
     for row in range(8):
         for column in range(8):
             blocks = _blocks(planes[:, row:, column:])
             if len(blocks) < _LEAST_BLOCKS:
                 return 0.0, (0, 0)
-            size = np.quantile(np.abs(blocks @ fine), 0.15, axis=0)
+            rank = int(0.15 * len(blocks))
+            size = np.partition(np.abs(blocks @ fine), rank, axis=0)[rank]
             levels[row, column] = np.exp(np.log(size + 1e-12 * np.abs(part).max()).mean())
     order = np.argsort(levels, axis=None)
     row, column = divmod(int(order[0]), 8)
@@ -66,20 +65,21 @@ def _fall(part: NDArray[Any]) -> tuple[float, tuple[int, int]]:
     return float(1 - smallest / second), (row, column)
 
 
-def _blocks(planes: NDArray[Any]) -> NDArray[np.float64]:
+def _blocks(planes: NDArray[Any]) -> NDArray[Any]:
     """Blocks that are not constant, each flattened: shape (n, 64), evenly thinned."""
     count = (planes.shape[1] // 8, planes.shape[2] // 8)
     cut = planes[:, : count[0] * 8, : count[1] * 8]
     folded = cut.reshape(len(planes), count[0], 8, count[1], 8).transpose(0, 1, 3, 2, 4)
     blocks = folded.reshape(-1, 64)
-    blocks = blocks[:: max(1, len(blocks) // _MOST_BLOCKS)]
-    return blocks[np.ptp(blocks, axis=1) > 0].astype(np.float64)
+    blocks = blocks[:: -(-len(blocks) // _MOST_BLOCKS) or 1]
+    return blocks[np.ptp(blocks, axis=1) > 0]
 
 
 def _fine_cosines() -> NDArray[np.float64]:
-    """Orthonormal 8 x 8 cosine patterns of order u + v >= 5, shape (64, n)."""
+    """Orthonormal 8 x 8 cosine patterns of order u + v = 6 and 7, shape (64, 15)."""
     place = np.arange(8)
     line = np.cos(np.pi * (2 * place[None, :] + 1) * place[:, None] / 16) / 2
     line[0] /= np.sqrt(2)
     both = np.einsum("ux,vy->uvxy", line, line).reshape(8, 8, 64)
-    return both[np.add.outer(place, place) >= 5].T
+    order = np.add.outer(place, place)
+    return both[(order == 6) | (order == 7)].T
