@@ -11,6 +11,7 @@ from mrics.recovery.settings import Settings
 
 #: name -> module of mrics.recovery holding ``solve(acquisition, settings, sigma) -> Recovered``
 METHODS: dict[str, str] = {
+    "dictionary": "dictionary.recovery",
     "homodyne": "partial_fourier",
     "pocs": "partial_fourier",
     "kernel": "kernel",

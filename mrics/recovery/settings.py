@@ -188,7 +188,68 @@ class Pocs(Settings):
     tolerance: float = _number(1e-4, 0.0, 1.0, above=True)
 
 
+@dataclass(frozen=True)
+class PatchDictionary(Settings):
+    """Sparse patches over a dictionary.
+
+    Attributes
+    ----------
+    source : str
+        "adaptive": learned from the data as it goes; "trained": the file ``dictionary``;
+        "dct", "wavelets", "union": fixed.
+    dictionary : str or None
+        Path of a trained dictionary; gives the patch size too.
+    patch, depth : int
+        Samples of a patch along u and v, and planes in a 3-D patch.
+    atoms : int
+        Atoms learned.
+    kind : str
+        "real": atoms that the real and imaginary part of a patch share; "complex".
+    joint : bool
+        Stack all frames of a place in one patch.
+    gain : float or "auto"
+        Error target of a patch, as a root mean square in units of the effective noise.
+    most_atoms : int or None
+        Most atoms of a patch; None for half its samples, so that the error target rules.
+    iterations : int
+        Outer iterations.
+    stride, border
+        Step between patches; "wrap" or "reflect".
+    start : str
+        "variation" or "zero-filled".
+    seed : int
+        Seed of the choice of patches.
+    """
+
+    source: str = _choice("adaptive", ("adaptive", "trained", "dct", "wavelets", "union"))
+    dictionary: str | None = field(default=None, metadata={"kind": "text", "optional": True})
+    patch: int = _number(8, 2, 32, whole=True)
+    depth: int = _number(1, 1, 16, whole=True)
+    atoms: int = _number(256, 2, 4096, whole=True)
+    kind: str = _choice("real", ("real", "complex"))
+    joint: bool = field(default=False, metadata={"kind": "flag"})
+    gain: float | str = _number("auto", 0.0, above=True, words=("auto",))
+    most_atoms: int | None = _number(None, 1, 4096, whole=True, optional=True)
+    iterations: int = _number(10, 1, 1000, whole=True)
+    stride: int = _number(1, 1, 32, whole=True)
+    border: str = _choice("wrap", ("wrap", "reflect"))
+    start: str = _choice("variation", ("variation", "zero-filled"))
+    seed: int = _number(0, 0, whole=True)
+
+    def __post_init__(self) -> None:
+        if self.dictionary is not None and self.source == "adaptive":
+            object.__setattr__(self, "source", "trained")
+        super().__post_init__()
+        if (self.source == "trained") != (self.dictionary is not None):
+            raise RecoveryError(
+                f"Source {self.source!r} and dictionary {self.dictionary!r} do not go together.",
+                "source, dictionary",
+                "Give dictionary = the path of a trained file, or another source without one.",
+            )
+
+
 SETTINGS: dict[str, type[Settings]] = {
+    "dictionary": PatchDictionary,
     "homodyne": Homodyne,
     "pocs": Pocs,
     "kernel": Kernel,
@@ -247,6 +308,9 @@ def _check_value(name: str, value: Any, rule: Mapping[str, Any]) -> None:
     if rule["kind"] == "flag":
         good = isinstance(value, bool)
         wanted = "true or false"
+    elif rule["kind"] == "text":
+        good = isinstance(value, str)
+        wanted = "a text"
     elif rule["kind"] == "choice":
         good = False
         wanted = f"one of {', '.join(map(repr, words))}"

@@ -1,0 +1,122 @@
+"""Whether a scan is of the kind that a dictionary was trained on.
+
+A prior from other anatomy can remove or invent detail. Patches of the scan are coded with as many
+atoms as the training patches were; where their relative residuals lie far above the training
+distribution the dictionary is outside its domain.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from mrics.recovery.dictionary.coding import Prepared
+from mrics.recovery.dictionary.patches import ENERGY_SHARE, Layout, cut, without_mean
+from mrics.recovery.dictionary.store import CHECK_SPARSITY, Dictionary
+
+Array = NDArray[Any]
+#: share of training patches that lie above the level a scan's patches are counted at
+_TAIL = 0.05
+#: a plane is outside where this share of its patches lies above that level
+OUTSIDE = 0.15
+#: patches must hold this many times the energy of their noise to be judged
+_CLEAR = 4.0
+
+
+@dataclass(frozen=True)
+class DomainCheck:
+    """Verdict on every plane.
+
+    Attributes
+    ----------
+    planes : ndarray of float, shape (group,)
+        Share of judged patches whose residual exceeds the training's 95 % point (0.05 expected).
+    outside : ndarray of bool, shape (group,)
+        Planes outside the domain.
+    map : ndarray of float32, shape (group, u, v)
+        Residual of the patch at each place divided by the training's 95 % point; 0 where the
+        patch holds little but noise.
+    sentence : str
+        One line for the report.
+    """
+
+    planes: Array
+    outside: NDArray[np.bool_]
+    map: NDArray[np.float32]
+    sentence: str
+
+
+def relative_residuals(patches: Array, prepared: Prepared, noise: float = 0.0) -> Array:
+    """Squared residuals at 6 atoms relative to the patch, expected noise energy taken away."""
+    from mrics.recovery.dictionary.coding import pursue
+
+    codes = pursue(patches, prepared, min(CHECK_SPARSITY, *prepared.atoms.shape))
+    length = patches.shape[1]
+    parts = 2 if np.iscomplexobj(patches) else 1
+    whole = np.sum(np.abs(patches) ** 2, axis=1, dtype=np.float64) - parts * length * noise**2
+    left = codes.residual - parts * max(0, length - CHECK_SPARSITY) * noise**2
+    result: Array = np.maximum(left, 0) / np.maximum(whole, 1e-30)
+    return result
+
+
+def check_domain(
+    dictionary: Dictionary, stack: Array, layout: Layout, noise: float = 0.0, stride: int = 2
+) -> DomainCheck:
+    """Compare coding residuals of a stack with those of the training.
+
+    Parameters
+    ----------
+    dictionary : Dictionary
+        With its training residuals.
+    stack : ndarray of shape (plane, u, v)
+        Recovered or reference images.
+    layout : Layout
+        Of the dictionary's patches.
+    noise : float
+        Standard deviation of the real part of the image's noise; its energy is taken away.
+    stride : int
+        Step between judged patches.
+    """
+    _, u, v = stack.shape
+    limit = float(np.quantile(dictionary.residuals, 1 - _TAIL))
+    prepared = Prepared(
+        dictionary.atoms.astype(
+            stack.dtype if np.iscomplexobj(dictionary.atoms) else stack.real.dtype
+        )
+    )
+    grid = np.stack(np.meshgrid(np.arange(0, u, stride), np.arange(0, v, stride), indexing="ij"))
+    spots = grid.reshape(2, -1).T
+    picture = np.zeros((len(layout.groups), u, v), np.float32)
+    shares = np.zeros(len(layout.groups))
+    parts = 2 if np.iscomplexobj(stack) else 1
+    for group in range(len(layout.groups)):
+        places = np.concatenate([np.full((len(spots), 1), group), spots], axis=1)
+        patches = without_mean(cut(stack, layout, places), layout.layers)
+        energy = np.sum(np.abs(patches) ** 2, axis=1)
+        floor = max(
+            10 * ENERGY_SHARE * float(energy.max()), _CLEAR * parts * layout.length * noise**2
+        )
+        judged = energy > floor
+        if not judged.any():
+            continue
+        ratio = relative_residuals(patches[judged], prepared, noise) / max(limit, 1e-12)
+        shares[group] = float(np.mean(ratio > 1))
+        chosen = places[judged]
+        picture[
+            group,
+            (chosen[:, 1] + layout.size[0] // 2) % u,
+            (chosen[:, 2] + layout.size[1] // 2) % v,
+        ] = ratio
+    outside = shares > OUTSIDE
+    if outside.any():
+        sentence = (
+            f"outside its domain on {int(outside.sum())} of {len(outside)} planes (worst: "
+            f"{100 * shares.max():.0f} % of patches code worse than 95 % of the training's): "
+            "detail may be removed or invented"
+        )
+    else:
+        sentence = "inside the dictionary's domain on all planes"
+    return DomainCheck(shares, outside, picture, sentence)

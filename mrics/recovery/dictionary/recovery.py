@@ -1,0 +1,216 @@
+"""Recovery with a patch dictionary, learned from the data as it goes or trained before.
+
+Outer iteration t has an effective noise s_t that falls geometrically from ``START_FACTOR`` times
+the noise of the data to the noise itself (aliasing that the start left counts as noise):
+
+1. every patch, its mean apart, is coded by matching pursuit until its squared residual is below
+   2 n (gain s_t)^2, n its samples; the image d is the average of the coded patches, those of few
+   atoms weighted higher;
+2. x minimises ||A x - y||^2 + (coupling sigma / s_t)^2 ||x - d||^2: by a division in k-space on one
+   channel, by conjugate gradients from d on several.
+
+``source = "adaptive"`` learns the atoms online from patches of the current image (Ravishankar &
+Bresler 2011, doi:10.1109/TMI.2010.2090538, with other learning and noise schedule). There is no
+fixed objective, so the result is not certified.
+"""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from mrics.encoding import blocks
+from mrics.encoding.acquisition import Acquisition
+from mrics.encoding.operator import Encoding
+from mrics.numerics import fft_planes, ifft_planes, map_blocks
+from mrics.recovery.contract import Certificate, Recovered
+from mrics.recovery.dictionary.coding import Prepared
+from mrics.recovery.dictionary.domain import check_domain
+from mrics.recovery.dictionary.fixed import fixed_atoms
+from mrics.recovery.dictionary.learning import learn_online
+from mrics.recovery.dictionary.patches import Averaged, Layout, choose, code_and_average, lay_out
+from mrics.recovery.dictionary.store import Dictionary, load_dictionary
+from mrics.recovery.plane import scale_unit
+from mrics.recovery.settings import PatchDictionary, Variation, ZeroFilled
+
+Array = NDArray[Any]
+#: chosen on volume A alone
+GAIN, START_FACTOR, COUPLING = 1.0, 2.0, 1.0
+_CG_STEPS = 6
+_LEARN_PATCHES, _LEARN_ATOMS = 10_000, 8
+
+
+def solve(acquisition: Acquisition, settings: PatchDictionary, sigma: float) -> Recovered:
+    """Recover every plane; see the module for the method."""
+    if acquisition.channels > 1 and acquisition.sensitivities is None:
+        from mrics.encoding import with_sensitivities
+
+        acquisition = with_sensitivities(acquisition)
+    unit = scale_unit(acquisition)
+    image = _start(acquisition, settings, sigma)
+    if not image.any():
+        return Recovered(image, Certificate("dictionary", certified=False, note="all data are 0"))
+    # Real atoms see the image's own real and imaginary part: its mean phase is taken out, so that a
+    # global phase of the data changes nothing.
+    middle = complex(image.sum(dtype=np.complex128))
+    turned = unit * (middle / abs(middle) if middle else 1.0)
+    image /= image.dtype.type(turned)
+    noise = sigma / unit
+    layout, atoms, known = _first_atoms(acquisition, settings)
+    limit = settings.most_atoms or layout.length // 2
+    gain = GAIN if isinstance(settings.gain, str) else settings.gain
+    history: dict[str, list[float]] = {"change": [], "atoms_per_patch": [], "noise": []}
+    number = settings.iterations
+    averaged: Averaged | None = None
+    prepared = None if atoms is None else Prepared(atoms)
+    for turn in range(number):
+        level = noise * START_FACTOR ** (1 - turn / max(1, number - 1))
+        target = 2 * layout.length * (gain * level) ** 2
+        if settings.source == "adaptive":
+            atoms = _learned(image, layout, settings, atoms, target, turn)
+            prepared = Prepared(atoms)
+        assert prepared is not None
+        averaged = code_and_average(image, prepared, layout, limit, target)
+        coupling = (COUPLING * noise / level) ** 2
+        fresh = data_step(acquisition, averaged.image, coupling, turned)
+        change = float(np.linalg.norm(fresh - image)) / max(float(np.linalg.norm(fresh)), 1e-30)
+        image = fresh
+        history["change"].append(change)
+        history["atoms_per_patch"].append(averaged.mean_atoms)
+        history["noise"].append(level * unit)
+    assert averaged is not None
+    assert prepared is not None
+    order = np.argsort(-averaged.use, kind="stable")
+    extras: dict[str, Any] = {
+        "atoms": prepared.atoms[order],
+        "usage": averaged.use[order],
+        "residual": np.sqrt(averaged.residual) * unit,
+        "atoms_per_patch": averaged.atoms_used,
+        "patch": (*layout.size,),
+        "layers": layout.layers,
+    }
+    note = (
+        "not certified: no fixed objective; "
+        f"{averaged.mean_atoms:.1f} atoms per patch at the last error target"
+    )
+    if known is not None and known.residuals.size:
+        verdict = check_domain(known, image, layout, noise)
+        extras["domain"] = verdict.planes
+        extras["domain_map"] = verdict.map
+        note += f"; {verdict.sentence}"
+    certificate = Certificate(
+        "dictionary",
+        iterations=number,
+        final_change=history["change"][-1],
+        certified=False,
+        weight=gain,
+        weight_rule="auto: error target of the noise" if settings.gain == "auto" else "given",
+        note=note,
+    )
+    image *= image.dtype.type(turned)
+    return Recovered(image, certificate, history, extras)
+
+
+def _start(acquisition: Acquisition, settings: PatchDictionary, sigma: float) -> Array:
+    """Warm start in the unit of the data."""
+    if settings.start == "zero-filled":
+        from mrics.recovery import zero_filled
+
+        return zero_filled.solve(acquisition, ZeroFilled(), sigma).image
+    from mrics.recovery import variation
+
+    return variation.solve(acquisition, Variation(), sigma).image
+
+
+def _first_atoms(
+    acquisition: Acquisition, settings: PatchDictionary
+) -> tuple[Layout, Array | None, Dictionary | None]:
+    """Layout of the patches, fixed or trained atoms, and the trained dictionary."""
+    real = np.dtype(acquisition.kspace.dtype.type(0).real.dtype)
+    known = None if settings.dictionary is None else load_dictionary(settings.dictionary)
+    size: tuple[int, ...] = (settings.patch, settings.patch)
+    if settings.depth > 1:
+        size = (settings.depth, *size)
+    layout = lay_out(
+        acquisition.shape, known.patch if known else size, frames=_frames(acquisition),
+        joint=settings.joint, stride=settings.stride, border=settings.border,
+    )  # fmt: skip
+    if settings.source == "adaptive":
+        return layout, None, None
+    if settings.source == "trained":
+        assert known is not None
+        assert settings.dictionary is not None
+        known = load_dictionary(settings.dictionary, layers=layout.layers)
+        kind = acquisition.kspace.dtype if np.iscomplexobj(known.atoms) else real
+        return layout, known.atoms.astype(kind), known
+    atoms = fixed_atoms(settings.source, layout.size, settings.atoms)
+    if layout.layers > 1:
+        atoms = np.kron(np.eye(layout.layers), atoms)
+    return layout, atoms.astype(real), None
+
+
+def _frames(acquisition: Acquisition) -> int:
+    shape = acquisition.volume_shape
+    return int(shape[3]) if len(shape) > 3 else max(1, acquisition.pattern.frames)
+
+
+def _learned(
+    image: Array, layout: Layout, settings: PatchDictionary, atoms: Array | None,
+    target: float, turn: int,
+) -> Array:  # fmt: skip
+    """Atoms taught by patches of the current image, from the last ones on."""
+    patches = choose(image, layout, _LEARN_PATCHES, settings.seed, ("recovery", turn))
+    number = settings.atoms
+    kind = image.dtype if settings.kind == "complex" else image.real.dtype
+    return learn_online(
+        patches, number, sparsity=_LEARN_ATOMS, error=target, passes=3 if atoms is None else 1,
+        seed=settings.seed, start=atoms, kind=kind,
+    )  # fmt: skip
+
+
+def data_step(acquisition: Acquisition, denoised: Array, coupling: float, unit: complex) -> Array:
+    """Images that minimise ||A x - y / unit||^2 + coupling ||x - denoised||^2, block by block."""
+    out = np.empty_like(denoised)
+    real = denoised.real.dtype.type
+    for planes, encoding, data in blocks(acquisition):
+        first = planes.start
+
+        def one(
+            i: int, encoding: Encoding = encoding, data: Array = data, first: int = first
+        ) -> None:
+            part = encoding.part(slice(i, i + 1))
+            start = denoised[first + i][None]
+            if part.sensitivities is None:
+                spectrum = fft_planes(start)
+                wanted = data[i] / denoised.dtype.type(unit)
+                share = part.mask[0, 0] / real(1 + coupling)
+                spectrum += share * (wanted - spectrum)
+                out[first + i] = ifft_planes(spectrum, overwrite=True)[0]
+            else:
+                right = part.adjoint(data[i : i + 1]) / denoised.dtype.type(unit)
+                out[first + i] = _gradients(part, right, start, real(coupling))[0]
+
+        map_blocks(one, range(data.shape[0]))
+    return out
+
+
+def _gradients(encoding: Encoding, right: Array, start: Array, coupling: Any) -> Array:
+    """(A^H A + coupling) x = right + coupling start, from ``start``."""
+    x = start.copy()
+    residual = right - encoding.normal(x)
+    direction = residual.copy()
+    square = float(np.vdot(residual, residual).real)
+    begin = square
+    for _ in range(_CG_STEPS):
+        if square <= 1e-10 * begin or square == 0:
+            break
+        mapped = encoding.normal(direction) + coupling * direction
+        step = x.real.dtype.type(square / float(np.vdot(direction, mapped).real))
+        x += step * direction
+        residual -= step * mapped
+        following = float(np.vdot(residual, residual).real)
+        direction = residual + x.real.dtype.type(following / square) * direction
+        square = following
+    return x
