@@ -20,6 +20,8 @@ app = typer.Typer(
     rich_markup_mode=None,
 )
 
+_STOPPED = 130
+
 Force = Annotated[bool, typer.Option("--force", help="Replace what is there.")]
 Quick = Annotated[bool, typer.Option("--quick", help="Few slices, for a first look.")]
 Workers = Annotated[
@@ -46,9 +48,12 @@ def main() -> None:
             raise
         typer.echo(f"mrics: {error}", err=True)
         sys.exit(2)
-    except KeyboardInterrupt:
-        typer.echo("mrics: stopped; finished units are kept, run again to go on", err=True)
-        sys.exit(130)
+    except (KeyboardInterrupt, SystemExit) as stop:
+        # typer turns Ctrl-C into status 130.
+        if isinstance(stop, SystemExit) and stop.code != _STOPPED:
+            raise
+        typer.echo("\nmrics: stopped; finished units are kept, run again to go on", err=True)
+        sys.exit(_STOPPED)
 
 
 def _version(wanted: bool) -> None:

@@ -5,6 +5,7 @@ import io
 import json
 import os
 import re
+import signal
 import subprocess
 import sys
 from pathlib import Path
@@ -203,3 +204,27 @@ def test_the_study_can_be_read_by_json_alone(tmp_path: Path) -> None:
     assert mrics("run", protocol, "--out", tmp_path / "o", "--quick").returncode == 0
     text = (tmp_path / "o" / "results.json").read_text()
     json.loads(text, parse_constant=lambda name: pytest.fail(f"{name} is not JSON"))
+
+
+def test_ctrl_c_keeps_finished_units_and_says_so(tmp_path: Path) -> None:
+    text = PROTOCOL.replace("draws = 2", "draws = 400")
+    protocol = write_small_study(tmp_path, scans=1, protocol=text)
+    code = "from mrics.cli import main; main()"
+    child = subprocess.Popen(
+        [sys.executable, "-c", code, "run", str(protocol), "--out", str(tmp_path / "o")],
+        stderr=subprocess.PIPE,
+        stdout=subprocess.DEVNULL,
+        text=True,
+    )
+    assert child.stderr is not None
+    for line in child.stderr:
+        if "left" in line:
+            break
+    child.send_signal(signal.SIGINT)
+    rest = child.stderr.read()
+    child.stderr.close()
+    assert child.wait() == 130
+    assert "finished units are kept" in rest
+    assert "Traceback" not in rest
+    units = json.loads((tmp_path / "o" / "results.json").read_text())["units"]
+    assert len(units) > 10
