@@ -18,7 +18,7 @@ NAMES = ("sub-a_acq-gre3d", "sub-c_acq-tse2d")
 @pytest.mark.parametrize("seed", range(10))
 def test_clean_scans_have_no_finding(seed: int, magnitude: bool) -> None:
     name = NAMES[seed % 2]
-    x = noisy(sample(name, 18), 0.7 * seed, seed)  # SNR about 30 down to 13
+    x = noisy(sample(name, 14), 0.7 * seed, seed)  # SNR about 30 down to 13
     found = inspect_scan(as_scan(np.abs(x) if magnitude else x), axes_of(name))
     assert [f.code for f in found] == (["magnitude-only"] if magnitude else [])
 
@@ -38,7 +38,7 @@ RUNS = [
 )
 def test_manipulated_scans_are_found(number: int, case: Case, magnitude: bool) -> None:
     name = NAMES[(number + magnitude) % 2]
-    clean = noisy(sample(name, 18), 2.0, number)
+    clean = noisy(sample(name, 14), 2.0, number)
     found = inspect_scan(as_scan(manipulated(case, clean, magnitude)), axes_of(name))
     assert {f.code for f in found} & set(case.codes), [f.code for f in found]
     if case.true_share:
