@@ -60,8 +60,13 @@ def arm_numbers(
     ]
     summaries: dict[str, dict[str, Summary | None]] = {
         arm: {
+            # Draw k is one pattern for all scans of a grid (see units.draw_of).
             name: summarise(
-                _records(mine, name), direction=METRICS[name].direction, level=level, seed=seed
+                _records(mine, name),
+                direction=METRICS[name].direction,
+                level=level,
+                seed=seed,
+                shared_draws=True,
             )
             for name in scored
         }
@@ -154,7 +159,7 @@ def _against_today(
     baseline = _records(units[today], name)
     if not arms or not any(r[3] is not None for r in baseline):
         return {}
-    return compare_arms(arms, baseline, level=level, seed=seed)
+    return compare_arms(arms, baseline, level=level, seed=seed, shared_draws=True)
 
 
 def _records(units: Sequence[dict[str, Any]], name: str) -> Records:
