@@ -60,13 +60,8 @@ def arm_numbers(
     ]
     summaries: dict[str, dict[str, Summary | None]] = {
         arm: {
-            # Draw k is one pattern for all scans of a grid (see units.draw_of).
             name: summarise(
-                _records(mine, name),
-                direction=METRICS[name].direction,
-                level=level,
-                seed=seed,
-                shared_draws=True,
+                _records(mine, name), direction=METRICS[name].direction, level=level, seed=seed
             )
             for name in scored
         }
@@ -159,7 +154,7 @@ def _against_today(
     baseline = _records(units[today], name)
     if not arms or not any(r[3] is not None for r in baseline):
         return {}
-    return compare_arms(arms, baseline, level=level, seed=seed, shared_draws=True)
+    return compare_arms(arms, baseline, level=level, seed=seed)
 
 
 def _records(units: Sequence[dict[str, Any]], name: str) -> Records:
