@@ -231,6 +231,12 @@ class StudyPlan:
                 + ", ".join(f"{r['id']} {len(r['planes'])}" for r in few)
                 + "."
             )
+        if len(records) > 2 and any(row.draws > 1 for row in self.rows):
+            notes.append(
+                "All scans of a grid share the patterns of a draw, while intervals over scans take "
+                "draws as independent between scans: they are too narrow where the luck of the "
+                "draw outweighs the difference between scans."
+            )
         notes.append(self._channel_note(records))
         return notes
 
