@@ -108,23 +108,24 @@ def new(
 def plan(
     protocol: ProtocolFile,
     page: Annotated[
-        Path | None, typer.Option("--page", help="Where to write the page of pattern pictures.")
+        Path | None, typer.Option("--page", help="Also draw the patterns, as a page written here.")
     ] = None,
 ) -> None:
     """Lines acquired, achieved R and scan time of every arm, without touching image data.
 
-    Example: mrics plan knee.toml
+    Example: mrics plan knee.toml --page knee-plan.html
     """
     from mrics.cli.tables import plan_table
     from mrics.protocol import load_protocol
-    from mrics.report import write_plan_page
     from mrics.study import plan_study
 
     study_plan = plan_study(load_protocol(protocol))
     typer.echo(plan_table(study_plan))
-    where = page if page is not None else protocol.with_suffix(".plan.html")
-    write_plan_page(study_plan, where)
-    typer.echo(f"\npage: {where}\n{RESEARCH_ONLY}")
+    if page is not None:
+        from mrics.report import write_plan_page
+
+        typer.echo(f"\npage: {write_plan_page(study_plan, page)}")
+    typer.echo(RESEARCH_ONLY)
 
 
 @app.command()

@@ -4,13 +4,15 @@ from __future__ import annotations
 
 import textwrap
 from collections.abc import Sequence
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from mrics.protocol import minutes
-from mrics.scan import Scan
-from mrics.scan.fitness import Inspection
-from mrics.study import Difference, StudyPlan
-from mrics.study.as_is import Optimism
+
+if TYPE_CHECKING:
+    from mrics.scan import Scan
+    from mrics.scan.fitness import Inspection
+    from mrics.study import Difference, StudyPlan
+    from mrics.study.as_is import Optimism
 
 WIDTH = 100
 

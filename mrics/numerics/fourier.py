@@ -15,7 +15,7 @@ from __future__ import annotations
 from typing import Any
 
 import numpy as np
-import scipy.fft
+import scipy  # scipy.fft loads on first use: a plan needs none
 from numpy.typing import NDArray
 
 from mrics.numerics.threads import threads

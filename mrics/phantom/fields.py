@@ -6,8 +6,8 @@ from collections.abc import Sequence
 from typing import Any
 
 import numpy as np
+import scipy
 from numpy.typing import NDArray
-from scipy.sparse import csr_array
 
 from mrics.errors import MricsError
 from mrics.numerics import stream
@@ -68,7 +68,7 @@ class RandomField:
         return (along @ part).reshape(-1, n_z, n_x).transpose(1, 0, 2)
 
 
-def spline_weights(place: Array) -> tuple[csr_array, slice]:
+def spline_weights(place: Array) -> tuple[scipy.sparse.csr_array, slice]:
     """Weights of a uniform cubic B-spline.
 
     Parameters
@@ -92,6 +92,6 @@ def spline_weights(place: Array) -> tuple[csr_array, slice]:
     weights = np.where(away < 1.0, inner, outer).astype(np.float32)
     starts = np.arange(0, weights.size + 1, 4)
     shape = (len(place), high - low)
-    return csr_array((weights.ravel(), (columns - low).ravel(), starts), shape=shape), slice(
-        low, high
-    )
+    return scipy.sparse.csr_array(
+        (weights.ravel(), (columns - low).ravel(), starts), shape=shape
+    ), slice(low, high)

@@ -5,8 +5,8 @@ from __future__ import annotations
 from typing import Any
 
 import numpy as np
+import scipy
 from numpy.typing import NDArray
-from scipy import ndimage
 
 from mrics.errors import ScanError
 from mrics.scan.volume import Scan
@@ -41,7 +41,7 @@ def body_mask(volume: Scan | NDArray[Any]) -> NDArray[np.bool_]:
         True everywhere in a volume that has no air.
     """
     magnitude = spatial_magnitude(volume)
-    smooth = ndimage.uniform_filter(magnitude, 3, mode="nearest")
+    smooth = scipy.ndimage.uniform_filter(magnitude, 3, mode="nearest")
     level = _otsu(np.sqrt(smooth)) ** 2
     bright = smooth > level
     dark = smooth[~bright]
@@ -91,11 +91,11 @@ def _opened(mask: NDArray[np.bool_]) -> NDArray[np.bool_]:
     """Thin bridges and specks removed; the volume's border counts as body."""
     if min(mask.shape) < 3:
         return mask
-    return ndimage.binary_dilation(ndimage.binary_erosion(mask, border_value=1)) & mask
+    return scipy.ndimage.binary_dilation(scipy.ndimage.binary_erosion(mask, border_value=1)) & mask
 
 
 def _large_parts(opened: NDArray[np.bool_], whole: NDArray[np.bool_]) -> NDArray[np.bool_]:
-    labels, count = ndimage.label(opened)
+    labels, count = scipy.ndimage.label(opened)
     if count == 0:
         return whole
     sizes = np.bincount(labels.ravel())
@@ -106,9 +106,9 @@ def _large_parts(opened: NDArray[np.bool_], whole: NDArray[np.bool_]) -> NDArray
 
 def _fill(mask: NDArray[np.bool_]) -> NDArray[np.bool_]:
     """Air that does not reach the border is body: in space, then in planes along each axis."""
-    mask = ~_reaches_border(~mask, ndimage.generate_binary_structure(3, 1), (0, 1, 2))
+    mask = ~_reaches_border(~mask, scipy.ndimage.generate_binary_structure(3, 1), (0, 1, 2))
     for axis in range(3):
-        structure = ndimage.generate_binary_structure(3, 1)
+        structure = scipy.ndimage.generate_binary_structure(3, 1)
         np.moveaxis(structure, axis, 0)[[0, 2]] = False
         borders = tuple(a for a in range(3) if a != axis)
         if min(mask.shape[a] for a in borders) > 2:
@@ -119,7 +119,7 @@ def _fill(mask: NDArray[np.bool_]) -> NDArray[np.bool_]:
 def _reaches_border(
     air: NDArray[np.bool_], structure: NDArray[np.bool_], axes: tuple[int, ...]
 ) -> NDArray[np.bool_]:
-    labels, count = ndimage.label(air, structure)
+    labels, count = scipy.ndimage.label(air, structure)
     outside = np.zeros(count + 1, dtype=bool)
     for axis in axes:
         for end in (0, -1):

@@ -6,8 +6,8 @@ from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
+import scipy
 from numpy.typing import NDArray
-from scipy import ndimage, special
 
 from mrics.scan.mask import body_mask, spatial_magnitude
 from mrics.scan.volume import Scan
@@ -125,7 +125,7 @@ def first_volume(scan: Scan) -> NDArray[Any]:
 
 def air_noise(magnitude: NDArray[Any], mask: NDArray[np.bool_]) -> Noise | None:
     """Root of half the mean power in quiet air, or None where there is too little air."""
-    near = ndimage.binary_dilation(mask, iterations=_MARGIN)
+    near = scipy.ndimage.binary_dilation(mask, iterations=_MARGIN)
     usable = _block_mean((magnitude > 0) & ~near) == 1
     if np.count_nonzero(usable) < LEAST_BLOCKS:
         return None
@@ -133,7 +133,7 @@ def air_noise(magnitude: NDArray[Any], mask: NDArray[np.bool_]) -> Noise | None:
     mean = _block_mean(magnitude)[usable]
     shape = float(_BLOCK**2)
     level, count = quiet_mean(power / 2, shape)
-    quiet = power / 2 <= level * special.gammaincinv(shape, 0.98) / shape
+    quiet = power / 2 <= level * scipy.special.gammaincinv(shape, 0.98) / shape
     average, square = float(mean[quiet].mean()), float(power[quiet].mean())
     spread = float(np.sqrt(max(square - average**2, 0.0)))
     return Noise(float(np.sqrt(level)), "air", count, average / spread if spread > 0 else 0.0)
@@ -149,7 +149,7 @@ def channels_of_ratio(ratio: float) -> float | None:
     if ratio < (1 + RATIO_SLACK) * RAYLEIGH_RATIO:
         return 1.0
     count = np.geomspace(1, 256, 512)
-    mean = np.sqrt(2) * np.exp(special.gammaln(count + 0.5) - special.gammaln(count))
+    mean = np.sqrt(2) * np.exp(scipy.special.gammaln(count + 0.5) - scipy.special.gammaln(count))
     return float(np.interp(ratio, mean / np.sqrt(2 * count - mean**2), count))
 
 
@@ -204,9 +204,9 @@ def quiet_mean(values: NDArray[Any], shape: float) -> tuple[float, int]:
     shape : float
         Shape of the gamma law of pure noise (1 / its relative variance).
     """
-    cut = special.gammaincinv(shape, 0.9) / shape
-    correction = special.gammainc(shape + 1, cut * shape) / 0.9
-    mean = float(np.quantile(values, 0.05)) * shape / special.gammaincinv(shape, 0.05)
+    cut = scipy.special.gammaincinv(shape, 0.9) / shape
+    correction = scipy.special.gammainc(shape + 1, cut * shape) / 0.9
+    mean = float(np.quantile(values, 0.05)) * shape / scipy.special.gammaincinv(shape, 0.05)
     kept = values
     for _ in range(50):
         kept = values[values < cut * mean]
@@ -221,8 +221,8 @@ def quiet_mean(values: NDArray[Any], shape: float) -> tuple[float, int]:
 
 def second_difference(part: NDArray[Any]) -> NDArray[Any]:
     """[1 -2 1] along both plane axes; the squared weights sum to 36."""
-    once = ndimage.correlate1d(part, [1.0, -2.0, 1.0], axis=0, mode="nearest")
-    return ndimage.correlate1d(once, [1.0, -2.0, 1.0], axis=1, mode="nearest")
+    once = scipy.ndimage.correlate1d(part, [1.0, -2.0, 1.0], axis=0, mode="nearest")
+    return scipy.ndimage.correlate1d(once, [1.0, -2.0, 1.0], axis=1, mode="nearest")
 
 
 def _block_mean(values: NDArray[Any]) -> NDArray[np.float64]:

@@ -13,7 +13,6 @@ from numpy.typing import NDArray
 from mrics.errors import ScanError
 from mrics.numerics import centred_fft, centred_ifft, stream
 from mrics.scan.fitness.finding import Finding
-from mrics.scan.fitness.view import PROFILE_DB, ScanView
 from mrics.scan.volume import LETTERS, Axes, Scan
 
 INVENTED = "invented phase"
@@ -84,6 +83,9 @@ def acquired_region(scan: Scan, axes: Axes | None = None) -> dict[str, NDArray[n
         By axis letter, centred (zero frequency at N//2); True where k-space is not empty. Studies
         restrict their patterns to it. A scan without phase cannot tell one-sided emptiness.
     """
+    # The checks' view needs scipy.ndimage, which a plan should not wait for.
+    from mrics.scan.fitness.view import PROFILE_DB, ScanView
+
     view = ScanView(scan, axes if axes is not None else Axes())
     region = {}
     for axis in view.encoded:

@@ -56,10 +56,10 @@ def test_new_plan_run_report_on_ones_own_scans(tmp_path: Path) -> None:
     assert len(load_protocol(tmp_path / "mine.toml").scan_files()) == 2
     refused("new", *scans, "--out", tmp_path / "mine.toml", says="exists")
 
-    done = mrics("plan", tmp_path / "mine.toml")
+    done = mrics("plan", tmp_path / "mine.toml", "--page", tmp_path / "patterns.html")
     assert done.returncode == 0, done.stderr
     assert max(len(line) for line in done.stdout.splitlines() if "page:" not in line) <= 100
-    assert (tmp_path / "mine.plan.html").is_file()
+    assert (tmp_path / "patterns.html").is_file()
     assert RESEARCH_ONLY in done.stdout
 
     done = mrics("run", tmp_path / "mine.toml", "--out", tmp_path / "out", "--quick")

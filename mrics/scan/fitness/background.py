@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import numpy as np
-from scipy import ndimage
+import scipy
 
 from mrics.scan.fitness.finding import Finding
 from mrics.scan.fitness.view import ScanView
@@ -26,7 +26,7 @@ def exact_zeros(view: ScanView) -> tuple[Finding, ...]:
     if not outside.any():
         return ()
     size = [3 if axis < 2 and view.volume.shape[axis] >= 3 else 1 for axis in range(3)]
-    solid = outside & (ndimage.maximum_filter(view.magnitude, size, mode="nearest") == 0)
+    solid = outside & (scipy.ndimage.maximum_filter(view.magnitude, size, mode="nearest") == 0)
     air = np.count_nonzero(outside)
     share = float(np.count_nonzero(solid) / air)
     if share <= SHARE:

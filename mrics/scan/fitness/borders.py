@@ -5,7 +5,7 @@ from __future__ import annotations
 from typing import Any
 
 import numpy as np
-from scipy import ndimage
+import scipy
 
 from mrics.numerics import circular_correlation
 from mrics.scan.fitness.finding import Finding
@@ -42,14 +42,14 @@ def ghosting(view: ScanView) -> tuple[Finding, ...]:
 
 def ghost_amplitude(view: ScanView, axis: int) -> tuple[float, int, float] | None:
     """Strongest ghost along an axis: amplitude, shift in voxels, slope / standard error."""
-    near = ndimage.binary_dilation(view.mask, iterations=3)
+    near = scipy.ndimage.binary_dilation(view.mask, iterations=3)
     across = 2 if axis != 2 else 0
     step = max(1, view.volume.shape[across] // _MOST_PLANES)
     index: list[Any] = [slice(None)] * 3
     index[across] = slice(None, None, step)
     power = view.magnitude[tuple(index)].astype(np.float64) ** 2
-    texture = power - ndimage.uniform_filter1d(power, _SMOOTH, axis=axis, mode="wrap")
-    air = ndimage.minimum_filter1d(
+    texture = power - scipy.ndimage.uniform_filter1d(power, _SMOOTH, axis=axis, mode="wrap")
+    air = scipy.ndimage.minimum_filter1d(
         ~near[tuple(index)] & (power > 0), _SMOOTH, axis=axis, mode="wrap"
     )
     body = np.where(view.mask[tuple(index)], texture, 0.0)

@@ -6,8 +6,8 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
+import scipy
 from numpy.typing import NDArray
-from scipy import ndimage
 
 from mrics.numerics import centred_fft
 from mrics.scan.noise import quiet_mean
@@ -146,7 +146,7 @@ def noise_correlation(
     if values.shape[axis] < _BLOCK or values.shape[across] < _BLOCK:
         return None
     for filtered in (across,) if axis < 2 else (0, 1):
-        values = ndimage.correlate1d(values, _CROSS, axis=filtered, mode="nearest")
+        values = scipy.ndimage.correlate1d(values, _CROSS, axis=filtered, mode="nearest")
     blocks = _blocks(values.transpose(axis, across, third))
     kept = blocks[_blocks(inside.transpose(axis, across, third)).all(axis=(1, 2))]
     if len(kept) < LEAST_BLOCKS:

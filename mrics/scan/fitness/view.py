@@ -7,8 +7,8 @@ from functools import cached_property, wraps
 from typing import Any, TypeVar
 
 import numpy as np
+import scipy
 from numpy.typing import NDArray
-from scipy import ndimage
 
 from mrics.numerics import centred_fft, map_blocks
 from mrics.scan.fitness.edges import Edge, profile_edge, spectrum_edge
@@ -123,7 +123,7 @@ class ScanView:
     @cached_property
     def inside(self) -> NDArray[np.bool_]:
         """The body without its outer two voxels; the volume's border is no edge of the body."""
-        return ndimage.binary_erosion(self.mask, iterations=2, border_value=1)
+        return scipy.ndimage.binary_erosion(self.mask, iterations=2, border_value=1)
 
     @_once
     def detail_spectrum(self, axis: int) -> LineSpectrum | None:
