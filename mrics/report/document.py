@@ -17,12 +17,7 @@ from mrics.report.charts import draw_against_acceleration, draw_by_slice
 from mrics.report.colours import FAIL, INK, MUTED
 from mrics.report.folder import StudyFolder, open_folder
 from mrics.report.image_figures import draw_panels
-from mrics.report.measure_charts import (
-    draw_features,
-    draw_spectral,
-    kept_features,
-    spectral_curves,
-)
+from mrics.report.panels import Panel, panels
 from mrics.report.pattern_figures import draw_pattern_picture
 from mrics.report.pictures import load_pictures
 from mrics.report.style_figures import figure_style
@@ -106,8 +101,8 @@ def _pages(study: StudyFolder) -> Iterator[Callable[[Any], None]]:
     charted = charted_metrics(study)
     if charted:
         yield partial(_chart_page, study=study, metrics=charted)
-    if kept_features(study) or spectral_curves(study):
-        yield partial(_measures_page, study=study)
+    for together in _filled(panels(study)):
+        yield partial(_panel_page, together=together)
     for view in arm_views(study, pictures, windows(study, pictures)):
         yield partial(_arm_page, study=study, view=view)
     yield from _text_pages(list(_appendix(study)))
@@ -193,17 +188,32 @@ def _chart_page(figure: Any, study: StudyFolder, metrics: Any) -> None:
     draw_against_acceleration(area, study, metrics)
 
 
-def _measures_page(figure: Any, study: StudyFolder) -> None:
-    upper, lower = _bands(figure, 0.91, 0.53, 0.47, 0.08)
-    head: Any = {"fontsize": 13, "weight": "bold", "va": "top"}
-    if kept_features(study):
-        figure.text(
-            _LEFT, _TOP, "Small features that survive", fontsize=13, weight="bold", va="top"
-        )
-        draw_features(upper, study)
-    if spectral_curves(study):
-        figure.text(_LEFT, 0.5, "Error by fineness of detail", **head)
-        draw_spectral(lower, study)
+def _filled(every: list[Panel]) -> Iterator[list[Panel]]:
+    """Panels that share a page."""
+    together: list[Panel] = []
+    for panel in every:
+        if together and sum(_share(one) for one in [*together, panel]) > _TOP - _BOTTOM:
+            yield together
+            together = []
+        together.append(panel)
+    if together:
+        yield together
+
+
+def _share(panel: Panel) -> float:
+    """Height of a panel with its heading, of the page's."""
+    scale = (_RIGHT - _LEFT) * _WIDTH / panel.size_in[0]
+    return min(_TOP - _BOTTOM, scale * panel.size_in[1] / _HEIGHT + 0.05)
+
+
+def _panel_page(figure: Any, together: list[Panel]) -> None:
+    edges, height = [], _TOP
+    for panel in together:
+        figure.text(_LEFT, height, panel.title, fontsize=13, weight="bold", va="top")
+        edges += [height - 0.028, height - _share(panel) + 0.01]
+        height -= _share(panel)
+    for area, panel in zip(_bands(figure, *edges), together, strict=True):
+        panel.draw(area)
 
 
 def _arm_page(figure: Any, study: StudyFolder, view: ArmView) -> None:

@@ -12,7 +12,7 @@ from mrics.report.arms import arm_views, windows
 from mrics.report.charts import against_acceleration, by_slice
 from mrics.report.folder import StudyFolder, open_folder
 from mrics.report.image_figures import panel_figure
-from mrics.report.measure_charts import feature_figure, spectral_figure
+from mrics.report.panels import panels
 from mrics.report.pattern_figures import pattern_figure
 from mrics.report.pictures import load_pictures
 from mrics.report.style_figures import figure_style
@@ -32,8 +32,8 @@ def write_figures(directory: str | Path) -> tuple[Path, ...]:
     Returns
     -------
     tuple of Path
-        ``metrics``, ``features`` and ``spectral`` (where measured), and for each arm
-        ``<arm>-pattern``, ``<arm>-images`` and ``<arm>-slices``.
+        ``metrics``, one for each further panel (``features``, ``spectral``, ...), and for each
+        arm ``<arm>-pattern``, ``<arm>-images`` and ``<arm>-slices``.
 
     Raises
     ------
@@ -66,10 +66,8 @@ def _figures(study: StudyFolder) -> Iterator[tuple[str, Any]]:
     charted = charted_metrics(study)
     if charted:
         yield "metrics", against_acceleration(study, charted)
-    for name, further in (("features", feature_figure), ("spectral", spectral_figure)):
-        figure = further(study)
-        if figure is not None:
-            yield name, figure
+    for panel in panels(study):
+        yield panel.name, panel.figure()
     for view in arm_views(study, pictures, windows(study, pictures)):
         name = "".join(c if c.isalnum() or c in "-." else "-" for c in str(view.row["id"]))
         if view.pattern is not None:

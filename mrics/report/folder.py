@@ -102,6 +102,10 @@ class StudyFolder:
             if u["arm"] == arm and (scan is None or u["scan"] == scan) and u.get("slices")
         ]
 
+    def measures(self, arm: str) -> list[dict[str, Any]]:
+        """Tables of further measures of an arm's units, those that have any."""
+        return [u["measures"] for u in self.units(arm) if u.get("measures")]
+
     @cached_property
     def maps(self) -> tuple[StoredMap, ...]:
         """Every map that results.json names and that lies inside the folder."""

@@ -9,12 +9,7 @@ from mrics.report.arms import ArmPictures, ArmView, arm_views, windows
 from mrics.report.charts import against_acceleration, by_slice
 from mrics.report.folder import StudyFolder, open_folder
 from mrics.report.image_figures import Window, panel_figure
-from mrics.report.measure_charts import (
-    feature_figure,
-    kept_features,
-    spectral_curves,
-    spectral_figure,
-)
+from mrics.report.panels import panels
 from mrics.report.pattern_figures import pattern_figure
 from mrics.report.pictures import load_pictures
 from mrics.report.rendering import render, write_page
@@ -82,7 +77,7 @@ def page_values(study: StudyFolder) -> dict[str, Any]:
         "first_metric": metric_words(first_metric(study)),
         "chart": svg_uri(against_acceleration(study, charted)) if charted else None,
         "chart_text": _chart_text(study, charted),
-        "further": _further_charts(study),
+        "further": [(panel, svg_uri(panel.figure())) for panel in panels(study)],
         "missing_maps": study.missing,
         "units_done": sum(1 for u in study.results["units"] if u.get("slices")),
         "units_planned": study.results.get("units_planned"),
@@ -114,47 +109,6 @@ def _arm(study: StudyFolder, view: ArmView) -> dict[str, Any]:
             "mean and range over draws, one curve for each scan."
         )
     return out
-
-
-def _further_charts(study: StudyFolder) -> list[dict[str, Any]]:
-    """Charts of measures beyond the scores, with their text and the numbers behind them."""
-    labels = {arm["id"]: arm["label"] for arm in study.arms}
-    charts = []
-    features = feature_figure(study)
-    if features is not None:
-        kept = kept_features(study)
-        charts.append(
-            {
-                "title": "Small features that survive",
-                "image": svg_uri(features),
-                "text": "Share of the contrast of inserted features that is kept, by size and "
-                "contrast, one panel for each arm; 1 is all of it.",
-                "head": ("Size (mm)", "Contrast (%)", "Kept"),
-                "rows": [
-                    (labels[arm], *(number(v) for v in (size, contrast, value)))
-                    for arm, cells in kept.items()
-                    for (size, contrast), value in sorted(cells.items())
-                ],
-            }
-        )
-    spectral = spectral_figure(study)
-    if spectral is not None:
-        curves = spectral_curves(study)
-        charts.append(
-            {
-                "title": "Error by fineness of detail",
-                "image": svg_uri(spectral),
-                "text": "Error relative to the reference by spatial frequency, one curve for each "
-                "arm; fine detail lies to the right.",
-                "head": ("Frequency (cycles per mm)", "Error / reference"),
-                "rows": [
-                    (labels[arm], number(where), number(value))
-                    for arm, curve in curves.items()
-                    for where, value in zip(*curve, strict=True)
-                ],
-            }
-        )
-    return charts
 
 
 def _images_text(arm: dict[str, Any], shown: ArmPictures, window: Window) -> str:

@@ -14,13 +14,10 @@ from mrics.quality import Measures, measure
 from mrics.quality.features import Feature
 from mrics.recovery import recover
 from mrics.report import write_document, write_report
+from mrics.report.feature_chart import kept_features
 from mrics.report.folder import open_folder
-from mrics.report.measure_charts import (
-    feature_figure,
-    kept_features,
-    spectral_curves,
-    spectral_figure,
-)
+from mrics.report.panels import panels
+from mrics.report.spectral_chart import spectral_curves
 from mrics.report.words import number
 from mrics.sampling import draw_pattern
 
@@ -76,6 +73,4 @@ def test_document_has_a_page_of_them(measured: Path, tiny_study: Path) -> None:
 
 
 def test_study_without_measures_has_no_such_chart(tiny_study: Path) -> None:
-    study = open_folder(tiny_study)
-    assert feature_figure(study) is None
-    assert spectral_figure(study) is None
+    assert panels(open_folder(tiny_study)) == []
