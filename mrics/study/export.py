@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -15,7 +15,8 @@ from mrics.study.aggregate import arm_numbers
 from mrics.study.compare import load_results
 from mrics.study.files import plain, write_json
 from mrics.study.plan import plan_study
-from mrics.study.units import draw_of, pattern_grid
+from mrics.study.prepare import PlaneChoice
+from mrics.study.units import draw_of, pattern_grid, run_unit_here
 
 
 @dataclass(frozen=True)
@@ -51,7 +52,8 @@ def export_draw(protocol: Protocol, arm: str, draw: int, out: str | Path) -> Exp
     arm : str
         Id of the arm.
     draw : int
-        Number of the draw, from 0; the same pattern as the study's draw of that number.
+        Number of the draw, from 0; the pattern of the study's draw of that number of its first
+        scan.
     out : str or Path
         Folder to write to; files are named by arm and draw.
 
@@ -79,7 +81,8 @@ def export_draw(protocol: Protocol, arm: str, draw: int, out: str | Path) -> Exp
     header = read_header(plan.scans[0].path)
     frames = header.shape[3] if len(header.shape) > 3 and plan.channel_axis is None else 0
     grid = pattern_grid(plan.axes, header.shape)
-    played = draw_of(protocol, row.arm, grid, draw, frames if frames > 1 else 0)
+    frames = frames if frames > 1 else 0
+    played = draw_of(protocol, row.arm, plan.scan_ids[0], grid, draw, frames)
     folder = Path(out)
     folder.mkdir(parents=True, exist_ok=True)
     files = tuple(
@@ -92,6 +95,9 @@ def export_draw(protocol: Protocol, arm: str, draw: int, out: str | Path) -> Exp
 def add_exported_row(folder: str | Path, protocol: Protocol, exported: Exported) -> dict[str, Any]:
     """Give a finished study's verdict a row for exactly the exported draw.
 
+    The study ran this pattern on its first scan; it is run here on every other scan of that grid,
+    so that the row speaks of one table on all scans, with no luck of the draw in it.
+
     Returns
     -------
     dict
@@ -100,18 +106,23 @@ def add_exported_row(folder: str | Path, protocol: Protocol, exported: Exported)
     Raises
     ------
     StudyError
-        Where the folder holds no finished study, or one whose draw is another pattern.
+        Where the folder holds no finished study, one whose draw is another pattern, or a scan has
+        changed since.
     """
     results = load_results(Path(folder))
-    units = [u for u in results["units"] if u["arm"] == exported.arm and u["draw"] == exported.draw]
+    ran = [u for u in results["units"] if u["arm"] == exported.arm and u["draw"] == exported.draw]
     table = exported.played.pattern.hash
-    if table not in {u["pattern_hash"] for u in units}:
+    if table not in {u["pattern_hash"] for u in ran}:
         raise StudyError(
             f"The study in {folder} did not run this draw ({exported.arm}, draw {exported.draw}).",
             str(Path(folder) / "results.json"),
             "Run the protocol the table was exported from, then export again.",
         )
     identity = f"{exported.arm}-draw{exported.draw}"
+    units = [
+        {**plain(unit), "arm": identity}
+        for unit in _on_every_scan(Path(folder), protocol, exported, results, ran)
+    ]
     today = next((a["id"] for a in results["arms"] if a["today"]), None)
     by_arm = {identity: units}
     if today is not None:
@@ -132,5 +143,39 @@ def add_exported_row(folder: str | Path, protocol: Protocol, exported: Exported)
         "verdict": numbers.verdict,
     }
     results["arms"] = [a for a in results["arms"] if a["id"] != identity] + [plain(row)]
+    results["units"] = [u for u in results["units"] if u["arm"] != identity] + units
     write_json(Path(folder) / "results.json", results)
     return results
+
+
+def _on_every_scan(
+    folder: Path,
+    protocol: Protocol,
+    exported: Exported,
+    results: dict[str, Any],
+    ran: list[dict[str, Any]],
+) -> list[dict[str, Any]]:
+    """Units of the exported pattern: those the study ran, the others computed."""
+    plan = plan_study(protocol)
+    row = next(row for row in plan.rows if row.arm.id == exported.arm)
+    records = {record["id"]: record for record in results["scans"]}
+    table, units = exported.played.pattern.hash, []
+    for scan_id in plan.scan_ids:
+        record = records.get(scan_id)
+        kept = next((u for u in ran if (u["scan"], u["pattern_hash"]) == (scan_id, table)), None)
+        if kept is not None:
+            units.append(kept)
+        elif record is not None:
+            if pattern_grid(plan.axes, tuple(record["shape"])) != exported.played.pattern.grid:
+                continue
+            same = replace(plan, choice=PlaneChoice(tuple(record["planes"])))
+            hashes = [records[i]["sha256"] if i in records else "" for i in plan.scan_ids]
+            mine = next(
+                unit
+                for unit in same.units(folder, hashes, [row])
+                if unit.scan_id == scan_id and unit.draw == exported.draw
+            )
+            mine = replace(mine, keep_maps=False, pattern_of=plan.scan_ids[0])
+            done = run_unit_here(mine)
+            units.append({k: v for k, v in done.items() if k not in ("timing", "maps")})
+    return units

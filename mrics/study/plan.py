@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -55,6 +55,11 @@ class PlanRow:
     def pattern(self) -> Pattern:
         """The first draw."""
         return self.played.pattern
+
+    @property
+    def random(self) -> bool:
+        """True where the pattern is drawn, so that scans and draws have others."""
+        return self.pattern.probability is not None
 
     @property
     def calibration_share(self) -> float:
@@ -172,6 +177,7 @@ class StudyPlan:
                         planes=self.choice.spec,
                         # Any change in how patterns are drawn, or in files they come from.
                         first_pattern=row.pattern.hash,
+                        draws_of=scan_id if row.random else "",
                         channel_axis=self.channel_axis,
                         sampling={k: v for k, v in row.arm.sampling.items() if k != "name"},
                         acceleration=row.arm.acceleration,
@@ -230,12 +236,6 @@ class StudyPlan:
                 "Only part of the slices was studied: "
                 + ", ".join(f"{r['id']} {len(r['planes'])}" for r in few)
                 + "."
-            )
-        if len(records) > 2 and any(row.draws > 1 for row in self.rows):
-            notes.append(
-                "All scans of a grid share the patterns of a draw, while intervals over scans take "
-                "draws as independent between scans: they are too narrow where the luck of the "
-                "draw outweighs the difference between scans."
             )
         notes.append(self._channel_note(records))
         return notes
@@ -328,20 +328,21 @@ def plan_study(protocol: Protocol, *, quick: bool = False) -> StudyPlan:
             choice = PlaneChoice(given[:few])
         else:
             choice = PlaneChoice(few if given == "all" else min(few, int(given)))
-    grids: dict[tuple[int, ...], str] = {}
+    scan_ids = _unique_ids(scans)
+    grids: dict[tuple[int, ...], tuple[str, str]] = {}
     shapes = [read_header(scan.path).shape for scan in scans]
-    for scan, shape in zip(scans, shapes, strict=True):
-        grids.setdefault(pattern_grid(axes, shape), scan.path.name)
+    for scan, scan_id, shape in zip(scans, scan_ids, shapes, strict=True):
+        grids.setdefault(pattern_grid(axes, shape), (scan.path.name, scan_id))
     slices = None if axes.partition else shapes[0][axes.order[0]]
     noise = Noise(study.sigma_added, study.snr, study.noise_percent)
     rows: list[PlanRow] = []
     left_out: list[str] = []
-    for number, (grid, name) in enumerate(grids.items()):
+    for number, (grid, (name, scan_id)) in enumerate(grids.items()):
         for arm in protocol.arms():
             if arm.id in left_out:
                 continue
             try:
-                played = draw_of(protocol, arm, grid, 0)
+                played = draw_of(protocol, arm, scan_id, grid, 0)
             except MricsError as error:
                 if arm.search:
                     # A search chooses among what the grid can hold.
@@ -351,13 +352,14 @@ def plan_study(protocol: Protocol, *, quick: bool = False) -> StudyPlan:
                 raise type(error)(error.what, f"{where}; {error.where}", error.fix) from error
             if number == 0:
                 timing = scan_time(protocol, played.pattern, arm=arm, slices=slices)
-                lucky = played.pattern.probability is not None or noise != Noise()
-                rows.append(PlanRow(arm, played, timing, study.draws if lucky else 1))
+                row = PlanRow(arm, played, timing, 1)
+                lucky = row.random or noise != Noise()
+                rows.append(replace(row, draws=study.draws) if lucky else row)
     return StudyPlan(
         protocol=protocol,
         axes=axes,
         scans=scans,
-        scan_ids=_unique_ids(scans),
+        scan_ids=scan_ids,
         rows=tuple(row for row in rows if row.arm.id not in left_out),
         choice=choice,
         noise=noise,

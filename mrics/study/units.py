@@ -84,6 +84,8 @@ class Unit:
         Whether images are written too.
     sha256 : str
         Hash of the scan the study was started with.
+    pattern_of : str
+        Label of the scan whose draws are played; this scan's own where empty.
     """
 
     key: str
@@ -100,6 +102,7 @@ class Unit:
     folder: Path
     keep_maps: bool
     sha256: str
+    pattern_of: str = ""
 
     @property
     def scratch(self) -> Path:
@@ -114,12 +117,14 @@ def content_key(**parts: object) -> str:
 
 
 def draw_of(
-    protocol: Protocol, arm: Arm, shape: tuple[int, ...], draw: int, frames: int = 0
+    protocol: Protocol, arm: Arm, scan_id: str, shape: tuple[int, ...], draw: int, frames: int = 0
 ) -> Ordered:
-    """One draw of an arm, as the protocol's sequence plays it.
+    """One draw of an arm for a scan, as the protocol's sequence plays it.
 
     Arms with the same sampling entry and acceleration share their draws, whatever their recovery,
-    and so do all scans of one grid: arms are compared on the same patterns.
+    so that they are compared on the same patterns. Every scan has draws of its own, by its label:
+    the luck of one draw then reaches one scan, and scan means are independent. The label and not
+    the content, so that a remedied scan has the patterns of the scan it came from.
     """
     drawn = draw_entry(
         arm.sampling,
@@ -127,7 +132,7 @@ def draw_of(
         arm.acceleration,
         protocol.study.seed,
         frames=frames,
-        identity=("draw", draw),
+        identity=("draw", scan_id, draw),
         axes=protocol.axes(),
     )
     return play_pattern(protocol, drawn)
@@ -171,7 +176,9 @@ def _computed(unit: Unit, scan: Prepared) -> dict[str, Any]:
     started = time.perf_counter()
     grid = pattern_grid(unit.axes, scan.scan.shape)
     frames = scan.scan.frames if scan.scan.frames > 1 else 0
-    pattern = draw_of(unit.protocol, unit.arm, grid, unit.draw, frames).pattern
+    pattern = draw_of(
+        unit.protocol, unit.arm, unit.pattern_of or unit.scan_id, grid, unit.draw, frames
+    ).pattern
     # Fewer averages than the reference: its noise is raised by what the missing averages add.
     fewer = scan.sigma * float(np.sqrt(max(0.0, unit.averages_ratio - 1.0)))
     added = float(np.hypot(unit.noise.added(scan), fewer))

@@ -26,7 +26,9 @@ def test_the_exported_table_is_the_studys_draw_and_has_a_row(tmp_path: Path) -> 
     exported, sheet = export_table(
         load_protocol(protocol), ARM, 1, tmp_path / "table", tmp_path / "study"
     )
-    [used] = {u["pattern_hash"] for u in results["units"] if (u["arm"], u["draw"]) == (ARM, 1)}
+    drawn = {u["scan"]: u for u in results["units"] if (u["arm"], u["draw"]) == (ARM, 1)}
+    used = drawn["object-0"]["pattern_hash"]
+    assert drawn["object-1"]["pattern_hash"] != used
     assert exported.played.pattern.hash == used
     assert sheet.read_bytes().startswith(b"\x89PNG")
     for path in exported.files:
@@ -36,7 +38,11 @@ def test_the_exported_table_is_the_studys_draw_and_has_a_row(tmp_path: Path) -> 
     after = json.loads((tmp_path / "study" / "results.json").read_text())
     row = after["arms"][-1]
     assert row["exported"] == {"arm": ARM, "draw": 1, "hash": used}
-    units = [u for u in results["units"] if (u["arm"], u["draw"]) == (ARM, 1)]
+    # The table was run on the second scan too, where the study had drawn another.
+    units = [u for u in after["units"] if u["arm"] == f"{ARM}-draw1"]
+    assert {u["scan"]: u["pattern_hash"] for u in units} == dict.fromkeys(drawn, used)
+    assert units[0]["slices"] == drawn["object-0"]["slices"]
+    assert units[1]["slices"] != drawn["object-1"]["slices"]
     mean = np.mean([np.mean([s["nrmse"] for s in u["slices"]]) for u in units])
     assert row["metrics"]["nrmse"]["mean"] == pytest.approx(mean, rel=1e-6)
     assert used[:12] in (tmp_path / "study" / "report.html").read_text()

@@ -120,9 +120,31 @@ def test_the_pattern_image_is_the_pattern(study: tuple[Path, dict[str, Any]]) ->
             m["file"] for m in results["maps"] if (m["kind"], m["arm"]) == ("pattern", row.arm.id)
         )
         mask = nibabel.load(folder / "out" / file).get_fdata()[:, 0, 0] > 0
-        np.testing.assert_array_equal(mask, draw_of(plan.protocol, row.arm, (40,), 0).pattern.mask)
+        drawn = draw_of(plan.protocol, row.arm, plan.scan_ids[0], (40,), 0)
+        np.testing.assert_array_equal(mask, drawn.pattern.mask)
         hashes = {u["pattern_hash"] for u in results["units"] if u["arm"] == row.arm.id}
         assert row.pattern.hash in hashes
+
+
+def test_scans_have_draws_of_their_own_and_arms_share_them(
+    study: tuple[Path, dict[str, Any]], tmp_path: Path
+) -> None:
+    _, results = study
+    random = [u for u in results["units"] if u["arm"].startswith("power-law")]
+    hashes: dict[str, set[str]] = {}
+    for unit in random:
+        hashes.setdefault(unit["arm"], set()).add(unit["pattern_hash"])
+    assert all(len(found) == 4 for found in hashes.values()), "2 scans x 2 draws, all different"
+    regular = {u["pattern_hash"] for u in results["units"] if u["arm"].startswith("today")}
+    assert len(regular) == 1
+    text = PROTOCOL.replace("[acceptance]", '[[recovery]]\nmethod = "least-squares"\n[acceptance]')
+    both = run_study(write_small_study(tmp_path, protocol=text), tmp_path / "out")
+    drawn: dict[tuple[str, int, float], set[str]] = {}
+    for unit in both["units"]:
+        if not unit["arm"].startswith("today"):
+            key = (unit["scan"], unit["draw"], unit["acceleration"])
+            drawn.setdefault(key, set()).add(unit["pattern_hash"])
+    assert all(len(found) == 1 for found in drawn.values()), "recoveries see the same patterns"
 
 
 def test_the_table_holds_every_slice(study: tuple[Path, dict[str, Any]]) -> None:

@@ -43,9 +43,9 @@ def test_it_finds_what_the_full_grid_finds(limit: float, tmp_path: Path) -> None
     # Arms that were looked at are arms of the study; shared draws have shared patterns.
     ids = {a["id"] for a in results["arms"]}
     assert {d["arm"] for d in search["decisions"]} <= ids
-    shared = {(u["arm"], u["draw"]): u["pattern_hash"] for u in full["units"]}
+    shared = {(u["arm"], u["scan"], u["draw"]): u["pattern_hash"] for u in full["units"]}
     for unit in results["units"]:
-        assert shared[unit["arm"], unit["draw"]] == unit["pattern_hash"]
+        assert shared[unit["arm"], unit["scan"], unit["draw"]] == unit["pattern_hash"]
 
 
 def test_searching_without_limits_is_refused(tmp_path: Path) -> None:
