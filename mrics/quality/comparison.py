@@ -106,7 +106,6 @@ def compare(
     *,
     level: float = 0.95,
     seed: int = 0,
-    shared_draws: bool = False,
 ) -> Comparison:
     """Paired difference of two arms, arm less baseline.
 
@@ -118,15 +117,13 @@ def compare(
         Two-sided level.
     seed : int
         Of the bootstrap.
-    shared_draws : bool
-        True where draw k is the same pattern in every scan.
 
     Raises
     ------
     QualityError
         Where the two have no scan in common, or draws that do not pair.
     """
-    best = estimate(_paired(list(arm), list(baseline)), seed=seed, shared_draws=shared_draws)
+    best = estimate(_paired(list(arm), list(baseline)), seed=seed)
     interval = best.interval(level)
     p = best.p_differs()
     return Comparison(best, interval, interval, p, p)
@@ -138,13 +135,11 @@ def compare_arms(
     *,
     level: float = 0.95,
     seed: int = 0,
-    shared_draws: bool = False,
 ) -> dict[str, Comparison]:
     """Several arms against one baseline, p values corrected by Holm over the arms."""
     common = list(baseline)
     single = {
-        name: compare(records, common, level=level, seed=seed, shared_draws=shared_draws)
-        for name, records in arms.items()
+        name: compare(records, common, level=level, seed=seed) for name, records in arms.items()
     }
     corrected = holm([one.p for one in single.values()])
     wide = 1.0 - (1.0 - level) / max(1, len(single))

@@ -10,11 +10,8 @@ that mean comes from how scans differ:
 * 1 or 2 scans: over the draws of these scans alone (Welch-Satterthwaite degrees of freedom for
   two). It says how much the luck of the draw matters for this scan, and nothing of other scans.
 
-That holds where draws are independent between scans. Where all scans share their patterns (draw k
-is one pattern, ``shared_draws``), scan means move together and their spread does not show it. Then
-scans and draws are two crossed random effects: the variance of the mean is
-(MS scans + MS draws - MS residual) / (scans draws), never below MS scans alone, with
-Satterthwaite's degrees of freedom, for any number of scans from 3.
+Draws must be independent between scans: were draw k one pattern for all scans, their means would
+move together and their spread would not show it.
 
 References
 ----------
@@ -26,7 +23,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Hashable, Iterable, Mapping
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
@@ -55,8 +52,7 @@ class Interval:
     level : float
         Nominal coverage, two-sided.
     method : str
-        "Student t", "hierarchical bootstrap-t", "Student t, scans and shared draws" or "Student t
-        over draws".
+        "Student t", "hierarchical bootstrap-t" or "Student t over draws".
     over : str
         "5 scans", or "this scan, luck of the draw (5 draws)".
     """
@@ -94,8 +90,6 @@ class Estimate:
         How many scans, and how many draws the scan with most of them has.
     resampled : ndarray or None
         Sorted studentised bootstrap errors.
-    crossed : bool
-        True where the error counts draws that scans share.
     """
 
     mean: float
@@ -104,7 +98,6 @@ class Estimate:
     scans: int
     draws: int
     resampled: NDArray[np.float64] | None = field(default=None, repr=False)
-    crossed: bool = False
 
     @property
     def known(self) -> bool:
@@ -121,8 +114,6 @@ class Estimate:
         """How the interval is made."""
         if self.resampled is not None:
             return "hierarchical bootstrap-t"
-        if self.crossed and self.claims:
-            return "Student t, scans and shared draws"
         return "Student t" if self.claims else "Student t over draws"
 
     @property
@@ -235,7 +226,6 @@ def summarise(
     direction: str,
     level: float = 0.95,
     seed: int = 0,
-    shared_draws: bool = False,
 ) -> Summary | None:
     """Mean, range, interval and worst slice of one metric of one arm.
 
@@ -250,8 +240,6 @@ def summarise(
         Two-sided level of the interval.
     seed : int
         Of the bootstrap.
-    shared_draws : bool
-        True where draw k is the same pattern in every scan.
 
     Returns
     -------
@@ -278,7 +266,7 @@ def summarise(
     worst = high if direction == "lower" else low
     scan, draw, where, _ = kept[values.index(worst)]
     table = draw_means(kept)
-    best = estimate(table, seed=seed, shared_draws=shared_draws)
+    best = estimate(table, seed=seed)
     return Summary(
         mean=best.mean,
         min=low,
@@ -311,7 +299,7 @@ def draw_means(records: Iterable[Record]) -> dict[Hashable, dict[Hashable, float
     }
 
 
-def estimate(table: Draws, *, seed: int = 0, shared_draws: bool = False) -> Estimate:
+def estimate(table: Draws, *, seed: int = 0) -> Estimate:
     """Mean of the scan means with its standard error (rules in the module's docstring).
 
     Parameters
@@ -320,9 +308,6 @@ def estimate(table: Draws, *, seed: int = 0, shared_draws: bool = False) -> Esti
         At least one scan with one draw each.
     seed : int
         Of the bootstrap, used from 20 scans on.
-    shared_draws : bool
-        True where draw k is the same pattern in every scan. Scans must then have the same draws;
-        where they have not, they are taken as independent.
     """
     draws = [np.array(list(one.values()), dtype=np.float64) for one in table.values()]
     means = np.array([_mean(one) for one in draws])
@@ -330,42 +315,11 @@ def estimate(table: Draws, *, seed: int = 0, shared_draws: bool = False) -> Esti
     mean = _mean(means)
     if not np.isfinite(means).all():
         return Estimate(mean, math.nan, math.nan, count, most)
-    grid = _grid(table) if shared_draws and count > 1 and most > 1 else None
     if count < CLAIM_FROM:
-        if grid is not None:
-            together = _over_draws([grid.mean(axis=0)], mean, most)
-            return replace(together, scans=count, crossed=True)
         return _over_draws(draws, mean, most)
-    if grid is not None:
-        return _crossed(grid, mean)
     error = float(means.std(ddof=1) / math.sqrt(count))
     resampled = _bootstrap(draws, mean, seed) if count >= BOOTSTRAP_FROM and error > 0 else None
     return Estimate(mean, error, count - 1.0, count, most, resampled)
-
-
-def _grid(table: Draws) -> NDArray[np.float64] | None:
-    """Values of shape (scan, draw) where all scans have the same draws."""
-    labels = list(next(iter(table.values())))
-    if any(set(one) != set(labels) for one in table.values()):
-        return None
-    return np.array([[one[label] for label in labels] for one in table.values()])
-
-
-def _crossed(grid: NDArray[np.float64], mean: float) -> Estimate:
-    """Two crossed random effects, one value per cell."""
-    scans, draws = grid.shape
-    by_scan, by_draw = grid.mean(axis=1), grid.mean(axis=0)
-    of_scans = draws * float(by_scan.var(ddof=1))
-    of_draws = scans * float(by_draw.var(ddof=1))
-    rest = grid - by_scan[:, None] - by_draw[None, :] + mean
-    cells = (scans - 1) * (draws - 1)
-    residual = float((rest**2).sum()) / cells
-    total, spread = of_scans, of_scans**2 / (scans - 1)
-    if of_draws > residual:
-        total += of_draws - residual
-        spread += of_draws**2 / (draws - 1) + residual**2 / cells
-    freedom = total**2 / spread if spread > 0.0 else scans - 1.0
-    return Estimate(mean, math.sqrt(total / (scans * draws)), freedom, scans, draws, crossed=True)
 
 
 def _over_draws(draws: list[NDArray[np.float64]], mean: float, most: int) -> Estimate:

@@ -60,25 +60,3 @@ def test_skewed_scans_are_reported(scans):
     share = coverage(scans, "skewed")
     print(f"skewed, {scans} scans x 5 draws: {100 * share:.2f} %")
     assert share >= 0.87
-
-
-@pytest.mark.slow
-@pytest.mark.parametrize("of_draws", [0.0, 0.5, 1.0])
-@pytest.mark.parametrize("scans", [3, 5, 10, 20])
-def test_shared_draws(scans, of_draws):
-    """Draw k is one pattern for all scans; 3 scans cover a little more than asked for."""
-    hits = alone = 0
-    for number in range(STUDIES):
-        generator = np.random.default_rng([9, scans, number])
-        values = draws_of(generator, scans, "normal") + of_draws * generator.standard_normal(5)
-        table = {i: dict(enumerate(row)) for i, row in enumerate(values)}
-        interval = estimate(table, shared_draws=True).interval()
-        hits += interval.low <= 0.0 <= interval.high
-        if scans < 20:
-            interval = estimate(table).interval()
-            alone += interval.low <= 0.0 <= interval.high
-    print(
-        f"shared draws, SD {of_draws} of scans, {scans} scans x 5 draws: "
-        f"{100 * hits / STUDIES:.2f} % (taken as independent: {100 * alone / STUDIES:.2f} %)"
-    )
-    assert 0.93 <= hits / STUDIES <= (0.975 if scans == 3 else 0.965)

@@ -152,55 +152,21 @@ def test_nominal_intervals_cover_the_truth(scans):
     assert 182 <= hits <= 198
 
 
-def crossed(scans, draws=5, of_draws=0.02, seed=0):
-    """Values (scan, draw) whose draws are one pattern for all scans."""
-    rng = np.random.default_rng(seed)
-    values = 0.02 * rng.standard_normal((scans, 1)) + of_draws * rng.standard_normal((1, draws))
-    return values + 0.01 * rng.standard_normal((scans, draws))
-
-
-def table_of(values):
-    return {i: dict(enumerate(row)) for i, row in enumerate(values)}
-
-
-@pytest.mark.parametrize("scans", [3, 5, 20])
-def test_shared_draws_keep_their_level(scans):
-    # 300 simulated studies, 95 % +- 3.3 standard errors of a binomial count (3 scans: a little
-    # over, since a draw effect below the residual is not subtracted).
+@pytest.mark.parametrize("scans", [3, 5, 10, 20])
+def test_intervals_of_paired_differences_cover_the_truth(scans):
+    # As above, with what arms share (three times as large, skewed) cancelling in the difference.
     hits = 0
-    for seed in range(300):
-        table = table_of(crossed(scans, seed=1000 * scans + seed))
-        interval = estimate(table, shared_draws=True).interval()
-        hits += interval.low <= 0.0 <= interval.high
-    assert 272 <= hits <= 298
-    assert interval.method == "Student t, scans and shared draws"
-
-
-def test_shared_draws_worked_by_hand():
-    # Two-way layout 3 x 2 without repeats: MS scans 2, MS draws 6, MS residual 0; the variance of
-    # the mean is (2 + 6 - 0) / 6 and Satterthwaite's degrees of freedom 64 / (4 / 2 + 36 / 1).
-    values = np.array([[0.0, 2.0], [1.0, 3.0], [2.0, 4.0]])
-    best = estimate(table_of(values), shared_draws=True)
-    of_scans = 2 * np.var(values.mean(axis=1), ddof=1)
-    of_draws = 3 * np.var(values.mean(axis=0), ddof=1)
-    assert (of_scans, of_draws) == (2.0, 6.0)
-    assert best.error == pytest.approx(np.sqrt((2.0 + 6.0) / 6.0))
-    assert best.freedom == pytest.approx(64.0 / (4.0 / 2 + 36.0 / 1))
-
-
-def test_two_scans_with_shared_draws_are_averaged_draw_by_draw():
-    values = crossed(2)
-    best = estimate(table_of(values), shared_draws=True)
-    wanted = stats.ttest_1samp(values.mean(axis=0), 0.0).confidence_interval(0.95)
-    assert (best.interval().low, best.interval().high) == pytest.approx(tuple(wanted))
-    assert not best.claims
-
-
-def test_one_draw_or_unequal_draws_fall_back_to_scans():
-    one = {i: {0: float(i)} for i in range(4)}
-    assert estimate(one, shared_draws=True).method == "Student t"
-    unequal = {**table_of(crossed(4)), 9: {0: 0.1}}
-    assert estimate(unequal, shared_draws=True).method == "Student t"
+    for seed in range(200):
+        rng = np.random.default_rng([8, scans, seed])
+        common = 3.0 * rng.exponential(size=(scans, 1)) + rng.standard_normal((scans, 5))
+        effect = 0.4 + rng.standard_normal((scans, 1)) + 0.5 * rng.standard_normal((scans, 5))
+        arm, baseline = (
+            [(i, j, 0, float(v)) for (i, j), v in np.ndenumerate(values)]
+            for values in (common + effect, common)
+        )
+        interval = compare(arm, baseline, seed=seed).interval
+        hits += interval.low <= 0.4 <= interval.high
+    assert 182 <= hits <= 198
 
 
 def test_paired_difference_is_the_paired_t_test():
