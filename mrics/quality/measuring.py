@@ -33,7 +33,8 @@ class Measured:
         ``smallest_kept_mm``, ``observer``, ``regions``, as far as they were asked for.
     maps : dict of str to ndarray of shape (plane, u, v), float32
         ``missing``, ``invented`` (magnitudes), ``noise_ratio``, ``resolution_u_mm``,
-        ``resolution_v_mm``; NaN in planes that were not measured.
+        ``resolution_v_mm``, and ``feature_1``, ``feature_2``, ... in the order of the table: what
+        inserted features change in the recovered magnitude; NaN in planes that were not measured.
     planes : tuple of int
         Planes that further recoveries were made of.
     seconds, recovery_seconds : float
@@ -317,7 +318,9 @@ class _Results:
             mine = least.retained[least.sites[:, 0] == row]
             if mine.size:
                 self.by_plane[plane]["feature_retention"] = float(mine.mean())
-        self.tables["features"] = [_plain(_feature_row(one)) for one in found]
+        self.tables["features"] = [_plain(_feature_row(one, chosen)) for one in found]
+        for number, one in enumerate(found, start=1):
+            self._map(f"feature_{number}", chosen, one.change)
         self.tables["smallest_kept_mm"] = {
             f"{contrast:g}": size for contrast, size in smallest_kept(found, 0.8).items()
         }
@@ -359,10 +362,18 @@ class _Results:
         self.maps[name] = whole
 
 
-def _feature_row(one: Any) -> dict[str, Any]:
+def _feature_row(one: Any, chosen: list[int]) -> dict[str, Any]:
+    """A feature as it was asked for, what was kept of it, and where on the stack it was put."""
     return {
         **asdict(one.feature),
+        "nominal_mm": one.feature.size_mm,
         "sites": len(one.sites),
+        "placed": [
+            {"plane": chosen[plane], "u": u, "v": v, "height": height, "retained": kept}
+            for (plane, u, v), height, kept in zip(
+                one.sites, one.heights, one.retained, strict=True
+            )
+        ],
         "retained": one.mean,
         "interval": one.interval.as_dict() if one.interval else None,
         "size_mm": _median(one.size_mm),

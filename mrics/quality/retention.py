@@ -40,6 +40,10 @@ class Retention:
     feature : Feature
     sites : ndarray of int, shape (n, 3)
         (plane, u, v).
+    heights : ndarray of shape (n,)
+        Height of the inserted feature at each site, in units of the image.
+    change : ndarray of shape (plane, u, v), float32
+        Magnitude of the image recovered with the features less that without.
     retained : ndarray of shape (n,)
         Retained share of the contrast.
     size_mm, inserted_mm : ndarray of shape (n,)
@@ -51,6 +55,8 @@ class Retention:
 
     feature: Feature
     sites: NDArray[np.intp]
+    heights: Array
+    change: Array
     retained: Array
     size_mm: Array
     inserted_mm: Array
@@ -142,7 +148,7 @@ def feature_retention(
     changes = (chain.encode(one.astype(chain.base.dtype)) for one in inserted)
     images = chain.images(changes, total=len(placed), progress=progress)
     return [
-        _measure(image - chain.base, one, voxel_mm, phase)
+        _measure(image, chain.base, one, voxel_mm, phase)
         for image, one in zip(images, placed, strict=True)
     ]
 
@@ -186,12 +192,14 @@ def _insert(
 
 
 def _measure(
-    response: Array,
+    image: Array,
+    base: Array,
     placed: tuple[Feature, Array, Array],
     voxel_mm: tuple[float, float, float],
     phase: Array | None,
 ) -> Retention:
     feature, sites, heights = placed
+    response = image - base
     patch = feature.patch(voxel_mm)
     windows = np.empty((len(sites), *patch.shape))
     for row, (site, height) in enumerate(zip(sites, heights, strict=True)):
@@ -208,6 +216,8 @@ def _measure(
     return Retention(
         feature=feature,
         sites=sites,
+        heights=heights,
+        change=(np.abs(image) - np.abs(base)).astype(np.float32),
         retained=retained,
         size_mm=size,
         inserted_mm=np.broadcast_to(inserted, size.shape),

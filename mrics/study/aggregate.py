@@ -6,7 +6,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any
 
-from mrics.protocol import Limit, minutes
+from mrics.protocol import Limit
 from mrics.quality import METRICS, Comparison, Summary, compare_arms, summarise, verdict
 from mrics.quality.acceptance import LimitResult
 from mrics.quality.comparison import UNDECIDED
@@ -102,50 +102,6 @@ def arm_numbers(
     return numbers
 
 
-def overall_verdict(arms: Sequence[dict[str, Any]]) -> dict[str, Any]:
-    """The fastest candidate that passes every limit (today's arm is no candidate)."""
-    if not any(a["verdict"]["limits"] for a in arms):
-        return {
-            "status": "undecided",
-            "arm": None,
-            "sentence": "No acceptance limits were given, so nothing is decided.",
-        }
-    candidates = [a for a in arms if not a["today"]]
-    passing = [a for a in candidates if a["verdict"]["status"].startswith("pass")]
-    open_arms = [a for a in candidates if a["verdict"]["status"] == "undecided"]
-    if not passing:
-        sentence = "No candidate passes every limit."
-        if open_arms:
-            sentence = (
-                f"No candidate passes every limit; undecided: {_listed(open_arms)} "
-                "(the interval holds the limit)."
-            )
-        return {
-            "status": "undecided" if open_arms else "fail",
-            "arm": None,
-            "sentence": sentence,
-        }
-    best = min(passing, key=_speed_then_error)
-    status = best["verdict"]["status"]
-    scope = "every limit" if status == "pass" else "every limit on the scan studied"
-    full, mine = best["full_scan_time_s"], best["scan_time_s"]
-    sentence = (
-        f"{best['label']} passes {scope}: {minutes(full)} fully sampled becomes {minutes(mine)}, "
-        f"{minutes(full - mine)} saved"
-    )
-    today = next((a for a in arms if a["today"]), None)
-    if today is not None:
-        gain = today["scan_time_s"] - mine
-        word = "saved" if gain >= 0 else "lost"
-        sentence += (
-            f"; against today's {minutes(today['scan_time_s'])}, {minutes(abs(gain))} {word}"
-        )
-    faster = [a for a in open_arms if a["scan_time_s"] < mine]
-    if faster:
-        sentence += f"; faster but undecided: {_listed(faster)}"
-    return {"status": status, "arm": best["id"], "sentence": sentence + "."}
-
-
 def _against_today(
     units: dict[str, list[dict[str, Any]]], today: str, name: str, seed: int, level: float
 ) -> dict[str, Comparison]:
@@ -185,11 +141,3 @@ def _advice(
         return None
     table = draw_means(_records(units, limit.metric))
     return what_would_decide(table, result.limit, level)
-
-
-def _listed(arms: Sequence[dict[str, Any]]) -> str:
-    return ", ".join(a["label"] for a in arms)
-
-
-def _speed_then_error(arm: dict[str, Any]) -> tuple[float, float]:
-    return (arm["scan_time_s"], arm["metrics"].get("nrmse", {}).get("mean", 0.0))

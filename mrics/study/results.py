@@ -16,7 +16,8 @@ import numpy as np
 import mrics
 from mrics.caution import RESEARCH_ONLY
 from mrics.scan import write_nifti
-from mrics.study.aggregate import ArmNumbers, arm_numbers, overall_verdict
+from mrics.study.aggregate import ArmNumbers, arm_numbers
+from mrics.study.answer import KEPT_LEVEL, overall_verdict, smallest_kept
 from mrics.study.code_version import code_version
 from mrics.study.files import plain
 from mrics.study.plan import PlanRow, StudyPlan
@@ -87,8 +88,14 @@ def study_results(
     waits = today is None and any(row.arm.today for row in plan.rows)
     limits = [x for x in protocol.acceptance if not waits or x.kind in ("mean", "worst")]
     numbers = arm_numbers(finished, limits, today, protocol.study.seed)
+    asked = (x.value for x in limits if x.key == "feature_retention_min")
+    level = next(asked, KEPT_LEVEL)
     arms = [
-        {**row.as_dict(), **_arm_record(row, by_arm[row.arm.id], numbers.get(row.arm.id))}
+        {
+            **row.as_dict(),
+            **_arm_record(row, by_arm[row.arm.id], numbers.get(row.arm.id)),
+            "smallest_kept": smallest_kept(by_arm[row.arm.id], level),
+        }
         for row in rows
     ]
     maps = references + [entry for r in results for entry in r["maps"]]
@@ -107,7 +114,7 @@ def study_results(
         "scans": records,
         "units": units_out,
         "arms": arms,
-        "verdict": overall_verdict(arms),
+        "verdict": overall_verdict(arms, len(records)),
         "maps": maps,
         "notes": plan.notes(records),
         "provenance": provenance(protocol.study.seed),

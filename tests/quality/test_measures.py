@@ -84,12 +84,31 @@ def test_maps_lie_on_the_whole_stack(measured):
         "noise_ratio",
         "resolution_u_mm",
         "resolution_v_mm",
+        "feature_1",
+        "feature_2",
     }
     for name, values in result.maps.items():
         assert values.shape == SHAPE
         assert values.dtype == np.float32
         if name not in ("missing", "invented"):
             assert np.isnan(values[0]).all() == (0 not in result.planes)
+
+
+def test_features_stand_where_the_table_says(measured):
+    """In the recovered image, the height at every site is about what is said to be kept of it."""
+    result, _ = measured
+    for number, row in enumerate(result.tables["features"], start=1):
+        assert row["nominal_mm"] == (2.0, 4.0)[number - 1]
+        assert len(row["placed"]) == row["sites"] == 4
+        assert np.mean([one["retained"] for one in row["placed"]]) == pytest.approx(row["retained"])
+        change = result.maps[f"feature_{number}"]
+        for one in row["placed"]:
+            assert one["plane"] in result.planes
+            plane = change[one["plane"]]
+            seen = plane[one["u"], one["v"]]
+            assert seen == pytest.approx(one["retained"] * one["height"], rel=0.35)
+            ring = np.abs(plane[one["u"] - 3 : one["u"] + 4, one["v"] - 3 : one["v"] + 4])
+            assert seen > 0.8 * ring.max()
 
 
 def test_progress_names_the_measure(measured):

@@ -23,7 +23,8 @@ from mrics.protocol import Limit
 from mrics.quality import score_planes
 from mrics.sampling import draw_pattern
 from mrics.scan import Axes
-from mrics.study.aggregate import arm_numbers, overall_verdict
+from mrics.study.aggregate import arm_numbers
+from mrics.study.answer import overall_verdict
 from mrics.study.files import write_json
 
 LIMITS = (
@@ -196,7 +197,7 @@ def build_study(folder: Path, plan: StudyPlan) -> Path:
             "scans": scans,
             "units": units,
             "arms": arms,
-            "verdict": overall_verdict(arms),
+            "verdict": overall_verdict(arms, plan.scans),
             "maps": maps,
             "notes": ["Images are invented; noise of 1 % was added to them."],
             "provenance": {"seed": 20261201, "python": "3.12", "packages": {"numpy": "2.4"}},
