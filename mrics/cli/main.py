@@ -249,6 +249,7 @@ def recover(
     from mrics.cli.writing import read_axes, read_settings
     from mrics.study import recover_measured
 
+    _say_compiling()
     content = recover_measured(
         kspace,
         pattern,
@@ -323,11 +324,19 @@ def optimism(
     typer.echo(f"{optimism_lines(rows)}\n{RESEARCH_ONLY}")
 
 
+def _say_compiling() -> None:
+    from mrics.numerics.wavelets import kernels_kept
+
+    if not kernels_kept():
+        typer.echo("first run on this machine: kernels are compiled, once", err=True)
+
+
 def _run(protocol: Path, out: Path, **settings: Any) -> dict[str, Any]:
     from mrics.cli.progress import progress_line
     from mrics.cli.tables import verdict_lines
     from mrics.report import run_study
 
+    _say_compiling()
     with progress_line() as progress:
         results = run_study(protocol, out, progress=progress, **settings)
     typer.echo(verdict_lines(results))

@@ -14,6 +14,7 @@ as tuples: their length is then a constant of the compiled kernel and the loop o
 from __future__ import annotations
 
 from functools import lru_cache
+from pathlib import Path
 from typing import Any
 
 import numba
@@ -25,6 +26,12 @@ Array = NDArray[Any]
 compiled = numba.njit(
     nogil=True, cache=True, error_model="numpy", fastmath={"contract", "reassoc", "nsz", "arcp"}
 )
+
+
+def kernels_kept() -> bool:
+    """Whether kernels compiled by an earlier run are on disk; without them a run compiles first."""
+    folder = Path(_split.stats.cache_path)
+    return any(folder.glob(f"{Path(__file__).stem}.*.nbi"))
 
 
 @lru_cache(maxsize=64)

@@ -48,7 +48,9 @@ def pytest_terminal_summary(terminalreporter, config):
         return
     lines = ["| measured | figure | aim |", "| --- | --- | --- |"]
     lines += [f"| {name} | {value} | {bar} |" for name, value, bar in rows]
-    lines.append(f"\nPython {platform.python_version()}, {platform.machine()}, {os.cpu_count()} cores.")
+    lines.append(
+        f"\nPython {platform.python_version()}, {platform.machine()}, {os.cpu_count()} cores."
+    )
     text = "\n".join(lines)
     terminalreporter.section("figures")
     terminalreporter.write_line(text)

@@ -1,5 +1,8 @@
 """The compiled wavelet transform against PyWavelets."""
 
+import os
+import subprocess
+import sys
 import warnings
 
 import numpy as np
@@ -56,3 +59,19 @@ def test_synthesis_is_the_adjoint_of_analysis():
     transform.synthesise(real(c), real(back))
     assert np.vdot(wx, c) == pytest.approx(np.vdot(x, back), rel=1e-12)
     assert np.vdot(wx, wx) == pytest.approx(np.vdot(x, x), rel=1e-12)
+
+
+def test_a_first_run_is_told_from_a_later_one(tmp_path):
+    code = (
+        "import numpy as np; from mrics.numerics.wavelets import PlaneWavelet, kernels_kept;"
+        "print(kernels_kept()); x = np.zeros((8, 16), np.float32);"
+        "PlaneWavelet((8, 8), 'haar', 1, np.complex64).analyse(x, x.copy()); print(kernels_kept())"
+    )
+    done = subprocess.run(
+        [sys.executable, "-c", code],
+        env={**os.environ, "NUMBA_CACHE_DIR": str(tmp_path)},
+        capture_output=True,
+        text=True,
+        check=True,
+    )
+    assert done.stdout.split() == ["False", "True"]
