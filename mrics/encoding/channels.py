@@ -199,8 +199,7 @@ def drop_silent(acquisition: Acquisition) -> Acquisition:
             "k-space, channel axis",
             "Check the file and the type it was written with.",
         )
-    silent = ", ".join(str(int(c)) for c in np.flatnonzero(~loud))
-    note = f"channels without signal left out: {silent} (counted from 0)"
+    note = silent_note(loud)
     warnings.warn(note, MricsWarning, stacklevel=3)
     maps, psi = acquisition.sensitivities, acquisition.covariance
     return replace(
@@ -210,6 +209,12 @@ def drop_silent(acquisition: Acquisition) -> Acquisition:
         covariance=None if psi is None else psi[np.ix_(loud, loud)],
         notes=(*acquisition.notes, note),
     )
+
+
+def silent_note(loud: NDArray[np.bool_]) -> str:
+    """Names the channels that are left out because they hold only zeros."""
+    silent = ", ".join(str(int(c)) for c in np.flatnonzero(~loud))
+    return f"channels without signal left out: {silent} (counted from 0)"
 
 
 def root_sum_of_squares(images: Array, axis: int = 1) -> Array:

@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 from mrics.encoding.acquisition import Acquisition
 from mrics.encoding.channels import drop_silent
-from mrics.encoding.noise import estimate_sigma, noise_covariance
+from mrics.encoding.noise import border_noise, estimate_sigma, noise_covariance
 from mrics.encoding.source import Source, pattern_masks
 from mrics.errors import AcquisitionError
 from mrics.numerics import centred_ifft
@@ -43,8 +43,9 @@ def acquisition_from_kspace(
     pattern : Pattern
         What was acquired.
     noise : path (.npy) or ndarray of shape (channel, ...), optional
-        Complex noise samples; without them sigma is estimated from the outer k-space and channels
-        are taken to be uncorrelated.
+        Complex noise samples. Without them the covariance is that of the image border along the
+        readout; where that holds signal, sigma is estimated from the outer k-space and channels
+        are taken to be uncorrelated. The acquisition's notes say which.
     channel_axis : int, optional
         Axis that holds receive channels, counted from 0; none for one channel.
     axes : Axes, optional
@@ -95,13 +96,24 @@ def acquisition_from_kspace(
         calibration=pattern.calibration,
     )
     if planes.channels > 1:
-        acquisition = drop_silent(acquisition)
+        acquisition = _described(drop_silent(acquisition))
     psi = acquisition.covariance
     if psi is None:
         sigma = estimate_sigma(acquisition)
     else:
         sigma = float(np.sqrt(np.trace(psi).real / len(psi)))
     return replace(acquisition, sigma_scan=sigma)
+
+
+def _described(acquisition: Acquisition) -> Acquisition:
+    """With a noise covariance from the image border where none was measured, and notes on both."""
+    psi, text = acquisition.covariance, "noise covariance from noise samples"
+    if psi is None and acquisition.channels > 1:
+        psi, text = border_noise(acquisition)
+    notes = (*acquisition.notes, text)
+    if acquisition.channels > 1:
+        notes = (*notes, "sensitivities estimated from the calibration region of each plane")
+    return replace(acquisition, covariance=psi, notes=notes)
 
 
 def _open(source: PathLike | Array | Scan, channel_axis: int | None) -> tuple[Array | Scan, str]:

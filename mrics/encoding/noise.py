@@ -25,6 +25,10 @@ _LEAST_SAMPLES = 64
 _LEAST_POOL = 500
 #: border energy of central over outer k-space above which the border is not noise
 _SIGNAL_RATIO = 1.5
+#: share of the readout that counts as border, both ends together
+BORDER_SHARE = 0.06
+#: samples a channel that a covariance from the border needs: whitening by it then costs 2 % of SNR
+_BORDER_SAMPLES = 25
 
 
 def relative_covariance(covariance: Array, channels: int) -> Array:
@@ -107,7 +111,30 @@ def noise_covariance(samples: Array) -> Array:
     return psi
 
 
-def border_covariance(acquisition: Acquisition, share: float = 0.06) -> Array:
+def border_noise(acquisition: Acquisition, share: float = BORDER_SHARE) -> tuple[Array | None, str]:
+    """Covariance of the border where it holds noise alone, and where it came from in words.
+
+    Returns
+    -------
+    covariance : ndarray of shape (channel, channel) or None
+        None where the border holds signal, is too small, or cannot be told: channels are then
+        taken to be uncorrelated and of equal noise.
+    text : str
+        One clause for a report.
+    """
+    try:
+        psi = border_covariance(acquisition, share)
+    except AcquisitionError as error:
+        reason = error.what.rstrip(".")
+        reason = reason[0].lower() + reason[1:]
+        return (
+            None,
+            f"noise covariance unknown, channels taken as uncorrelated and equal ({reason})",
+        )
+    return psi, "noise covariance from the border of the image along the readout"
+
+
+def border_covariance(acquisition: Acquisition, share: float = BORDER_SHARE) -> Array:
     """Psi from the image border along the readout, where the object does not reach.
 
     The readout is never undersampled, so its two ends are free of folded signal. With a full
@@ -164,7 +191,16 @@ def border_covariance(acquisition: Acquisition, share: float = 0.06) -> Array:
             f"readout border, {2 * edge} of {length} positions",
             "Give noise samples, or a smaller share.",
         )
-    return noise_covariance(np.concatenate([low, high], axis=1))
+    samples = np.concatenate([low, high], axis=1)
+    least = _BORDER_SAMPLES * len(samples)
+    if samples.shape[1] < least:
+        raise AcquisitionError(
+            f"The border holds {samples.shape[1]} samples, too few for {len(samples)} channels "
+            f"({least} are needed).",
+            f"readout border, {2 * edge} of {length} positions",
+            "Give noise samples, or a larger share.",
+        )
+    return noise_covariance(samples)
 
 
 def _mean_energy(samples: Array) -> float:

@@ -7,6 +7,8 @@ from collections.abc import Callable, Iterable
 from concurrent.futures import ThreadPoolExecutor
 from typing import Any
 
+from threadpoolctl import threadpool_limits
+
 _threads = max(1, len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else 1)
 
 
@@ -26,11 +28,13 @@ def set_threads(count: int) -> None:
 def map_blocks(function: Callable[[Any], Any], blocks: Iterable[Any]) -> list[Any]:
     """Run ``function`` on every block, over the compute threads, results in the order given.
 
-    The function must spend its time outside the interpreter lock (FFTs, compiled kernels).
+    The function must spend its time outside the interpreter lock (FFTs, compiled kernels). Linear
+    algebra runs on one thread meanwhile: the blocks are what is spread over the cores.
     """
     items = list(blocks)
     count = min(_threads, len(items))
-    if count <= 1:
-        return [function(item) for item in items]
-    with ThreadPoolExecutor(count) as pool:
-        return list(pool.map(function, items))
+    with threadpool_limits(1, user_api="blas"):
+        if count <= 1:
+            return [function(item) for item in items]
+        with ThreadPoolExecutor(count) as pool:
+            return list(pool.map(function, items))

@@ -314,6 +314,9 @@ class Study(Section):
     reference_averages: Annotated[int, Field(ge=1, le=256)] | None = Field(
         None, description="averages the reference scans were made with"
     )
+    virtual_channels: Annotated[int, Field(ge=1, le=256)] | None = Field(
+        None, description="receive channels are compressed to so many before recovery"
+    )
     echo_train_decay: bool = Field(
         False, description="weight k-space by the decay along the echo train (needs tissue_t2_ms)"
     )

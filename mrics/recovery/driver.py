@@ -53,7 +53,8 @@ def recover(acquisition: Acquisition, method: str = "wavelet", **settings: Any) 
     if empty:
         sigma, note = 0.0, "all acquired samples are zero; the image is zero"
     result = solver(method)(acquisition, chosen, sigma)
-    notes = "; ".join(text for text in (result.certificate.note, note) if text)
+    every = (*acquisition.notes, result.certificate.note, note)
+    notes = "; ".join(text for text in every if text)
     certificate = replace(
         result.certificate, note=notes, sigma=sigma, wall_s=time.perf_counter() - started
     )

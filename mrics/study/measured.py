@@ -102,6 +102,7 @@ def recover_measured(
         "pattern_hash": played.hash,
         "acceleration": played.acceleration,
         "channels": acquisition.channels,
+        "notes": list(acquisition.notes),
         "sigma": acquisition.sigma,
         "certificate": recovered.certificate.as_dict(),
         "seconds": time.perf_counter() - started,

@@ -26,7 +26,7 @@ from mrics.scan import Axes, read_header
 from mrics.scan.remedies import INVENTED
 from mrics.study.code_version import code_version
 from mrics.study.prepare import PlaneChoice, Prepared, prepare
-from mrics.study.units import Noise, Unit, content_key, draw_of, pattern_grid
+from mrics.study.units import LEAST_LINES, Noise, Unit, content_key, draw_of, pattern_grid
 
 
 @dataclass(frozen=True)
@@ -130,6 +130,7 @@ class StudyPlan:
             self.channel_axis,
             protocol.coils,
             protocol.study.seed,
+            protocol.study.virtual_channels,
         )
 
     def scan_bytes(self) -> int:
@@ -188,6 +189,7 @@ class StudyPlan:
                         seed=study.seed,
                         sequence=self._played_by(),
                         coils=self.protocol.values()["coils"],
+                        virtual_channels=study.virtual_channels,
                         quality=self.protocol.values()["quality"],
                         code=code_version(),
                     )
@@ -241,29 +243,32 @@ class StudyPlan:
         return notes
 
     def _channel_note(self, records: Sequence[dict[str, Any]]) -> str:
-        coils = self.protocol.coils
-        if any(record["channels"] > 1 for record in records):
-            return (
-                "Receive channels are those of the scan. Every arm estimates sensitivities from "
-                "its own calibration region; an arm with fewer than 12 lines of it is given those "
-                "of the full scan. Scores compare magnitudes."
-            )
-        if coils is None:
+        received = [(r["id"], r["receive"]) for r in records if r["receive"]]
+        if not received:
             return (
                 "One receive channel: the image is taken as the combined image of the array, so "
                 "parallel imaging has nothing to work with."
             )
-        note = (
-            f"The receive array is simulated: {coils.number} circular loops on a "
-            f"{coils.form} in {coils.rows} row(s) "
-            f"{coils.standoff_mm:g} mm off the field of view, noise correlation "
-            f"{coils.correlation:g} between neighbours. Every arm estimates sensitivities from its "
-            "own calibration region; an arm with fewer than 12 lines of it is given the true ones. "
-            "Scores compare magnitudes. The noise of the scan itself reaches all loops alike, so "
-            "noise gain shows only in noise that is added."
+        told: dict[str, list[str]] = {}
+        for scan, one in received:
+            told.setdefault(f"{one['note']}; {one['noise']}", []).append(scan)
+        note = " ".join(f"Receive channels of {', '.join(ids)}: {t}." for t, ids in told.items())
+        given = "true" if self.protocol.coils else "full scan's"
+        note += (
+            " Every arm estimates sensitivities from its own calibration region; an arm with fewer "
+            f"than {LEAST_LINES} lines of it is given the {given} ones. Scores compare magnitudes."
         )
-        if coils.phase > 0 and any(r["complex_source"] == INVENTED for r in records):
-            note += f" A smooth random phase of {coils.phase:g} rad was put on magnitude scans."
+        coils = self.protocol.coils
+        if coils is not None:
+            note += (
+                " The noise of the scan itself reaches all loops alike, so noise gain shows only "
+                "in noise that is added."
+            )
+            if coils.phase > 0 and any(r["complex_source"] == INVENTED for r in records):
+                note += (
+                    f" Phase simulated: a smooth random phase of {coils.phase:g} rad was put on "
+                    "magnitude scans."
+                )
         return note
 
     def findings(self) -> list[str]:
@@ -318,6 +323,7 @@ def plan_study(protocol: Protocol, *, quick: bool = False) -> StudyPlan:
         impossible.
     """
     study = protocol.study
+    _check_channels(protocol)
     axes = protocol.axes()
     scans = protocol.scan_files()
     choice = PlaneChoice(study.slices)
@@ -365,6 +371,30 @@ def plan_study(protocol: Protocol, *, quick: bool = False) -> StudyPlan:
         noise=noise,
         channel_axis=protocol.grid.channel_axis,
     )
+
+
+def _check_channels(protocol: Protocol) -> None:
+    """Channels are the scan's own or simulated, and there must be some to compress."""
+    own, coils = protocol.grid.channel_axis is not None, protocol.coils
+    if own and coils is not None:
+        raise StudyError(
+            f"[coils] simulates an array, but channel_axis = {protocol.grid.channel_axis} names "
+            "the scans' own channels.",
+            f"{protocol.path}: [coils], grid.channel_axis",
+            "Remove one of the two.",
+        )
+    virtual = protocol.study.virtual_channels
+    if virtual is None or own:
+        return
+    most = coils.number if coils is not None else 1
+    if virtual > most:
+        raise StudyError(
+            f"{virtual} virtual channels cannot be made of {most}.",
+            f"{protocol.path}: study.virtual_channels",
+            f"Give a number from 1 to {most}."
+            if coils is not None
+            else "Name the scans' channel_axis, add [coils], or remove virtual_channels.",
+        )
 
 
 def _calibrated(pattern: Pattern) -> int:

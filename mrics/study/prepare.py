@@ -3,23 +3,19 @@
 from __future__ import annotations
 
 from collections import OrderedDict
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
-from mrics.encoding import estimate_sensitivities, root_sum_of_squares, undersample
-from mrics.encoding.coils import coils_for_scan
+from mrics.encoding import root_sum_of_squares
 from mrics.errors import StudyError
 from mrics.protocol import ScanFiles
 from mrics.protocol.sections import Coils as CoilSection
-from mrics.recovery import recover
-from mrics.sampling import Pattern
 from mrics.scan import Axes, Finding, Scan, body_mask, inspect_scan, read_scan, scan_sigma
 from mrics.scan.remedies import add_phase
-
-_REFERENCE_CALIBRATION = 24
+from mrics.study.channels import Receive, loud_channels, with_own_channels, with_simulated_channels
 
 
 @dataclass(frozen=True)
@@ -82,9 +78,14 @@ class Prepared:
         Receive sensitivities of the studied planes: simulated ones, or for a multi-channel scan
         those estimated from the full scan. None for one channel.
     covariance : ndarray of shape (channel, channel) or None
-        Noise covariance of simulated channels.
+        Noise covariance: of simulated channels, or of a multi-channel scan's border; None for one
+        channel and where it is not known.
     channel_data : ndarray or None
         The studied planes of a multi-channel scan, in file axes.
+    compression : ndarray or None
+        Virtual channels from the full scan, for arms without calibration lines of their own.
+    receive : Receive or None
+        What is known of the channels, for the report; None for one channel.
     """
 
     scan: Scan
@@ -100,6 +101,8 @@ class Prepared:
     sensitivities: NDArray[Any] | None = None
     covariance: NDArray[Any] | None = None
     channel_data: NDArray[Any] | None = None
+    compression: NDArray[Any] | None = None
+    receive: Receive | None = None
 
     @property
     def frame_planes(self) -> int:
@@ -127,11 +130,13 @@ def prepare(
     channel_axis: int | None = None,
     coils: CoilSection | None = None,
     seed: int = 0,
+    virtual_channels: int | None = None,
 ) -> Prepared:
     """Read a scan and take from it what its units need; kept until others need the room.
 
     A file that changed since is read again. ``coils`` puts a simulated receive array (and, on
-    magnitude scans, a smooth phase of that seed) on a scan of one channel.
+    magnitude scans, a smooth phase of that seed) on a scan of one channel; ``virtual_channels``
+    compresses the channels there are.
 
     Raises
     ------
@@ -140,11 +145,11 @@ def prepare(
     StudyError
         Where no plane holds body, or a named slice does not exist.
     """
-    key = (files, axes, choice, channel_axis, coils, seed, _signature(files))
+    key = (files, axes, choice, channel_axis, coils, seed, virtual_channels, _signature(files))
     if key in _kept:
         _kept.move_to_end(key)
         return _kept[key]
-    prepared = _prepare(files, axes, choice, channel_axis, coils, seed)
+    prepared = _prepare(files, axes, choice, channel_axis, coils, seed, virtual_channels)
     _kept[key] = prepared
     while len(_kept) > 1 and sum(_size(one) for one in _kept.values()) > _KEPT_BYTES:
         _kept.popitem(last=False)
@@ -175,10 +180,13 @@ def _prepare(
     channel_axis: int | None,
     coils: CoilSection | None,
     seed: int,
+    virtual_channels: int | None,
 ) -> Prepared:
     scan = read_scan(
         files.path, phase=files.phase, imaginary=files.imaginary, channel_axis=channel_axis
     )
+    if scan.data.ndim > 4:
+        scan = loud_channels(scan)
     findings = tuple(inspect_scan(scan, axes))
     sigma = float(scan_sigma(scan))
     if coils is not None and coils.phase > 0 and scan.magnitude_only:
@@ -211,9 +219,9 @@ def _prepare(
         findings=findings,
     )
     if scan.channels > 1:
-        return _with_own_channels(prepared)
+        return with_own_channels(prepared, virtual_channels)
     if coils is not None:
-        return _with_simulated_channels(prepared, coils)
+        return with_simulated_channels(prepared, coils, virtual_channels)
     return prepared
 
 
@@ -234,47 +242,3 @@ def _light(whole: NDArray[Any], body: NDArray[np.bool_]) -> _Light:
             total += float(inside.sum(dtype=np.float64))
             energy += float(np.square(inside, dtype=np.float64).sum())
     return _Light(largest, total, energy)
-
-
-def _with_simulated_channels(prepared: Prepared, coils: CoilSection) -> Prepared:
-    array = coils_for_scan(
-        prepared.scan,
-        prepared.axes,
-        number=coils.number,
-        rows=coils.rows,
-        radius_mm=coils.radius_mm,
-        standoff_mm=coils.standoff_mm,
-        correlation=coils.correlation,
-        form=coils.form,
-    )
-    return replace(
-        prepared,
-        sensitivities=array.sensitivities[list(prepared.planes)],
-        covariance=array.covariance,
-    )
-
-
-def _with_own_channels(prepared: Prepared) -> Prepared:
-    """The reference of a multi-channel scan: its channels combined by sensitivities of its own.
-
-    The sensitivities come from the centre of the full scan, the combination is the one every
-    multi-channel recovery makes, so that arms and reference differ by what was left out alone.
-    """
-    axis = prepared.axes.order[0]
-    data = np.take(prepared.scan.data, prepared.planes, axis=axis)
-    subset = replace(prepared.scan, data=data)
-    shape = tuple(data.shape[a] for a in prepared.axes.order[1:])
-    grid = shape if prepared.axes.partition is not None else shape[:1]
-    centre = tuple(min(_REFERENCE_CALIBRATION, n) for n in grid)
-    full = Pattern(np.ones(grid, dtype=bool), calibration=centre)
-    acquisition = undersample(subset, full, axes=prepared.axes, sigma_scan=prepared.sigma)
-    maps = estimate_sensitivities(acquisition)[0][:, 0]
-    known = replace(acquisition, sensitivities=maps, covariance=None)
-    image = recover(known, method="zero-filled").image
-    return replace(
-        prepared,
-        stack=image,
-        data_range=float(np.abs(image[prepared.body]).max()),
-        sensitivities=maps,
-        channel_data=data,
-    )

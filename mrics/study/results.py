@@ -15,9 +15,10 @@ import numpy as np
 
 import mrics
 from mrics.caution import RESEARCH_ONLY
-from mrics.scan import write_nifti
+from mrics.scan import Scan, write_nifti
 from mrics.study.aggregate import ArmNumbers, arm_numbers
 from mrics.study.answer import KEPT_LEVEL, overall_verdict, smallest_kept
+from mrics.study.channels import channel_picture
 from mrics.study.code_version import code_version
 from mrics.study.files import plain
 from mrics.study.plan import PlanRow, StudyPlan
@@ -39,6 +40,7 @@ def scan_record(plan: StudyPlan, number: int) -> dict[str, Any]:
         "planes": list(scan.planes),
         "frames": scan.scan.frames,
         "channels": scan.scan.channels,
+        "receive": scan.receive.as_dict() if scan.receive else None,
         "sigma": scan.sigma,
         "snr": scan.snr,
         "sigma_added": plan.noise.added(scan),
@@ -49,7 +51,7 @@ def scan_record(plan: StudyPlan, number: int) -> dict[str, Any]:
 
 
 def write_references(plan: StudyPlan, folder: Path) -> list[dict[str, Any]]:
-    """Write every scan's reference magnitude and body mask; return their map entries."""
+    """Write every scan's reference, body mask and sensitivities; return their map entries."""
     written = []
     for number, scan_id in enumerate(plan.scan_ids):
         scan = plan.prepared(number)
@@ -57,19 +59,20 @@ def write_references(plan: StudyPlan, folder: Path) -> list[dict[str, Any]]:
             ("reference", np.abs(scan.stack).astype(np.float32)),
             ("body", scan.body.astype(np.uint8)),
         ):
-            path = folder / "reference" / f"{scan_id}_{kind}.nii.gz"
-            path.parent.mkdir(exist_ok=True)
-            write_nifti(path, scan.to_volume(stack), scan.scan)
-            written.append(
-                {
-                    "kind": kind,
-                    "scan": scan_id,
-                    "arm": None,
-                    "draw": None,
-                    "file": path.relative_to(folder).as_posix(),
-                }
-            )
+            written.append(_reference(folder, scan_id, kind, scan.to_volume(stack), scan.scan))
+        picture = channel_picture(scan)
+        if picture is not None:
+            written.append(_reference(folder, scan_id, "sensitivities", picture.data, picture))
     return written
+
+
+def _reference(folder: Path, scan_id: str, kind: str, volume: Any, like: Scan) -> dict[str, Any]:
+    """Write a map that belongs to a scan alone; its entry."""
+    path = folder / "reference" / f"{scan_id}_{kind}.nii.gz"
+    path.parent.mkdir(exist_ok=True)
+    write_nifti(path, volume, like)
+    file = path.relative_to(folder).as_posix()
+    return {"kind": kind, "scan": scan_id, "arm": None, "draw": None, "file": file}
 
 
 def study_results(

@@ -12,7 +12,7 @@ from typing import Any
 import numpy as np
 from threadpoolctl import threadpool_limits
 
-from mrics.encoding import Acquisition, echo_weights, undersample
+from mrics.encoding import Acquisition, compress, echo_weights, undersample
 from mrics.encoding.sensitivities import KERNEL
 from mrics.errors import StudyError
 from mrics.protocol import Arm, Protocol, ScanFiles, play_pattern
@@ -26,6 +26,9 @@ from mrics.study.files import plain
 from mrics.study.maps import write_maps
 from mrics.study.prepare import PlaneChoice, Prepared, prepare
 from mrics.study.scratch import SCRATCH, read_scratch
+
+#: calibration lines an arm needs along each axis to estimate its own sensitivities
+LEAST_LINES = 2 * KERNEL
 
 
 @dataclass(frozen=True)
@@ -147,6 +150,7 @@ def run_unit_here(unit: Unit) -> dict[str, Any]:
         unit.channel_axis,
         unit.protocol.coils,
         unit.protocol.study.seed,
+        unit.protocol.study.virtual_channels,
     )
     if scan.scan.sha256 != unit.sha256:
         raise StudyError(
@@ -293,9 +297,22 @@ def _acquire(unit: Unit, scan: Prepared, pattern: Pattern, added: float) -> Acqu
     if scan.sensitivities is None:
         return acquisition
     # Known sensitivities would flatter an arm that has to estimate them from its own lines.
-    least = 2 * KERNEL
-    own = len(pattern.calibration) == len(pattern.grid) and min(pattern.calibration) >= least
-    return replace(acquisition, sensitivities=None if own else scan.sensitivities)
+    own = len(pattern.calibration) == len(pattern.grid)
+    own = own and min(pattern.calibration) >= LEAST_LINES
+    if not own:
+        notes = (*acquisition.notes, "sensitivities of the full scan")
+        return replace(
+            acquisition,
+            sensitivities=scan.sensitivities,
+            compression=scan.compression,
+            notes=notes,
+        )
+    notes = (*acquisition.notes, "sensitivities estimated from the arm's own calibration region")
+    acquisition = replace(acquisition, sensitivities=None, notes=notes)
+    virtual = unit.protocol.study.virtual_channels
+    if virtual is None or virtual >= acquisition.channels:
+        return acquisition
+    return compress(acquisition, virtual, per_plane=unit.axes.partition is not None)
 
 
 def _decay(protocol: Protocol, pattern: Pattern) -> Any:
