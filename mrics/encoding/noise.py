@@ -151,8 +151,8 @@ def border_covariance(acquisition: Acquisition, share: float = BORDER_SHARE) -> 
     Raises
     ------
     AcquisitionError
-        Where the border holds signal (its energy is not even over k-space), or the stack has no
-        readout axis.
+        Where the border holds signal (its energy is not even over k-space, or not the same at both
+        ends), or the stack has no readout axis.
     """
     rows_only = acquisition.mask.shape[2] == 1
     planes, u, v = acquisition.shape
@@ -168,6 +168,7 @@ def border_covariance(acquisition: Acquisition, share: float = BORDER_SHARE) -> 
     edge = max(1, round(share * length / 2))
     ends = np.r_[0:edge, length - edge : length]
     inner, outer = [], []
+    energy: tuple[list[Array], list[Array]] = ([], [])
     chosen = list(range(planes))
     if not rows_only:
         chosen = [f * length + int(e) for f in range(frames) for e in ends]
@@ -179,6 +180,10 @@ def border_covariance(acquisition: Acquisition, share: float = BORDER_SHARE) -> 
         data = np.asarray(acquisition.kspace[plane])
         if rows_only:
             data, mask = centred_ifft(data, axes=(-1,))[:, :, ends], mask[:, 0]
+            for side, part in enumerate(np.split(data[:, mask], 2, axis=2)):
+                energy[side].append(part.reshape(len(data), -1))
+        else:
+            energy[int(plane % length >= edge)].append(data[:, mask])
         flat = [data[:, mask & part].reshape(len(data), -1) for part in (near, ~near)]
         inner.append(flat[0])
         outer.append(flat[1])
@@ -191,6 +196,7 @@ def border_covariance(acquisition: Acquisition, share: float = BORDER_SHARE) -> 
             f"readout border, {2 * edge} of {length} positions",
             "Give noise samples, or a smaller share.",
         )
+    _check_sides([np.concatenate(side, axis=1) for side in energy])
     samples = np.concatenate([low, high], axis=1)
     least = _BORDER_SAMPLES * len(samples)
     if samples.shape[1] < least:
@@ -201,6 +207,23 @@ def border_covariance(acquisition: Acquisition, share: float = BORDER_SHARE) -> 
             "Give noise samples, or a larger share.",
         )
     return noise_covariance(samples)
+
+
+def _check_sides(sides: list[Array]) -> None:
+    """Receiver noise is the same at both ends of the readout in every channel."""
+    one, two = ((side.real**2 + side.imag**2).mean(axis=1) for side in sides)
+    lowest = np.maximum(np.minimum(one, two), 1e-300)
+    ratio = np.maximum(one, two) / lowest
+    # A mean of n energies is known to 1/sqrt(n): five of its standard deviations.
+    allowed = max(_SIGNAL_RATIO, 1 + 5 * np.sqrt(2 / sides[0].shape[1]))
+    if ratio.max() > allowed:
+        channel = int(np.argmax(ratio))
+        raise AcquisitionError(
+            f"Channel {channel} has {ratio[channel]:.3g} times the energy at one end of the "
+            "readout, so the border does not hold receiver noise alone.",
+            "readout border",
+            "Give noise samples.",
+        )
 
 
 def _mean_energy(samples: Array) -> float:

@@ -1,5 +1,6 @@
 """Noise covariance, whitening, compression, combination, silent channels."""
 
+import re
 from itertools import pairwise
 
 import numpy as np
@@ -19,6 +20,7 @@ from mrics.encoding import (
     whitening,
 )
 from mrics.encoding.acquisition import Acquisition
+from mrics.encoding.noise import border_noise
 from mrics.errors import AcquisitionError, MricsWarning
 from mrics.numerics import centred_ifft
 from mrics.sampling.pattern import Pattern
@@ -79,6 +81,22 @@ def test_covariance_from_the_border_of_a_readout():
     np.testing.assert_allclose(found, 0.05**2 * psi, atol=0.05**2 * 0.05)
     with pytest.raises(AcquisitionError, match="border holds signal"):
         border_covariance(data, 0.9)
+
+
+def test_a_border_that_is_no_receiver_noise_is_not_believed():
+    maps, _, images = scene(48, 160, channels=4, planes=24)
+    # Noise that went through the sensitivities is louder in the coil of its own side.
+    generator = np.random.default_rng(3)
+    noise = complex_noise(generator, *images.shape)
+    data = undersample(noise, regular((48,), (1,)), sensitivities=maps[None])
+    psi, text = border_noise(data)
+    assert psi is None
+    assert re.search(r"channel 0 has [\d.]+ times the energy at one end", text)
+    thin = np.zeros((1, 48, 32), complex)
+    few = undersample(thin, regular((48,), (2,)), 1.0, 2, sensitivities=maps[None, ..., :32])
+    psi, text = border_noise(few)
+    assert psi is None
+    assert "48 samples, too few for 4 channels (100 are needed)" in text
 
 
 def test_covariance_from_the_end_planes_of_a_3d_scan():
