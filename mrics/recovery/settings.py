@@ -129,6 +129,9 @@ class Variation(Settings):
     ----------
     weight : float or "auto"
         Weight in units of sigma.
+    order : int
+        1: total variation, which makes shading into steps. 2: second-order total generalised
+        variation, which keeps slopes.
     iterations : int or None
         Most iterations; None for 300.
     tolerance : float
@@ -136,6 +139,7 @@ class Variation(Settings):
     """
 
     weight: float | str = _number("auto", 0.0, above=True, words=("auto",))
+    order: int = _number(1, 1, 2, whole=True)
     iterations: int | None = _number(None, 1, 100_000, whole=True, optional=True)
     tolerance: float = _number(1e-3, 0.0, 1.0, above=True)
 

@@ -16,6 +16,7 @@ VARIANTS = [
     ("wavelet", {"shift": "none"}),
     ("wavelet", {"shift": "full", "tolerance": 1e-2}),
     ("variation", {}),
+    ("variation", {"order": 2, "tolerance": 1e-2}),
 ]
 
 
@@ -37,6 +38,7 @@ def test_every_method_has_settings():
         ),
         ("wavelet", {"wavelet": "db44"}, r"wavelet must be one of 'haar'.*did you mean 'db4'"),
         ("wavelet", {"iterations": 2.5}, r"iterations must be a whole number.*got 2.5"),
+        ("variation", {"order": 3}, r"order must be a whole number.*at most 2, got 3"),
         ("wavelet", {"iterations": True}, r"iterations must be a whole number.*got True"),
         ("least-squares", {"tolerance": 0.0}, r"tolerance must be a number above 0"),
         ("zero-filled", {"weight": 1}, r"no setting 'weight'"),
