@@ -98,9 +98,15 @@ class Protocol:
 
     def scan_files(self) -> tuple[_files.ScanFiles, ...]:
         """Files of the scans, patterns expanded; raises ProtocolError where one is missing."""
-        return _files.expand(
-            self.study.scans, self.path.parent, place(self.path, self.text, ("study", "scans"))
+        folder = self.path.parent
+        scans = _files.expand(
+            self.study.scans, folder, place(self.path, self.text, ("study", "scans"))
         )
+        measures = self.measures() if self.quality else None
+        if measures is None or not measures.labels:
+            return scans
+        where = place(self.path, self.text, ("quality", "labels"))
+        return _files.with_labels(scans, measures.labels, folder, where)
 
     def measures(self) -> Measures | None:
         """Which measures beside the scores are taken; None where ``[quality]`` is not given."""

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import glob
 import re
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 from mrics.errors import ProtocolError
@@ -21,11 +21,14 @@ class ScanFiles:
         Magnitude, complex or real-part file.
     phase, imaginary : Path or None
         The second file of a pair.
+    labels : Path or None
+        Label map drawn on it.
     """
 
     path: Path
     phase: Path | None = None
     imaginary: Path | None = None
+    labels: Path | None = None
 
     @property
     def name(self) -> str:
@@ -56,6 +59,28 @@ def expand(entries: tuple[ScanEntry, ...], folder: Path, where: str) -> tuple[Sc
                 )
             found.append(scan)
     return tuple(found)
+
+
+def with_labels(
+    scans: tuple[ScanFiles, ...], labels: tuple[str, ...], folder: Path, where: str
+) -> tuple[ScanFiles, ...]:
+    """Scans with their label maps: one for all, or one for each in the order of the scans.
+
+    Raises
+    ------
+    ProtocolError
+        Where a file is missing, or there are as many as fit neither.
+    """
+    found = [path for name in labels for path in _matches(name, folder, where).values()]
+    if len(found) == 1:
+        found *= len(scans)
+    if len(found) != len(scans):
+        raise ProtocolError(
+            f"There are {len(found)} label maps for {len(scans)} scans.",
+            where,
+            "Give one that fits every scan, or one for each in the order of the scans.",
+        )
+    return tuple(replace(scan, labels=path) for scan, path in zip(scans, found, strict=True))
 
 
 def _scans(given: dict[str, str], folder: Path, where: str) -> list[ScanFiles]:

@@ -19,7 +19,7 @@ from numpy.typing import NDArray
 
 from mrics.encoding import Acquisition
 from mrics.errors import QualityError
-from mrics.numerics import centred_fft, map_blocks
+from mrics.numerics import centred_fft, centred_ifft, map_blocks
 from mrics.recovery import recover
 from mrics.recovery.settings import check_settings
 
@@ -75,6 +75,9 @@ class Chain:
         # A method with random parts draws them by plane number, so planes must keep theirs.
         self._batched = "seed" not in names or getattr(checked, "shift", "random") != "random"
         self._root = _noise_root(acquisition)
+        held = self.acquisition
+        shape = self.base.shape
+        self._acquired = np.broadcast_to(held.mask[held.pattern_index], shape) != 0
 
     @property
     def linear(self) -> bool:
@@ -91,19 +94,53 @@ class Chain:
         kspace *= held.mask[held.pattern_index][:, None]
         return kspace
 
+    def random(
+        self, generator: np.random.Generator, power: Array, signal: Array | float = 0.0
+    ) -> Array:
+        """Data of a random field and a signal, with the acquisition's noise.
+
+        Parameters
+        ----------
+        generator : numpy Generator
+        power : ndarray of shape (u, v)
+            Power of one k-space sample of the field, per real part, centred.
+        signal : ndarray of shape (plane, u, v), or 0
+            Its centred k-space.
+        """
+        held = self.acquisition
+        if held.sensitivities is None:
+            # Field and noise of one channel are one Gaussian variable at each sample.
+            data = self._samples(generator, np.sqrt(power + self.sigma**2))
+            if np.ndim(signal):
+                data += np.where(self._acquired, signal, 0)[:, None]
+            return data
+        shape = (*self.base.shape, 2)
+        parts = generator.standard_normal(shape, dtype=self.base.real.dtype.type)
+        field = parts.view(self.base.dtype)[..., 0] * np.sqrt(power) + signal
+        return self.encode(centred_ifft(field)) + self.noise(generator)
+
     def noise(self, generator: np.random.Generator) -> Array:
         """One realisation of the acquisition's noise at the acquired samples."""
-        held = self.acquisition
-        real = held.kspace.real.dtype
-        parts = generator.standard_normal((*held.kspace.shape, 2), dtype=real.type)
-        noise = parts.view(held.kspace.dtype)[..., 0]
+        noise = self._samples(generator, np.broadcast_to(self.sigma, self.base.shape[1:]))
         if self._root is not None:
             planes, channels, u, v = noise.shape
             noise = np.matmul(self._root.astype(noise.dtype), noise.reshape(planes, channels, -1))
             noise = noise.reshape(planes, channels, u, v)
-        noise *= real.type(self.sigma)
-        noise *= held.mask[held.pattern_index][:, None]
         return noise
+
+    def _samples(self, generator: np.random.Generator, scale: Array) -> Array:
+        """Independent circular values of that standard deviation per part where acquired, else 0.
+
+        Only what is acquired is drawn: it is the costly part of a replica.
+        """
+        held = self.acquisition
+        kspace = np.zeros(held.kspace.shape, dtype=held.kspace.dtype)
+        real = held.kspace.real.dtype.type
+        for plane, inside in zip(kspace, self._acquired, strict=True):
+            size = scale[inside].astype(real)
+            parts = generator.standard_normal((len(plane), size.size, 2), dtype=real)
+            plane[:, inside] = parts.view(kspace.dtype)[..., 0] * size
+        return kspace
 
     def images(
         self, changes: Iterable[Array], *, total: int = 0, progress: Progress | None = None

@@ -8,6 +8,7 @@ from dataclasses import dataclass, fields
 from typing import Any
 
 from mrics.errors import QualityError
+from mrics.quality.edges import Edge
 from mrics.quality.features import Feature
 
 
@@ -21,8 +22,13 @@ class Measures:
         MS-SSIM, gradient deviation, worst patches and the spectral error, of every plane.
     error_split : bool
         Measured, missing and invented parts of the error, of every plane.
-    edges : bool
-        Edge blur, of every plane studied.
+    edges : bool or tuple of Edge
+        Edge blur, of every plane studied: at edges that are found, or at these.
+    labels : tuple of str
+        Label maps (NIfTI): one for every scan, or one for each. Regions are measured in them, and
+        features are inserted inside them.
+    background_label : int or None
+        Label that contrast and CNR of the others are taken against.
     planes : int
         Planes that measures with further recoveries use, spread over the body.
     noise_replicas : int
@@ -44,7 +50,9 @@ class Measures:
 
     more_scores: bool = True
     error_split: bool = True
-    edges: bool = False
+    edges: bool | tuple[Edge, ...] = False
+    labels: tuple[str, ...] = ()
+    background_label: int | None = None
     planes: int = 2
     noise_replicas: int = 0
     resolution_runs: int = 0
@@ -67,9 +75,15 @@ class Measures:
             value = getattr(self, name)
             if isinstance(value, bool) or not isinstance(value, int | float) or not value > 0:
                 raise _bad(name, value, "a positive number")
-        for name in ("more_scores", "error_split", "edges"):
+        for name in ("more_scores", "error_split"):
             if not isinstance(getattr(self, name), bool):
                 raise _bad(name, getattr(self, name), "true or false")
+        if self.background_label is not None:
+            label = self.background_label
+            if isinstance(label, bool) or not isinstance(label, int) or label < 1:
+                raise _bad("background_label", label, "a whole number of at least 1")
+            if not self.labels:
+                raise _bad("background_label", label, "given together with labels")
 
     @property
     def recoveries(self) -> int:
@@ -84,7 +98,8 @@ def measures_from(table: Mapping[str, Any]) -> Measures:
 
     Its keys are the fields of :class:`Measures`. ``features`` is a list of tables with the keys of
     :class:`mrics.quality.features.Feature`; ``size_mm`` and ``contrast`` may be lists, and every
-    combination is inserted.
+    combination is inserted. ``edges`` is true, false, or a list of tables with the keys of
+    :class:`mrics.quality.edges.Edge`; ``labels`` one path or a list of them.
 
     Raises
     ------
@@ -99,7 +114,35 @@ def measures_from(table: Mapping[str, Any]) -> Measures:
         values["features"] = tuple(
             feature for entry in values["features"] for feature in _features(entry)
         )
+    if "edges" in values:
+        values["edges"] = _edges(values["edges"])
+    if "labels" in values:
+        given = values["labels"]
+        listed = tuple(given) if isinstance(given, list | tuple) else (given,)
+        if not listed or not all(isinstance(path, str) and path for path in listed):
+            raise _bad("labels", given, "one path in quotes, or a list of them")
+        values["labels"] = listed
     return Measures(**values)
+
+
+def _edges(given: Any) -> bool | tuple[Edge, ...]:
+    if isinstance(given, bool):
+        return given
+    if not isinstance(given, list | tuple) or not given:
+        raise _bad("edges", given, "true, false or a list of tables")
+    known = [one.name for one in fields(Edge)]
+    found = []
+    for entry in given:
+        if not isinstance(entry, Mapping):
+            raise _bad("edges", entry, "a table with i, j, k and angle_deg")
+        for key in entry:
+            _known(key, known, f"[quality] edges.{key}")
+        for name in ("i", "j", "k", "angle_deg"):
+            value = entry.get(name)
+            if isinstance(value, bool) or not isinstance(value, int | float):
+                raise _bad(f"edges.{name}", value, "a number")
+        found.append(Edge(**entry))
+    return tuple(found)
 
 
 def _features(entry: Any) -> list[Feature]:

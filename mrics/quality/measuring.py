@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 
 from mrics.encoding import Acquisition
 from mrics.errors import QualityError
+from mrics.numerics import map_blocks
 from mrics.quality.chain import Chain, planes_of
 from mrics.quality.measures import Measures
 
@@ -29,8 +30,8 @@ class Measured:
         One dict per plane of the stack, metric name to value; a metric is absent where it was not
         taken of that plane, None where it has no value.
     tables : dict
-        Plain values for results files: ``spectral``, ``noise``, ``resolution``, ``features``,
-        ``smallest_kept_mm``, ``observer``, ``regions``, as far as they were asked for.
+        Plain values for results files: ``spectral``, ``error_split``, ``edges``, ``noise``,
+        ``resolution``, ``features``, ``observer``, ``regions``, as far as they were asked for.
     maps : dict of str to ndarray of shape (plane, u, v), float32
         ``missing``, ``invented`` (magnitudes), ``noise_ratio``, ``resolution_u_mm``,
         ``resolution_v_mm``, and ``feature_1``, ``feature_2``, ... in the order of the table: what
@@ -61,6 +62,7 @@ def measure(
     mask: NDArray[np.bool_] | None = None,
     data_range: float | None = None,
     labels: Array | None = None,
+    edges: Array | None = None,
     seed: int = 0,
     progress: Note | None = None,
 ) -> Measured:
@@ -86,6 +88,8 @@ def measure(
         L of the scores; the reference's largest magnitude in the mask if left out.
     labels : ndarray of integer, shape (plane, u, v), optional
         Regions for statistics; features are drawn in them too where they are given.
+    edges : ndarray of shape (n, 4), optional
+        Edges (plane, u, v, angle) to measure; found in every plane if left out.
     seed : int
         Of noise, sites and signs.
     progress : callable of (measure, done, total), optional
@@ -99,11 +103,12 @@ def measure(
     wanted = measures or Measures()
     started = perf_counter()
     result = _Results(image, reference, voxel_mm, mask, data_range)
-    result.whole_stack(acquisition, wanted, labels)
+    result.whole_stack(acquisition, wanted, labels, edges)
     planes: tuple[int, ...] = ()
     recovery_s = 0.0
     if wanted.recoveries:
-        planes = choose_planes(reference, mask, wanted, voxel_mm)
+        where = mask if labels is None else labels > 0
+        planes = choose_planes(reference, where, wanted, voxel_mm)
         chain = Chain(planes_of(acquisition, planes), method, **(settings or {}))
         result.with_recoveries(chain, planes, wanted, labels, seed, progress)
         recovery_s = chain.seconds
@@ -123,7 +128,7 @@ def choose_planes(
     measures: Measures,
     voxel_mm: tuple[float, float, float],
 ) -> tuple[int, ...]:
-    """Planes spread over those that hold at least half as much body as the fullest one.
+    """Planes spread over those that hold at least half as much of the mask as the fullest one.
 
     Features that reach over planes need neighbours: then it is one block around the fullest plane.
 
@@ -167,7 +172,13 @@ class _Results:
         self.tables: dict[str, Any] = {}
         self.maps: dict[str, Array] = {}
 
-    def whole_stack(self, acquisition: Acquisition, wanted: Measures, labels: Array | None) -> None:
+    def whole_stack(
+        self,
+        acquisition: Acquisition,
+        wanted: Measures,
+        labels: Array | None,
+        edges: Array | None,
+    ) -> None:
         """Measures that need no further recovery."""
         in_plane = self.voxel_mm[1:]
         if wanted.more_scores:
@@ -179,8 +190,10 @@ class _Results:
                 mine.update(more)
             spectral = spectral_error(self.image, self.reference, in_plane)
             self.tables["spectral"] = {
-                name: _plain(values) for name, values in asdict(spectral).items()
+                name: _plain(getattr(spectral, name)) for name in ("frequency", "relative", "share")
             }
+            for mine, fine in zip(self.by_plane, _plain(spectral.fine), strict=True):
+                mine["error_fine"] = fine
         if wanted.error_split:
             from mrics.quality.error_split import PARTS, error_split
 
@@ -196,12 +209,16 @@ class _Results:
             for name in ("missing", "invented"):
                 self.maps[name] = np.abs(getattr(split, name)).astype(np.float32)
         if wanted.edges:
-            self._edges(in_plane)
+            self._edges(in_plane, edges)
         if labels is not None:
-            from mrics.quality.regions import region_statistics
+            from mrics.quality.regions import region_planes, region_statistics
 
-            regions = region_statistics(self.image, self.reference, labels)
+            against = wanted.background_label
+            regions = region_statistics(self.image, self.reference, labels, background=against)
             self.tables["regions"] = [_plain(asdict(region)) for region in regions]
+            by_plane = region_planes(self.image, self.reference, labels, background=against)
+            for mine, values in zip(self.by_plane, by_plane, strict=True):
+                mine.update(values)
 
     def with_recoveries(
         self,
@@ -229,23 +246,41 @@ class _Results:
         if wanted.observer_images:
             self._observer(chain, chosen, mask, wanted, seed, note("observer"))
 
-    def _edges(self, in_plane: tuple[float, ...]) -> None:
-        from mrics.quality.edges import edge_blur
+    def _edges(self, in_plane: tuple[float, ...], given: Array | None) -> None:
+        from mrics.quality.edges import EdgeBlur, edge_blur
 
-        for plane, mine in enumerate(self.by_plane):
+        def one(plane: int) -> EdgeBlur | None:
+            mine = None
+            if given is not None:
+                mine = given[given[:, 0] == plane]
+                if not len(mine):
+                    return None
+                mine = mine - np.array([plane, 0, 0, 0])
             box = slice(plane, plane + 1)
+            inside = None if self.mask is None else self.mask[box]
+            if inside is not None and not inside.any():
+                return None
+            voxel = (in_plane[0], in_plane[1])
             try:
-                found = edge_blur(
-                    self.image[box],
-                    self.reference[box],
-                    (in_plane[0], in_plane[1]),
-                    mask=None if self.mask is None else self.mask[box],
+                return edge_blur(
+                    self.image[box], self.reference[box], voxel, mask=inside, edges=mine
                 )
             except QualityError:
-                # A plane without a clean edge, or outside the body, has no value.
-                mine["edge_blur"] = None
-            else:
-                mine["edge_blur"] = found.ratio if np.isfinite(found.ratio) else None
+                # A plane without a clean edge has no value; given edges were checked before.
+                return None
+
+        rows = []
+        for plane, found in enumerate(map_blocks(one, range(len(self.by_plane)))):
+            ratio = found.ratio if found is not None and np.isfinite(found.ratio) else None
+            self.by_plane[plane]["edge_blur"] = ratio
+            if found is not None and given is not None:
+                for edge, width, before in zip(
+                    found.edges, found.width_mm, found.reference_mm, strict=True
+                ):
+                    place = {"plane": plane, "u": edge[1], "v": edge[2], "angle_deg": edge[3]}
+                    rows.append({**place, "width_mm": width, "reference_mm": before})
+        if rows:
+            self.tables["edges"] = _plain(rows)
 
     def _noise(self, chain: Chain, chosen: list[int], mask: Any, wanted: Measures, seed: int,
                note: Any) -> None:  # fmt: skip
@@ -280,13 +315,14 @@ class _Results:
             seed=seed,
             progress=note,
         )
+        maps = found.as_maps(chain.base.shape)
         for axis, name in enumerate(("resolution_u_mm", "resolution_v_mm")):
             for row, plane in enumerate(chosen):
                 mine = found.width_mm[found.sites[:, 0] == row, axis]
                 mine = mine[~np.isnan(mine)]
                 if mine.size and np.isfinite(np.median(mine)):
                     self.by_plane[plane][name] = float(np.median(mine))
-            self._map(name, chosen, found.as_map(chain.base.shape, axis))
+            self._map(name, chosen, maps[axis])
         self.tables["resolution"] = _plain(
             {
                 "median_mm": found.median_mm,
@@ -301,7 +337,7 @@ class _Results:
 
     def _features(self, chain: Chain, chosen: list[int], region: Any, wanted: Measures, seed: int,
                   note: Any) -> None:  # fmt: skip
-        from mrics.quality.retention import feature_retention, smallest_kept
+        from mrics.quality.retention import feature_retention
 
         found = feature_retention(
             chain,
@@ -318,12 +354,12 @@ class _Results:
             mine = least.retained[least.sites[:, 0] == row]
             if mine.size:
                 self.by_plane[plane]["feature_retention"] = float(mine.mean())
+            shifts = [one.displacement_mm[one.sites[:, 0] == row] for one in found]
+            shift = _median(np.concatenate(shifts))
+            self.by_plane[plane]["feature_shift_mm"] = shift if np.isfinite(shift) else None
         self.tables["features"] = [_plain(_feature_row(one, chosen)) for one in found]
         for number, one in enumerate(found, start=1):
             self._map(f"feature_{number}", chosen, one.change)
-        self.tables["smallest_kept_mm"] = {
-            f"{contrast:g}": size for contrast, size in smallest_kept(found, 0.8).items()
-        }
 
     def _observer(self, chain: Chain, chosen: list[int], mask: Any, wanted: Measures, seed: int,
                   note: Any) -> None:  # fmt: skip
@@ -364,6 +400,14 @@ class _Results:
 
 def _feature_row(one: Any, chosen: list[int]) -> dict[str, Any]:
     """A feature as it was asked for, what was kept of it, and where on the stack it was put."""
+    intervals = {
+        name: None if interval is None else interval.as_dict()
+        for name, interval in (
+            ("interval", one.interval),
+            ("size_interval", one.size_interval),
+            ("displacement_interval", one.displacement_interval),
+        )
+    }
     return {
         **asdict(one.feature),
         "nominal_mm": one.feature.size_mm,
@@ -375,10 +419,10 @@ def _feature_row(one: Any, chosen: list[int]) -> dict[str, Any]:
             )
         ],
         "retained": one.mean,
-        "interval": one.interval.as_dict() if one.interval else None,
         "size_mm": _median(one.size_mm),
         "inserted_mm": _median(one.inserted_mm),
         "displacement_mm": _median(one.displacement_mm),
+        **intervals,
     }
 
 

@@ -136,6 +136,13 @@ METRICS: MappingProxyType[str, Metric] = MappingProxyType(
             "SSIM, worst patch",
             "Likeness in the worst small region.",
         ),
+        "error_fine": Metric(
+            "lower",
+            "norm of the error over the norm of the reference in the outer half of k-space",
+            "1",
+            "error in fine detail",
+            "Size of the error in the finest detail as a share of that detail.",
+        ),
         "error_measured": Metric(
             "lower",
             "||P (x - y)|| / ||y||, P what the acquisition determines (one channel: the projector "
@@ -204,6 +211,28 @@ METRICS: MappingProxyType[str, Metric] = MappingProxyType(
             "1",
             "feature retention",
             "Share of a small feature's contrast that survives; 1 is all of it.",
+        ),
+        "feature_shift_mm": Metric(
+            "lower",
+            "median length of the shift that fits recovered to inserted features best",
+            "mm",
+            "feature displacement",
+            "How far small features are moved from where they are.",
+        ),
+        "region_bias": Metric(
+            "lower",
+            "largest |mean - reference mean| / reference mean of the labelled regions of a plane",
+            "1",
+            "region bias",
+            "How far the brightness of a labelled region is off, at worst.",
+        ),
+        "region_cnr": Metric(
+            "higher",
+            "smallest ratio over the labelled regions of a plane of CNR to the reference's CNR; "
+            "CNR = |mean - background mean| / root of the mean of both variances",
+            "1",
+            "region CNR kept",
+            "How well the regions still stand out from the background region, at worst.",
         ),
         "observer_auc": Metric(
             "higher",

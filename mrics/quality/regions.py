@@ -127,6 +127,44 @@ def region_statistics(
     return [_region(name, ours, theirs, labels == name, base) for name in names]
 
 
+def region_planes(
+    image: Array, reference: Array, labels: Array, *, background: int | None = None
+) -> list[dict[str, float | None]]:
+    """How far the regions of every plane are off at worst.
+
+    Parameters
+    ----------
+    image, reference, labels, background
+        As for :func:`region_statistics`, checked there.
+
+    Returns
+    -------
+    list of dict
+        ``region_bias``, the largest |mean - reference mean| / reference mean of a region of the
+        plane; with a background ``region_cnr``, the smallest CNR over the reference's. None in
+        planes without a region, or without background.
+    """
+    rows: list[dict[str, float | None]] = []
+    for plane, truth, names in zip(
+        magnitude(image), magnitude(reference), np.asarray(labels), strict=True
+    ):
+        base = None if background is None else names == background
+        biases, kept = [], []
+        for name in np.unique(names[names != 0]):
+            inside = names == name
+            level = float(truth[inside].mean())
+            if level > 0.0:
+                biases.append(abs(float(plane[inside].mean()) - level) / level)
+            if base is not None and base.any() and name != background:
+                ours, theirs = _contrast(plane, inside, base)[1], _contrast(truth, inside, base)[1]
+                if np.isfinite(ours) and theirs > 0.0:
+                    kept.append(ours / theirs)
+        rows.append({"region_bias": max(biases, default=None)})
+        if background is not None:
+            rows[-1]["region_cnr"] = min(kept, default=None)
+    return rows
+
+
 def bland_altman(ours: Array, theirs: Array) -> Agreement:
     """Bias and limits of agreement of paired values."""
     difference = np.asarray(ours, dtype=np.float64) - np.asarray(theirs, dtype=np.float64)

@@ -74,19 +74,23 @@ class LocalResolution:
     runs: int
     note: str
 
-    def as_map(self, shape: tuple[int, int, int], axis: int) -> Array:
-        """Width along u (``axis`` 0) or v (1) at every voxel, that of the nearest site in plane.
+    def as_maps(self, shape: tuple[int, int, int]) -> Array:
+        """Widths along u and v at every voxel, those of the nearest site in plane.
 
-        Planes without a site are NaN.
+        Shape (2, plane, u, v); planes without a site are NaN.
         """
-        from scipy.spatial import cKDTree
+        from scipy.ndimage import distance_transform_edt
 
-        out = np.full(shape, np.nan, dtype=np.float32)
-        grid = np.indices(shape[1:]).reshape(2, -1).T
+        out = np.full((2, *shape), np.nan, dtype=np.float32)
         for plane in np.unique(self.sites[:, 0]):
-            mine = self.sites[:, 0] == plane
-            _, nearest = cKDTree(self.sites[mine, 1:]).query(grid)
-            out[plane] = self.width_mm[mine, axis][nearest].reshape(shape[1:])
+            mine = np.flatnonzero(self.sites[:, 0] == plane)
+            place = tuple(self.sites[mine, 1:].T)
+            number = np.zeros(shape[1:], dtype=np.intp)
+            number[place] = mine
+            away = np.ones(shape[1:], dtype=bool)
+            away[place] = False
+            nearest = distance_transform_edt(away, return_distances=False, return_indices=True)
+            out[:, plane] = np.moveaxis(self.width_mm[number[tuple(nearest)]], -1, 0)
         return out
 
 
@@ -229,10 +233,12 @@ def _lattice(
         for u, v in taken[taken[:, 0] == plane, 1:]:
             _clear(free, u, v, spacing // 4)
         candidates = np.argwhere(free)
-        for u, v in candidates[generator.permutation(len(candidates))]:
-            if free[u, v]:
-                chosen.append((plane, u, v))
-                _clear(free, u, v, spacing)
+        order = candidates[generator.permutation(len(candidates))]
+        while len(order):
+            u, v = order[0]
+            chosen.append((plane, u, v))
+            _clear(free, u, v, spacing)
+            order = order[free[tuple(order.T)]]
     return np.array(chosen, dtype=np.intp).reshape(-1, 3)
 
 

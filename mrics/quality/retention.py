@@ -49,8 +49,9 @@ class Retention:
     size_mm, inserted_mm : ndarray of shape (n,)
         Size at half maximum as recovered and as inserted; NaN where nothing is left.
     displacement_mm : ndarray of shape (n,)
-    interval : Interval or None
-        Of the mean of ``retained``, over sites of this acquisition alone.
+    interval, size_interval, displacement_interval : Interval or None
+        Of the means of ``retained``, ``size_mm`` and ``displacement_mm``, over sites of this
+        acquisition alone.
     """
 
     feature: Feature
@@ -62,6 +63,8 @@ class Retention:
     inserted_mm: Array
     displacement_mm: Array
     interval: Interval | None
+    size_interval: Interval | None
+    displacement_interval: Interval | None
 
     @property
     def mean(self) -> float:
@@ -153,23 +156,6 @@ def feature_retention(
     ]
 
 
-def smallest_kept(results: Sequence[Retention], level: float) -> dict[float, float | None]:
-    """Smallest size in mm whose retention reaches a level, for every contrast.
-
-    A size counts only where every larger size of the same contrast is kept too; None where not
-    even the largest is.
-    """
-    kept: dict[float, float | None] = {}
-    for contrast in sorted({one.feature.contrast for one in results}):
-        kept[contrast] = None
-        mine = [one for one in results if one.feature.contrast == contrast]
-        for one in sorted(mine, key=lambda r: -r.feature.size_mm):
-            if one.mean < level:
-                break
-            kept[contrast] = one.feature.size_mm
-    return kept
-
-
 def _unit(image: Array) -> Array:
     size = np.abs(image)
     return np.where(size > 0.0, image / np.where(size > 0.0, size, 1.0), 1.0)
@@ -209,10 +195,7 @@ def _measure(
     retained = (windows * patch).sum(axis=(1, 2, 3)) / float((patch**2).sum())
     size = _sizes(feature, windows, patch, voxel_mm)
     inserted = _sizes(feature, patch[None], patch, voxel_mm)
-    interval = estimate({"this": dict(enumerate(retained.tolist()))}).interval()
-    if interval is not None:
-        over = f"{len(sites)} sites of this acquisition"
-        interval = Interval(interval.low, interval.high, interval.level, "Student t", over)
+    displacement = _displacements(windows, patch, voxel_mm)
     return Retention(
         feature=feature,
         sites=sites,
@@ -221,9 +204,23 @@ def _measure(
         retained=retained,
         size_mm=size,
         inserted_mm=np.broadcast_to(inserted, size.shape),
-        displacement_mm=_displacements(windows, patch, voxel_mm),
-        interval=interval,
+        displacement_mm=displacement,
+        interval=_over_sites(retained),
+        size_interval=_over_sites(size),
+        displacement_interval=_over_sites(displacement),
     )
+
+
+def _over_sites(values: Array) -> Interval | None:
+    """Student t over the sites that have a value; None for fewer than two."""
+    seen = values[np.isfinite(values)]
+    if seen.size < 2:
+        return None
+    interval = estimate({"this": dict(enumerate(seen.tolist()))}).interval()
+    if interval is None:
+        return None
+    over = f"{seen.size} sites of this acquisition"
+    return Interval(interval.low, interval.high, interval.level, "Student t", over)
 
 
 def _sizes(

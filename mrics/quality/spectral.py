@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from mrics.numerics import centred_fft
+from mrics.numerics import centred_fft, map_blocks
 from mrics.quality._inputs import as_stack
 
 Array = NDArray[Any]
@@ -26,11 +26,15 @@ class SpectralError:
         Norm of the error over the norm of the reference in the ring; NaN where that is 0.
     share : ndarray of shape (ring,)
         Share of the whole squared error; the rings cover all of k-space, corners in the last.
+    fine : ndarray of shape (plane,)
+        Norm of the error over the norm of the reference in the outer half of k-space (beyond half
+        of the way to the edge), plane by plane; NaN where that is 0.
     """
 
     frequency: Array
     relative: Array
     share: Array
+    fine: Array
 
 
 def spectral_error(
@@ -62,12 +66,23 @@ def spectral_error(
     radius = np.hypot(axes[0][:, None], axes[1][None, :])
     nyquist = 0.5 / min(voxel_mm)
     ring = np.minimum((radius / nyquist * rings).astype(np.intp), rings - 1).ravel()
-    wrong, known = np.zeros(rings), np.zeros(rings)
-    for x, y in zip(stack, ref, strict=True):
-        error = centred_fft(x.astype(np.complex128) - y)
-        own = centred_fft(y.astype(np.complex128))
-        wrong += np.bincount(ring, weights=(np.abs(error) ** 2).ravel(), minlength=rings)
-        known += np.bincount(ring, weights=(np.abs(own) ** 2).ravel(), minlength=rings)
+    edge = [(np.arange(n) - n // 2) / (n / 2) for n in grid]
+    outer = (np.hypot(edge[0][:, None], edge[1][None, :]) > 0.5).ravel()
+
+    def one(index: int) -> list[Array]:
+        y = ref[index]
+        parts = []
+        for image in (stack[index] - y, y):
+            kspace = centred_fft(image).ravel()
+            energy = (kspace.real**2 + kspace.imag**2).astype(np.float64)
+            sums = np.bincount(ring, weights=energy, minlength=rings)
+            parts.append(np.append(sums, energy[outer].sum()))
+        return parts
+
+    sums = np.array(map_blocks(one, range(len(stack)))).reshape(len(stack), 2, rings + 1)
+    wrong, known = sums[:, 0, :-1].sum(axis=0), sums[:, 1, :-1].sum(axis=0)
+    fine = np.full(len(stack), np.nan)
+    np.divide(sums[:, 0, -1], sums[:, 1, -1], out=fine, where=sums[:, 1, -1] > 0.0)
     relative = np.full(rings, np.nan)
     np.divide(wrong, known, out=relative, where=known > 0.0)
     total = float(wrong.sum())
@@ -75,4 +90,5 @@ def spectral_error(
         frequency=(np.arange(rings) + 0.5) * nyquist / rings,
         relative=np.sqrt(relative),
         share=wrong / total if total > 0.0 else wrong,
+        fine=np.sqrt(fine),
     )

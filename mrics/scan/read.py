@@ -12,7 +12,7 @@ from mrics.errors import ScanError
 from mrics.scan.header import Header, read_header
 from mrics.scan.phase import phase_scale
 from mrics.scan.values import file_hash, read_values
-from mrics.scan.volume import Scan
+from mrics.scan.volume import Scan, apart_mm
 
 PathLike = str | Path
 
@@ -151,11 +151,7 @@ def _check_pair(header: Header, other: Header, kind: str) -> None:
             f"{other.path}, {header.path}",
             f"Give the {kind} file of the same series.",
         )
-    corners = np.array(
-        [[i, j, k, 1] for i in (0, 1) for j in (0, 1) for k in (0, 1)], dtype=np.float64
-    )
-    corners[:, :3] *= np.array(header.shape[:3]) - 1
-    apart = np.abs((corners @ (header.affine - other.affine).T)[:, :3]).max()
+    apart = apart_mm(header.shape, header.affine, other.affine)
     if apart > 0.01 * min(header.voxel_mm):
         raise ScanError(
             f"The {kind} file lies elsewhere: its affine puts voxels up to {apart:.3g} mm away.",

@@ -141,3 +141,14 @@ class Scan:
     def magnitude_only(self) -> bool:
         """True where the file says nothing of phase: its k-space is Hermitian."""
         return self.complex_source == "magnitude"
+
+
+def apart_mm(
+    shape: tuple[int, ...], affine: NDArray[np.float64], other: NDArray[np.float64]
+) -> float:
+    """Largest distance along one axis that two affines put between the same corner voxel."""
+    corners = np.array(
+        [[i, j, k, 1] for i in (0, 1) for j in (0, 1) for k in (0, 1)], dtype=np.float64
+    )
+    corners[:, :3] *= np.array(shape[:3]) - 1
+    return float(np.abs((corners @ (affine - other).T)[:, :3]).max())

@@ -100,6 +100,9 @@ def optimism(
         write_nifti(path, after.data, after)
         entries.append(ScanEntry.model_validate({"path": str(path.resolve())}))
     study = protocol.study.model_copy(update={"scans": tuple(entries)})
+    # Scores alone are compared; label maps and edges would not fit a cropped matrix.
+    limits = tuple(limit for limit in protocol.acceptance if limit.metric in _METRICS)
+    protocol = replace(protocol, quality=None, acceptance=limits)
     other = replace(protocol, study=study, grid=_free(protocol))
     settings: dict[str, Any] = {"quick": quick, "workers": workers, "progress": progress}
     before = run_study(protocol, folder / "as-is", **settings)

@@ -24,6 +24,7 @@ from mrics.sampling import Pattern
 from mrics.sampling.ordered import Ordered
 from mrics.scan import Axes, read_header
 from mrics.scan.remedies import INVENTED
+from mrics.scan.values import file_hash
 from mrics.study.code_version import code_version
 from mrics.study.prepare import PlaneChoice, Prepared, prepare
 from mrics.study.units import LEAST_LINES, Noise, Unit, content_key, draw_of, pattern_grid
@@ -191,6 +192,7 @@ class StudyPlan:
                         coils=self.protocol.values()["coils"],
                         virtual_channels=study.virtual_channels,
                         quality=self.protocol.values()["quality"],
+                        labels=None if scan.labels is None else file_hash(scan.labels),
                         code=code_version(),
                     )
                     units.append(
@@ -239,6 +241,12 @@ class StudyPlan:
                 + ", ".join(f"{r['id']} {len(r['planes'])}" for r in few)
                 + "."
             )
+        elif few:
+            skipped = [
+                f"{r['id']} {r['shape']['ijk'.index(r['plane_axis'])] - len(r['planes'])}"
+                for r in few
+            ]
+            notes.append(f"Slices without body were skipped: {', '.join(skipped)}.")
         notes.append(self._channel_note(records))
         return notes
 
@@ -339,6 +347,7 @@ def plan_study(protocol: Protocol, *, quick: bool = False) -> StudyPlan:
     shapes = [read_header(scan.path).shape for scan in scans]
     for scan, scan_id, shape in zip(scans, scan_ids, shapes, strict=True):
         grids.setdefault(pattern_grid(axes, shape), (scan.path.name, scan_id))
+    _check_edges(protocol, scan_ids, shapes)
     slices = None if axes.partition else shapes[0][axes.order[0]]
     noise = Noise(study.sigma_added, study.snr, study.noise_percent)
     rows: list[PlanRow] = []
@@ -395,6 +404,30 @@ def _check_channels(protocol: Protocol) -> None:
             if coils is not None
             else "Name the scans' channel_axis, add [coils], or remove virtual_channels.",
         )
+
+
+def _check_edges(
+    protocol: Protocol, scan_ids: Sequence[str], shapes: Sequence[tuple[int, ...]]
+) -> None:
+    """Whether every edge of ``[quality]`` lies in a scan of the study."""
+    measures = protocol.measures()
+    if measures is None or isinstance(measures.edges, bool):
+        return
+    for number, edge in enumerate(measures.edges):
+        where = f"{protocol.path}: quality.edges[{number}]"
+        if edge.scan and edge.scan not in scan_ids:
+            raise StudyError(
+                f"There is no scan {edge.scan!r}.", where, f"Scans: {', '.join(scan_ids)}."
+            )
+        for scan_id, shape in zip(scan_ids, shapes, strict=True):
+            at = (edge.i, edge.j, edge.k)
+            inside = all(0 <= x <= n - 1 for x, n in zip(at, shape[:3], strict=True))
+            if edge.scan in ("", scan_id) and not inside:
+                raise StudyError(
+                    f"The edge at voxel {at} lies outside scan {scan_id} of shape {shape[:3]}.",
+                    where,
+                    "Give voxels of the file counted from 0, or name the scan it lies in.",
+                )
 
 
 def _calibrated(pattern: Pattern) -> int:

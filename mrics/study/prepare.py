@@ -13,7 +13,16 @@ from mrics.encoding import root_sum_of_squares
 from mrics.errors import StudyError
 from mrics.protocol import ScanFiles
 from mrics.protocol.sections import Coils as CoilSection
-from mrics.scan import Axes, Finding, Scan, body_mask, inspect_scan, read_scan, scan_sigma
+from mrics.scan import (
+    Axes,
+    Finding,
+    Scan,
+    body_mask,
+    inspect_scan,
+    read_labels,
+    read_scan,
+    scan_sigma,
+)
 from mrics.scan.remedies import add_phase
 from mrics.study.channels import Receive, loud_channels, with_own_channels, with_simulated_channels
 
@@ -86,6 +95,8 @@ class Prepared:
         Virtual channels from the full scan, for arms without calibration lines of their own.
     receive : Receive or None
         What is known of the channels, for the report; None for one channel.
+    labels : ndarray of int, shape of ``stack``, or None
+        Label map of the scan.
     """
 
     scan: Scan
@@ -103,6 +114,7 @@ class Prepared:
     channel_data: NDArray[Any] | None = None
     compression: NDArray[Any] | None = None
     receive: Receive | None = None
+    labels: NDArray[np.int32] | None = None
 
     @property
     def frame_planes(self) -> int:
@@ -159,7 +171,7 @@ def prepare(
 def _signature(files: ScanFiles) -> tuple[object, ...]:
     """Size and time of change of the files; a missing one is told apart when it is read."""
     found: list[object] = []
-    for path in (files.path, files.phase, files.imaginary):
+    for path in (files.path, files.phase, files.imaginary, files.labels):
         if path is not None and path.exists():
             state = path.stat()
             found += [state.st_size, state.st_mtime_ns]
@@ -196,10 +208,23 @@ def _prepare(
         combined = combined[..., 0]
     volume = body_mask(combined)
     body_planes = axes.to_planes(volume)
-    planes = choice.indices(body_planes)
+    labels = None if files.labels is None else axes.to_planes(read_labels(files.labels, scan))
+    eligible = body_planes
+    if labels is not None and isinstance(choice.spec, int):
+        # Few planes: those that the regions lie in.
+        eligible = body_planes & np.asarray(labels.any(axis=(1, 2)))[:, None, None]
+    planes = choice.indices(eligible)
     if not planes:
         raise StudyError(
-            "No plane of the scan holds body.", files.path.name, "Check the scan and its axes."
+            f"No plane of the scan holds body{'' if labels is None else ' and a label'}.",
+            files.path.name,
+            "Check the scan and its axes.",
+        )
+    if labels is not None and not labels[list(planes)].any():
+        raise StudyError(
+            f"The label map holds no region in the studied slices {list(planes)}.",
+            f"{files.labels}, study.slices",
+            "Study slices that hold regions.",
         )
     per_frame = body_planes[list(planes)]
     whole = axes.to_planes(combined)
@@ -217,6 +242,9 @@ def _prepare(
         snr=light.total / voxels / sigma if sigma > 0 else float("inf"),
         nrmse_floor=sigma * (voxels / light.energy) ** 0.5 if light.energy > 0 else 0.0,
         findings=findings,
+        labels=None
+        if labels is None
+        else np.ascontiguousarray(np.tile(labels[list(planes)], (scan.frames, 1, 1))),
     )
     if scan.channels > 1:
         return with_own_channels(prepared, virtual_channels)

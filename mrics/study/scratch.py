@@ -17,7 +17,7 @@ from mrics.study.files import read_json, write_json
 from mrics.study.prepare import Prepared
 
 SCRATCH = "scratch"
-_ARRAYS = ("stack", "body", "sensitivities", "channel_data")
+_ARRAYS = ("stack", "body", "sensitivities", "channel_data", "labels")
 
 
 class ScratchError(Exception):
@@ -40,6 +40,7 @@ def write_scratch(prepared: Prepared, folder: Path) -> Path:
         body=np.empty(0, dtype=bool),
         sensitivities=None,
         channel_data=None,
+        labels=None,
         scan=replace(prepared.scan, data=np.empty(0)),
     )
     packed = pickle.dumps((rest, prepared.scan.shape, prepared.scan.data.dtype.str))

@@ -17,6 +17,7 @@ from mrics.encoding.sensitivities import KERNEL
 from mrics.errors import StudyError
 from mrics.protocol import Arm, Protocol, ScanFiles, play_pattern
 from mrics.quality import score_planes
+from mrics.quality.measures import Measures
 from mrics.quality.measuring import Measured, measure
 from mrics.recovery import recover
 from mrics.sampling import Pattern, draw_entry
@@ -262,8 +263,28 @@ def _measure(unit: Unit, scan: Prepared, acquisition: Acquisition, image: Any) -
         measures=wanted,
         mask=scan.body,
         data_range=scan.data_range,
+        labels=scan.labels,
+        edges=_given_edges(unit, scan, wanted),
         seed=unit.protocol.study.seed,
     )
+
+
+def _given_edges(unit: Unit, scan: Prepared, wanted: Measures) -> Any:
+    """Edges that the protocol names in this scan, as (plane of the stack, u, v, angle)."""
+    if isinstance(wanted.edges, bool):
+        return None
+    rows = []
+    for edge in wanted.edges:
+        at = [(edge.i, edge.j, edge.k)[axis] for axis in unit.axes.order]
+        plane = round(at[0])
+        if edge.scan in ("", unit.scan_id) and plane in scan.planes:
+            first = scan.planes.index(plane)
+            count = len(scan.planes)
+            rows += [
+                (frame * count + first, at[1], at[2], edge.angle_deg)
+                for frame in range(scan.scan.frames)
+            ]
+    return np.array(rows, dtype=np.float64).reshape(-1, 4)
 
 
 def pattern_grid(axes: Axes, shape: tuple[int, ...]) -> tuple[int, ...]:

@@ -14,6 +14,9 @@ from mrics.recovery import recover
 
 MM = (3.0, 1.0, 1.0)
 SHAPE = (4, 128, 120)
+LABELS = np.zeros(SHAPE, int)
+LABELS[:, 30:60, 35:85] = 1
+LABELS[:, 65:95, 35:85] = 2
 EVERYTHING = {
     "edges": True,
     "noise_replicas": 4,
@@ -22,6 +25,8 @@ EVERYTHING = {
     "feature_sites": 4,
     "observer_images": 80,
     "observer_contrast": 8.0,
+    "labels": "regions.nii.gz",
+    "background_label": 2,
 }
 
 
@@ -38,6 +43,7 @@ def measured():
         method="zero-filled",
         measures=measures_from(EVERYTHING),
         mask=body(SHAPE),
+        labels=LABELS,
         progress=lambda *step: seen.append(step),
     )
     return result, seen
@@ -68,7 +74,7 @@ def test_values_are_those_of_the_single_measures(measured):
 def test_tables_are_plain_json(measured):
     result, _ = measured
     text = json.dumps(result.tables, allow_nan=False)
-    assert {"noise", "resolution", "features", "smallest_kept_mm", "observer", "spectral"} <= set(
+    assert {"noise", "resolution", "features", "regions", "observer", "spectral"} <= set(
         json.loads(text)
     )
     rows = result.tables["features"]
@@ -138,6 +144,58 @@ def test_labels_give_regions():
     assert result.tables["regions"][0]["label"] == 3
 
 
+def test_region_lines_are_the_worst_region_of_each_plane(measured):
+    result, _ = measured
+    image = phantom(SHAPE, dtype=np.complex64)
+    found = recover(acquire(image, sigma=0.05), "zero-filled").image
+    a, b = np.abs(found[1]).astype(float), np.abs(image[1]).astype(float)
+    one, two = LABELS[1] == 1, LABELS[1] == 2
+    biases = [abs(a[x].mean() / b[x].mean() - 1.0) for x in (one, two)]
+    assert result.by_plane[1]["region_bias"] == pytest.approx(max(biases))
+    cnr = [
+        abs(x[one].mean() - x[two].mean()) / np.sqrt(0.5 * (x[one].var() + x[two].var()))
+        for x in (a, b)
+    ]
+    assert result.by_plane[1]["region_cnr"] == pytest.approx(cnr[0] / cnr[1])
+    first = result.tables["regions"][0]
+    assert first["cnr"] > 0.0
+    assert first["agreement"]["planes"] == SHAPE[0]
+
+
+def test_features_lie_in_their_regions(measured):
+    result, _ = measured
+    rows = result.tables["features"]
+    assert [row["nominal_mm"] for row in rows] == [2.0, 4.0]
+    for place in rows[1]["placed"]:
+        reach = range(-8, 9)
+        box = {LABELS[place["plane"], place["u"] + a, place["v"] + b] for a in reach for b in reach}
+        assert len(box - {0}) == 1
+    assert rows[0]["size_interval"]["over"] == "4 sites of this acquisition"
+
+
+def test_given_edges_are_measured_where_they_lie():
+    image = phantom((3, 64, 48))
+    held = acquire(image)
+    edges = np.array([[1, 6.0, 24.0, 0.0], [1, 32.0, 5.0, 90.0]])
+    result = measure(
+        held,
+        recover(held, "zero-filled").image,
+        image,
+        MM,
+        method="zero-filled",
+        measures=Measures(edges=True, more_scores=False, error_split=False),
+        edges=edges,
+    )
+    assert result.by_plane[0]["edge_blur"] is None
+    assert [row["plane"] for row in result.tables["edges"]] == [1, 1]
+    assert [row["angle_deg"] for row in result.tables["edges"]] == [0.0, 90.0]
+    # Undersampled along u, fully sampled along v: the edge across v stays as it is.
+    across_u, across_v = (row["width_mm"] / row["reference_mm"] for row in result.tables["edges"])
+    assert across_u > 1.2
+    assert across_v == pytest.approx(1.0, abs=0.05)
+    assert result.by_plane[1]["edge_blur"] == pytest.approx(np.median([across_u, across_v]))
+
+
 def test_planes_are_spread_over_the_body():
     mask = np.zeros((20, 8, 8), bool)
     mask[5:15] = True
@@ -168,6 +226,13 @@ def test_combinations_of_features():
         ({"noise_replicas": 1}, "noise_replicas = 1 is not allowed"),
         ({"planes": 0}, "planes = 0 is not allowed"),
         ({"edges": 1}, "edges = 1 is not allowed"),
+        ({"edges": [3]}, "a table with i, j, k and angle_deg"),
+        ({"edges": [{"i": 1, "j": 2, "k": 0}]}, r"edges\.angle_deg = None"),
+        ({"edges": [{"i": 1, "angle": 0}]}, r"'angle'(.|\n)*'angle_deg'"),
+        ({"labels": []}, "one path in quotes"),
+        ({"labels": 3}, "one path in quotes"),
+        ({"background_label": 1}, "given together with labels"),
+        ({"labels": "a.nii", "background_label": 0}, "background_label = 0"),
         ({"perturbation_sigma": -1}, "perturbation_sigma = -1 is not allowed"),
         ({"features": [{"diameter": 3}]}, r"'diameter'(.|\n)*features\.diameter"),
         ({"features": [3]}, "features = 3 is not allowed"),

@@ -6,6 +6,7 @@ from scipy.ndimage import gaussian_filter
 from skimage.metrics import structural_similarity
 
 from mrics.errors import QualityError
+from mrics.numerics import centred_fft, centred_ifft
 from mrics.quality.edges import edge_blur, zero_fill
 from mrics.quality.gradients import gradient_deviation, gradient_similarity
 from mrics.quality.more_scores import MORE, more_scores_planes
@@ -118,6 +119,21 @@ def test_spectral_error_finds_the_ring_that_is_wrong():
     ring = np.sum(found.share > 1e-12)
     assert ring == 1
     np.testing.assert_allclose(spectral_error(1.1 * reference, reference, (1, 1)).relative, 0.1)
+
+
+def test_error_in_fine_detail_is_that_of_the_outer_half():
+    rng = np.random.default_rng(4)
+    shape = (2, 32, 24)
+    truth = centred_ifft(rng.standard_normal(shape) + 1j * rng.standard_normal(shape))
+    kspace = centred_fft(truth)
+    u, v = np.meshgrid((np.arange(32) - 16) / 16, (np.arange(24) - 12) / 12, indexing="ij")
+    outer = np.hypot(u, v) > 0.5
+    wrong = centred_ifft(np.where(outer, 0.75 * kspace, kspace))
+    wrong[1] = truth[1]
+    found = spectral_error(wrong, truth, (1.0, 1.3))
+    np.testing.assert_allclose(found.fine, [0.25, 0.0], atol=1e-7)
+    inner = spectral_error(centred_ifft(np.where(outer, kspace, 0.0)), truth, (1.0, 1.3))
+    np.testing.assert_allclose(inner.fine, 0.0, atol=1e-7)
 
 
 def test_spectral_error_of_magnitudes():

@@ -60,9 +60,13 @@ def test_a_low_pass_pattern_widens_one_axis():
     assert result.median_mm[0] == pytest.approx(1.2067 * 64 / 21, rel=0.03)
     assert result.median_mm[1] == pytest.approx(1.2067, rel=0.01)
     assert result.height.mean() == pytest.approx(21 / 64, rel=0.05)
-    shown = result.as_map(chain.base.shape, 0)
-    assert shown.shape == chain.base.shape
-    assert np.median(shown) == pytest.approx(result.median_mm[0], rel=0.05)
+    shown = result.as_maps(chain.base.shape)
+    assert shown.shape == (2, *chain.base.shape)
+    assert np.median(shown[0]) == pytest.approx(result.median_mm[0], rel=0.05)
+    # A site shows its own width, a voxel beside it the same.
+    plane, u, v = result.sites[5]
+    np.testing.assert_allclose(shown[:, plane, u, v], result.width_mm[5], rtol=1e-6)
+    np.testing.assert_allclose(shown[:, plane, u, v + 1], result.width_mm[5], rtol=1e-6)
 
 
 def test_channels_resolve_what_one_channel_aliases():

@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from mrics.errors import QualityError
-from mrics.numerics import centred_fft, centred_ifft
+from mrics.numerics import centred_fft
 
 Array = NDArray[Any]
 _TILES = (64, 48, 32, 24)
@@ -45,14 +45,6 @@ class Spectrum:
     def on_grid(self, shape: tuple[int, int], voxel_mm: tuple[float, float]) -> Array:
         """Power on the centred k-space grid of a plane, shape (u, v)."""
         return self.at(radial_frequency(shape, voxel_mm))
-
-    def draw(
-        self, generator: np.random.Generator, shape: tuple[int, ...], voxel_mm: tuple[float, float]
-    ) -> Array:
-        """Backgrounds of shape (..., u, v), complex128, circular."""
-        parts = generator.standard_normal((*shape, 2)).view(np.complex128)[..., 0]
-        root = np.sqrt(self.on_grid((shape[-2], shape[-1]), voxel_mm))
-        return centred_ifft(parts * root)
 
 
 def radial_frequency(shape: tuple[int, int], voxel_mm: tuple[float, float]) -> Array:

@@ -150,14 +150,19 @@ def hotelling_observer(
         raise QualityError(
             f"The site {site} lies outside planes of shape {(u, v)}.", "observers, site", "Move it."
         )
-    signal = centred_ifft(task.kspace((u, v), voxel_mm, site))
+    signal = task.kspace((u, v), voxel_mm, site)
     where = np.array([(plane, *site) for plane in range(planes)], dtype=np.intp)
     phase = local_phase(chain.base, where)[:, None, None]
     runs = -(-images // (2 * planes))
     data = _ensemble(chain, spectrum, voxel_mm, signal[None] * phase, runs, seed)
     box, templates = channel_templates((u, v), voxel_mm, site)
     outputs = [
-        np.einsum("puv,cuv->pc", ((image - chain.base) * np.conj(phase))[box].real, templates)
+        np.einsum(
+            "puv,cuv->pc",
+            ((image[box] - chain.base[box]) * np.conj(phase)).real,
+            templates,
+            optimize=True,
+        )
         for image in chain.images(data, total=2 * runs, progress=progress)
     ]
     absent, present = np.concatenate(outputs[::2]), np.concatenate(outputs[1::2])
@@ -264,12 +269,10 @@ def _ensemble(
     seed: int,
 ) -> Iterator[Array]:
     """Data changes of runs without and with the signal, in turn, all independent."""
+    power = spectrum.on_grid(chain.base.shape[1:], voxel_mm)
     for number in range(2 * runs):
         generator = stream(seed, "observer", number)
-        change = spectrum.draw(generator, chain.base.shape, voxel_mm)
-        if number % 2:
-            change = change + signal
-        yield chain.encode(change.astype(chain.base.dtype)) + chain.noise(generator)
+        yield chain.random(generator, power, signal if number % 2 else 0.0)
 
 
 def _ideal(
