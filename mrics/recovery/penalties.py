@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import Any
 
 import numpy as np
@@ -40,30 +41,54 @@ def bands_of(shape: tuple[int, int], levels: int) -> NDArray[np.int64]:
 
 
 class OrthonormalWavelet:
-    """L1 of periodized orthonormal wavelet coefficients, the coarsest approximation free."""
+    """L1 of periodized orthonormal wavelet coefficients, the coarsest approximation free.
 
-    def __init__(self, shape: tuple[int, int], real: Any, wavelet: str, levels: int) -> None:
+    ``scales``: factors of the weight, finest level first; ones if left out.
+    """
+
+    def __init__(
+        self,
+        shape: tuple[int, int],
+        real: Any,
+        wavelet: str,
+        levels: int,
+        scales: Sequence[float] | None = None,
+    ) -> None:
         self.real = np.dtype(real)
         self.padded = padded_shape(shape, levels)
         self.levels = levels
+        self.factors = np.repeat(np.ones(levels) if scales is None else np.array(scales), 3)
         dtype = np.complex64 if self.real == np.float32 else np.complex128
         self.transform = PlaneWavelet(self.padded, wavelet, levels, dtype)
         self.bands = bands_of(self.padded, levels)
-        size = (self.padded[0], 2 * self.padded[1])
-        self.state, self.coefficients = np.empty(size, self.real), np.empty(size, self.real)
+        self.size = (self.padded[0], 2 * self.padded[1])
+        self.state, self.coefficients = (np.empty(self.size, self.real) for _ in range(2))
         self.weights = np.zeros(len(self.bands), self.real)
         self.symbol = np.zeros((1, 1), self.real)
         self.sums = np.zeros(6)
 
-    def set_weight(self, weight: float, image: Array) -> None:
-        """See :class:`splitting.Penalty`."""
-        self.weights[:-1] = weight
-        self.transform.analyse(image, self.state)
-        coarse = self.state[: self.bands[-1, 1], : 2 * self.bands[-1, 3]]
-        energy = float(np.vdot(self.state, self.state)) - float(np.sum(coarse**2))
-        count = self.state.size // 2 - coarse.size // 2
+    def analyse(self, image: Array, coefficients: Array) -> None:
+        """Coefficients (rows, 2 columns) of a plane."""
+        self.transform.analyse(image, coefficients)
+
+    def synthesise(self, coefficients: Array, image: Array) -> None:
+        """Adjoint of :meth:`analyse`."""
+        self.transform.synthesise(coefficients, image)
+
+    def balance(self, weight: float, coefficients: Array) -> Array:
+        """Set the bands' weights and, by the size of ``coefficients``, rho; rho of every band."""
+        self.weights[:-1] = weight * self.factors
+        coarse = coefficients[..., : self.bands[-1, 1], : 2 * self.bands[-1, 3]]
+        energy = float(np.vdot(coefficients, coefficients)) - float(np.sum(coarse**2))
+        count = self.state.size // 2 - int(np.prod(coarse.shape[-2:])) // 2
         self.rho = self.real.type(weight / (_THRESHOLD * np.sqrt(max(energy, 0) / count)))
         self.symbol[...] = self.rho
+        return np.full(len(self.bands), self.rho, self.real)
+
+    def set_weight(self, weight: float, image: Array) -> None:
+        """See :class:`splitting.Penalty`."""
+        self.analyse(image, self.state)
+        self.balance(weight, self.state)
         self.coefficients[...] = self.state
         penalty_kernels.split_bands(
             self.state, self.coefficients, self.bands, self.weights, self.rho,

@@ -21,6 +21,7 @@ from mrics.recovery import kernels
 Array = NDArray[Any]
 #: penalty of the splitting u = F S x with several channels, relative to the largest sum |S|^2
 _CHANNEL_PENALTY = 0.1
+_BLOCK_BYTES = 64 * 2**20
 
 
 class PlaneModel:
@@ -223,17 +224,22 @@ def each_plane(
     acquisition: Acquisition,
     make: Callable[[], Any],
     solve: Callable[[Any, Encoding, Array, int, int], Any],
+    together: int = 1,
 ) -> list[Any]:
     """Call ``solve(worker, encoding, data, i, plane)`` for every plane, over the threads.
 
     ``i`` is the plane's place in the block ``data``, ``plane`` in the stack; ``make`` builds one
-    worker (its memory) per thread. Results come in plane order.
+    worker (its memory) per thread. With ``together`` above 1 that many planes go in one call, of
+    which the first is named. Results come in plane order.
     """
     pool: SimpleQueue[Any] = SimpleQueue()
-    for _ in range(min(threads(), acquisition.shape[0])):
+    for _ in range(min(threads(), acquisition.shape[0] // together)):
         pool.put(make())
     results: list[Any] = []
-    for planes, encoding, data in blocks(acquisition):
+    kspace = acquisition.kspace
+    one_call = together * int(np.prod(kspace.shape[1:])) * kspace.dtype.itemsize
+    size = max(1, _BLOCK_BYTES // one_call) * one_call
+    for planes, encoding, data in blocks(acquisition, size):
 
         def one(
             i: int, encoding: Encoding = encoding, data: Array = data, first: int = planes.start
@@ -244,5 +250,5 @@ def each_plane(
             finally:
                 pool.put(worker)
 
-        results += map_blocks(one, range(data.shape[0]))
+        results += map_blocks(one, range(0, data.shape[0], together))
     return results

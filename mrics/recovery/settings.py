@@ -100,6 +100,10 @@ class Wavelet(Settings):
         Orthogonal wavelet.
     levels : int or None
         Levels; None for as many as leave at least 5 samples, at most 4.
+    scales : sequence of float or None
+        Factors of the weight for every level, finest first; None for ones.
+    joint : bool
+        Shrink the coefficients of all frames at a place together.
     shift : str
         "none": one fixed transform, certified. "full": the mean over all shifts,
         translation-invariant, certified. "random": a random shift in every iteration, nearly
@@ -115,10 +119,28 @@ class Wavelet(Settings):
     weight: float | str = _number("auto", 0.0, above=True, words=("auto",))
     wavelet: str = _choice("sym4", WAVELETS)
     levels: int | None = _number(None, 1, 12, whole=True, optional=True)
+    scales: tuple[float, ...] | None = field(
+        default=None, metadata={"kind": "numbers", "optional": True}
+    )
+    joint: bool = field(default=False, metadata={"kind": "flag"})
     shift: str = _choice("random", ("none", "random", "full"))
     iterations: int | None = _number(None, 1, 100_000, whole=True, optional=True)
     tolerance: float = _number(1e-3, 0.0, 1.0, above=True)
     seed: int = _number(0, 0, whole=True)
+
+    def __post_init__(self) -> None:
+        super().__post_init__()
+        if self.scales is None:
+            return
+        object.__setattr__(self, "scales", tuple(float(factor) for factor in self.scales))
+        if self.levels is None:
+            object.__setattr__(self, "levels", len(self.scales))
+        if self.levels != len(self.scales):
+            raise RecoveryError(
+                f"{len(self.scales)} factors were given for {self.levels} levels.",
+                "scales, levels",
+                "Give one factor for each level, finest first, or leave levels out.",
+            )
 
 
 @dataclass(frozen=True)
@@ -312,6 +334,10 @@ def _check_value(name: str, value: Any, rule: Mapping[str, Any]) -> None:
     if rule["kind"] == "flag":
         good = isinstance(value, bool)
         wanted = "true or false"
+    elif rule["kind"] == "numbers":
+        good = isinstance(value, list | tuple) and 0 < len(value) <= 12
+        good = good and all(_is_number(one) and one > 0 for one in value)
+        wanted = "a list of 1 to 12 numbers above 0"
     elif rule["kind"] == "text":
         good = isinstance(value, str)
         wanted = "a text"
@@ -322,9 +348,8 @@ def _check_value(name: str, value: Any, rule: Mapping[str, Any]) -> None:
         low, high = rule["low"], rule["high"]
         whole = rule["kind"] == "whole number"
         good = (
-            isinstance(value, int if whole else int | float)
-            and not isinstance(value, bool)
-            and math.isfinite(value)
+            _is_number(value)
+            and (isinstance(value, int) or not whole)
             and (value > low if rule["above"] else value >= low)
             and value <= high
         )
@@ -341,3 +366,7 @@ def _check_value(name: str, value: Any, rule: Mapping[str, Any]) -> None:
             name,
             "Change it or leave it out for the default.",
         )
+
+
+def _is_number(value: Any) -> bool:
+    return isinstance(value, int | float) and not isinstance(value, bool) and math.isfinite(value)

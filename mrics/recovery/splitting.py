@@ -64,6 +64,37 @@ class PlaneResult:
         return replace(self, objective=self.objective * unit**2, history=history)
 
 
+class Trace:
+    """Objective, duality gap and change of a running splitting, and their history."""
+
+    def __init__(self) -> None:
+        self.done = 0
+        self.objective = self.gap = self.change = np.inf
+        self.history: dict[str, list[float]] = {"objective": [], "optimality": [], "change": []}
+
+    def add(self, terms: Any, sums: Array, image: Array) -> None:
+        """One iteration: ``terms`` of :meth:`PlaneModel.solve`, ``sums`` of the penalty."""
+        self.done += 1
+        square, p_square, product, slack = (float(term) for term in terms)
+        norm = float(np.sqrt(np.vdot(image, image).real))
+        self.objective = 0.5 * square + float(sums[0])
+        s = 1 / max(1.0, float(sums[1]))
+        dual = -0.5 * s * s * p_square - s * product
+        dual -= 2 * s * (slack * norm + float(np.sqrt(sums[2] * sums[3])))
+        self.gap = (self.objective - dual) / max(self.objective, 1e-300)
+        self.change = float(np.sqrt(sums[4] / max(sums[5], 1e-300)))
+        for name, value in (
+            ("objective", self.objective),
+            ("optimality", self.gap),
+            ("change", self.change),
+        ):
+            self.history[name].append(value)
+
+    def result(self) -> PlaneResult:
+        """What is handed back."""
+        return PlaneResult(self.done, self.change, self.objective, self.gap, self.history)
+
+
 class Splitting:
     """Solver of one plane with its memory."""
 
@@ -77,23 +108,10 @@ class Splitting:
         model.start()
         self.best[...] = model.image
         penalty.set_weight(weight, model.flat)
-        history: dict[str, list[float]] = {"objective": [], "optimality": [], "change": []}
-        objective = gap = change = np.inf
-        done = 0
-        while done < iterations and gap > tolerance:
-            done += 1
+        trace = Trace()
+        while trace.done < iterations and trace.gap > tolerance:
             penalty.pull(model.flat)
-            square, p_square, product, slack = model.solve(penalty.symbol, RELAX)
+            terms = model.solve(penalty.symbol, RELAX)
             self.best[...] = model.image
-            sums = penalty.push(model.flat, RELAX)
-            image_norm = float(np.sqrt(np.vdot(self.best, self.best).real))
-            objective = 0.5 * square + float(sums[0])
-            s = 1 / max(1.0, float(sums[1]))
-            dual = -0.5 * s * s * p_square - s * product
-            dual -= 2 * s * (slack * image_norm + float(np.sqrt(sums[2] * sums[3])))
-            gap = (objective - dual) / max(objective, 1e-300)
-            change = float(np.sqrt(sums[4] / max(sums[5], 1e-300)))
-            history["objective"].append(objective)
-            history["optimality"].append(gap)
-            history["change"].append(change)
-        return PlaneResult(done, change, objective, gap, history)
+            trace.add(terms, penalty.push(model.flat, RELAX), self.best)
+        return trace.result()

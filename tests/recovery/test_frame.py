@@ -15,10 +15,10 @@ from mrics.sampling import draw_pattern
 
 
 def bands(frame, image):
-    """K x of every level, by one push from an empty state."""
-    frame.state[...] = 0
-    frame._pass(image.copy().view(float), 1.0, np.ones(frame.levels), huge=True)
-    return frame.state.view(complex)
+    """K x of every level."""
+    found = np.empty(frame.size)
+    frame.analyse(image.copy().view(float), found)
+    return found.reshape(frame.state.shape).view(complex)
 
 
 def mean_over_shifts(image, wavelet, levels):
