@@ -87,3 +87,17 @@ def test_importing_mrics_loads_nothing_heavy() -> None:
     )
     out = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
     assert json.loads(out.stdout) == []
+
+
+def test_a_plan_loads_no_package_it_does_not_need() -> None:
+    protocol = ROOT.parent / "protocols" / "knee_gre3d.toml"
+    code = (
+        "import sys, json; from mrics.protocol import load_protocol; "
+        "from mrics.study import plan_study; from mrics.cli.tables import plan_table; "
+        "plan_table(plan_study(load_protocol(sys.argv[1]))); "
+        "print(json.dumps([m for m in ('matplotlib', 'numba', 'rich', 'scipy.ndimage', 'scipy.fft',"
+        " 'scipy.sparse', 'scipy.stats') if m in sys.modules]))"
+    )
+    command = [sys.executable, "-c", code, str(protocol)]
+    done = subprocess.run(command, capture_output=True, text=True, check=True)
+    assert json.loads(done.stdout) == []
