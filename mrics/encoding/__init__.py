@@ -27,6 +27,8 @@ if TYPE_CHECKING:
     from mrics.encoding.sensitivities import with_sensitivities as with_sensitivities
     from mrics.encoding.simulate import undersample as undersample
     from mrics.encoding.stream import blocks as blocks
+    from mrics.encoding.subset import frames_of as frames_of
+    from mrics.encoding.subset import some_planes as some_planes
 
 _HOMES = {
     "Acquisition": "acquisition",
@@ -43,10 +45,12 @@ _HOMES = {
     "estimate_sensitivities": "sensitivities",
     "estimate_sigma": "noise",
     "find_lattice": "lattice",
+    "frames_of": "subset",
     "noise_covariance": "noise",
     "root_sum_of_squares": "channels",
     "simulate_coils": "coils",
     "singular_values": "channels",
+    "some_planes": "subset",
     "undersample": "simulate",
     "whitening": "noise",
     "with_sensitivities": "sensitivities",
@@ -67,10 +71,12 @@ __all__ = [
     "estimate_sensitivities",
     "estimate_sigma",
     "find_lattice",
+    "frames_of",
     "noise_covariance",
     "root_sum_of_squares",
     "simulate_coils",
     "singular_values",
+    "some_planes",
     "undersample",
     "whitening",
     "with_sensitivities",

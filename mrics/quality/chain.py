@@ -18,10 +18,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from mrics.encoding import Acquisition
-from mrics.errors import QualityError
 from mrics.numerics import centred_fft, centred_ifft, map_blocks
-from mrics.recovery import recover
-from mrics.recovery.settings import check_settings
+from mrics.recovery import check_settings, frozen, recover
 
 Array = NDArray[Any]
 Progress = Callable[[int, int], None]
@@ -37,7 +35,7 @@ class Chain:
     Parameters
     ----------
     acquisition : Acquisition
-        The data; choose few planes (:func:`planes_of`) where many runs are asked for.
+        The data; choose few planes (``some_planes``) where many runs are asked for.
     method : str
         Name of a recovery.
     settings : dict
@@ -61,13 +59,10 @@ class Chain:
         started = perf_counter()
         first = recover(acquisition, method, **settings)
         self.seconds = perf_counter() - started
-        chosen = first.certificate.weight
         checked = check_settings(method, settings)
         names = {entry.name for entry in fields(checked)}
         self.method = method
-        self.settings = dict(settings)
-        if "weight" in names and chosen is not None:
-            self.settings["weight"] = chosen
+        self.settings = frozen(method, settings, first.certificate)
         self.base = first.image
         self.sigma = float(first.certificate.sigma)
         self.acquisition = replace(acquisition, sigma_scan=self.sigma, sigma_added=0.0)
@@ -201,34 +196,6 @@ class Chain:
 
     def _recover(self, acquisition: Acquisition) -> Array:
         return recover(acquisition, self.method, **self.settings).image
-
-
-def planes_of(acquisition: Acquisition, planes: Iterable[int]) -> Acquisition:
-    """An acquisition of some planes of the stack.
-
-    Raises
-    ------
-    QualityError
-        For planes that are not in the stack.
-    """
-    chosen = [int(plane) for plane in planes]
-    count = acquisition.shape[0]
-    outside = [plane for plane in chosen if not 0 <= plane < count]
-    if outside or not chosen:
-        raise QualityError(
-            f"Planes {outside or chosen} are not in a stack of {count}.",
-            "planes",
-            f"Choose from 0 to {count - 1}.",
-        )
-    maps = acquisition.sensitivities
-    return replace(
-        acquisition,
-        kspace=np.ascontiguousarray(acquisition.kspace[chosen]),
-        pattern_index=acquisition.pattern_index[chosen],
-        sensitivities=maps if maps is None or maps.shape[0] == 1 else maps[chosen],
-        axes=None,
-        volume_shape=(len(chosen), *acquisition.shape[1:]),
-    )
 
 
 def _noise_root(acquisition: Acquisition) -> Array | None:

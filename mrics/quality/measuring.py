@@ -10,10 +10,10 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from mrics.encoding import Acquisition
+from mrics.encoding import Acquisition, some_planes
 from mrics.errors import QualityError
 from mrics.numerics import map_blocks
-from mrics.quality.chain import Chain, planes_of
+from mrics.quality.chain import Chain
 from mrics.quality.measures import Measures
 
 Array = NDArray[Any]
@@ -109,7 +109,7 @@ def measure(
     if wanted.recoveries:
         where = mask if labels is None else labels > 0
         planes = choose_planes(reference, where, wanted, voxel_mm)
-        chain = Chain(planes_of(acquisition, planes), method, **(settings or {}))
+        chain = Chain(some_planes(acquisition, planes), method, **(settings or {}))
         result.with_recoveries(chain, planes, wanted, labels, seed, progress)
         recovery_s = chain.seconds
     return Measured(

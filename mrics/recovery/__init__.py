@@ -16,12 +16,14 @@ if TYPE_CHECKING:
     from mrics.recovery.driver import reference_sigma as reference_sigma
     from mrics.recovery.registry import METHODS as METHODS
     from mrics.recovery.settings import check_settings as check_settings
+    from mrics.recovery.weights import frozen as frozen
 
 _HOMES = {
     "METHODS": "registry",
     "Certificate": "contract",
     "Recovered": "contract",
     "check_settings": "settings",
+    "frozen": "weights",
     "recover": "driver",
     "reference_sigma": "driver",
 }
@@ -31,6 +33,7 @@ __all__ = [
     "Certificate",
     "Recovered",
     "check_settings",
+    "frozen",
     "recover",
     "reference_sigma",
 ]

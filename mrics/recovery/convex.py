@@ -64,7 +64,6 @@ def certify(
     results: list[PlaneResult],
     tolerance: float,
     weight: float,
-    rule: str,
     note: str = "",
 ) -> Recovered:
     """The certificate of the worst plane, objectives summed."""
@@ -78,7 +77,7 @@ def certify(
         tolerance=tolerance,
         reached=optimality <= tolerance,
         weight=weight,
-        weight_rule=rule,
+        weight_rule="given",
         note=note,
     )
     worst = max(results, key=lambda r: r.optimality)

@@ -7,18 +7,27 @@ from dataclasses import replace
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from mrics.encoding.acquisition import Acquisition
 from mrics.errors import RecoveryError
 from mrics.recovery.contract import Recovered
 from mrics.recovery.registry import solver
 from mrics.recovery.settings import check_settings
+from mrics.recovery.weights import choose_weight
 
 #: noise level taken where the data's own is 0, relative to the RMS of the calibration samples
 SIGMA_FLOOR = 1e-4
 
 
-def recover(acquisition: Acquisition, method: str = "wavelet", **settings: Any) -> Recovered:
+def recover(
+    acquisition: Acquisition,
+    method: str = "wavelet",
+    *,
+    reference: NDArray[Any] | None = None,
+    mask: NDArray[np.bool_] | None = None,
+    **settings: Any,
+) -> Recovered:
     """Recover a stack of planes from undersampled k-space.
 
     Parameters
@@ -27,6 +36,10 @@ def recover(acquisition: Acquisition, method: str = "wavelet", **settings: Any) 
         Undersampled k-space with its pattern and noise level.
     method : str
         A name in ``METHODS``.
+    reference : ndarray of shape (plane, u, v), optional
+        Fully sampled image; read by ``weight = "best"`` alone.
+    mask : ndarray of bool, same shape, optional
+        Voxels that "best" counts.
     **settings
         Settings of the method (see ``mrics.recovery.settings``); without any it chooses its own
         weight.
@@ -39,7 +52,8 @@ def recover(acquisition: Acquisition, method: str = "wavelet", **settings: Any) 
     Raises
     ------
     RecoveryError
-        For unknown methods or settings, and for k-space with NaN or Inf.
+        For unknown methods or settings, k-space with NaN or Inf, and weights that cannot be
+        chosen (no centre of k-space, no reference for "best").
 
     Notes
     -----
@@ -52,11 +66,24 @@ def recover(acquisition: Acquisition, method: str = "wavelet", **settings: Any) 
     sigma, note = reference_sigma(acquisition)
     if empty:
         sigma, note = 0.0, "all acquired samples are zero; the image is zero"
-    result = solver(method)(acquisition, chosen, sigma)
+    solve = solver(method)
+    rule = ""
+    if isinstance(getattr(chosen, "weight", None), str):
+        weight, rule = 1.0, f"{getattr(chosen, 'weight')}: none, without signal"  # noqa: B009
+        if not empty:
+            choice = choose_weight(solve, acquisition, chosen, sigma, reference, mask)
+            weight, rule = choice.weight, choice.rule
+        number: Any = {"weight": weight}
+        chosen = replace(chosen, **number)
+    result = solve(acquisition, chosen, sigma)
     every = (*acquisition.notes, result.certificate.note, note)
     notes = "; ".join(text for text in every if text)
     certificate = replace(
-        result.certificate, note=notes, sigma=sigma, wall_s=time.perf_counter() - started
+        result.certificate,
+        weight_rule=rule or result.certificate.weight_rule,
+        note=notes,
+        sigma=sigma,
+        wall_s=time.perf_counter() - started,
     )
     return replace(result, certificate=certificate)
 

@@ -1,6 +1,9 @@
 """Settings of every recovery: frozen, checked when made, cheap to import.
 
-Weights are in units of the total noise sigma. ``check_settings`` is what a protocol uses to judge a
+Weights are in units of the total noise sigma, or a word that says how to choose them:
+"auto" (from the data, the rule that measured best), "best" (against the reference, with the answer
+in hand), "trained" (on a study's training scans), or a single rule: "held-out", "sure",
+"discrepancy". ``check_settings`` is what a protocol uses to judge a
 ``[[recovery]]`` entry before any data is read.
 """
 
@@ -19,6 +22,10 @@ WAVELETS = (
     *(f"db{n}" for n in range(2, 11)),
     *(f"sym{n}" for n in range(2, 11)),
 )
+
+
+#: ways of choosing a weight (see ``weights``) in place of a number
+WEIGHT_WORDS = ("auto", "best", "trained", "held-out", "sure", "discrepancy")
 
 
 def _number(
@@ -41,6 +48,11 @@ def _number(
         "optional": optional,
     }
     return field(default=default, metadata=rule)
+
+
+def _weight() -> Any:
+    """A weight in units of sigma, or how to choose it; the driver puts the number in its place."""
+    return _number("auto", 0.0, above=True, words=WEIGHT_WORDS)
 
 
 def _choice(default: str, choices: tuple[str, ...]) -> Any:
@@ -94,8 +106,8 @@ class Wavelet(Settings):
 
     Attributes
     ----------
-    weight : float or "auto"
-        Threshold in units of sigma.
+    weight : float or str
+        Threshold in units of sigma, or one of ``WEIGHT_WORDS``.
     wavelet : str
         Orthogonal wavelet.
     levels : int or None
@@ -116,7 +128,7 @@ class Wavelet(Settings):
         Seed of the random shifts.
     """
 
-    weight: float | str = _number("auto", 0.0, above=True, words=("auto",))
+    weight: float | str = _weight()
     wavelet: str = _choice("sym4", WAVELETS)
     levels: int | None = _number(None, 1, 12, whole=True, optional=True)
     scales: tuple[float, ...] | None = field(
@@ -149,8 +161,8 @@ class Variation(Settings):
 
     Attributes
     ----------
-    weight : float or "auto"
-        Weight in units of sigma.
+    weight : float or str
+        Weight in units of sigma, or one of ``WEIGHT_WORDS``.
     order : int
         1: total variation, which makes shading into steps. 2: second-order total generalised
         variation, which keeps slopes.
@@ -160,7 +172,7 @@ class Variation(Settings):
         Duality gap, relative to the objective, to stop at.
     """
 
-    weight: float | str = _number("auto", 0.0, above=True, words=("auto",))
+    weight: float | str = _weight()
     order: int = _number(1, 1, 2, whole=True)
     iterations: int | None = _number(None, 1, 100_000, whole=True, optional=True)
     tolerance: float = _number(1e-3, 0.0, 1.0, above=True)

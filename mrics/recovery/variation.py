@@ -26,9 +26,7 @@ from mrics.recovery.settings import Variation
 
 def solve(acquisition: Acquisition, settings: Variation, sigma: float) -> Recovered:
     """Recover every plane; see the module for the objectives."""
-    weight, rule = settings.weight, "given"
-    if isinstance(weight, str):
-        weight, rule = 0.5, "auto: 0.5 sigma"
+    weight = float(settings.weight)
     image, results = run_planes(
         acquisition,
         VariationPenalty if settings.order == 1 else SecondOrder,
@@ -37,4 +35,4 @@ def solve(acquisition: Acquisition, settings: Variation, sigma: float) -> Recove
         settings.tolerance,
     )
     note = "" if settings.order == 1 else "second order"
-    return certify("variation", image, results, settings.tolerance, weight, rule, note)
+    return certify("variation", image, results, settings.tolerance, weight, note)

@@ -53,12 +53,9 @@ _LAST = 8
 
 def solve(acquisition: Acquisition, settings: Wavelet, sigma: float) -> Recovered:
     """Recover every plane; see the module for the objectives."""
-    weight, rule = settings.weight, "given"
-    if isinstance(weight, str):
-        weight = 0.4 if settings.shift == "random" else 1.0
-        rule = f"auto: {weight:g} sigma"
+    weight = float(settings.weight)
     if settings.shift == "random":
-        return _shifting(acquisition, settings, weight, rule, weight * sigma)
+        return _shifting(acquisition, settings, weight, weight * sigma)
     levels = settings.levels or levels_for(acquisition.shape[1:])
     full = settings.shift == "full"
     kind = FrameWavelet if full else OrthonormalWavelet
@@ -75,11 +72,11 @@ def solve(acquisition: Acquisition, settings: Wavelet, sigma: float) -> Recovere
     else:
         image, results = run_planes(acquisition, make, *limits)
     note = "full cycle spinning" if full else ""
-    return certify("wavelet", image, results, settings.tolerance, weight, rule, note)
+    return certify("wavelet", image, results, settings.tolerance, weight, note)
 
 
 def _shifting(
-    acquisition: Acquisition, settings: Wavelet, weight: float, rule: str, threshold: float
+    acquisition: Acquisition, settings: Wavelet, weight: float, threshold: float
 ) -> Recovered:
     dtype = acquisition.kspace.dtype
     unit = scale_unit(acquisition)
@@ -111,7 +108,7 @@ def _shifting(
         final_change=max(r.change for r in results),
         certified=False,
         weight=weight,
-        weight_rule=rule,
+        weight_rule="given",
         note=f"not certified: shifting objective; change is the mean of the last {_LAST}",
     )
     return Recovered(by_frame(image, together), certificate, results[0].history)

@@ -19,7 +19,7 @@ from mrics.protocol import Arm, Protocol, ScanFiles, play_pattern
 from mrics.quality import score_planes
 from mrics.quality.measures import Measures
 from mrics.quality.measuring import Measured, measure
-from mrics.recovery import recover
+from mrics.recovery import Recovered, frozen, recover
 from mrics.sampling import Pattern, draw_entry
 from mrics.sampling.ordered import Ordered
 from mrics.scan import Axes
@@ -188,13 +188,14 @@ def _computed(unit: Unit, scan: Prepared) -> dict[str, Any]:
     fewer = scan.sigma * float(np.sqrt(max(0.0, unit.averages_ratio - 1.0)))
     added = float(np.hypot(unit.noise.added(scan), fewer))
     acquisition = _acquire(unit, scan, pattern, added)
-    recovered = recover(acquisition, method=unit.arm.recovery, **unit.arm.recovery_settings)
+    method, settings = unit.arm.recovery, unit.arm.recovery_settings
+    recovered = recover(acquisition, method, reference=scan.stack, mask=scan.body, **settings)
     image = recovered.image
     if scan.sensitivities is not None:
         # The phase of estimated sensitivities is free: magnitudes alone compare.
         image = np.abs(image)
     slices = score_planes(image, scan.stack, scan.body, scan.data_range)
-    measured = _measure(unit, scan, acquisition, recovered.image)
+    measured = _measure(unit, scan, acquisition, recovered)
     if measured is not None:
         slices = [{**one, **more} for one, more in zip(slices, measured.by_plane, strict=True)]
     certificate = recovered.certificate.as_dict()
@@ -239,8 +240,11 @@ def _computed(unit: Unit, scan: Prepared) -> dict[str, Any]:
     return rounded
 
 
-def _measure(unit: Unit, scan: Prepared, acquisition: Acquisition, image: Any) -> Measured | None:
+def _measure(
+    unit: Unit, scan: Prepared, acquisition: Acquisition, recovered: Recovered
+) -> Measured | None:
     """The further measures the protocol asks for; those that recover again on the first draw."""
+    image = recovered.image
     wanted = unit.protocol.measures()
     if wanted is None:
         return None
@@ -259,7 +263,7 @@ def _measure(unit: Unit, scan: Prepared, acquisition: Acquisition, image: Any) -
         scan.stack,
         (plane, u, v),
         method=unit.arm.recovery,
-        settings=unit.arm.recovery_settings,
+        settings=frozen(unit.arm.recovery, unit.arm.recovery_settings, recovered.certificate),
         measures=wanted,
         mask=scan.body,
         data_range=scan.data_range,

@@ -4,7 +4,8 @@ import numpy as np
 import pytest
 from chains import acquire, coils, phantom
 
-from mrics.quality.chain import Chain, planes_of
+from mrics.encoding import some_planes
+from mrics.quality.chain import Chain
 from mrics.recovery import recover
 
 
@@ -42,7 +43,7 @@ def test_noise_has_the_level_and_covariance_of_the_acquisition():
 
 def test_planes_keep_their_data():
     held = acquire(phantom((3, 32, 24)), sensitivities=np.repeat(coils(32, 24), 3, axis=0))
-    part = planes_of(held, [2, 0])
+    part = some_planes(held, [2, 0])
     np.testing.assert_array_equal(part.kspace[1], held.kspace[0])
     assert part.sensitivities.shape[0] == 2
     np.testing.assert_allclose(

@@ -4,9 +4,9 @@ import numpy as np
 import pytest
 from chains import acquire, body, coils, full, phantom
 
-from mrics.encoding import undersample
-from mrics.errors import QualityError
-from mrics.quality.chain import Chain, planes_of
+from mrics.encoding import some_planes, undersample
+from mrics.errors import AcquisitionError, QualityError
+from mrics.quality.chain import Chain
 from mrics.quality.noise_gain import full_sampling_sd, noise_gain
 from mrics.sampling import Pattern
 
@@ -94,5 +94,5 @@ def test_bad_input():
         noise_gain(chain, 1)
     with pytest.raises(QualityError, match=r"Mask of shape \(1, 4, 4\)"):
         noise_gain(chain, 2, mask=np.ones((1, 4, 4), bool))
-    with pytest.raises(QualityError, match=r"Planes \[3\] are not in a stack of 1"):
-        planes_of(chain.acquisition, [3])
+    with pytest.raises(AcquisitionError, match=r"Planes \[3\] are not in a stack of 1"):
+        some_planes(chain.acquisition, [3])

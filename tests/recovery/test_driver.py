@@ -14,7 +14,7 @@ VARIANTS = [
     ("least-squares", {}),
     ("wavelet", {}),
     ("wavelet", {"shift": "none"}),
-    ("wavelet", {"shift": "full", "tolerance": 1e-2}),
+    ("wavelet", {"shift": "full", "tolerance": 1e-2, "weight": 0.4}),
     ("variation", {}),
     ("variation", {"order": 2, "tolerance": 1e-2}),
 ]
@@ -70,6 +70,8 @@ def test_scaling_data_and_sigma_scales_the_image(lines, method, settings):
 
 @pytest.mark.parametrize(("method", "settings"), VARIANTS)
 def test_an_empty_plane_is_zero_and_disturbs_nothing(points, method, settings):
+    if hasattr(SETTINGS[method], "weight"):
+        settings = {**settings, "weight": 0.4}
     kspace = points.kspace.copy()
     kspace[1] = 0
     full, holed = (

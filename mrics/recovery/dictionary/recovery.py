@@ -121,7 +121,7 @@ def _start(acquisition: Acquisition, settings: PatchDictionary, sigma: float) ->
         return zero_filled.solve(acquisition, ZeroFilled(), sigma).image
     from mrics.recovery import variation
 
-    return variation.solve(acquisition, Variation(), sigma).image
+    return variation.solve(acquisition, Variation(weight=0.5), sigma).image
 
 
 def _first_atoms(
