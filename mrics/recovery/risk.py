@@ -145,7 +145,7 @@ class Split:
 def split_samples(acquisition: Acquisition, seed: int = 0) -> Split:
     """Leave out 5 % of the samples outside the calibration region, others in every plane.
 
-    Where the readout is full whole lines are left out. At least two of a plane are. Without a stated
+    At least two of every plane; where the readout is full, whole lines. Without a stated
     calibration region the largest fully sampled box around zero frequency is kept.
 
     Raises
