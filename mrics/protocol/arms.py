@@ -43,6 +43,8 @@ class Arm:
         Averages of this arm where they differ from those of ``[sequence]``.
     search : str
         Label of the search that may choose this arm; empty for arms that are always run.
+    full_scan : bool
+        True for the arm that acquires everything and that margins are taken against.
     """
 
     id: str
@@ -56,6 +58,7 @@ class Arm:
     recovery_settings: dict[str, Any] = field(hash=False)
     averages: int | None = None
     search: str = ""
+    full_scan: bool = False
 
 
 def sampling_name(entry: Sampling, others: tuple[Sampling, ...] = ()) -> str:
@@ -87,6 +90,16 @@ def expand_arms(
             for method in recovery:
                 arms.append(_arm(entry, acceleration, method, name, False))
     return tuple(replace(arm, sampling=_with_folder(arm.sampling, folder)) for arm in _unique(arms))
+
+
+def with_full_scan(arms: tuple[Arm, ...]) -> tuple[Arm, ...]:
+    """The arms with the full scan marked; it is added at the end where none acquires all."""
+    for at, arm in enumerate(arms):
+        if arm.sampling.get("pattern") == "full":
+            return (*arms[:at], replace(arm, full_scan=True), *arms[at + 1 :])
+    entry = Sampling.model_validate({"name": "full scan", "pattern": "full"})
+    added = _arm(entry, 1.0, Recovery(method="zero-filled", name=None), "full scan", False)
+    return _unique([*arms, replace(added, label="full scan", full_scan=True)])
 
 
 def _first(accelerations: tuple[float, ...]) -> float | None:
@@ -184,7 +197,7 @@ def slug(text: str) -> str:
     return re.sub(r"[^a-z0-9.]+", "-", plain).strip("-.") or "entry"
 
 
-def _unique(arms: list[Arm]) -> list[Arm]:
+def _unique(arms: list[Arm]) -> tuple[Arm, ...]:
     """Number the ids that repeat (entries whose names differ only in what a slug drops)."""
     seen: dict[str, int] = {}
     out = []
@@ -192,4 +205,4 @@ def _unique(arms: list[Arm]) -> list[Arm]:
         seen[arm.id] = seen.get(arm.id, 0) + 1
         again = seen[arm.id]
         out.append(replace(arm, id=f"{arm.id}-{again}") if again > 1 else arm)
-    return out
+    return tuple(out)

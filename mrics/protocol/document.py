@@ -15,7 +15,7 @@ from pydantic import ValidationError
 from mrics.errors import MricsError, ProtocolError
 from mrics.protocol import arms as _arms
 from mrics.protocol import files as _files
-from mrics.protocol.acceptance import Limit, read_limits
+from mrics.protocol.acceptance import DIFFERENCES, Limit, read_baseline, read_limits
 from mrics.protocol.messages import Location, nearest, place, refuse, shown, within
 from mrics.protocol.sections import (
     About,
@@ -56,6 +56,8 @@ class Protocol:
         file has none, ``sampling`` and ``recovery`` are tuples.
     acceptance : tuple of Limit
         The acceptance limits.
+    baseline : str
+        What their margins are taken against: "today" or "full".
     quality : mapping or None
         The ``[quality]`` table as it stands: measures beside the scores.
     """
@@ -72,6 +74,7 @@ class Protocol:
     acceptance: tuple[Limit, ...]
     coils: Coils | None
     quality: Mapping[str, Any] | None = None
+    baseline: str = "today"
 
     @property
     def title(self) -> str:
@@ -93,8 +96,10 @@ class Protocol:
         return Axes(self.grid.readout_axis, self.grid.phase_axis, self.grid.partition_axis)
 
     def arms(self) -> tuple[_arms.Arm, ...]:
-        """Every arm to be studied, today's first."""
-        return _arms.expand_arms(self.sampling, self.recovery, self.today, self.path.parent)
+        """Every arm to be studied, today's first; the full scan where margins refer to it."""
+        arms = _arms.expand_arms(self.sampling, self.recovery, self.today, self.path.parent)
+        held = any(limit.kind in DIFFERENCES for limit in self.acceptance)
+        return _arms.with_full_scan(arms) if held and self.baseline == "full" else arms
 
     def scan_files(self) -> tuple[_files.ScanFiles, ...]:
         """Files of the scans, patterns expanded; raises ProtocolError where one is missing."""
@@ -123,7 +128,10 @@ class Protocol:
             "today": self.today.model_dump() if self.today else None,
             "sampling": [entry.model_dump() for entry in self.sampling],
             "recovery": [entry.model_dump() for entry in self.recovery],
-            "acceptance": {limit.key: limit.value for limit in self.acceptance},
+            "acceptance": {
+                "baseline": self.baseline,
+                **{limit.key: limit.value for limit in self.acceptance},
+            },
             "study": self.study.model_dump(),
             "coils": self.coils.model_dump() if self.coils else None,
             "quality": None if self.quality is None else dict(self.quality),
@@ -206,6 +214,7 @@ def from_text(text: str, path: str | Path = "protocol.toml") -> Protocol:
         acceptance=read_limits(raw.get("acceptance", {}), file, text),
         coils=section(Coils, "coils", needed=False),
         quality=raw.get("quality"),
+        baseline=read_baseline(raw.get("acceptance", {}), "today" in raw, file, text),
     )
     _check(protocol)
     return protocol
@@ -297,7 +306,33 @@ def _check(protocol: Protocol) -> None:
                 f"Add {key} to [sequence], or remove echo_train_decay.",
             )
     _ask_room(protocol, ("quality",), Protocol.measures, protocol)
+    _check_limits(protocol, fail)
     _check_arms(protocol, fail)
+
+
+def _check_limits(protocol: Protocol, fail: Fail) -> None:
+    """Every limited measure must be taken: a study is too long to find out at its end."""
+    from mrics.quality.metrics import SCORES
+
+    if all(limit.metric in SCORES for limit in protocol.acceptance):
+        return
+    measures = protocol.measures()
+    taken = SCORES | (measures.metrics if measures else frozenset())
+    channels = protocol.coils is not None or protocol.grid.channel_axis is not None
+    for limit in protocol.acceptance:
+        split = limit.metric in ("error_measured", "error_missing", "error_invented")
+        if split and channels:
+            fail(
+                f"{limit.key} limits a part of the error: not taken with receive channels.",
+                ("acceptance", limit.key),
+                "Take the limit out.",
+            )
+        if limit.metric not in taken:
+            fail(
+                f"{limit.key} limits a measure that is not taken.",
+                ("acceptance", limit.key),
+                "Ask for it in [quality], or take the limit out.",
+            )
 
 
 def _check_arms(protocol: Protocol, fail: Fail) -> None:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any
@@ -36,7 +37,8 @@ class LimitResult:
     bound : float
         The end of the confidence interval that has to pass; ``value`` for the worst slice.
     status : str
-        "pass", "pass on this scan", "fail" or "undecided".
+        "pass", "pass on this scan", "fail" or "undecided" (also where no slice has a value, which
+        is then NaN).
     margin : float
         How far ``value`` is on the good side of the limit; negative: by how much it fails.
     """
@@ -105,7 +107,7 @@ def verdict(
     Parameters
     ----------
     summaries : mapping of metric name to Summary
-        From :func:`mrics.quality.summarise`.
+        From :func:`mrics.quality.summarise`; None where no slice has a value.
     limits : mapping of acceptance key to float
         Keys of :func:`mrics.quality.acceptance_keys`.
     comparisons : mapping of metric name to Comparison, or None
@@ -141,13 +143,16 @@ def _one(
     level: float,
 ) -> LimitResult:
     name = meaning.metric
-    summary = summaries.get(name)
-    if summary is None:
+    if name not in summaries:
         raise QualityError(
             f"{METRICS[name].label} has a limit but was not measured.",
             f"[acceptance] {key}",
             "Measure it, or take the limit out.",
         )
+    summary = summaries[name]
+    if summary is None:
+        # Looked for and nowhere found (no clean edge, say): neither a pass nor a failure.
+        return LimitResult(key, limit, math.nan, math.nan, UNDECIDED, math.nan)
     if meaning.kind == "worst":
         value = summary.worst
         good = value >= limit if meaning.side == "min" else value <= limit
@@ -162,7 +167,7 @@ def _one(
         raise QualityError(
             f"{key} compares with a baseline, but this arm was compared with none.",
             f"[acceptance] {key}",
-            "Give the protocol in use as [today], or take the margin out.",
+            "Compare it with today's arm or the full scan, or take the margin out.",
         )
     comparison = comparisons[name]
     best = comparison.estimate

@@ -86,6 +86,24 @@ class Measures:
                 raise _bad("background_label", label, "given together with labels")
 
     @property
+    def metrics(self) -> frozenset[str]:
+        """Metrics that these measures give, beside the scores."""
+        by_measure = {
+            "more_scores": ("ms_ssim", "gmsd", "nrmse_patch", "ssim_patch", "error_fine"),
+            "error_split": ("error_measured", "error_missing", "error_invented"),
+            "edges": ("edge_blur",),
+            "noise_replicas": ("noise_ratio", "noise_gain"),
+            "resolution_runs": ("resolution_u_mm", "resolution_v_mm"),
+            "features": ("feature_retention", "feature_shift_mm"),
+            "labels": ("region_bias",),
+            "background_label": ("region_cnr",),
+            "observer_images": ("observer_auc", "observer_efficiency"),
+        }
+        return frozenset(
+            name for key, names in by_measure.items() if getattr(self, key) for name in names
+        )
+
+    @property
     def recoveries(self) -> int:
         """Recoveries of the chosen planes these measures need, the first included."""
         extra = self.noise_replicas + self.resolution_runs + len(self.features)

@@ -253,6 +253,10 @@ METRICS: MappingProxyType[str, Metric] = MappingProxyType(
 )
 
 
+#: taken in every study; the others where ``[quality]`` asks for them
+SCORES = frozenset({"nrmse", "psnr", "ssim", "hfen", "nrmse_complex"})
+
+
 def acceptance_keys() -> dict[str, AcceptanceKey]:
     """Every key an ``[acceptance]`` table may hold that limits a measure."""
     keys = {}

@@ -26,12 +26,15 @@ class ArmNumbers:
         Metric name to mean, min, max, interval, worst and where, as results files hold it.
     comparisons : dict
         Metric name to the paired difference to today's arm; empty without one.
+    differences : dict
+        The same to the baseline of margins.
     verdict : dict
         What the acceptance limits say.
     """
 
     metrics: dict[str, dict[str, Any]]
     comparisons: dict[str, dict[str, Any]]
+    differences: dict[str, dict[str, Any]]
     verdict: dict[str, Any]
 
 
@@ -41,6 +44,7 @@ def arm_numbers(
     today: str | None,
     seed: int,
     level: float = 0.95,
+    baseline: str | None = None,
 ) -> dict[str, ArmNumbers]:
     """Numbers of every arm.
 
@@ -54,6 +58,10 @@ def arm_numbers(
         Id of the arm in use today, to which differences are taken.
     seed : int
         Of the bootstrap.
+    level : float
+        Of the intervals, two-sided.
+    baseline : str, optional
+        Id of the arm that margins refer to; today's where left out.
     """
     scored = [
         name for name in METRICS if any(_has(unit, name) for u in units.values() for unit in u)
@@ -67,24 +75,27 @@ def arm_numbers(
         }
         for arm, mine in units.items()
     }
-    differences: dict[str, dict[str, Comparison]] = {arm: {} for arm in units}
-    if today is not None:
-        for name in scored:
-            for arm, comparison in _against_today(units, today, name, seed, level).items():
-                differences[arm][name] = comparison
+    baseline = today if baseline is None else baseline
+    comparisons = {
+        one: _against(units, one, scored, seed, level) for one in {today, baseline} if one
+    }
+    none: dict[str, dict[str, Comparison]] = {arm: {} for arm in units}
+    differences = comparisons.get(baseline or "", none)
+    with_today = comparisons.get(today or "", none)
     by_key = {limit.key: limit for limit in limits}
     numbers = {}
     for arm in units:
-        # Today's arm has no difference to itself to hold a margin against.
+        # The baseline has no difference to itself to hold a margin against.
         held = {
             limit.key: limit.value
             for limit in limits
-            if arm != today or limit.kind in ("mean", "worst")
+            if arm != baseline or limit.kind in ("mean", "worst")
         }
         judged = verdict(summaries[arm], held, differences[arm], level=level)
         numbers[arm] = ArmNumbers(
             metrics={name: _placed(summary) for name, summary in summaries[arm].items() if summary},
-            comparisons={name: c.as_dict() for name, c in differences[arm].items()},
+            comparisons={name: c.as_dict() for name, c in with_today[arm].items()},
+            differences={name: c.as_dict() for name, c in differences[arm].items()},
             verdict={
                 **judged.as_dict(),
                 "limits": [
@@ -102,22 +113,32 @@ def arm_numbers(
     return numbers
 
 
-def _against_today(
-    units: dict[str, list[dict[str, Any]]], today: str, name: str, seed: int, level: float
-) -> dict[str, Comparison]:
-    arms = {arm: _records(mine, name) for arm, mine in units.items() if arm != today}
-    arms = {arm: records for arm, records in arms.items() if any(r[3] is not None for r in records)}
-    baseline = _records(units[today], name)
-    if not arms or not any(r[3] is not None for r in baseline):
-        return {}
-    return compare_arms(arms, baseline, level=level, seed=seed)
+def _against(
+    units: dict[str, list[dict[str, Any]]],
+    baseline: str,
+    metrics: Sequence[str],
+    seed: int,
+    level: float,
+) -> dict[str, dict[str, Comparison]]:
+    """Paired differences to one arm: arm -> metric -> comparison."""
+    found: dict[str, dict[str, Comparison]] = {arm: {} for arm in units}
+    for name in metrics:
+        arms = {arm: _records(mine, name) for arm, mine in units.items() if arm != baseline}
+        arms = {arm: rows for arm, rows in arms.items() if any(r[3] is not None for r in rows)}
+        theirs = _records(units[baseline], name)
+        if arms and any(r[3] is not None for r in theirs):
+            for arm, one in compare_arms(arms, theirs, level=level, seed=seed).items():
+                found[arm][name] = one
+    return found
 
 
 def _records(units: Sequence[dict[str, Any]], name: str) -> Records:
     return [
-        (unit["scan"], unit["draw"], (part["index"], part["frame"]), part.get(name))
+        (unit["scan"], unit["draw"], (part["index"], part["frame"]), part[name])
         for unit in units
         for part in unit["slices"]
+        # A plane that a measure was not taken of counts as no skipped slice.
+        if name in part
     ]
 
 

@@ -56,7 +56,7 @@ def smallest_kept(units: Sequence[dict[str, Any]], level: float) -> list[dict[st
 
 
 def overall_verdict(arms: Sequence[dict[str, Any]], scans: int) -> dict[str, Any]:
-    """The fastest candidate that passes every limit (today's arm is no candidate).
+    """The fastest candidate that passes every limit (neither today's arm nor the full scan).
 
     Parameters
     ----------
@@ -71,7 +71,7 @@ def overall_verdict(arms: Sequence[dict[str, Any]], scans: int) -> dict[str, Any
             "arm": None,
             "sentence": "No acceptance limits were given, so nothing is decided.",
         }
-    candidates = [a for a in arms if not a["today"]]
+    candidates = [a for a in arms if not a["today"] and not a.get("full_scan")]
     passing = [a for a in candidates if a["verdict"]["status"].startswith("pass")]
     open_arms = [a for a in candidates if a["verdict"]["status"] == "undecided"]
     if not passing:

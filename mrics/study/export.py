@@ -125,10 +125,11 @@ def add_exported_row(folder: str | Path, protocol: Protocol, exported: Exported)
     ]
     today = next((a["id"] for a in results["arms"] if a["today"]), None)
     by_arm = {identity: units}
-    if today is not None:
-        by_arm[today] = [u for u in results["units"] if u["arm"] == today]
+    baseline = results.get("baseline", today)
+    for other in [arm for arm in (today, baseline) if arm is not None]:
+        by_arm[other] = [u for u in results["units"] if u["arm"] == other]
     seed = protocol.study.seed
-    numbers = arm_numbers(by_arm, protocol.acceptance, today, seed)[identity]
+    numbers = arm_numbers(by_arm, protocol.acceptance, today, seed, baseline=baseline)[identity]
     source = next(a for a in results["arms"] if a["id"] == exported.arm)
     row = {
         **source,
@@ -140,6 +141,7 @@ def add_exported_row(folder: str | Path, protocol: Protocol, exported: Exported)
         "acquired": units[0]["acquired"],
         "metrics": numbers.metrics,
         "against_today": numbers.comparisons,
+        "against_baseline": numbers.differences,
         "verdict": numbers.verdict,
     }
     results["arms"] = [a for a in results["arms"] if a["id"] != identity] + [plain(row)]

@@ -73,6 +73,7 @@ class PlanRow:
             "id": self.arm.id,
             "label": self.arm.label,
             "today": self.arm.today,
+            "full_scan": self.arm.full_scan,
             "sampling": self.arm.sampling_name,
             "sampling_settings": self.arm.sampling,
             "recovery": self.arm.recovery,
@@ -133,6 +134,13 @@ class StudyPlan:
             protocol.study.seed,
             protocol.study.virtual_channels,
         )
+
+    @property
+    def baseline(self) -> str | None:
+        """Id of the arm that margins are taken against; None where there is none."""
+        if self.protocol.baseline == "today":
+            return next((row.arm.id for row in self.rows if row.arm.today), None)
+        return next((row.arm.id for row in self.rows if row.arm.full_scan), None)
 
     def scan_bytes(self) -> int:
         """Memory one scan takes as complex64 with its channels, the largest of them."""

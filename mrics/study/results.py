@@ -87,10 +87,11 @@ def study_results(
     by_arm = {row.arm.id: [r for r in results if r["arm"] == row.arm.id] for row in rows}
     finished = {arm: units for arm, units in by_arm.items() if units}
     today = next((row.arm.id for row in rows if row.arm.today and row.arm.id in finished), None)
-    # Before today's arm has finished, no difference to it can be judged.
-    waits = today is None and any(row.arm.today for row in plan.rows)
+    # Before the baseline has finished, no difference to it can be judged.
+    baseline = plan.baseline if plan.baseline in finished else None
+    waits = baseline is None and plan.baseline is not None
     limits = [x for x in protocol.acceptance if not waits or x.kind in ("mean", "worst")]
-    numbers = arm_numbers(finished, limits, today, protocol.study.seed)
+    numbers = arm_numbers(finished, limits, today, protocol.study.seed, baseline=baseline)
     asked = (x.value for x in limits if x.key == "feature_retention_min")
     level = next(asked, KEPT_LEVEL)
     arms = [
@@ -117,6 +118,7 @@ def study_results(
         "scans": records,
         "units": units_out,
         "arms": arms,
+        "baseline": plan.baseline,
         "verdict": overall_verdict(arms, len(records)),
         "maps": maps,
         "notes": plan.notes(records),
@@ -135,6 +137,7 @@ def _arm_record(
             "acquired": float(row.pattern.acquired),
             "metrics": {},
             "against_today": {},
+            "against_baseline": {},
             "verdict": {
                 "status": "undecided",
                 "limits": [],
@@ -149,6 +152,7 @@ def _arm_record(
         "acquired": float(np.mean([u["acquired"] for u in units])),
         "metrics": numbers.metrics,
         "against_today": numbers.comparisons,
+        "against_baseline": numbers.differences,
         "verdict": numbers.verdict,
         "certificates": {
             "reached": sum(bool(c["reached"]) for c in certificates),

@@ -91,7 +91,8 @@ def run_study(
                     return visited[row.arm.id]
 
                 limits, seed = protocol.acceptance, protocol.study.seed
-                found.append(search_family(family, looked_at, limits, _today(plan, results), seed))
+                held = _baseline(plan, results)
+                found.append(search_family(family, looked_at, limits, held, seed))
                 rows += [row for row in family if row.arm.id in visited]
                 results += [result for row in family for result in visited.get(row.arm.id, [])]
         except BaseException:
@@ -136,14 +137,12 @@ def _write(
     write_text(folder / "results.csv", slice_table(results))
 
 
-def _today(
+def _baseline(
     plan: StudyPlan, results: list[dict[str, Any]]
 ) -> tuple[str, list[dict[str, Any]]] | None:
-    """Today's arm and its results."""
-    for row in plan.rows:
-        if row.arm.today:
-            return row.arm.id, [r for r in results if r["arm"] == row.arm.id]
-    return None
+    """The arm that margins are taken against, and its results."""
+    arm = plan.baseline
+    return None if arm is None else (arm, [r for r in results if r["arm"] == arm])
 
 
 class _Work:

@@ -79,7 +79,7 @@ def search_family(
     rows: Sequence[PlanRow],
     run: Runner,
     limits: Sequence[Limit],
-    today: tuple[str, Results] | None,
+    baseline: tuple[str, Results] | None,
     seed: int,
 ) -> Found:
     """Find the fastest arm that passes by halving the range, in at most two looks at each arm.
@@ -96,8 +96,8 @@ def search_family(
         Runs draws of one arm.
     limits : sequence of Limit
         Acceptance limits, at least one.
-    today : (arm id, its results) or None
-        The baseline of margins.
+    baseline : (arm id, its results) or None
+        What margins are taken against.
     seed : int
         Of the bootstrap.
     """
@@ -113,10 +113,10 @@ def search_family(
             results = run(row, (row.draws + 1) // 2 if half else row.draws)
             draws = len({unit["draw"] for unit in results})
             units = {row.arm.id: results}
-            if today is not None:
-                units[today[0]] = today[1]
+            if baseline is not None:
+                units[baseline[0]] = baseline[1]
             numbers = arm_numbers(
-                units, limits, None if today is None else today[0], seed, level=level
+                units, limits, None if baseline is None else baseline[0], seed, level=level
             )[row.arm.id]
             status = numbers.verdict["status"]
             seen[middle] = numbers.metrics

@@ -307,6 +307,18 @@ def test_margins_compare_with_the_baseline():
     assert verdict(summaries, {"ssim_margin": 1e-6}, comparisons).status != "pass"
 
 
+def test_a_measure_without_any_value_is_undecided():
+    _, records = study(3)
+    summaries = {
+        "ssim": summarise(records, direction="higher"),
+        "edge_blur": summarise([("s0", 0, 0, None)], direction="lower"),
+    }
+    result = verdict(summaries, {"ssim_min": 0.0, "edge_blur_max": 1.2})
+    assert [one.status for one in result.limits] == ["pass", "undecided"]
+    assert np.isnan(result.limits[1].value)
+    assert result.status == "undecided"
+
+
 def test_no_limits_give_no_decision():
     _, records = study(3)
     result = verdict({"ssim": summarise(records, direction="higher")}, {})

@@ -10,6 +10,7 @@ from mrics.errors import QualityError
 from mrics.quality import METRICS, Measures, measure, measures_from
 from mrics.quality.features import Feature
 from mrics.quality.measuring import choose_planes
+from mrics.quality.metrics import SCORES
 from mrics.recovery import recover
 
 MM = (3.0, 1.0, 1.0)
@@ -55,6 +56,8 @@ def test_every_value_has_a_metric(measured):
     names = {name for plane in result.by_plane for name in plane}
     plain = {"nrmse", "psnr", "ssim", "hfen", "nrmse_complex"}
     assert names == set(METRICS) - plain
+    assert plain == SCORES
+    assert measures_from(EVERYTHING).metrics == names
     assert len(result.planes) == 2
     for plane in result.planes:
         assert {"noise_gain", "resolution_u_mm"} <= set(result.by_plane[plane])
