@@ -174,7 +174,7 @@ def protocols(draw: st.DrawFn) -> str:
         law = draw(st.sampled_from(("uniform", "gaussian", "power", "inverse-square")))
         form = draw(st.sampled_from((f'law = "{law}"', 'pattern = "equispaced"')))
         lines += ["[[sampling]]", f'name = "s{number}"', form]
-        lines += [f"acceleration = {draw(st.sampled_from(('2', '[1.5, 2]', '3.0')))}"]
+        lines += [f"acceleration = {draw(st.sampled_from(('2', '[2, 4]', '3.0')))}"]
         lines += [f"calibration = {draw(st.integers(0, 4))}"]
     methods = draw(st.lists(st.sampled_from(METHODS), min_size=1, max_size=3, unique=True))
     for method in methods:
@@ -287,30 +287,49 @@ def dictionary() -> bytes:
         return save_dictionary(made, Path(name) / "d.npz").read_bytes()
 
 
+@functools.cache
+def entries() -> dict[str, bytes]:
+    """Contents of the valid dictionary's entries."""
+    with zipfile.ZipFile(io.BytesIO(dictionary())) as held:
+        return {name: held.read(name) for name in held.namelist()}
+
+
+def packed(contents: dict[str, bytes], how: int) -> bytes:
+    """Contents as a zip file."""
+    out = io.BytesIO()
+    with zipfile.ZipFile(out, "w", how, compresslevel=1) as made:
+        for name, content in contents.items():
+            made.writestr(name, content)
+    return out.getvalue()
+
+
+@functools.cache
+def bomb(victim: str) -> bytes:
+    """A dictionary of some hundred kB, one entry of which unpacks to 128 MB."""
+    head = _npy("<f8", "(16777216,)")[:-24]
+    return packed({**entries(), victim: head + bytes(2**27)}, zipfile.ZIP_DEFLATED)
+
+
 @st.composite
 def damaged_dictionaries(draw: st.DrawFn) -> bytes:
     """A dictionary file with damaged bytes, entries that lie, or entries that unpack to much."""
     how = draw(st.integers(0, 3))
+    contents = dict(entries())
+    victim = draw(st.sampled_from(sorted(contents)))
     if how == 0:
         return draw(damaged_bytes(dictionary()))
-    out = io.BytesIO()
-    packed = draw(st.sampled_from((zipfile.ZIP_STORED, zipfile.ZIP_DEFLATED)))
-    with zipfile.ZipFile(io.BytesIO(dictionary())) as held, zipfile.ZipFile(out, "w", packed) as to:
-        victim = draw(st.sampled_from(held.namelist()))
-        for name in held.namelist():
-            content = held.read(name)
-            if name == victim:
-                if how == 1:
-                    content = draw(damaged_bytes(content, hot=128))
-                elif how == 2:
-                    content = _npy(draw(st.sampled_from(("<f8", "<i8", "|O", "<U9", "<c16", "|b1"))),
-                                   draw(st.sampled_from(("()", "(3,)", "(40000, 40000, 9)", "(0,)",
-                                                         "(-1,)", "(1e3,)", "[3]"))))  # fmt: skip
-                else:
-                    content += bytes(64 * 2**20)
-            if name != victim or draw(st.integers(0, 9)):
-                to.writestr(name, content)
-    content = out.getvalue()
+    if how == 1:
+        large = bomb(draw(st.sampled_from(("atoms.npy", "provenance.npy"))))
+        return large if draw(st.booleans()) else draw(damaged_bytes(large))
+    if how == 2:
+        contents[victim] = draw(damaged_bytes(contents[victim], hot=128))
+    elif draw(st.booleans()):
+        kind = draw(st.sampled_from(("<f8", "<i8", "|O", "<U9", "<c16", "|b1")))
+        shapes = ("()", "(3,)", "(40000, 40000, 9)", "(0,)", "(-1,)", "(1e3,)", "[3]")
+        contents[victim] = _npy(kind, draw(st.sampled_from(shapes)))
+    else:
+        del contents[victim]
+    content = packed(contents, draw(st.sampled_from((zipfile.ZIP_STORED, zipfile.ZIP_DEFLATED))))
     return draw(damaged_bytes(content)) if draw(st.integers(0, 4)) == 0 else content
 
 
@@ -338,14 +357,16 @@ def damaged_ledgers(draw: st.DrawFn) -> bytes:
     """A ledger with damaged bytes, or sound SQLite with units that are none."""
     if draw(st.integers(0, 2)):
         return draw(damaged_bytes(ledger(), hot=draw(st.sampled_from((100, 0)))))
-    value = draw(st.sampled_from((None, 3, 1.5, b"\xff\xfe", "[]", "null", "{", "{}", "3", "[" * 9000,
-                                  '{"maps": 3}', "NaN", "9" * 6000)))  # fmt: skip
+    texts = ("[]", "null", "{", "{}", "3", "[" * 9000, '{"maps": 3}', "NaN", "9" * 6000)
+    value = draw(st.sampled_from((None, 3, 1.5, b"\xff\xfe", *texts)))
     with sqlite3.connect(":memory:") as base:
         base.deserialize(ledger())
         key = draw(st.sampled_from(LEDGER_KEYS))
         if draw(st.booleans()):
             base.execute("DROP TABLE units")
-            columns = draw(st.sampled_from(("key, finished, result", "key", "key, result, b, c, d")))
+            columns = draw(
+                st.sampled_from(("key, finished, result", "key", "key, result, b, c, d"))
+            )
             base.execute(f"CREATE TABLE units ({columns})")
         else:
             base.execute("UPDATE OR IGNORE units SET result = ? WHERE key = ?", (value, key))
@@ -353,5 +374,3 @@ def damaged_ledgers(draw: st.DrawFn) -> bytes:
         content = base.serialize()
     base.close()
     return content
-
-

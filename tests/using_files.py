@@ -5,6 +5,7 @@ from __future__ import annotations
 from pathlib import Path
 
 from damaged_files import LEDGER_KEYS
+from limits import MIB, memory_for
 
 from mrics.protocol import load_protocol
 from mrics.recovery.dictionary.store import load_dictionary
@@ -18,7 +19,8 @@ from mrics.study.ledger import LEDGER, Ledger
 def use_nifti(content: bytes, folder: Path) -> None:
     path = folder / "scan.nii"
     path.write_bytes(content)
-    scan = read_scan(path)
+    with memory_for(64 * MIB):
+        scan = read_scan(path)
     body_mask(scan.data)
     scan_sigma(scan)
     inspect_fully(scan, Axes())

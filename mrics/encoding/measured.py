@@ -15,6 +15,7 @@ from mrics.encoding.noise import border_noise, estimate_sigma, noise_covariance
 from mrics.encoding.source import Source, pattern_masks
 from mrics.errors import AcquisitionError
 from mrics.numerics import centred_ifft
+from mrics.numerics.arrays import open_array
 from mrics.sampling.pattern import Pattern
 from mrics.scan.volume import Axes, Scan
 
@@ -129,7 +130,7 @@ def _open(source: PathLike | Array | Scan, channel_axis: int | None) -> tuple[Ar
 
 def _load(path: Path) -> Array:
     try:
-        return np.load(path, mmap_mode="r", allow_pickle=False)
+        return open_array(path)
     except FileNotFoundError:
         raise AcquisitionError(
             f"There is no file {path}.", str(path), "Check the name and folder."

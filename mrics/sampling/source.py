@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 
 from mrics.errors import PatternError
 from mrics.numerics import centred_fft
+from mrics.numerics.arrays import open_array
 from mrics.sampling.grid import Field
 from mrics.scan.volume import Axes, Scan
 
@@ -175,7 +176,7 @@ def _load(table: Any, where: str) -> Any:
         return table
     try:
         if Path(table).suffix == ".npy":
-            return np.load(table, allow_pickle=False)
+            return open_array(table)
         text = Path(table).read_text(encoding="utf-8")
         rows = [line.replace(",", " ").split() for line in text.splitlines()]
         return np.array([row for row in rows if row and not row[0].startswith("#")], dtype=float)

@@ -11,6 +11,7 @@ import base64
 import csv
 import io
 import json
+import math
 import os
 import secrets
 import zlib
@@ -37,6 +38,9 @@ COLUMNS = (
     "partition_from_centre",
     "frame",
 )
+_LARGEST = 2**31 - 1
+# As large as a protocol's acceleration.
+_LARGEST_R = 1000
 _SUFFIXES = (".csv", ".json", ".nii", ".nii.gz")
 
 
@@ -96,12 +100,7 @@ def read_pattern(path: str | Path, shape: tuple[int, ...] | int | None = None) -
         raise PatternError("The pattern file does not exist.", str(path), "Check the path.")
     if kind.startswith(".nii"):
         return _read_mask(path, grid)
-    try:
-        text = path.read_text(encoding="utf-8")
-    except (OSError, UnicodeDecodeError) as error:
-        raise PatternError(
-            f"The pattern file cannot be read: {error}.", str(path), "Check the file."
-        ) from error
+    text = _text(path)
     table = _parse_csv(text, path) if kind == ".csv" else _parse_json(text, path)
     return _table_pattern(table, grid, path)
 
@@ -112,11 +111,27 @@ def law_quanta(path: str | Path) -> Quanta | None:
     They are kept for laws that come from files (``energy``, ``table``), so that the table can be
     drawn again without them.
     """
-    stored = json.loads(Path(path).read_text(encoding="utf-8"))
+    path = Path(path)
+    stored = _parse_json(_text(path), path)
     if "probability" not in stored:
         return None
-    raw = zlib.decompress(base64.b64decode(stored["probability"]))
-    return np.frombuffer(raw, dtype="<i4").astype(np.int64).reshape(stored["grid"])
+    grid = check_grid(tuple(_numbers(stored.get("grid"), "grid", path)))
+    size = 4 * math.prod(grid)
+    try:
+        raw = zlib.decompressobj().decompress(base64.b64decode(stored["probability"]), size + 1)
+    except (ValueError, TypeError, zlib.error) as error:
+        raise _bad_probability(path) from error
+    if len(raw) != size:
+        raise _bad_probability(path)
+    return np.frombuffer(raw, dtype="<i4").astype(np.int64).reshape(grid)
+
+
+def _bad_probability(path: Path) -> PatternError:
+    return PatternError(
+        "The kept probabilities are damaged or do not fit the grid.",
+        f"{path}, probability",
+        "Write the table again.",
+    )
 
 
 def rows(pattern: Pattern) -> list[list[int | None]]:
@@ -199,6 +214,15 @@ def _write_text(path: Path, text: str) -> None:
         ) from error
 
 
+def _text(path: Path) -> str:
+    try:
+        return path.read_text(encoding="utf-8")
+    except (OSError, UnicodeDecodeError) as error:
+        raise PatternError(
+            f"The pattern file cannot be read: {error}.", str(path), "Check the file."
+        ) from error
+
+
 def _parse_csv(text: str, path: Path) -> dict[str, Any]:
     table: dict[str, Any] = {}
     lines = []
@@ -208,23 +232,30 @@ def _parse_csv(text: str, path: Path) -> dict[str, Any]:
             table[key.strip()] = value.strip()
         elif line.strip():
             lines.append(line)
-    content = list(csv.reader(lines))
+    try:
+        content = list(csv.reader(lines))
+    except csv.Error as error:
+        raise PatternError(
+            f"The file is not CSV: {error}.", str(path), "Write the table again."
+        ) from error
     table["columns"] = [name.strip() for name in content[0]] if content else []
     table["rows"] = [[cell.strip() or None for cell in row] for row in content[1:]]
     for key in ("grid", "calibration"):
         if key in table:
-            table[key] = _numbers(table[key].split(), key, path)
+            table[key] = table[key].split()
     return table
 
 
 def _parse_json(text: str, path: Path) -> dict[str, Any]:
     try:
         table = json.loads(text)
-    except ValueError as error:
+    except (ValueError, RecursionError) as error:
         raise PatternError(
             f"The file is not JSON: {error}.", str(path), "Write the table again."
         ) from error
-    if not isinstance(table, dict) or not isinstance(table.get("rows"), list):
+    rows = table.get("rows") if isinstance(table, dict) else None
+    listed = isinstance(rows, list) and all(isinstance(row, list) for row in rows)
+    if not listed or not isinstance(table.get("columns"), list):
         raise PatternError(
             "The JSON file holds no sampling table.", str(path), "It needs 'columns' and 'rows'."
         )
@@ -233,18 +264,26 @@ def _parse_json(text: str, path: Path) -> dict[str, Any]:
 
 def _numbers(cells: Any, key: str, path: Path) -> list[int]:
     try:
-        return [int(cell) for cell in cells]
-    except (TypeError, ValueError) as error:
+        numbers = [int(cell) for cell in cells]
+        # int() takes 1.5 and true, and a text is a list of digits
+        whole = not isinstance(cells, str) and all(
+            isinstance(cell, str) or (cell == number and not isinstance(cell, bool))
+            for cell, number in zip(cells, numbers, strict=True)
+        )
+    except (TypeError, ValueError, OverflowError):
+        whole = False
+    if not whole or any(abs(number) > _LARGEST for number in numbers):
         raise PatternError(
-            f"{key} holds {cells!r}, which are not whole numbers.",
+            f"{key} holds {str(cells)[:80]}, which are not whole numbers up to {_LARGEST}.",
             f"{path}, {key}",
             "Write whole numbers.",
-        ) from error
+        )
+    return numbers
 
 
 def _column(table: dict[str, Any], name: str, path: Path) -> list[int] | None:
     """A column of whole numbers, None where it is absent or empty."""
-    columns = list(table.get("columns", ()))
+    columns = table["columns"]
     if name not in columns:
         return None
     at = columns.index(name)
@@ -255,7 +294,9 @@ def _column(table: dict[str, Any], name: str, path: Path) -> list[int] | None:
 
 
 def _table_pattern(table: dict[str, Any], grid: tuple[int, ...] | None, path: Path) -> Pattern:
-    written = check_grid(tuple(table["grid"])) if "grid" in table else grid
+    written = grid
+    if "grid" in table:
+        written = check_grid(tuple(_numbers(table["grid"], "grid", path)))
     if written is None:
         raise PatternError(
             "The table does not say how large its grid is.",
@@ -266,7 +307,15 @@ def _table_pattern(table: dict[str, Any], grid: tuple[int, ...] | None, path: Pa
         raise PatternError(
             f"The pattern has the grid {written}, not {grid}.", str(path), "Use another pattern."
         )
-    frames = int(table.get("frames", 0))
+    frames = max(0, *_numbers([table.get("frames", 0)], "frames", path))
+    positions = math.prod(written) * max(1, frames)
+    if positions > _LARGEST_R * max(1, len(table["rows"])):
+        raise PatternError(
+            f"The table lists {len(table['rows'])} of {positions} positions; at most 1 in "
+            f"{_LARGEST_R} may be left.",
+            f"{path}, grid",
+            "Check the grid and the number of frames.",
+        )
     named = {"phase": written[0]}
     if len(written) == 2:
         named["partition"] = written[1]
@@ -279,7 +328,7 @@ def _table_pattern(table: dict[str, Any], grid: tuple[int, ...] | None, path: Pa
             raise PatternError(
                 f"The table has no positions in a column {name!r}.",
                 str(path),
-                f"Its columns are {', '.join(map(str, table.get('columns', ())))}.",
+                f"Its columns are {', '.join(map(str, table['columns']))[:200]}.",
             )
         _check_range(column, length, name, path)
         where.append(np.array(column, dtype=np.int64))
@@ -294,13 +343,21 @@ def _table_pattern(table: dict[str, Any], grid: tuple[int, ...] | None, path: Pa
     mask.ravel()[flat] = True
     calibration = None
     if "calibration" in table:
-        calibration = check_calibration(table["calibration"], written)
+        sizes = _numbers(table["calibration"], "calibration", path)
+        calibration = check_calibration(sizes, written)
+    settings = table.get("settings", {"pattern": "file", "file": str(path)})
+    if not isinstance(settings, dict):
+        raise PatternError(
+            f"settings holds {str(settings)[:80]}, which is no table.",
+            f"{path}, settings",
+            "Write the table again.",
+        )
     return pattern_of_mask(
         mask,
         frames,
         calibration=calibration,
         order=_order(table, flat, path),
-        settings=dict(table.get("settings", {"pattern": "file", "file": str(path)})),
+        settings=settings,
     )
 
 
@@ -336,23 +393,22 @@ def _write_mask(pattern: Pattern, path: Path) -> None:
 
 
 def _read_mask(path: Path, grid: tuple[int, ...] | None) -> Pattern:
-    import nibabel as nib
+    from mrics.errors import ScanError
+    from mrics.scan.header import read_header
+    from mrics.scan.values import read_values
 
     try:
-        image: Any = nib.load(path)
-        values = np.asanyarray(image.dataobj)
-    except (OSError, EOFError, ValueError, nib.filebasedimages.ImageFileError) as error:
-        raise PatternError(
-            f"The mask cannot be read: {error}.", str(path), "Check that it is a NIfTI file."
-        ) from error
+        values = read_values(read_header(path, flat=True), zero_allowed=True)
+    except ScanError as error:
+        raise PatternError(error.what, error.where, error.fix) from error
     if not np.isin(values, (0, 1)).all():
         other = values[~np.isin(values, (0, 1))].ravel()[0]
         raise PatternError(
-            f"The mask holds the value {other!s}, not only 0 and 1.",
+            f"The mask holds the value {other:g}, not only 0 and 1.",
             str(path),
             "Write 1 where a position is acquired and 0 elsewhere.",
         )
-    mask, frames = _mask_axes(values.astype(bool), grid, path)
+    mask, frames = _mask_axes(values != 0, grid, path)
     return pattern_of_mask(mask, frames, settings={"pattern": "file", "file": str(path)})
 
 
@@ -376,7 +432,7 @@ def _mask_axes(
             if first.shape == grid and (volume == np.expand_dims(first, axis)).all():
                 return first, 0
     raise PatternError(
-        f"The mask has shape {values.shape}"
+        f"The mask has shape {values.shape[: 2 if values.shape[2:] == (1,) else None]}"
         + (f", the grid is {grid}." if grid else ", which is no (phase, partition) image."),
         str(path),
         "Give an image of shape (phase, partition), a fourth axis for frames.",

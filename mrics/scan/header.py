@@ -121,13 +121,15 @@ class Header:
         return self.shape[axis] >= 16 and self.voxel_mm[axis] <= 1.8 * max(others) and not timed
 
 
-def read_header(path: str | Path) -> Header:
+def read_header(path: str | Path, *, flat: bool = False) -> Header:
     """Read and check a NIfTI-1 or NIfTI-2 header without touching image data.
 
     Parameters
     ----------
     path : str or Path
         A single-file NIfTI, plain or gzip-compressed.
+    flat : bool
+        Whether one or two axes will do (a sampling mask); axes of length 1 are then added.
 
     Raises
     ------
@@ -138,6 +140,8 @@ def read_header(path: str | Path) -> Header:
     path = Path(path)
     first, zipped = _first_bytes(path)
     source = _parse(first, path)
+    if flat:
+        _add_axes(source)
     shape = _shape(source, path)
     dtype = _dtype(source, path)
     offset = _offset(source, path)
@@ -249,6 +253,15 @@ def _shape(source: Any, path: Path) -> tuple[int, ...]:
     return tuple(shape)
 
 
+def _add_axes(source: Any) -> None:
+    """One or two axes as three; what the header says of the others is not meant."""
+    axes = int(source["dim"][0])
+    if axes in (1, 2):
+        source["dim"][0] = 3
+        source["dim"][axes + 1 : 4] = 1
+        source["pixdim"][axes + 1 : 4] = 1.0
+
+
 def _dtype(source: Any, path: Path) -> np.dtype[Any]:
     code = int(source["datatype"])
     try:
@@ -332,8 +345,9 @@ def _affine(source: Any, path: Path, to_mm: float) -> NDArray[np.float64]:
         affine = np.array(source.get_best_affine(), dtype=np.float64)
     except Exception as error:
         raise _bad_header(path, f"its orientation cannot be read ({error})") from error
-    affine[:3] *= to_mm
-    lengths = np.linalg.norm(affine[:3, :3], axis=0)
+    with np.errstate(over="ignore", invalid="ignore"):
+        affine[:3] *= to_mm
+        lengths = np.linalg.norm(affine[:3, :3], axis=0)
     usable = np.isfinite(affine).all() and np.isfinite(lengths).all() and lengths.min() > 0
     if not usable or abs(np.linalg.det(affine[:3, :3] / lengths)) < 1e-6:
         raise _bad_header(path, "the matrix from voxels to positions is singular or not finite")

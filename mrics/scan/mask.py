@@ -9,6 +9,7 @@ import scipy
 from numpy.typing import NDArray
 
 from mrics.errors import ScanError
+from mrics.numerics.scaling import usual_size
 from mrics.scan.volume import Scan
 
 # Share of the mean tissue magnitude below which a voxel counts as air.
@@ -40,7 +41,8 @@ def body_mask(volume: Scan | NDArray[Any]) -> NDArray[np.bool_]:
     ndarray of bool, shape (i, j, k)
         True everywhere in a volume that has no air.
     """
-    magnitude = spatial_magnitude(volume)
+    data = volume.data if isinstance(volume, Scan) else np.asarray(volume)
+    magnitude = spatial_magnitude(usual_size(data)[0])
     smooth = scipy.ndimage.uniform_filter(magnitude, 3, mode="nearest")
     level = _otsu(np.sqrt(smooth)) ** 2
     bright = smooth > level
@@ -73,7 +75,10 @@ def spatial_magnitude(volume: Scan | NDArray[Any]) -> NDArray[np.float32]:
 
 def _otsu(values: NDArray[Any]) -> float:
     """Threshold that maximises the between-class variance (Otsu 1979, IEEE Trans. SMC 9:62)."""
-    counts, edges = np.histogram(values, bins=_BINS)
+    low, high = float(values.min()), float(values.max())
+    if high - low <= 1e-5 * high:
+        return 0.9 * low
+    counts, edges = np.histogram(values, bins=_BINS, range=(low, high))
     centres = (edges[1:] + edges[:-1]) / 2
     below = np.cumsum(counts, dtype=np.float64)
     moment = np.cumsum(counts * centres, dtype=np.float64)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -9,6 +10,7 @@ import numpy as np
 import scipy
 from numpy.typing import NDArray
 
+from mrics.numerics.scaling import usual_size
 from mrics.scan.mask import body_mask, spatial_magnitude
 from mrics.scan.volume import Scan
 
@@ -88,6 +90,15 @@ def scan_noise(scan: Scan, mask: NDArray[np.bool_] | None = None) -> Noise:
 
 def noise_estimates(scan: Scan, mask: NDArray[np.bool_] | None = None) -> dict[str, Noise]:
     """Every estimate of :func:`scan_noise` that the scan allows, by its method."""
+    values, exponent = usual_size(scan.data)
+    found = _estimates(replace(scan, data=values), mask)
+    return {
+        name: replace(noise, sigma=math.ldexp(noise.sigma, -exponent))
+        for name, noise in found.items()
+    }
+
+
+def _estimates(scan: Scan, mask: NDArray[np.bool_] | None) -> dict[str, Noise]:
     data = first_volume(scan)
     mask = body_mask(data) if mask is None else mask
     magnitude = spatial_magnitude(data)

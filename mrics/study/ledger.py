@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import fcntl
+import hashlib
 import json
 import os
 import sqlite3
@@ -17,7 +18,7 @@ from mrics.study.files import plain
 
 LEDGER = "ledger.sqlite"
 LOCK = ".running"
-VERSION = 1
+VERSION = 2
 
 
 class Ledger:
@@ -43,7 +44,6 @@ class Ledger:
         self._path = folder / LEDGER
         self._lock = _take(folder / LOCK)
         try:
-            self._base = sqlite3.connect(self._path)
             self._open()
         except BaseException:
             self._release()
@@ -51,22 +51,25 @@ class Ledger:
 
     def _open(self) -> None:
         try:
+            self._base = sqlite3.connect(self._path)
+        except sqlite3.Error as error:
+            raise self._unusable(error) from error
+        try:
             version = self._base.execute("PRAGMA user_version").fetchone()[0]
-            if version > VERSION:
+            if version not in (0, VERSION):
                 raise StudyError(
-                    f"The ledger has format {version}; this version of mrics reads up to "
-                    f"{VERSION}.",
+                    f"The ledger has format {version}; this version of mrics reads {VERSION}.",
                     str(self._path),
-                    "Use the newer mrics, or name another folder.",
+                    "Use the mrics that wrote it, or name another folder.",
                 )
             self._base.execute("PRAGMA synchronous = FULL")
             self._base.execute(
-                "CREATE TABLE IF NOT EXISTS units"
-                " (key TEXT PRIMARY KEY, finished TEXT NOT NULL, result TEXT NOT NULL)"
+                "CREATE TABLE IF NOT EXISTS units (key TEXT PRIMARY KEY,"
+                " finished TEXT NOT NULL, result TEXT NOT NULL, checksum TEXT NOT NULL)"
             )
             self._base.execute(f"PRAGMA user_version = {VERSION}")
             self._base.commit()
-        except sqlite3.Error as error:
+        except (sqlite3.Error, OverflowError) as error:
             self._base.close()
             raise self._unusable(error) from error
 
@@ -79,10 +82,13 @@ class Ledger:
                 part = wanted[start : start + 500]
                 marks = ",".join("?" * len(part))
                 rows = self._base.execute(
-                    f"SELECT key, result FROM units WHERE key IN ({marks})", part
+                    f"SELECT key, result, checksum FROM units WHERE key IN ({marks})", part
                 )
-                found.update((key, json.loads(result)) for key, result in rows)
-        except (sqlite3.Error, json.JSONDecodeError) as error:
+                for key, result, checksum in rows:
+                    if not isinstance(result, str) or _checksum(key, result) != checksum:
+                        raise self._unusable(ValueError("a unit is damaged"))
+                    found[key] = json.loads(result)
+        except (sqlite3.Error, OverflowError) as error:
             raise self._unusable(error) from error
         return found
 
@@ -91,9 +97,13 @@ class Ledger:
         now = datetime.now(UTC).isoformat(timespec="seconds")
         text = json.dumps(plain(result), allow_nan=False)
         try:
-            self._base.execute("INSERT OR REPLACE INTO units VALUES (?, ?, ?)", (key, now, text))
+            self._base.execute(
+                "INSERT OR REPLACE INTO units (key, finished, result, checksum)"
+                " VALUES (?, ?, ?, ?)",
+                (key, now, text, _checksum(key, text)),
+            )
             self._base.commit()
-        except sqlite3.Error as error:
+        except (sqlite3.Error, OverflowError) as error:
             raise self._unusable(error) from error
 
     def close(self) -> None:
@@ -130,9 +140,21 @@ class Ledger:
         )
 
 
+def _checksum(key: str, text: str) -> str:
+    """A damaged disk can leave a number changed where the database still reads."""
+    return hashlib.sha256(f"{key} {text}".encode()).hexdigest()
+
+
 def _take(path: Path) -> int:
     """An open file that holds the folder's lock; the kernel frees it when the process ends."""
-    handle = os.open(path, os.O_RDWR | os.O_CREAT, 0o644)
+    try:
+        handle = os.open(path, os.O_RDWR | os.O_CREAT, 0o644)
+    except OSError as error:
+        raise StudyError(
+            f"The study folder cannot be written to ({error.strerror}).",
+            str(path),
+            "Name a folder you may write to.",
+        ) from error
     try:
         fcntl.flock(handle, fcntl.LOCK_EX | fcntl.LOCK_NB)
     except BlockingIOError as error:

@@ -150,7 +150,7 @@ def test_a_fully_sampled_mask_is_allowed_and_said(tmp_path):
     ("values", "shape", "message"),
     [
         (np.full((8, 6), 0.5), None, "holds the value 0.5, not only 0 and 1"),
-        (np.full((8, 6), np.nan), None, "holds the value nan"),
+        (np.full((8, 6), np.nan), None, "48 of 48 voxels are NaN"),
         (np.zeros((8, 6)), None, "acquires no position"),
         (np.ones((8, 6)), (6, 8), r"shape \(8, 6\), the grid is \(6, 8\)"),
         (np.arange(48).reshape(8, 6) % 2, (8,), r"shape \(8, 6\), the grid is \(8,\)"),
@@ -183,7 +183,7 @@ def test_a_frame_without_positions_is_refused(tmp_path):
         ("t.csv", "# grid: 8 7\nphase,partition\n1,1\n", r"grid \(8, 7\), not \(8, 6\)"),
         ("t.json", "{", "is not JSON"),
         ("t.json", "[]", "holds no sampling table"),
-        ("t.nii", "no image", "mask cannot be read"),
+        ("t.nii", "no image", "not a NIfTI image"),
         ("t.txt", "", "unknown ending"),
     ],
 )

@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from mrics.scan.fitness.background import exact_zeros
 from mrics.scan.fitness.borders import ghosting, wrapped
@@ -91,7 +92,8 @@ def inspect_fully(scan: Scan, axes: Axes | None = None) -> Inspection:
     findings = tuple(finding for check in CHECKS for finding in check(view))
     sigma = view.noise.sigma
     snr = signal(view) / sigma if sigma > 0 else float("inf")
-    return Inspection(findings, _cannot_be_told(view), snr, view.noise)
+    noise = replace(view.noise, sigma=math.ldexp(sigma, -view.exponent))
+    return Inspection(findings, _cannot_be_told(view), snr, noise)
 
 
 def _cannot_be_told(view: ScanView) -> tuple[str, ...]:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from dataclasses import replace
 from functools import cached_property, wraps
 from typing import Any, TypeVar
 
@@ -11,6 +12,7 @@ import scipy
 from numpy.typing import NDArray
 
 from mrics.numerics import centred_fft, map_blocks
+from mrics.numerics.scaling import usual_size
 from mrics.scan.fitness.edges import Edge, profile_edge, spectrum_edge
 from mrics.scan.fitness.spectrum import (
     Correlation,
@@ -57,9 +59,11 @@ class ScanView:
     """
 
     def __init__(self, scan: Scan, axes: Axes) -> None:
-        self.scan = scan
+        # No finding tells a value in the scan's unit, so the checks may work on another scale.
+        values, self.exponent = usual_size(scan.data)
+        self.scan = replace(scan, data=values)
         self.axes = axes
-        self.volume: NDArray[Any] = first_volume(scan)
+        self.volume: NDArray[Any] = first_volume(self.scan)
         self.results: dict[tuple[str, int], Any] = {}
 
     @property
