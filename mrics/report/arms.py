@@ -12,7 +12,7 @@ from mrics.report.folder import StoredMap, StudyFolder
 from mrics.report.image_figures import PanelRow, Window, error_factor, image_window
 from mrics.report.pattern_figures import PatternPicture
 from mrics.report.pictures import ScanPictures
-from mrics.report.summary import charted_metrics, first_metric, limits_of, shown_slices
+from mrics.report.summary import charted_metrics, exact_arms, first_metric, limits_of, shown_slices
 from mrics.report.words import MetricWords, metric_value, metric_words
 from mrics.sampling import Pattern
 
@@ -41,7 +41,8 @@ class ArmView:
     window : Window or None
         Scale of the images.
     metrics : tuple of MetricWords
-        Drawn by slice: those with limits first, three at most; empty without finished units.
+        Drawn by slice: those with limits first, three at most; empty without finished units and
+        where the arm gives the reference back to rounding.
     """
 
     row: dict[str, Any]
@@ -66,6 +67,7 @@ def arm_views(
     charted = charted_metrics(study)
     chosen = sorted(charted, key=lambda m: (m.key not in limited, charted.index(m)))[:3]
     metrics = tuple(sorted(chosen, key=charted.index))
+    nothing_to_draw = exact_arms(study)
     views = []
     for arm in study.arms:
         shown = arm_pictures(study, arm, pictures)
@@ -75,7 +77,7 @@ def arm_views(
                 pattern_picture(study, arm),
                 shown,
                 scales[shown.scan.entry["id"]] if shown else None,
-                metrics if study.units(arm["id"]) else (),
+                metrics if study.units(arm["id"]) and arm["id"] not in nothing_to_draw else (),
             )
         )
     return views

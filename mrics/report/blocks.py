@@ -99,11 +99,19 @@ def pack(scans: list[ScanPictures], text_limit: int) -> list[ScanBlocks]:
             share *= 0.95 * text_limit / size
 
 
-def pack_map(values: NDArray[np.float32], top: float) -> Block:
-    """A map of a measure in 8 bits: 1 to 255 for 0 to ``top``, 0 where there is no value."""
+def pack_map(values: NDArray[np.float32], low: float, top: float) -> Block:
+    """A map of a measure in 8 bits: 1 to 255 for ``low`` to ``top``, 0 where there is no value."""
     with np.errstate(invalid="ignore"):
-        numbers = 1 + np.rint(254 * np.clip(values / top, 0.0, 1.0))
+        share = (values.astype(np.float64) - low) / (top - low)
+        numbers = 1 + np.rint(254 * np.clip(share, 0.0, 1.0))
     return _encode(np.where(np.isfinite(values), numbers, 0).astype(np.int32))
+
+
+def pack_change(values: NDArray[np.float32], step: float) -> Block:
+    """Signed changes of image values as lattice numbers."""
+    return _encode(
+        np.clip(np.rint(values / np.float32(step)), -_LARGEST, _LARGEST).astype(np.int32)
+    )
 
 
 def _size(packed: ScanBlocks) -> int:

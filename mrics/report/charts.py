@@ -9,7 +9,7 @@ import numpy as np
 from mrics.report.colours import FAIL, INK, MARKERS, MUTED, SERIES
 from mrics.report.folder import StudyFolder
 from mrics.report.style_figures import figure_style, new_figure
-from mrics.report.summary import Limit, drawn_limits, exact_arms, limits_of
+from mrics.report.summary import Limit, drawn_limits, exact_arms, limits_of, with_intervals
 from mrics.report.words import MetricWords, metric_value
 
 
@@ -104,7 +104,11 @@ def _scale_without(axes: Any, study: StudyFolder, key: str, beside: set[str]) ->
     if not shown:
         return
     low, high = min(r["min"] for r in shown), max(r["max"] for r in shown)
+    low, high = with_intervals(low, high, shown)
     pad = 0.08 * (high - low or abs(high) or 1.0)
+    exact = [rows[i][0]["mean"] for i in beside if rows[i][0]]
+    near = [mean for mean in exact if low - 3 * pad <= mean <= high + 3 * pad]
+    low, high = min([low, *near]), max([high, *near])
     axes.set_ylim(low - pad, high + pad)
     for identity in beside:
         row, arm = rows[identity]
@@ -187,7 +191,7 @@ def draw_by_slice(
     for axes, metric in zip(grid.flat, metrics, strict=False):
         for position, scan in enumerate(scans):
             _slice_curve(axes, study.units(arm["id"], scan["id"]), metric.key, position)
-        axes.set_title(metric.axis + _better(metric))
+        axes.set_title(metric.axis + _better(metric).replace(", ", "\n"))
         axes.set_xlabel(f"slice (index along {letter})")
         axes.grid(axis="y")
         axes.xaxis.get_major_locator().set_params(integer=True, nbins=6)

@@ -1,6 +1,7 @@
 """Colours of figures and of the page's image windows.
 
-Images are grey; spreads and other one-signed maps use cividis; signed errors use a map built here:
+Images are grey; spreads use cividis, measures beside images viridis, which passes through no grey
+that could be read as a gap; signed errors use a map built here:
 two hues that every common form of colour vision tells apart (blue, orange), lightness falling
 linearly and equally from white at zero to both ends in the OKLab space (B. Ottosson, 2020), so that
 equal steps of error look equal and +e looks as strong as -e.
@@ -54,10 +55,10 @@ def signed_map() -> Any:
 
 @lru_cache(maxsize=1)
 def one_signed_table() -> NDArray[np.uint8]:
-    """Cividis (Nunez, Anderton, Renslow 2018) in 256 steps, shape (256, 3), uint8."""
+    """Viridis (van der Walt and Smith 2015) in 256 steps, shape (256, 3), uint8."""
     from matplotlib import colormaps
 
-    return (colormaps["cividis"](np.arange(256))[:, :3] * 255 + 0.5).astype(np.uint8)
+    return (colormaps["viridis"](np.arange(256))[:, :3] * 255 + 0.5).astype(np.uint8)
 
 
 def _srgb8(lightness: NDArray[Any], a: NDArray[Any], b: NDArray[Any]) -> NDArray[np.uint8]:

@@ -21,7 +21,7 @@ from mrics.report.panels import Panel, panels
 from mrics.report.pattern_figures import draw_pattern_picture
 from mrics.report.pictures import load_pictures
 from mrics.report.style_figures import figure_style
-from mrics.report.summary import charted_metrics, limits_of, metrics_of, unfinished
+from mrics.report.summary import charted_metrics, limits_of, metrics_of, unfinished, unreached
 from mrics.report.words import clock, metric_value, number, settings_text
 
 _WIDTH, _HEIGHT = 8.27, 11.69
@@ -127,7 +127,7 @@ def _front(study: StudyFolder) -> Iterator[Callable[[Any], None]]:
 
 def _table(study: StudyFolder) -> Iterator[Line]:
     """The verdict table in fixed-width lines, so that its text can be selected."""
-    metrics = [m for m in metrics_of(study) if m.key != "nrmse_complex"][:4]
+    metrics = charted_metrics(study)[:4]
     labels = [str(a["label"]) + (" *" if a.get("today") else "") for a in study.arms]
     width = min(34, max((len(x) for x in labels), default=10))
     head = f"{'arm':<{width}} {'R':>5} {'time':>6} {'saved':>6}"
@@ -146,12 +146,14 @@ def _table(study: StudyFolder) -> Iterator[Line]:
         status = str(verdict.get("status") or "undecided")
         yield Line(f"{text}  {status}", colour=FAIL if status == "fail" else INK, **mono)
         for limit in verdict.get("limits") or []:
-            if limit["status"] == "fail" and limit["value"] is not None:
-                reached = metric_value(limit.get("metric") or "", limit["value"])
-                asked = metric_value(limit.get("metric") or "", limit["limit"])
-                missed = number(abs(limit["margin"]), 2)
-                text = f"{'':<{width}} {limit['key']} {asked}: {reached}, missed by {missed}"
-                yield Line(text, colour=MUTED, **mono)
+            if limit["status"].startswith("pass") or limit["value"] is None:
+                continue
+            reached = metric_value(limit.get("metric") or "", limit["value"])
+            asked = metric_value(limit.get("metric") or "", limit["limit"])
+            missed = f"missed by {number(abs(limit['margin']), 2)}"
+            said = missed if limit["status"] == "fail" else "undecided"
+            text = f"{'':<{width}} {limit['key']} {asked}: {reached}, {said}"
+            yield Line(text, colour=MUTED, **mono)
     if any(a.get("today") for a in study.arms):
         yield Line("* in use today; saved: against the fully sampled scan", 8.0, colour=MUTED)
     notes = dict.fromkeys((a.get("verdict") or {}).get("confidence") for a in study.arms)
@@ -166,12 +168,8 @@ def _doubts(study: StudyFolder) -> Iterator[Line]:
         for finding in scan.get("findings") or []:
             text = f"{name}: {finding['what']} ({finding['where']}); {finding['bias']}. "
             yield from _wrapped(f"{text}{finding['advice']}.", _COLUMNS)
-    for arm in study.arms:
-        done = arm.get("certificates") or {}
-        if done.get("reached", 0) < done.get("of", 0):
-            short = done["of"] - done["reached"]
-            text = f"{arm['label']}: {short} of {done['of']} recoveries stopped short of their "
-            yield from _wrapped(f"{text}tolerance. {done.get('note', '')}", _COLUMNS)
+    for row in unreached(study):
+        yield from _wrapped(f"{row['label']}: {'; '.join(row['told'])}.", _COLUMNS)
     for arm_label, scan_name in unfinished(study):
         yield from _wrapped(f"Not finished: {arm_label} on {scan_name}.", _COLUMNS)
     for note in study.results.get("notes") or []:

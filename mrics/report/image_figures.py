@@ -12,6 +12,8 @@ from mrics.report.colours import MUTED, signed_map
 from mrics.report.style_figures import figure_style, new_figure
 from mrics.report.words import number
 
+# Larger than elsewhere: on paper these figures are drawn smaller than others.
+_FONT = 10.0
 _FACTORS = (1, 2, 5, 10, 20, 50, 100)
 
 
@@ -82,9 +84,9 @@ def panel_figure(
 ) -> Any:
     """Figure of :func:`draw_panels`."""
     shape = rows[0].reference.shape
-    panel = min(2.05 * shape[0] * aspect / shape[1], 3.2)
+    panel = min(2.05 * shape[0] * aspect / shape[1], 2.5)
     with figure_style():
-        figure = new_figure(7.2, len(rows) * (panel + 0.3) + 0.75)
+        figure = new_figure(7.2, len(rows) * (panel + 0.1) + 0.9)
         draw_panels(figure, rows, window, aspect, ends)
     return figure
 
@@ -116,15 +118,17 @@ def draw_panels(
         grey = _row(axes, row, window, aspect)
         _end_letters(axes[0], ends)
     for axes, name in zip(grid[0], ("reference", "recovered", "error"), strict=True):
-        axes.set_title(name if name != "error" else f"error ×{window.factor}")
+        text = name if name != "error" else f"error ×{window.factor}"
+        axes.set_title(text, fontsize=_FONT)
     scale = {"orientation": "horizontal", "shrink": 0.75, "aspect": 30, "pad": 0.02}
     bar = figure.colorbar(grey[0], ax=grid[:, :2].ravel().tolist(), **scale)
-    bar.set_label("image value (common window)")
+    bar.set_label("image value (common window)", fontsize=_FONT)
     error_bar = figure.colorbar(grey[1], ax=grid[:, 2].tolist(), **scale)
-    error_bar.set_label("recovered − reference")
+    error_bar.set_label("recovered − reference", fontsize=_FONT)
     error_bar.set_ticks([-window.error_end, 0, window.error_end])
     error_bar.set_ticklabels([f"−{number(window.error_end)}", "0", number(window.error_end)])
     for each in (bar, error_bar):
+        each.ax.tick_params(labelsize=_FONT)
         each.outline.set_edgecolor(MUTED)
 
 
@@ -134,7 +138,7 @@ def _row(axes: Any, row: PanelRow, window: Window, aspect: float) -> tuple[Any, 
     axes[1].imshow(row.recovered, **grey)
     end = window.error_end
     error = axes[2].imshow(row.error, cmap=signed_map(), vmin=-end, vmax=end, aspect=aspect)
-    axes[0].set_ylabel(row.title, fontsize=8, rotation=0, ha="right", va="center", labelpad=6)
+    axes[0].set_ylabel(row.title, fontsize=_FONT, rotation=0, ha="right", va="center", labelpad=6)
     for one in axes:
         one.set_xticks([])
         one.set_yticks([])
@@ -162,7 +166,7 @@ def _end_letters(axes: Any, ends: tuple[str, str, str, str]) -> None:
             transform=axes.transAxes,
             ha=across,
             va=up,
-            fontsize=8,
+            fontsize=_FONT,
             color="white",
             path_effects=[withStroke(linewidth=2, foreground="black")],
         )

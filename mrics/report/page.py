@@ -16,11 +16,13 @@ from mrics.report.rendering import render, write_page
 from mrics.report.style_figures import svg_uri
 from mrics.report.summary import (
     charted_metrics,
+    exact_arms,
     first_metric,
     limits_of,
     metrics_of,
     range_marks,
     unfinished,
+    unreached,
     worst_slices,
 )
 from mrics.report.viewer_data import viewer_values
@@ -69,6 +71,8 @@ def page_values(study: StudyFolder) -> dict[str, Any]:
         "verdict": study.results.get("verdict") or {},
         "arms": arms,
         "today": today,
+        "scan_names": {s["id"]: s.get("name") or s["id"] for s in study.scans},
+        "full_times": _full_times(study),
         "metrics": metrics,
         "charted": charted,
         "marks": {m.key: range_marks(study, m) for m in metrics},
@@ -82,7 +86,7 @@ def page_values(study: StudyFolder) -> dict[str, Any]:
         "units_done": sum(1 for u in study.results["units"] if u.get("slices")),
         "units_planned": study.results.get("units_planned"),
         "unfinished": unfinished(study),
-        "unreached": _unreached(study),
+        "unreached": unreached(study),
         "provenance": study.results.get("provenance") or {},
         "timing": study.results.get("timing") or {},
     }
@@ -102,6 +106,7 @@ def _arm(study: StudyFolder, view: ArmView) -> dict[str, Any]:
         out["images"] = svg_uri(figure)
         out["images_text"] = _images_text(view.row, shown, window)
     out["worst"] = worst_slices(study, view.row["id"])
+    out["exact"] = view.row["id"] in exact_arms(study)
     if view.metrics:
         out["by_slice"] = svg_uri(by_slice(study, view.row, view.metrics))
         out["by_slice_text"] = (
@@ -109,6 +114,12 @@ def _arm(study: StudyFolder, view: ArmView) -> dict[str, Any]:
             "mean and range over draws, one curve for each scan."
         )
     return out
+
+
+def _full_times(study: StudyFolder) -> list[float]:
+    """Times of the full scan that the arms are held against, each once."""
+    times = [arm.get("full_scan_time_s") for arm in study.arms]
+    return sorted({float(time) for time in times if time is not None})
 
 
 def _images_text(arm: dict[str, Any], shown: ArmPictures, window: Window) -> str:
@@ -131,29 +142,3 @@ def _chart_text(study: StudyFolder, metrics: Any) -> str:
         ]
         parts.append(f"{metric.label}: {', '.join(values)}")
     return "Metrics against acceleration. " + ". ".join(parts) + "."
-
-
-def _unreached(study: StudyFolder) -> list[dict[str, Any]]:
-    """Arms whose recoveries did not all reach their stopping measure, or are not certified."""
-    rows = []
-    for arm in study.arms:
-        units = [u for u in study.units(arm["id"]) if u.get("certificate")]
-        open_units = [u for u in units if not u["certificate"].get("reached", True)]
-        loose = [u for u in units if not u["certificate"].get("certified", True)]
-        if not open_units and not loose:
-            continue
-        notes = {u["certificate"].get("note") for u in (open_units or loose)} - {"", None}
-        worst = max((u["certificate"].get("optimality") or 0.0 for u in open_units), default=None)
-        tolerance = next((u["certificate"].get("tolerance") for u in open_units), None)
-        rows.append(
-            {
-                "label": arm["label"],
-                "open": len(open_units),
-                "loose": len(loose),
-                "of": len(units),
-                "worst": worst,
-                "tolerance": tolerance,
-                "notes": sorted(notes),
-            }
-        )
-    return rows

@@ -36,6 +36,8 @@ class Panel:
         Columns of the table; the first one names the row.
     rows : list of tuple of str
         The numbers, written out.
+    lines : bool
+        Drawn in lines alone, so that a dark page may invert it.
     """
 
     name: str
@@ -45,6 +47,7 @@ class Panel:
     draw: Callable[[Any], None]
     head: tuple[str, ...]
     rows: list[tuple[str, ...]]
+    lines: bool = False
 
     def figure(self) -> Any:
         """The chart on a sheet of its own."""

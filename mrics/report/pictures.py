@@ -1,7 +1,7 @@
 """The images a page shows: which slices, loaded once from the stored maps.
 
 Every slice that fits is taken. Where a study is too large, the worst and the median slice of every
-arm come first, then slices spread evenly, and the page says so.
+arm and those with inserted features come first, then slices spread evenly, and the page says so.
 """
 
 from __future__ import annotations
@@ -13,6 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from mrics.report.folder import StoredMap, StudyFolder
+from mrics.report.inserted import Inserted, inserted_features, is_feature_map
 from mrics.report.summary import shown_slices
 from mrics.report.view import PlaneView
 from mrics.scan.volume import LETTERS
@@ -57,7 +58,7 @@ class ScanPictures:
     places : list of (frame, plane)
         Slices held, in order.
     important : list of int
-        Positions of the worst and median slices of the arms.
+        Positions of the worst and median slices of the arms, and of those with features.
     available : int
         Slices the study has of this scan.
     reference : ndarray of shape (slice, row, column), float32
@@ -66,6 +67,8 @@ class ScanPictures:
         In the order of the arms.
     further : list of FurtherMap
         Maps of quality measures; read when they are packed.
+    features : list of Inserted
+        Features that the study inserted.
     """
 
     entry: dict[str, Any]
@@ -77,6 +80,7 @@ class ScanPictures:
     body: NDArray[np.bool_]
     recovered: list[RecoveredStack] = field(default_factory=list)
     further: list[FurtherMap] = field(default_factory=list)
+    features: list[Inserted] = field(default_factory=list)
 
     def of_arm(self, arm: str) -> RecoveredStack | None:
         """First stored draw of an arm."""
@@ -107,7 +111,8 @@ def load_pictures(study: StudyFolder, pixel_limit: int = PIXEL_LIMIT) -> list[Sc
         reference = study.find("reference", scan["id"])
         if reference is None:
             continue
-        first = _important(study, scan, stored)
+        features = inserted_features(study, scan["id"])
+        first = _important(study, scan, stored, features)
         places = _spread(scan, first, max(2, int(keep * _slices(scan))))
         body = study.find("body", scan["id"])
         truth = _magnitude(study, reference, places)
@@ -119,6 +124,7 @@ def load_pictures(study: StudyFolder, pixel_limit: int = PIXEL_LIMIT) -> list[Sc
             _slices(scan),
             truth,
             _magnitude(study, body, places) > 0 if body else np.ones(truth.shape, dtype=bool),
+            features=features,
         )
         for one in stored:
             image = _magnitude(study, one, places)
@@ -126,18 +132,22 @@ def load_pictures(study: StudyFolder, pixel_limit: int = PIXEL_LIMIT) -> list[Sc
         shown = {(one.arm, one.draw) for one in pictures.recovered}
         for one in study.maps:
             key = (one.arm, int(one.draw or 0))
-            if one.scan == scan["id"] and one.present and one.kind not in _MAIN and key in shown:
+            measure = one.kind not in _MAIN and not is_feature_map(one.kind)
+            if one.scan == scan["id"] and one.present and measure and key in shown:
                 pictures.further.append(FurtherMap(one.kind, *key, one))
         out.append(pictures)
     return out
 
 
-def _important(study: StudyFolder, scan: dict[str, Any], stored: list[StoredMap]) -> list[Place]:
-    """Worst and median slices of every stored recovery."""
+def _important(
+    study: StudyFolder, scan: dict[str, Any], stored: list[StoredMap], features: list[Inserted]
+) -> list[Place]:
+    """Worst and median slices of every stored recovery, then those with inserted features."""
     first: dict[Place, None] = {}
     for one in stored:
         for row in shown_slices(study, one.arm, scan["id"], one.draw).values():
             first[(int(row.get("frame") or 0), int(row["index"]))] = None
+    first |= dict.fromkeys(place for one in features for place in one.places)
     return [place for place in first if place[1] in studied(scan)]
 
 

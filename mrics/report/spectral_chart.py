@@ -34,6 +34,7 @@ def panel(study: StudyFolder) -> Panel | None:
             for arm, curve in curves.items()
             for where, value in zip(*curve, strict=True)
         ],
+        lines=True,
     )
 
 

@@ -6,7 +6,7 @@ from dataclasses import dataclass
 from typing import Any
 
 from mrics.report.folder import StudyFolder
-from mrics.report.words import MetricWords, metric_words
+from mrics.report.words import MetricWords, metric_words, number, numbered
 
 _ORDER = ("nrmse", "psnr", "ssim", "hfen")
 
@@ -97,9 +97,10 @@ def metrics_of(study: StudyFolder) -> tuple[MetricWords, ...]:
 
 
 def charted_metrics(study: StudyFolder) -> tuple[MetricWords, ...]:
-    """Metrics that charts show: the four of the first page and those with limits."""
+    """Metrics that charts show: those with limits, then the rest of the four of the first page."""
     limited = {limit.metric for limit in limits_of(study)}
-    return tuple(m for m in metrics_of(study) if m.key in _ORDER or m.key in limited)
+    shown = [m for m in metrics_of(study) if m.key in _ORDER or m.key in limited]
+    return tuple(sorted(shown, key=lambda m: m.key not in limited))
 
 
 def first_metric(study: StudyFolder) -> str:
@@ -116,6 +117,16 @@ def exact_arms(study: StudyFolder) -> set[str]:
     return {a["id"] for a in study.arms if _has(a, "nrmse") and a["metrics"]["nrmse"]["max"] < 1e-4}
 
 
+def with_intervals(low: float, high: float, rows: list[dict[str, Any]]) -> tuple[float, float]:
+    """A scale widened to hold confidence intervals, by half its length on each side at most."""
+    spare = 0.5 * (high - low)
+    ends = [row["interval"][end] for row in rows if row.get("interval") for end in ("low", "high")]
+    return (
+        max(low - spare, min([low, *ends])),
+        min(high + spare, max([high, *ends])),
+    )
+
+
 def range_marks(study: StudyFolder, metric: MetricWords) -> dict[str, RangeMark]:
     """Range marks of one metric for every arm that has it, on one scale."""
     from mrics.report.words import metric_value
@@ -127,7 +138,7 @@ def range_marks(study: StudyFolder, metric: MetricWords) -> dict[str, RangeMark]
     values = [v for r in counted for v in (r["min"], r["max"])] + [x.value for x in limits]
     if not values:
         return {}
-    low, high = min(values), max(values)
+    low, high = with_intervals(min(values), max(values), counted)
     span = (high - low) or abs(high) or 1.0
 
     def place(value: float) -> float:
@@ -220,3 +231,34 @@ def worst_slices(study: StudyFolder, arm: str, count: int = 10) -> list[dict[str
     ]
     rows.sort(key=lambda r: r[key], reverse=metric_words(key).better == "low")
     return rows[:count]
+
+
+def unreached(study: StudyFolder) -> list[dict[str, Any]]:
+    """Arms whose recoveries did not all reach their stopping measure, or are not certified.
+
+    Returns
+    -------
+    list of dict
+        "label" of the arm, and "told": what its certificates say, in words.
+    """
+    rows = []
+    for arm in study.arms:
+        units = [u for u in study.units(arm["id"]) if u.get("certificate")]
+        short = [u["certificate"] for u in units if not u["certificate"].get("reached", True)]
+        loose = [u["certificate"] for u in units if not u["certificate"].get("certified", True)]
+        if not short and not loose:
+            continue
+        told = []
+        if short:
+            told.append(
+                f"{len(short)} of {numbered(len(units), 'recovery', 'recoveries')} stopped short"
+            )
+            if short[0].get("tolerance") is not None:
+                worst = max(c.get("optimality") or 0.0 for c in short)
+                asked = number(short[0]["tolerance"], 2)
+                told[0] += f" (measure {number(worst, 2)}, asked {asked})"
+        notes = sorted({c.get("note") for c in (short or loose)} - {"", None})
+        if loose and not any(str(note).startswith("not certified") for note in notes):
+            told.append("not certified")
+        rows.append({"label": arm["label"], "told": told + notes})
+    return rows

@@ -3,19 +3,22 @@
 from __future__ import annotations
 
 import base64
+from collections.abc import Callable
 from typing import Any
 
 import numpy as np
 
-from mrics.report.blocks import DIGITS, Block, ScanBlocks, pack, pack_map
+from mrics.report.blocks import DIGITS, Block, ScanBlocks, pack, pack_change, pack_map
 from mrics.report.colours import one_signed_table, signed_table
 from mrics.report.folder import StudyFolder
 from mrics.report.image_figures import Window
+from mrics.report.inserted import recovered_change, reference_change
 from mrics.report.pictures import FurtherMap, ScanPictures, load_further
 from mrics.report.summary import first_metric, metrics_of
 from mrics.report.words import map_words
 
 _LEAST_CHARACTERS = 0.25
+_FEATURE_CHARACTERS = 0.05
 
 
 def viewer_values(
@@ -37,7 +40,7 @@ def viewer_values(
         "data" for the JSON block, "blocks" as name to text, "left_out" as sentences on
         slices that the page does not hold.
     """
-    packed = [one for one in pack(pictures, text_limit) if one.recovered]
+    packed = [one for one in pack(pictures, text_limit - _kept_free(pictures)) if one.recovered]
     if not packed:
         return None
     blocks: dict[str, str] = {}
@@ -55,6 +58,7 @@ def viewer_values(
         for stack, block in zip(one.pictures.recovered, one.recovered, strict=True):
             facts = put(block) | {"arm": stack.arm, "draw": stack.draw}
             scans[-1]["images"].append(facts)
+        scans[-1]["features"] = _features(study, one, put)
     room = text_limit - sum(len(text) for text in blocks.values())
     maps, too_large = _further_maps(study, packed, room)
     for number, facts, block in maps:
@@ -76,6 +80,51 @@ def viewer_values(
         "ramp": base64.b64encode(one_signed_table().tobytes()).decode("ascii"),
     }
     return {"data": data, "blocks": blocks, "left_out": [*_left_out(packed), *too_large]}
+
+
+def _kept_free(pictures: list[ScanPictures]) -> int:
+    """Characters that changes by inserted features may take; most of their voxels are zero."""
+    voxels = sum(
+        len(one.places) * scan.reference[0].size for scan in pictures for one in scan.features
+    )
+    return int(2 * _FEATURE_CHARACTERS * voxels)
+
+
+def _features(
+    study: StudyFolder, packed: ScanBlocks, put: Callable[[Block], dict[str, Any]]
+) -> list[dict[str, Any]]:
+    """Inserted features: their sites, and what they change in reference and recovered image."""
+    held = [packed.pictures.places[p] for p in packed.positions]
+    references: dict[tuple[Any, ...], dict[str, Any]] = {}
+    out = []
+    for one in packed.pictures.features:
+        places = [place for place in one.places if place in held]
+        sites = [site for site in one.sites if site.place in places]
+        if not sites:
+            continue
+        # Arms share sites as a rule: the reference with a feature in it is then packed once.
+        key = (one.number, one.sites[0].place, one.heights, tuple(places))
+        if key not in references:
+            references[key] = put(pack_change(reference_change(study, one, places), packed.step))
+        change = pack_change(recovered_change(study, one, places), packed.step)
+        out.append(
+            {
+                "number": one.number,
+                "arm": one.arm,
+                "draw": one.draw,
+                "label": one.label,
+                "mm": max(one.feature.extent_mm),
+                "kept": float(np.mean([site.kept for site in one.sites])),
+                "positions": [held.index(place) for place in places],
+                "sites": [
+                    {"slice": held.index(s.place), "row": s.row, "column": s.column, "kept": s.kept}
+                    for s in sites
+                ],
+                "reference": references[key],
+                "change": put(change),
+            }
+        )
+    return out
 
 
 def _further_maps(
@@ -113,22 +162,30 @@ def _further_maps(
 def _one_kind(
     study: StudyFolder, found: list[tuple[int, ScanBlocks, FurtherMap]]
 ) -> list[tuple[int, dict[str, Any], Block]]:
-    """Blocks of one kind of map, on one scale for all arms of a scan."""
+    """Blocks of one kind of map, on one scale for all arms of a scan.
+
+    The scale starts at 0 unless that would leave its lowest third empty; it ends at the 99.9th
+    percentile.
+    """
     loaded: list[tuple[int, FurtherMap, Any]] = []
-    tops: dict[int, float] = {}
+    ends: dict[int, list[tuple[float, float]]] = {}
     for number, one, further in found:
         places = [one.pictures.places[p] for p in one.positions]
         values = load_further(study, further, places)
         finite = values[np.isfinite(values)]
-        top = float(np.percentile(finite, 99.9)) if finite.size else 0.0
-        tops[number] = max(tops.get(number, 0.0), top)
+        if finite.size:
+            low, top = np.percentile(finite, (0.1, 99.9))
+            ends.setdefault(number, []).append((float(low), float(top)))
         loaded.append((number, further, values))
     out = []
     for number, further, values in loaded:
-        top = tops[number] or 1.0
-        facts = {"kind": further.kind, "label": map_words(further.kind), "top": top}
+        low = min((end[0] for end in ends.get(number, [])), default=0.0)
+        top = max((end[1] for end in ends.get(number, [])), default=0.0)
+        low = low if low > top / 3 else 0.0
+        top = top if top > low else low + 1.0
+        facts = {"kind": further.kind, "label": map_words(further.kind), "low": low, "top": top}
         facts |= {"arm": further.arm, "draw": further.draw}
-        out.append((number, facts, pack_map(values, top)))
+        out.append((number, facts, pack_map(values, low, top)))
     return out
 
 
@@ -176,7 +233,8 @@ def _left_out(packed: list[ScanBlocks]) -> list[str]:
     return [
         f"{one.pictures.entry.get('name') or one.pictures.entry['id']}: {len(one.positions)} of "
         f"{one.pictures.available} slices are in this page (worst and median slices of every arm "
-        "first, others spread evenly); all are in the study's stored maps."
+        "and those with inserted features first, others spread evenly); all are in the study's "
+        "stored maps."
         for one in packed
         if len(one.positions) < one.pictures.available
     ]

@@ -85,15 +85,17 @@ def number(value: Any, digits: int = 3) -> str:
     return text.replace("-", "−")
 
 
-def metric_value(key: str, value: Any) -> str:
-    """A metric's value: PSNR to 0.1 dB, similarities to 3 places, errors to 3 digits."""
+def metric_value(key: str, value: Any, digits: int = 3) -> str:
+    """A metric's value: similarities to 3 places, others to 3 digits, rounding errors as such."""
     if value is None:
         return "–"
+    if key == "psnr" and float(value) > 100:
+        return ">100"
     if metric_words(key).better == "low" and 0 < abs(float(value)) < 1e-4:
         return "<0.0001"
     if key.endswith("ssim") and abs(float(value)) <= 1:
         return f"{float(value):.3f}".replace("-", "−")
-    return number(value, 3)
+    return number(value, digits)
 
 
 def clock(seconds: Any) -> str:
@@ -123,6 +125,8 @@ def settings_text(settings: Any) -> str:
         if key in ("name", "acceleration") or value is None or value in ({}, []):
             continue
         shown = f"{value:g}" if isinstance(value, float) else value
+        if isinstance(value, bool):
+            shown = "yes" if value else "no"
         if isinstance(value, (list, tuple)):
             shown = " × ".join(str(v) for v in value)
         parts.append(f"{key.replace('_', ' ')} {shown}")

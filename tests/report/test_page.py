@@ -162,7 +162,7 @@ def test_unreached_certificates_are_listed(own_study: Path) -> None:
     }
     change(own_study, units=results["units"])
     page = write_report(own_study).read_text()
-    assert "1 of 2 units stopped short" in page
+    assert "1 of 2 recoveries stopped short (measure 0.0030, asked 0.00010)" in page
     assert "stopped at 60 iterations" in page
 
 

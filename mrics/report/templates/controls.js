@@ -132,6 +132,10 @@ function useScan(number) {
   if (!kinds.some(([kind]) => kind === state.map)) state.map = "";
   fill($("v-map"), [["", "none"], ...kinds], state.map);
   $("v-map-label").hidden = kinds.length === 0;
+  const features = [...new Map(s.features.map((f) => [f.number, f.label]))].sort(([a], [b]) => a - b);
+  if (!features.some(([n]) => n === state.feature)) state.feature = 0;
+  fill($("v-feature"), [[0, "none"], ...features], state.feature);
+  $("v-features").hidden = features.length === 0;
   $("v-slice").max = s.slices.length - 1;
   $("v-slice").disabled = s.slices.length < 2;
   const [low, high] = state.windows[number];
@@ -262,7 +266,7 @@ const KEYS = {
   Home: () => goTo(0), End: () => goTo(scan().slices.length - 1),
   ArrowLeft: () => sideways(-1), ArrowRight: () => sideways(1), " ": flip,
   1: () => useMode("side"), 2: () => useMode("flip"), 3: () => useMode("swipe"), 4: () => useMode("overlay"),
-  w: () => goToRanked(0), m: () => goToRanked(0.5),
+  f: () => nextSite(1), w: () => goToRanked(0), m: () => goToRanked(0.5),
   e: () => useFactor(FACTORS[(FACTORS.indexOf(state.factor) + 1) % FACTORS.length]),
   "[": () => scaleWindow(0.8, 0), "]": () => scaleWindow(1.25, 0),
   ",": () => scaleWindow(1, 0.05), ".": () => scaleWindow(1, -0.05),
@@ -287,6 +291,33 @@ function key(event) {
 function goToRanked(share) {
   const order = ranked(state.arm);
   if (order.length) goTo(order[Math.floor(share * order.length)]);
+}
+
+// Put a feature into the images and go to its first site.
+function useFeature(number) {
+  state.feature = number;
+  state.site = -1;
+  $("v-feature").value = number;
+  if (number) nextSite(1);
+  else setZoom(1);
+}
+
+function nextSite(step) {
+  const facts = featureOf(state.arm);
+  if (!facts) {
+    const first = scan().features.find((f) => f.arm === state.arm);
+    if (first && !state.feature) useFeature(first.number);
+    else say("This feature was not inserted for this arm.");
+    refresh();
+    return;
+  }
+  state.site = (state.site + step + facts.sites.length) % facts.sites.length;
+  const site = facts.sites[state.site];
+  state.zoom = Math.max(state.zoom, 3);
+  state.centre = [(site.column + 0.5) / scan().columns, (site.row + 0.5) / scan().rows];
+  setZoom(state.zoom);
+  goTo(site.slice, false);
+  say(`site ${state.site + 1}: ${Math.round(100 * site.kept)} % kept`);
 }
 
 // Some maps are measured in few slices: go to the nearest one that has values.
@@ -331,6 +362,8 @@ function startViewer() {
   on("v-other", "change", (e) => { state.other = e.target.value; state.turn = 0; refresh(); });
   on("v-draw", "change", (e) => { state.draw = Number(e.target.value); refresh(); });
   on("v-map", "change", (e) => { state.map = e.target.value; showMeasured(); });
+  on("v-feature", "change", (e) => useFeature(Number(e.target.value)));
+  on("v-site", "click", () => nextSite(1));
   on("v-metric", "change", (e) => { state.metric = e.target.value; refresh(); });
   on("v-slice", "input", (e) => goTo(Number(e.target.value), false));
   on("v-worst", "click", () => goToRanked(0));

@@ -11,11 +11,11 @@ const signed = (() => {
   return Uint32Array.from({ length: 255 }, (_, i) => packed(bytes[3 * i], bytes[3 * i + 1], bytes[3 * i + 2]));
 })();
 
-// Colours of measures: entry 0 (grey) where there is no value, then cividis.
+// Colours of measures: entry 0 (black) where there is no value, then viridis.
 const measureColours = (() => {
   const bytes = Uint8Array.from(atob(study.ramp), (c) => c.charCodeAt(0));
   const colours = Uint32Array.from({ length: 256 }, (_, i) => packed(bytes[3 * i], bytes[3 * i + 1], bytes[3 * i + 2]));
-  colours[0] = packed(70, 74, 78);
+  colours[0] = packed(0, 0, 0);
   return colours;
 })();
 
@@ -49,9 +49,9 @@ class Raster {
   }
 
   // Magnitude: reference numbers plus, for a recovered image, its differences.
-  grey(levels, truth, change, start) {
+  grey(levels, truth, change) {
     for (let i = 0; i < this.pixels.length; i += 1) {
-      const number = truth[start + i] + (change ? change[start + i] : 0);
+      const number = truth[i] + (change ? change[i] : 0);
       const g = levels[number];
       this.pixels[i] = packed(g, g, g);
     }
@@ -59,26 +59,26 @@ class Raster {
   }
 
   // Signed difference of two stacks (the second may be null), full colour at +-end.
-  difference(change, less, step, end, start) {
+  difference(change, less, step, end) {
     const scale = 127 * step / end;
     for (let i = 0; i < this.pixels.length; i += 1) {
-      const d = change[start + i] - (less ? less[start + i] : 0);
+      const d = change[i] - (less ? less[i] : 0);
       this.pixels[i] = signed[Math.max(0, Math.min(254, Math.round(127 + d * scale)))];
     }
     return this.finish();
   }
 
   // A measure of quality, its numbers from 0 (none) to 255.
-  measure(numbers, start) {
-    for (let i = 0; i < this.pixels.length; i += 1) this.pixels[i] = measureColours[numbers[start + i]];
+  measure(numbers) {
+    for (let i = 0; i < this.pixels.length; i += 1) this.pixels[i] = measureColours[numbers[i]];
     return this.finish();
   }
 
   // Magnitude with the error laid over it, opaque at +-end and clear at 0.
-  overlay(levels, truth, change, step, end, start) {
+  overlay(levels, truth, change, step, end) {
     for (let i = 0; i < this.pixels.length; i += 1) {
-      const d = change[start + i];
-      const g = levels[truth[start + i] + d];
+      const d = change[i];
+      const g = levels[truth[i] + d];
       const share = Math.min(1, Math.abs(d) * step / end);
       const tint = d < 0 ? BLUE : ORANGE;
       this.pixels[i] = packed(

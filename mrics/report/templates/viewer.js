@@ -7,6 +7,7 @@ const FACTORS = [1, 2, 5, 10, 20, 50, 100];
 const state = {
   scan: 0, arm: "", other: "", draw: 0, slice: 0, mode: "side", turn: 0, edge: 0.5,
   zoom: 1, centre: [0.5, 0.5], factor: study.factor, metric: study.metric, map: "", probe: null,
+  feature: 0, site: 0,
   windows: study.scans.map((s) => [...s.window]),
 };
 let panels = [];
@@ -23,6 +24,10 @@ const imageOf = (arm) => {
 const mapOf = (arm) => {
   const of = scan().maps.filter((m) => m.kind === state.map && m.arm === arm);
   return of.find((m) => m.draw === state.draw) || of[0];
+};
+const featureOf = (arm) => {
+  const of = scan().features.filter((f) => f.number === state.feature && f.arm === arm);
+  return of.find((f) => f.draw === imageOf(arm).draw) || null;
 };
 const errorEnd = () => (scan().window[1] - scan().window[0]) / state.factor;
 
@@ -68,7 +73,7 @@ function plan() {
   const list = [["reference", "truth"], [other ? `first: ${name}` : name, "image", arm]];
   const measures = [arm, other].filter((a) => a && mapOf(a)).map((a) => {
     const whose = other ? `${a === arm ? "first" : "second"}: ` : "";
-    return [`${whose}${mapOf(a).label}, 0 to ${plain(mapOf(a).top)}`, "measure", a];
+    return [`${whose}${mapOf(a).label}, ${plain(mapOf(a).low)} to ${plain(mapOf(a).top)}`, "measure", a];
   });
   const scale = `×${state.factor}`;
   if (!other) return [...list, [`error ${scale}`, "error", arm], ...measures];
@@ -77,6 +82,32 @@ function plan() {
     [`first: error ${scale}`, "error", arm],
     [`second: error ${scale}`, "error", other],
     ...measures];
+}
+
+// Lattice numbers of the slice in view: reference, changes by arm, measures by arm. A chosen feature
+// is added to reference and recovered images where every arm in view has it.
+async function numbersInView(arms) {
+  const s = scan();
+  const size = s.rows * s.columns;
+  const part = async (facts, position) => (await numbersOf(facts)).subarray(position * size, (position + 1) * size);
+  const view = { truth: await part(s.reference, state.slice), change: {}, measured: {}, feature: false };
+  const position = state.slice;
+  for (const arm of arms) {
+    view.change[arm] = await part(imageOf(arm), position);
+    if (mapOf(arm)) view.measured[arm] = await part(mapOf(arm), position);
+  }
+  const found = arms.map((arm) => featureOf(arm));
+  if (!found.every((f) => f && f.positions.includes(position))) return view;
+  const added = await part(found[0].reference, found[0].positions.indexOf(position));
+  // A dark feature cannot take a magnitude below zero.
+  const before = view.truth;
+  view.truth = before.map((v, i) => Math.max(0, v + added[i]));
+  for (const [n, arm] of arms.entries()) {
+    const own = await part(found[n].change, found[n].positions.indexOf(position));
+    view.change[arm] = view.change[arm].map((v, i) => Math.max(0, before[i] + v + own[i]) - view.truth[i]);
+  }
+  view.feature = true;
+  return view;
 }
 
 // Canvases are made again only when the number of panels or the grid changes.
@@ -101,7 +132,7 @@ function layPanels(wanted) {
     const frame = element("div", { className: "frame" }, canvas, cross, ...ends);
     frame.style.aspectRatio = `${across} / ${down}`;
     const title = element("p", { className: "panel-title" });
-    return { canvas, cross, title, box: element("div", { className: "panel" }, title, frame) };
+    return { canvas, cross, frame, title, box: element("div", { className: "panel" }, title, frame) };
   });
   stage.replaceChildren(...panels.map((p) => p.box));
 }
@@ -110,45 +141,42 @@ async function draw() {
   waiting = false;
   const s = scan();
   const wanted = plan();
-  const arms = [...new Set(wanted.flatMap(([, , a, b]) => [a, b]).filter(Boolean))];
-  const choice = () => JSON.stringify([state.scan, state.arm, state.other, state.draw, state.map]);
+  const arms = [state.arm, state.other].filter((a, n, all) => a && all.indexOf(a) === n);
+  const choice = () => JSON.stringify([state.scan, state.arm, state.other, state.draw, state.map, state.slice, state.feature]);
   const marks = choice();
-  const truth = await numbersOf(s.reference);
-  const change = {};
-  for (const arm of arms) change[arm] = await numbersOf(imageOf(arm));
-  const measured = {};
-  for (const arm of arms) if (mapOf(arm)) measured[arm] = await numbersOf(mapOf(arm));
+  const { truth, change, measured, feature } = await numbersInView(arms);
+  // Something was chosen meanwhile: another drawing is on its way.
   if (marks !== choice()) return;
   layPanels(wanted);
   const [low, high] = state.windows[state.scan];
   const levels = greyLevels(s.step, low, high);
-  const start = state.slice * s.rows * s.columns;
   const rect = viewRect(s.rows, s.columns, state.zoom, state.centre);
   wanted.forEach(([title, kind, a, b], index) => {
     const raster = rasters[index];
     const { canvas } = panels[index];
-    if (kind === "truth") raster.grey(levels, truth, null, start);
-    else if (kind === "image" || kind === "swipe") raster.grey(levels, truth, change[a], start);
-    else if (kind === "measure") raster.measure(measured[a], start);
-    else if (kind === "error") raster.difference(change[a], null, s.step, errorEnd(), start);
-    else if (kind === "between") raster.difference(change[a], change[b], s.step, errorEnd(), start);
-    else raster.overlay(levels, truth, change[a], s.step, errorEnd(), start);
+    if (kind === "truth") raster.grey(levels, truth, null);
+    else if (kind === "image" || kind === "swipe") raster.grey(levels, truth, change[a]);
+    else if (kind === "measure") raster.measure(measured[a]);
+    else if (kind === "error") raster.difference(change[a], null, s.step, errorEnd());
+    else if (kind === "between") raster.difference(change[a], change[b], s.step, errorEnd());
+    else raster.overlay(levels, truth, change[a], s.step, errorEnd());
     drawRaster(canvas, raster.canvas, rect);
     if (kind === "swipe") {
-      const left = rasters[wanted.length].grey(levels, truth, b ? change[b] : null, start);
+      const left = rasters[wanted.length].grey(levels, truth, b ? change[b] : null);
       drawRaster(canvas, left, rect, 0, state.edge);
       const context = canvas.getContext("2d");
       context.fillStyle = "#e69f00";
       context.fillRect(Math.round(state.edge * canvas.width) - 1, 0, 3, canvas.height);
     }
-    const plane = (numbers) => numbers.subarray(start, start + s.rows * s.columns);
-    const empty = kind === "measure" && !plane(measured[a]).some((n) => n > 0);
-    panels[index].title.textContent = empty ? `not measured in this slice: ${title}` : title;
+    const empty = kind === "measure" && !measured[a].some((n) => n > 0);
+    const named = feature && kind !== "measure" ? `${title}, with feature` : title;
+    panels[index].title.textContent = empty ? `not measured in this slice: ${title}` : named;
     canvas.setAttribute("role", "img");
     canvas.setAttribute("aria-label", `${title}, ${s.name}, ${sliceName(state.slice)}`);
   });
   drawScales(low, high);
   showProbe(truth, change, measured);
+  showRings(rect, feature);
   showTrack();
   stage.dataset.painted = [s.id, state.slice, state.mode, state.turn].join(" ");
 }
@@ -185,7 +213,7 @@ function drawScales(low, high) {
     const image = context.createImageData(255, 1);
     new Uint32Array(image.data.buffer).set(measureColours.subarray(1));
     for (let row = 0; row < bar.height; row += 1) context.putImageData(image, 0, row);
-    $("v-map-ends").textContent = `0 to ${plain(mapOf(state.arm).top)}, grey: no value`;
+    $("v-map-ends").textContent = `${plain(mapOf(state.arm).low)} to ${plain(mapOf(state.arm).top)}, black: no value`;
   }
   $("v-grey-ends").textContent = `${plain(low)} to ${plain(high)}`;
   $("v-error-ends").textContent = `−${plain(errorEnd())} to +${plain(errorEnd())} (window ×${state.factor})`;
@@ -206,7 +234,7 @@ function showProbe(truth, change, measured) {
     cross.style.left = `${100 * (column + 0.5 - rect.left) / rect.width}%`;
     cross.style.top = `${100 * (row + 0.5 - rect.top) / rect.height}%`;
   }
-  const at = state.slice * s.rows * s.columns + row * s.columns + column;
+  const at = row * s.columns + column;
   const index = voxel(row, column);
   const mm = worldOf(row, column).map((x) => x.toFixed(1).replace("-", "−"));
   const parts = [`i ${index.i}, j ${index.j}, k ${index.k}`, `${mm.join(", ")} mm`, `reference ${plain(truth[at] * s.step, 4)}`];
@@ -217,11 +245,37 @@ function showProbe(truth, change, measured) {
     parts.push(`${armName(arm)} ${plain((truth[at] + change[arm][at]) * s.step, 4)}, error ${sign}${plain(error, 3)} (${sign}${plain(100 * error / s.largest, 2)} % of the largest)`);
     if (measured[arm]) {
       const number = measured[arm][at];
-      const value = number ? plain((number - 1) / 254 * mapOf(arm).top, 3) : "no value";
+      const { low, top } = mapOf(arm);
+      const value = number ? plain(low + (number - 1) / 254 * (top - low), 3) : "no value";
       parts.push(`${mapOf(arm).label} ${value}`);
     }
   }
   $("v-read").textContent = parts.join("  ·  ");
+}
+
+// Rings around the sites of the chosen feature, beside the pixels and not in them.
+function showRings(rect, shown) {
+  const s = scan();
+  const facts = shown ? featureOf(state.arm) : null;
+  const sites = facts ? facts.sites.filter((site) => site.slice === state.slice) : [];
+  const across = facts ? 100 * (2 * facts.mm / s.columnMm + 4) / rect.width : 0;
+  for (const { frame } of panels) {
+    frame.querySelectorAll(".ring").forEach((ring) => ring.remove());
+    frame.append(...sites.map((site) => {
+      const ring = element("i", { className: site === facts.sites[state.site] ? "ring at" : "ring" });
+      ring.style.left = `${100 * (site.column + 0.5 - rect.left) / rect.width}%`;
+      ring.style.top = `${100 * (site.row + 0.5 - rect.top) / rect.height}%`;
+      ring.style.width = `${across}%`;
+      return ring;
+    }));
+  }
+  const site = facts && facts.sites[state.site];
+  $("v-site-text").textContent = facts
+    ? [state.arm, state.other].filter(Boolean).map((arm) => {
+      const own = featureOf(arm).sites[state.site];
+      return `${state.other ? `${armName(arm)}: ` : ""}${Math.round(100 * own.kept)} % of its contrast kept here, ${Math.round(100 * featureOf(arm).kept)} % on average`;
+    }).join("; ") + `; site ${state.site + 1} of ${facts.sites.length}${site.slice === state.slice ? "" : " is in another slice"}`
+    : "";
 }
 
 function voxel(row, column) {
