@@ -18,6 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from mrics.encoding import Acquisition
+from mrics.encoding.sensitivities import with_sensitivities
 from mrics.numerics import centred_fft, centred_ifft, map_blocks
 from mrics.recovery import check_settings, frozen, recover
 
@@ -49,6 +50,8 @@ class Chain:
         Noise level the recovery works with: the data's own, or the floor where that is 0.
     settings : dict
         With the weight that was chosen.
+    phase_free : bool
+        Whether the sensitivities were estimated here, which leaves the phase of images to them.
     runs : int
         Recoveries of the whole stack done so far, the first included.
     seconds : float
@@ -57,6 +60,10 @@ class Chain:
 
     def __init__(self, acquisition: Acquisition, method: str, **settings: Any) -> None:
         started = perf_counter()
+        self.phase_free = acquisition.channels > 1 and acquisition.sensitivities is None
+        if self.phase_free:
+            # Estimated once and kept: a change of the object reaches every channel through them.
+            acquisition = with_sensitivities(acquisition)
         first = recover(acquisition, method, **settings)
         self.seconds = perf_counter() - started
         checked = check_settings(method, settings)

@@ -126,7 +126,9 @@ def feature_retention(
     if allowed.dtype == bool:
         allowed = tissue(reference, allowed)
     signal = smoothed(np.abs(reference).astype(np.float64), 2.0)
-    phase = _unit(smoothed(reference, 1.0)) if np.iscomplexobj(reference) else None
+    # Where the chain's own sensitivities set the phase, a feature takes that of the image.
+    phased = chain.base if chain.phase_free else reference
+    phase = _unit(smoothed(phased, 1.0)) if np.iscomplexobj(phased) else None
     placed = []
     for feature in features:
         radii = feature.radii(voxel_mm)

@@ -1,8 +1,10 @@
 """Inserted features: shape, place, and what is left of them."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
-from chains import acquire, body, full, phantom
+from chains import acquire, body, coils, full, phantom
 from scipy.special import j1
 
 from mrics.errors import QualityError
@@ -56,6 +58,18 @@ def test_full_sampling_keeps_everything():
         np.testing.assert_allclose(result.size_mm, result.inserted_mm, rtol=1e-6)
         assert result.displacement_mm.max() < 1e-6
     assert result.size_mm.mean() == pytest.approx(1.5, abs=0.2)
+
+
+def test_channels_with_estimated_sensitivities_keep_everything_too():
+    """Full sampling, sensitivities left to the chain: features come back in every channel."""
+    image, maps = phantom((1, 64, 48)), coils(64, 48)
+    pattern = Pattern(np.ones(64, dtype=bool), calibration=(24,))
+    acquisition = acquire(image, pattern, sensitivities=maps)
+    chain = Chain(replace(acquisition, sensitivities=None), "least-squares")
+    given = np.abs(image) * np.sqrt((np.abs(maps[0]) ** 2).sum(axis=0))
+    features = [Feature("disc", 3.0, 20.0), Feature("disc", 5.0, -30.0)]
+    for result in feature_retention(chain, given, features, MM, region=body((1, 64, 48))):
+        np.testing.assert_allclose(result.retained, 1.0, atol=0.05)
 
 
 def test_a_disc_is_as_wide_as_it_was_made():

@@ -57,13 +57,15 @@ def test_caution_stands_first_and_last(page: str) -> None:
 
 def test_question_and_answer_come_before_everything_else(page: str, small_study: Path) -> None:
     results = read_results(small_study)
+    assert page.index(results["protocol"]["question"]) < page.index("<main>")
+    main = page[page.index("<main>") :]
     where = [
-        page.index(text)
+        main.index(text)
         for text in (
-            results["protocol"]["question"],
             results["verdict"]["sentence"].split(";")[0],
             "<table",
             "What weakens this answer",
+            "Look for yourself",
             "What acceleration costs",
             "Arm by arm",
             "Where this comes from",
