@@ -110,6 +110,12 @@ def plan(
     page: Annotated[
         Path | None, typer.Option("--page", help="Also draw the patterns, as a page written here.")
     ] = None,
+    rank: Annotated[
+        bool,
+        typer.Option(
+            "--rank", help="Also rank the patterns by small features; reads the first scan."
+        ),
+    ] = False,
 ) -> None:
     """Lines acquired, achieved R and scan time of every arm, without touching image data.
 
@@ -121,10 +127,17 @@ def plan(
 
     study_plan = plan_study(load_protocol(protocol))
     typer.echo(plan_table(study_plan))
+    ranking = None
+    if rank:
+        from mrics.cli.tables import ranking_table
+        from mrics.study import rank_plan
+
+        ranking = rank_plan(study_plan)
+        typer.echo(f"\n{ranking_table(ranking)}")
     if page is not None:
         from mrics.report import write_plan_page
 
-        typer.echo(f"\npage: {write_plan_page(study_plan, page)}")
+        typer.echo(f"\npage: {write_plan_page(study_plan, page, ranking)}")
     typer.echo(RESEARCH_ONLY)
 
 

@@ -11,7 +11,7 @@ from mrics.protocol import minutes
 if TYPE_CHECKING:
     from mrics.scan import Scan
     from mrics.scan.fitness import Inspection
-    from mrics.study import Difference, StudyPlan
+    from mrics.study import Difference, Ranking, StudyPlan
     from mrics.study.as_is import Optimism
 
 WIDTH = 100
@@ -45,6 +45,39 @@ def plan_table(plan: StudyPlan) -> str:
         lines.append("  ".join(cells).rstrip())
     for text in plan.findings():
         lines += textwrap.wrap(f"note: {text}", WIDTH, subsequent_indent="      ")
+    return "\n".join(lines)
+
+
+def ranking_table(ranking: Ranking) -> str:
+    """Every pattern's d' and rank for both tasks, with the d' of noise alone below it."""
+    tasks = ranking.tasks()
+    number = max(len(row["pattern"]) for row in ranking.rows)
+    name = max(14, min(number, WIDTH - 6 - 12 * len(tasks)))
+    lines = textwrap.wrap(
+        "Ideal observer on the data themselves, no recovery: d' and rank of every pattern "
+        f"(first draw; features of {ranking.contrast:g} %; background and noise of "
+        f"{ranking.scan}, sigma {ranking.sigma:.3g}; {ranking.channels} channel(s))",
+        WIDTH,
+    )
+    kinds = list(dict.fromkeys(kind for kind, _ in tasks))
+    sizes = [size for kind, size in tasks if kind == kinds[0]]
+    lines.append((" " * (name + 6) + "".join(k.center(12 * len(sizes)) for k in kinds)).rstrip())
+    heads = "".join(f"{size:g} mm".rjust(12) for _, size in tasks)
+    lines.append(f"{'pattern'.ljust(name)}{'R'.rjust(6)}{heads}")
+    for pattern, rows in ranking.by_pattern().items():
+        short = pattern if len(pattern) <= name else pattern[: name - 1] + "…"
+        cells = [f"{row['d_prime']:.3g} #{row['rank']}" for row in rows]
+        lines.append(
+            f"{short.ljust(name)}{rows[0]['acceleration']:6.2f}"
+            + "".join(cell.rjust(12) for cell in cells)
+        )
+        known = "".join(f"{row['noise_only']:.3g}   ".rjust(12) for row in rows)
+        lines.append(f"{'  noise only'.ljust(name + 6)}{known}".rstrip())
+    lines += textwrap.wrap(
+        "Ranked by d' in an anatomical background. \"Noise only\" is d' in a known background: it "
+        "always prefers the centre of k-space and ranks nothing.",
+        WIDTH,
+    )
     return "\n".join(lines)
 
 

@@ -13,10 +13,10 @@ from mrics.report.style_figures import svg_uri
 from mrics.sampling.source import law_source
 
 if TYPE_CHECKING:
-    from mrics.study import PlanRow, StudyPlan
+    from mrics.study import PlanRow, Ranking, StudyPlan
 
 
-def write_plan_page(plan: StudyPlan, path: str | Path) -> Path:
+def write_plan_page(plan: StudyPlan, path: str | Path, ranking: Ranking | None = None) -> Path:
     """Write the page of pattern pictures and times.
 
     Parameters
@@ -25,6 +25,8 @@ def write_plan_page(plan: StudyPlan, path: str | Path) -> Path:
         As ``mrics.study.plan_study`` gives it.
     path : str or Path
         HTML file to write.
+    ranking : Ranking, optional
+        As ``mrics.study.rank_plan`` gives it.
 
     Raises
     ------
@@ -47,6 +49,7 @@ def write_plan_page(plan: StudyPlan, path: str | Path) -> Path:
         patterns=list(drawn.values()),
         today=today,
         findings=plan.findings(),
+        ranking=ranking,
     )
     return write_page(Path(path), text)
 

@@ -17,6 +17,8 @@ _HOME = {
     "Optimism": "as_is",
     "optimism": "as_is",
     "plan_study": "plan",
+    "Ranking": "ranking",
+    "rank_plan": "ranking",
     "recover_measured": "measured",
     "run_study": "run",
 }
@@ -26,6 +28,7 @@ __all__ = [
     "Exported",
     "Optimism",
     "PlanRow",
+    "Ranking",
     "StudyPlan",
     "add_exported_row",
     "compare_studies",
@@ -33,6 +36,7 @@ __all__ = [
     "load_results",
     "optimism",
     "plan_study",
+    "rank_plan",
     "recover_measured",
     "run_study",
 ]
