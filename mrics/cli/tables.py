@@ -195,6 +195,7 @@ def certificate_lines(content: dict[str, Any]) -> str:
         f"data: {content['channels']} channel(s), R = {content['acceleration']:.3g}",
         f"noise: sigma {content['sigma']:.4g}",
     ]
+    lines += [f"data: {text}" for text in content["notes"]]
     if one["weight"] is not None:
         lines.append(f"weight: {one['weight']:.4g} sigma ({one['weight_rule']})")
     if one["optimality"] is not None:

@@ -76,8 +76,7 @@ def recover(
         number: Any = {"weight": weight}
         chosen = replace(chosen, **number)
     result = solve(acquisition, chosen, sigma)
-    every = (*acquisition.notes, result.certificate.note, note)
-    notes = "; ".join(text for text in every if text)
+    notes = "; ".join(text for text in (result.certificate.note, note) if text)
     certificate = replace(
         result.certificate,
         weight_rule=rule or result.certificate.weight_rule,

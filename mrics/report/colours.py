@@ -61,6 +61,26 @@ def one_signed_table() -> NDArray[np.uint8]:
     return (colormaps["viridis"](np.arange(256))[:, :3] * 255 + 0.5).astype(np.uint8)
 
 
+def one_signed_map() -> Any:
+    """:func:`one_signed_table` as a matplotlib colour map."""
+    from matplotlib.colors import ListedColormap
+
+    return ListedColormap((one_signed_table() / 255.0).tolist(), name="one-signed")
+
+
+def cyclic_map() -> Any:
+    """Phase: blue and orange half turns, light at 0 and dark at half a turn, equal at both ends."""
+    from matplotlib.colors import ListedColormap
+
+    turn = np.linspace(-1.0, 1.0, 255)
+    size = np.abs(turn)
+    lightness = _LIGHTEST + (0.25 - _LIGHTEST) * size
+    chroma = _CHROMA * np.sin(np.pi * size)
+    hue = np.deg2rad(np.where(turn < 0, _HUE_LOW, _HUE_HIGH))
+    table = _srgb8(lightness, chroma * np.cos(hue), chroma * np.sin(hue))
+    return ListedColormap((table / 255.0).tolist(), name="phase")
+
+
 def _srgb8(lightness: NDArray[Any], a: NDArray[Any], b: NDArray[Any]) -> NDArray[np.uint8]:
     """OKLab to sRGB bytes (matrices of the published definition)."""
     cube = (

@@ -13,7 +13,13 @@ from typing import Any
 from mrics.report.folder import StudyFolder
 from mrics.report.style_figures import figure_style, new_figure
 
-_HOMES = ("mrics.report.feature_chart", "mrics.report.spectral_chart")
+_HOMES = (
+    "mrics.report.feature_chart",
+    "mrics.report.spectral_chart",
+    "mrics.report.sensitivity_panel",
+    "mrics.report.singular_chart",
+    "mrics.report.noise_gain_panel",
+)
 
 
 @dataclass(frozen=True)

@@ -27,6 +27,7 @@ from mrics.scan.remedies import INVENTED
 from mrics.scan.values import file_hash
 from mrics.study.code_version import code_version
 from mrics.study.prepare import PlaneChoice, Prepared, prepare
+from mrics.study.suitable import check_suitable
 from mrics.study.units import LEAST_LINES, Noise, Unit, content_key, draw_of, pattern_grid
 
 
@@ -366,6 +367,7 @@ def plan_study(protocol: Protocol, *, quick: bool = False) -> StudyPlan:
                 continue
             try:
                 played = draw_of(protocol, arm, scan_id, grid, 0)
+                check_suitable(arm.recovery, played.pattern)
             except MricsError as error:
                 if arm.search:
                     # A search chooses among what the grid can hold.

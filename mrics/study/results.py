@@ -146,6 +146,7 @@ def _arm_record(
             "certificates": {"reached": 0, "of": 0, "certified": True, "note": ""},
         }
     certificates = [u["certificate"] for u in units]
+    acquired = sorted({note for u in units for note in u["acquisition"]})
     return {
         "acceleration": float(np.mean([u["acceleration"] for u in units])),
         "acceleration_in_shutter": float(np.mean([u["acceleration_in_shutter"] for u in units])),
@@ -158,7 +159,7 @@ def _arm_record(
             "reached": sum(bool(c["reached"]) for c in certificates),
             "of": len(certificates),
             "certified": all(c["certified"] for c in certificates),
-            "note": "; ".join(sorted({c["note"] for c in certificates if c["note"]})),
+            "note": "; ".join([*acquired, *sorted({c["note"] for c in certificates if c["note"]})]),
         },
     }
 

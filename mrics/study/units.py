@@ -214,6 +214,8 @@ def _computed(unit: Unit, scan: Prepared) -> dict[str, Any]:
         "acquired": pattern.acquired,
         "pattern_hash": pattern.hash,
         "certificate": certificate,
+        "acquisition": list(acquisition.notes),
+        "noise_gain": _analytic_gain(recovered.extras, scan),
         "slices": [
             {"index": index, "frame": frame, **values}
             for (frame, index), values in zip(_places(scan), slices, strict=True)
@@ -238,6 +240,23 @@ def _computed(unit: Unit, scan: Prepared) -> dict[str, Any]:
     # The same digits whether a unit was computed now or read back.
     rounded: dict[str, Any] = plain(result)
     return rounded
+
+
+def _analytic_gain(extras: dict[str, Any], scan: Prepared) -> dict[str, Any] | None:
+    """Percentiles inside the body of the noise gain that a recovery knows of itself."""
+    gain = extras.get("noise_gain")
+    if gain is None:
+        return None
+    seen = gain[scan.body & (gain > 0)]
+    if not seen.size:
+        return None
+    shares = (5, 25, 50, 75, 95, 99)
+    found = np.percentile(seen, shares)
+    return {
+        "acceleration": extras["noise_gain_acceleration"],
+        "percentiles": {str(s): float(v) for s, v in zip(shares, found, strict=True)},
+        "largest": float(seen.max()),
+    }
 
 
 def _measure(

@@ -118,7 +118,9 @@ FEW = {
 def _pattern(method):
     if method in ("homodyne", "pocs"):
         return draw_pattern(SHAPE[2:], pattern="full", acceleration=1, partial_fourier=[0.75, 1.0])
-    return draw_pattern(SHAPE[2:], pattern="lattice", steps=[2, 1], calibration=24)
+    return draw_pattern(
+        SHAPE[2:], pattern="equispaced", steps=[2, 1], acceleration=2, calibration=24
+    )
 
 
 def _write(path, method):
