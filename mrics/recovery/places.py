@@ -131,7 +131,7 @@ def run_places(
     iterations: int,
     tolerance: float,
     hybrid: bool = False,
-    finish: Callable[[JointPenalty, int, float], None] | None = None,
+    finish: Callable[[JointPenalty, list[int], int, float], None] | None = None,
 ) -> tuple[Array, list[PlaneResult]]:
     """Minimise for every place with the weight ``threshold`` in the data's unit.
 
@@ -142,7 +142,7 @@ def run_places(
     hybrid : bool
         The penalty's symbol is a number, so that a full readout needs no transform.
     finish : callable, optional
-        Penalty, place and unit of its images, after a place is done.
+        Penalty, its frames, place and unit of its images, after a place is done.
 
     Returns
     -------
@@ -177,7 +177,7 @@ def run_places(
         best = worker.best[:, : grid[0], : grid[1]]
         np.multiply(best, worker.models[0].real.type(unit), out=image[plane : plane + frames])
         if finish is not None:
-            finish(worker.penalty, plane // frames, unit)
+            finish(worker.penalty, active, plane // frames, unit)
         return result.scaled(unit)
 
     results = each_plane(placed, make_worker, one, frames)

@@ -18,6 +18,7 @@ METHODS: dict[str, str] = {
     "unfold": "unfold",
     "zero-filled": "zero_filled",
     "least-squares": "least_squares",
+    "low-rank": "low_rank",
     "variation": "variation",
     "wavelet": "wavelet",
 }

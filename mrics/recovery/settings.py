@@ -179,6 +179,35 @@ class Variation(Settings):
 
 
 @dataclass(frozen=True)
+class LowRank(Settings):
+    """Low rank over frames.
+
+    Attributes
+    ----------
+    weight : float or "auto"
+        Weight in units of sigma; noise alone is removed at 1.5.
+    model : str
+        "local": blocks of low rank. "low-rank+sparse": the plane as a part of low rank and a part
+        of few temporal frequencies.
+    block : int
+        Side of a block in pixels, for "local".
+    sparse : float
+        Weight of the temporal frequencies relative to ``weight``, for "low-rank+sparse".
+    iterations : int or None
+        Most iterations; None for 300.
+    tolerance : float
+        Duality gap, relative to the objective, to stop at.
+    """
+
+    weight: float | str = _number("auto", 0.0, above=True, words=("auto",))
+    model: str = _choice("local", ("local", "low-rank+sparse"))
+    block: int = _number(8, 2, 512, whole=True)
+    sparse: float = _number(2.0, 0.0, above=True)
+    iterations: int | None = _number(None, 1, 100_000, whole=True, optional=True)
+    tolerance: float = _number(1e-3, 0.0, 1.0, above=True)
+
+
+@dataclass(frozen=True)
 class Unfold(Settings):
     """Unfolding of regular patterns by sensitivities; nothing to set."""
 
@@ -294,6 +323,7 @@ SETTINGS: dict[str, type[Settings]] = {
     "unfold": Unfold,
     "zero-filled": ZeroFilled,
     "least-squares": LeastSquares,
+    "low-rank": LowRank,
     "variation": Variation,
     "wavelet": Wavelet,
 }
