@@ -27,11 +27,12 @@ from typing import Any
 
 import numpy as np
 
+from mrics.encoding import frames_of
 from mrics.encoding.acquisition import Acquisition
 from mrics.errors import RecoveryError
 from mrics.recovery.contract import Recovered
 from mrics.recovery.convex import ITERATIONS, certify
-from mrics.recovery.places import JointPenalty, frames_of, run_places
+from mrics.recovery.places import JointPenalty, run_places
 from mrics.recovery.settings import LowRank
 from mrics.recovery.singular import LocalLowRank, LowRankSparse
 
@@ -49,9 +50,7 @@ def solve(acquisition: Acquisition, settings: LowRank, sigma: float) -> Recovere
             "method",
             "Give a scan with a fourth axis (frames, echoes, contrasts), or choose another method.",
         )
-    weight, rule = settings.weight, "given"
-    if isinstance(weight, str):
-        weight, rule = 0.5, "auto: 0.5 sigma"
+    weight = float(settings.weight)
     extras: dict[str, Any] = {}
     local = settings.model == "local"
     if not local:
@@ -77,7 +76,5 @@ def solve(acquisition: Acquisition, settings: LowRank, sigma: float) -> Recovere
         hybrid=True,
         finish=keep,
     )
-    recovered = certify(
-        "low-rank", image, results, settings.tolerance, weight, rule, settings.model
-    )
+    recovered = certify("low-rank", image, results, settings.tolerance, weight, settings.model)
     return replace(recovered, extras=extras)

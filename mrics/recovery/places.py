@@ -9,7 +9,7 @@ from typing import Any, Protocol
 import numpy as np
 from numpy.typing import NDArray
 
-from mrics.encoding import Encoding
+from mrics.encoding import Encoding, frames_of
 from mrics.encoding.acquisition import Acquisition
 from mrics.recovery.plane import PlaneModel, each_plane, scale_unit
 from mrics.recovery.splitting import RELAX, PlaneResult, Trace
@@ -36,12 +36,6 @@ class Reordered:
             return picked[(slice(None), *rest)] if rest else picked
         picked = np.asarray(self.source[index])
         return picked[tuple(rest)] if rest else picked
-
-
-def frames_of(acquisition: Acquisition) -> int:
-    """Frames folded into the planes (frame by frame), 1 where there is one."""
-    shape = acquisition.volume_shape
-    return int(shape[3]) if len(shape) > 3 else max(1, acquisition.pattern.frames)
 
 
 def by_place(acquisition: Acquisition) -> Acquisition:

@@ -184,8 +184,8 @@ class LowRank(Settings):
 
     Attributes
     ----------
-    weight : float or "auto"
-        Weight in units of sigma; noise alone is removed at 1.5.
+    weight : float or str
+        Weight in units of sigma, or one of ``WEIGHT_WORDS``; noise alone is removed at 1.5.
     model : str
         "local": blocks of low rank. "low-rank+sparse": the plane as a part of low rank and a part
         of few temporal frequencies.
@@ -199,7 +199,7 @@ class LowRank(Settings):
         Duality gap, relative to the objective, to stop at.
     """
 
-    weight: float | str = _number("auto", 0.0, above=True, words=("auto",))
+    weight: float | str = _weight()
     model: str = _choice("local", ("local", "low-rank+sparse"))
     block: int = _number(8, 2, 512, whole=True)
     sparse: float = _number(2.0, 0.0, above=True)

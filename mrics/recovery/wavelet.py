@@ -29,7 +29,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from mrics.encoding import Encoding
+from mrics.encoding import Encoding, frames_of
 from mrics.encoding.acquisition import Acquisition
 from mrics.numerics import stream
 from mrics.numerics.wavelets import PlaneWavelet
@@ -40,7 +40,7 @@ from mrics.recovery.frame import FrameWavelet
 from mrics.recovery.joint import JointWavelet
 from mrics.recovery.joint_kernels import shrink_groups
 from mrics.recovery.penalties import OrthonormalWavelet, bands_of, levels_for, padded_shape
-from mrics.recovery.places import JointPenalty, by_frame, by_place, frames_of, run_places
+from mrics.recovery.places import JointPenalty, by_frame, by_place, run_places
 from mrics.recovery.plane import PlaneModel, each_plane, scale_unit
 from mrics.recovery.settings import Wavelet
 from mrics.recovery.splitting import PlaneResult
