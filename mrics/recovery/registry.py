@@ -21,6 +21,7 @@ METHODS: dict[str, str] = {
     "low-rank": "low_rank",
     "variation": "variation",
     "wavelet": "wavelet",
+    "wavelet+variation": "combined",
 }
 
 

@@ -179,6 +179,34 @@ class Variation(Settings):
 
 
 @dataclass(frozen=True)
+class WaveletVariation(Settings):
+    """L1 of wavelet coefficients over all shifts, and total variation.
+
+    Attributes
+    ----------
+    weight : float or str
+        Weight of the coefficients in units of sigma, or one of ``WEIGHT_WORDS``.
+    variation : float
+        Weight of the total variation relative to ``weight``.
+    wavelet : str
+        Orthogonal wavelet.
+    levels : int or None
+        Levels; None for as many as leave at least 5 samples, at most 4.
+    iterations : int or None
+        Most iterations; None for 300.
+    tolerance : float
+        Duality gap, relative to the objective, to stop at.
+    """
+
+    weight: float | str = _weight()
+    variation: float = _number(1.0, 0.0, above=True)
+    wavelet: str = _choice("sym4", WAVELETS)
+    levels: int | None = _number(None, 1, 12, whole=True, optional=True)
+    iterations: int | None = _number(None, 1, 100_000, whole=True, optional=True)
+    tolerance: float = _number(1e-3, 0.0, 1.0, above=True)
+
+
+@dataclass(frozen=True)
 class LowRank(Settings):
     """Low rank over frames.
 
@@ -326,6 +354,7 @@ SETTINGS: dict[str, type[Settings]] = {
     "low-rank": LowRank,
     "variation": Variation,
     "wavelet": Wavelet,
+    "wavelet+variation": WaveletVariation,
 }
 
 

@@ -16,7 +16,8 @@ VARIANTS = [
     ("wavelet", {"shift": "none"}),
     ("wavelet", {"shift": "full", "tolerance": 1e-2, "weight": 0.4}),
     ("variation", {}),
-    ("variation", {"order": 2, "tolerance": 1e-2}),
+    ("variation", {"order": 2, "tolerance": 1e-2, "weight": 0.5}),
+    ("wavelet+variation", {"tolerance": 1e-2, "weight": 0.4}),
 ]
 
 
