@@ -43,7 +43,8 @@ def body_mask(volume: Scan | NDArray[Any]) -> NDArray[np.bool_]:
     """
     data = volume.data if isinstance(volume, Scan) else np.asarray(volume)
     magnitude = spatial_magnitude(usual_size(data)[0])
-    smooth = scipy.ndimage.uniform_filter(magnitude, 3, mode="nearest")
+    # The filter's running sums can leave -1e-7 where all is zero.
+    smooth = np.maximum(scipy.ndimage.uniform_filter(magnitude, 3, mode="nearest"), 0)
     level = _otsu(np.sqrt(smooth)) ** 2
     bright = smooth > level
     dark = smooth[~bright]

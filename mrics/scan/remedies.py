@@ -80,8 +80,9 @@ def acquired_region(scan: Scan, axes: Axes | None = None) -> dict[str, NDArray[n
     Returns
     -------
     dict of str to ndarray of bool
-        By axis letter, centred (zero frequency at N//2); True where k-space is not empty. Studies
-        restrict their patterns to it. A scan without phase cannot tell one-sided emptiness.
+        By axis letter, centred (zero frequency at N//2); True where k-space is not empty. The key
+        ``partial_fourier`` of a sampling table keeps patterns to it where the low side is empty.
+        A scan without phase cannot tell one-sided emptiness.
     """
     # The checks' view needs scipy.ndimage, which a plan should not wait for.
     from mrics.scan.fitness.view import PROFILE_DB, ScanView
@@ -98,6 +99,15 @@ def acquired_region(scan: Scan, axes: Axes | None = None) -> dict[str, NDArray[n
             held[: length // 2 - int(down.place)] = False
         region[LETTERS[axis]] = held
     return region
+
+
+def conjugate(scan: Scan) -> Scan:
+    """Mirror k-space (the image's complex conjugate): an empty high side becomes the low side.
+
+    Patterns with ``partial_fourier`` leave out the low side.
+    """
+    told = "conjugated, so that the empty side of k-space is the lower one"
+    return _changed(scan, told, data=np.conj(scan.data))
 
 
 def add_phase(scan: Scan, *, strength_rad: float = 2.0, seed: int = 0) -> Scan:
@@ -159,9 +169,11 @@ def remedied(scan: Scan, findings: Iterable[Finding], *, sigma: float = 0.0, see
     """The scan with every remedy that its findings name and that needs no other data.
 
     K-space is cropped to the measured matrix where it was zero-filled, a smooth phase is invented
-    where there is none, and noise is added where ``sigma`` is given and a finding asks for it.
+    where there is none, noise is added where ``sigma`` is given and a finding asks for it, and
+    k-space is mirrored where it is empty on the side that patterns cannot leave out.
     """
     found = list(findings)
+    sides = {dict(f.settings).get("empty") for f in found if f.remedy == "acquired_region"}
     crop = {}
     for finding in found:
         if finding.remedy == "crop_kspace":
@@ -169,6 +181,8 @@ def remedied(scan: Scan, findings: Iterable[Finding], *, sigma: float = 0.0, see
     asked = {finding.remedy for finding in found}
     if crop:
         scan = crop_kspace(scan, **crop)
+    if sides == {"high"}:
+        scan = conjugate(scan)
     if "add_phase" in asked and scan.complex_source == "magnitude":
         scan = add_phase(scan, seed=seed)
     if "add_noise" in asked and sigma > 0:

@@ -10,6 +10,7 @@ from scan_manipulations import as_scan, axes_of, noisy, partial_fourier, sample,
 
 from mrics.errors import ScanError
 from mrics.numerics import centred_fft
+from mrics.sampling import draw_pattern
 from mrics.scan import (
     Axes,
     Scan,
@@ -108,3 +109,26 @@ def test_acquired_region_of_partial_fourier_and_zero_filling() -> None:
     assert region["j"][-1]
     whole = acquired_region(as_scan(noisy(sample(TSE), 1.0, 0)), Axes("i", "j"))
     assert all(held.all() for held in whole.values())
+
+
+@pytest.mark.parametrize("high", [False, True])
+def test_partial_fourier_is_remedied_by_patterns_of_the_measured_side(high: bool) -> None:
+    data = partial_fourier(noisy(sample(TSE), 1.0, 0), 6 / 8, 1)
+    scan = as_scan(np.conj(data) if high else data)
+    [finding] = [f for f in inspect_scan(scan, axes_of(TSE)) if f.code == "partial-fourier"]
+    assert dict(finding.settings)["empty"] == ("high" if high else "low")
+    share = dict(finding.settings)["j"]
+    assert f"partial_fourier = {share:.3f}" in finding.advice
+    better = remedied(scan, [finding])
+    held = acquired_region(better, Axes("i", "j"))["j"]
+    # Lines that patterns leave out are the empty ones, all but one at the edge.
+    kept = draw_pattern(held.shape, law="uniform", acceleration=1 / share, partial_fourier=share)
+    assert np.count_nonzero(kept.mask != held) <= 1
+    np.testing.assert_allclose(np.abs(better.data), np.abs(scan.data))
+    assert bool(better.remedies) == high
+
+
+def test_partial_fourier_of_a_magnitude_scan_has_no_remedy() -> None:
+    data = np.abs(partial_fourier(noisy(sample(TSE), 1.0, 0), 6 / 8, 1))
+    found = {f.code: f for f in inspect_scan(as_scan(data), axes_of(TSE))}
+    assert found["partial-fourier"].remedy == ""

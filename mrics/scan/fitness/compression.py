@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from typing import Any
 
 import numpy as np
@@ -12,6 +13,8 @@ from mrics.scan.fitness.view import ScanView
 
 # 1 - smallest / second smallest detail level over the 64 positions of the grid.
 FALL = 0.2
+# Share of the largest value below which detail is rounding.
+_ROUNDING = 1e-5
 _PLANES = 5
 _LEAST_BLOCKS = 150
 _MOST_BLOCKS = 1500
@@ -62,17 +65,19 @@ def _fall(part: NDArray[Any]) -> tuple[float, tuple[int, int]]:
     order = np.argsort(levels, axis=None)
     row, column = divmod(int(order[0]), 8)
     smallest, second = levels.ravel()[order[:2]]
+    if second < _ROUNDING * np.abs(part).max():
+        return 0.0, (0, 0)
     return float(1 - smallest / second), (row, column)
 
 
 def _blocks(planes: NDArray[Any]) -> NDArray[Any]:
     """Blocks that are not constant, each flattened: shape (n, 64), evenly thinned."""
-    count = (planes.shape[1] // 8, planes.shape[2] // 8)
-    cut = planes[:, : count[0] * 8, : count[1] * 8]
-    folded = cut.reshape(len(planes), count[0], 8, count[1], 8).transpose(0, 1, 3, 2, 4)
-    blocks = folded.reshape(-1, 64)
-    blocks = blocks[:: -(-len(blocks) // _MOST_BLOCKS) or 1]
-    return blocks[np.ptp(blocks, axis=1) > 0]
+    count = (len(planes), planes.shape[1] // 8, planes.shape[2] // 8)
+    cut = planes[:, : count[1] * 8, : count[2] * 8]
+    folded = cut.reshape(count[0], count[1], 8, count[2], 8).transpose(0, 1, 3, 2, 4)
+    chosen = np.arange(0, math.prod(count), -(-math.prod(count) // _MOST_BLOCKS) or 1)
+    blocks = folded[np.unravel_index(chosen, count)].reshape(-1, 64)
+    return blocks[(blocks != blocks[:, :1]).any(axis=1)]
 
 
 def _fine_cosines() -> NDArray[np.float64]:

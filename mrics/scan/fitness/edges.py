@@ -24,13 +24,20 @@ class Edge:
         How far power falls beyond the trend on both sides, in dB.
     place : float
         Where: sample of a profile (last one before the fall), or frequency 0 ... 1 of a spectrum.
-    slope_db : float
-        Decline after the step, in dB from frequency 0 to 1 (spectra only).
+    before_db, after_db : float
+        Slope before and after the step, in dB from frequency 0 to 1 (spectra only).
+    exponent : float
+        p where the power before the step falls as frequency to the -p (spectra only).
+    sharpness : float
+        Whole fall over that which the slope before the step would have made (spectra only).
     """
 
     fall_db: float
     place: float
-    slope_db: float = 0.0
+    before_db: float = 0.0
+    after_db: float = 0.0
+    exponent: float = 0.0
+    sharpness: float = 0.0
 
 
 def _decibels(power: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -74,10 +81,19 @@ def spectrum_edge(spectrum: LineSpectrum, lowest: float, highest: float) -> Edge
             continue
         before = float(np.polyfit(inner, level[inner], 1)[0])
         after = float(np.polyfit(outer, level[outer], 1)[0])
-        fall = float(level[inner].mean() - level[outer].mean())
-        fall += (before + after) / 2 * float(outer.mean() - inner.mean())
+        whole = float(level[inner].mean() - level[outer].mean())
+        distance = float(outer.mean() - inner.mean())
+        fall = whole + (before + after) / 2 * distance
         if fall > best.fall_db:
-            best = Edge(fall, float(spectrum.frequency[at]), after / float(spectrum.frequency[1]))
+            step = float(spectrum.frequency[1])
+            best = Edge(
+                fall,
+                float(spectrum.frequency[at]),
+                before_db=before / step,
+                after_db=after / step,
+                exponent=-before * float(inner.mean()) * np.log(10) / 10,
+                sharpness=whole / max(-before * distance, 1.0),
+            )
     return best
 
 

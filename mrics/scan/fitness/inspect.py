@@ -6,6 +6,8 @@ import math
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 
+from threadpoolctl import threadpool_limits
+
 from mrics.scan.fitness.background import exact_zeros
 from mrics.scan.fitness.borders import ghosting, wrapped
 from mrics.scan.fitness.combined import root_sum_of_squares
@@ -89,7 +91,9 @@ def inspect_fully(scan: Scan, axes: Axes | None = None) -> Inspection:
         Findings, what cannot be told, SNR and noise.
     """
     view = ScanView(scan, axes if axes is not None else Axes())
-    findings = tuple(finding for check in CHECKS for finding in check(view))
+    # Products are small: waiting for threads of linear algebra would cost more than they bring.
+    with threadpool_limits(1, user_api="blas"):
+        findings = tuple(finding for check in CHECKS for finding in check(view))
     sigma = view.noise.sigma
     snr = signal(view) / sigma if sigma > 0 else float("inf")
     noise = replace(view.noise, sigma=math.ldexp(sigma, -view.exponent))

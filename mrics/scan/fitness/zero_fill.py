@@ -9,6 +9,9 @@ from mrics.scan.volume import LETTERS
 
 # Both sides of a profile must end within this share of the axis of each other.
 SYMMETRY = 0.03
+# The fall at the end of the data over what the slope before it would make: a smoothed image, whose
+# steep decline ends in the noise floor, stays below 1.5.
+LEAST_SHARPNESS = 3.0
 
 
 def zero_filled(view: ScanView) -> tuple[Finding, ...]:
@@ -44,7 +47,9 @@ def _of_profile(view: ScanView, axis: int) -> tuple[int, float, float] | None:
 def _of_detail(view: ScanView, axis: int) -> tuple[int, float, float] | None:
     spectrum = view.detail_spectrum(axis)
     edge = view.detail_edge(axis)
-    if spectrum is None or edge is None or edge.fall_db < DETAIL_DB:
+    if spectrum is None or edge is None:
+        return None
+    if edge.fall_db < DETAIL_DB or edge.sharpness < LEAST_SHARPNESS:
         return None
     share = half_power_place(spectrum, edge)
     return round(share * view.volume.shape[axis]), edge.fall_db, DETAIL_DB
