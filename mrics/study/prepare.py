@@ -18,10 +18,9 @@ from mrics.scan import (
     Finding,
     Scan,
     body_mask,
-    inspect_scan,
+    inspect_fully,
     read_labels,
     read_scan,
-    scan_sigma,
 )
 from mrics.scan.remedies import add_phase
 from mrics.study.channels import Receive, loud_channels, with_own_channels, with_simulated_channels
@@ -199,8 +198,8 @@ def _prepare(
     )
     if scan.data.ndim > 4:
         scan = loud_channels(scan)
-    findings = tuple(inspect_scan(scan, axes))
-    sigma = float(scan_sigma(scan))
+    inspection = inspect_fully(scan, axes)
+    sigma = inspection.noise.sigma
     if coils is not None and coils.phase > 0 and scan.magnitude_only:
         scan = add_phase(scan, strength_rad=coils.phase, seed=seed)
     combined = scan.data if scan.channels == 1 else root_sum_of_squares(scan.data, axis=4)
@@ -241,7 +240,7 @@ def _prepare(
         sigma=sigma,
         snr=light.total / voxels / sigma if sigma > 0 else float("inf"),
         nrmse_floor=sigma * (voxels / light.energy) ** 0.5 if light.energy > 0 else 0.0,
-        findings=findings,
+        findings=inspection.findings,
         labels=None
         if labels is None
         else np.ascontiguousarray(np.tile(labels[list(planes)], (scan.frames, 1, 1))),

@@ -17,6 +17,9 @@ GHOST = 0.025
 CERTAIN = 6.0
 # Share of a border plane that lies in the body.
 BORDER = 0.02
+# Times sigma: the mean of Rayleigh air is 1.25, and over 5 x 5 voxels it stays below 1.8.
+NOISE = 2.0
+_WIDE = 5
 _NEAREST = 0.25
 _SMOOTH = 7
 _MOST_PLANES = 48
@@ -86,7 +89,7 @@ def wrapped(view: ScanView) -> tuple[Finding, ...]:
     """The body reaches the border planes of the phase axis, so it is cut or folded over."""
     letter = view.axes.phase
     axis = LETTERS.index(letter)
-    ends = [float(np.take(view.mask, end, axis=axis).mean()) for end in (0, -1)]
+    ends = [_filled(view, axis, end) for end in (0, -1)]
     if max(ends) <= BORDER:
         return ()
     return (
@@ -101,3 +104,10 @@ def wrapped(view: ScanView) -> tuple[Finding, ...]:
             advice="Check the image for fold-over; use a field of view that holds the body.",
         ),
     )
+
+
+def _filled(view: ScanView, axis: int, end: int) -> float:
+    """Share of a border plane in the body mask and above noise by the mean of its surroundings."""
+    plane = np.take(view.magnitude, end, axis=axis)
+    bright = ndimage.uniform_filter(plane, _WIDE, mode="nearest") > NOISE * view.noise.sigma
+    return float((np.take(view.mask, end, axis=axis) & bright).mean())
