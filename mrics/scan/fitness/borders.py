@@ -109,5 +109,5 @@ def wrapped(view: ScanView) -> tuple[Finding, ...]:
 def _filled(view: ScanView, axis: int, end: int) -> float:
     """Share of a border plane in the body mask and above noise by the mean of its surroundings."""
     plane = np.take(view.magnitude, end, axis=axis)
-    bright = ndimage.uniform_filter(plane, _WIDE, mode="nearest") > NOISE * view.noise.sigma
+    bright = scipy.ndimage.uniform_filter(plane, _WIDE, mode="nearest") > NOISE * view.noise.sigma
     return float((np.take(view.mask, end, axis=axis) & bright).mean())

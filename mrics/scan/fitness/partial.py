@@ -95,8 +95,8 @@ def _one_side_empty(letter: str, share: float, fall: float, least: float, side: 
     turned = "" if side == "low" else " of the remedied scan, whose empty side is the lower one"
     return Finding(
         code="partial-fourier",
-        what=f"About {share:.2f} of k-space along {letter} was measured; its {side} side ends early "
-        f"(power falls by {fall:.0f} dB there).",
+        what=f"About {share:.2f} of k-space along {letter} was measured; its {side} side ends "
+        f"early (power falls by {fall:.0f} dB there).",
         where=f"axis {letter}",
         statistic=fall,
         threshold=least,
