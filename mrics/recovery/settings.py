@@ -299,7 +299,8 @@ class PatchDictionary(Settings):
     atoms : int
         Atoms learned.
     kind : str
-        "real": atoms that the real and imaginary part of a patch share; "complex".
+        "real": atoms that code real and imaginary part each on its own, the smooth phase taken
+        out; "complex".
     joint : bool
         Stack all frames of a place in one patch.
     gain : float or "auto"

@@ -72,7 +72,8 @@ def check_domain(
     dictionary : Dictionary
         With its training residuals.
     stack : ndarray of shape (plane, u, v)
-        Recovered or reference images.
+        Recovered or reference images, smooth phase taken out; real atoms are compared on the real
+        part.
     layout : Layout
         Of the dictionary's patches.
     noise : float
@@ -82,11 +83,9 @@ def check_domain(
     """
     _, u, v = stack.shape
     limit = float(np.quantile(dictionary.residuals, 1 - _TAIL))
-    prepared = Prepared(
-        dictionary.atoms.astype(
-            stack.dtype if np.iscomplexobj(dictionary.atoms) else stack.real.dtype
-        )
-    )
+    if not np.iscomplexobj(dictionary.atoms):
+        stack = stack.real
+    prepared = Prepared(dictionary.atoms.astype(stack.dtype))
     grid = np.stack(np.meshgrid(np.arange(0, u, stride), np.arange(0, v, stride), indexing="ij"))
     spots = grid.reshape(2, -1).T
     picture = np.zeros((len(layout.groups), u, v), np.float32)

@@ -28,17 +28,29 @@ compiled = numba.njit(
 )
 #: squared length of an atom beyond the atoms chosen, below which it counts as dependent on them
 _DEPENDENT = 1e-5
+_BLOCK = 32
 
 
 @compiled
 def _largest(power: Any) -> Any:
-    most = power[0]
-    for n in range(len(power)):
-        most = max(most, power[n])
-    for n in range(len(power)):
-        if power[n] == most:
-            return n
-    return 0
+    """First place of the largest of numbers from 0 up; maxima of blocks keep it branch-free."""
+    number = len(power)
+    whole = number - number % _BLOCK
+    best, at = power[0] * 0 - 1, 0
+    for start in range(0, whole, _BLOCK):
+        most = power[start]
+        for n in range(start + 1, start + _BLOCK):
+            most = power[n] if power[n] > most else most
+        if most > best:
+            best, at = most, start
+    for n in range(at, min(at + _BLOCK, number)):
+        if power[n] == best:
+            at = n
+            break
+    for n in range(whole, number):
+        if power[n] > best:
+            best, at = power[n], n
+    return at
 
 
 @compiled

@@ -232,7 +232,8 @@ def code_and_average(
 ) -> Averaged:
     """Code every patch of a complex stack to an error or count, and average them.
 
-    Strips of rows are spread over the threads and added in one order; a strip's codes are gone
+    ``target`` is the squared residual of a patch: of its real and its imaginary part each where
+    the atoms are real, of both together where they are complex. Strips of rows are spread over the threads and added in one order; a strip's codes are gone
     when it is done.
     """
     planes, u, v = stack.shape
@@ -243,7 +244,7 @@ def code_and_average(
     left = pv - 1 if layout.border == "reflect" else 0
     real = np.dtype(stack.dtype.type(0).real.dtype)
     total = np.zeros((planes, u + before + pu - 1, v + left + pv - 1), stack.dtype)
-    weight = np.zeros(total.shape, real)
+    weight = np.zeros(total.shape, stack.dtype)
     rows = _starts(total.shape[1], pu, layout.stride)
     cols = _starts(total.shape[2], pv, layout.stride)
     use = np.zeros(len(atoms), np.int64)
@@ -256,14 +257,14 @@ def code_and_average(
         low, high = int(some[0]), int(some[-1]) + pu
         image = padded(stack[list(layout.groups[group])], layout)[:, low:high]
         image = np.ascontiguousarray(image).view(real)
-        out, share = np.zeros_like(image), np.zeros((high - low, total.shape[2]), real)
+        out, share = np.zeros_like(image), np.zeros(image.shape[1:], real)
         counts = np.zeros(len(atoms), np.int64)
         parts = np.empty((2, len(some), len(cols)), np.float32)
         strips.denoise_strip(
             image, some - low, cols, layout.size, prepared.columns, pair, prepared.gram, limit,
             target, out, share, counts, parts[0], parts[1],
         )  # fmt: skip
-        return group, some, out.view(stack.dtype), share, counts, parts
+        return group, some, out.view(stack.dtype), share.view(stack.dtype), counts, parts
 
     tasks = [(g, f) for g in range(len(layout.groups)) for f in range(0, len(rows), _ROWS)]
     for start in range(0, len(tasks), _TASKS):
@@ -277,8 +278,16 @@ def code_and_average(
             residual[group][at], used[group][at] = parts
     if layout.border == "reflect":
         inside = (slice(None), slice(before, before + u), slice(left, left + v))
-        return Averaged(total[inside] / weight[inside], residual, used, use)
+        return Averaged(_divided(total[inside], weight[inside]), residual, used, use)
     for array in (total, weight):
         array[:, : pu - 1] += array[:, u:]
         array[:, :, : pv - 1] += array[:, :, v:]
-    return Averaged(total[:, :u, :v] / weight[:, :u, :v], residual, used, use)
+    return Averaged(_divided(total[:, :u, :v], weight[:, :u, :v]), residual, used, use)
+
+
+def _divided(total: Array, weight: Array) -> Array:
+    """Real and imaginary part each by its own weight."""
+    image = np.empty_like(total)
+    image.real = total.real / weight.real
+    image.imag = total.imag / weight.imag
+    return image

@@ -1,17 +1,21 @@
 """Recovery with a patch dictionary, learned from the data as it goes or trained before.
 
-Outer iteration t has an effective noise s_t that falls geometrically from ``START_FACTOR`` times
-the noise of the data to the noise itself (aliasing that the start left counts as noise):
+The smooth phase of the warm start (its low frequencies, over the size of the calibration region) is
+taken out. Outer iteration t has an effective noise s_t that falls geometrically from
+``START_FACTOR`` times the noise of the data to the noise itself (aliasing that the start left
+counts as noise):
 
 1. every patch, its mean apart, is coded by matching pursuit until its squared residual is below
-   2 n (gain s_t)^2, n its samples; the image d is the average of the coded patches, those of few
+   n (gain s_t)^2, n its samples: real and imaginary part each on its own over real atoms (an
+   imaginary part that holds only noise is flattened, which makes the phase a prior), both together
+   with 2 n over complex ones; the image d is the average of the coded patches, those of few
    atoms weighted higher;
 2. x minimises ||A x - y||^2 + (coupling sigma / s_t)^2 ||x - d||^2: by a division in k-space on one
    channel, by conjugate gradients from d on several.
 
 ``source = "adaptive"`` learns the atoms online from patches of the current image (Ravishankar &
-Bresler 2011, doi:10.1109/TMI.2010.2090538, with other learning and noise schedule). There is no
-fixed objective, so the result is not certified.
+Bresler 2011, doi:10.1109/TMI.2010.2090538, with other learning, phase and noise schedule). There is
+no fixed objective, so the result is not certified.
 """
 
 from __future__ import annotations
@@ -31,13 +35,14 @@ from mrics.recovery.dictionary.domain import check_domain
 from mrics.recovery.dictionary.fixed import fixed_atoms
 from mrics.recovery.dictionary.learning import learn_online
 from mrics.recovery.dictionary.patches import Averaged, Layout, choose, code_and_average, lay_out
+from mrics.recovery.dictionary.phase import smooth_phase
 from mrics.recovery.dictionary.store import Dictionary, load_dictionary
 from mrics.recovery.plane import scale_unit
 from mrics.recovery.settings import PatchDictionary, Variation, ZeroFilled
 
 Array = NDArray[Any]
 #: chosen on volume A alone
-GAIN, START_FACTOR, COUPLING = 1.0, 2.0, 1.0
+GAIN, START_FACTOR, COUPLING = 1.0, 2.0, 0.25
 _CG_STEPS = 6
 _LEARN_PATCHES, _LEARN_ATOMS = 10_000, 8
 
@@ -52,11 +57,8 @@ def solve(acquisition: Acquisition, settings: PatchDictionary, sigma: float) -> 
     image = _start(acquisition, settings, sigma)
     if not image.any():
         return Recovered(image, Certificate("dictionary", certified=False, note="all data are 0"))
-    # Real atoms see the image's own real and imaginary part: its mean phase is taken out, so that a
-    # global phase of the data changes nothing.
-    middle = complex(image.sum(dtype=np.complex128))
-    turned = unit * (middle / abs(middle) if middle else 1.0)
-    image /= image.dtype.type(turned)
+    turn = smooth_phase(image, acquisition.calibration)
+    image /= image.dtype.type(unit)
     noise = sigma / unit
     layout, atoms, known = _first_atoms(acquisition, settings)
     limit = settings.most_atoms or layout.length // 2
@@ -65,16 +67,17 @@ def solve(acquisition: Acquisition, settings: PatchDictionary, sigma: float) -> 
     number = settings.iterations
     averaged: Averaged | None = None
     prepared = None if atoms is None else Prepared(atoms)
-    for turn in range(number):
-        level = noise * START_FACTOR ** (1 - turn / max(1, number - 1))
-        target = 2 * layout.length * (gain * level) ** 2
+    for step in range(number):
+        level = noise * START_FACTOR ** (1 - step / max(1, number - 1))
+        turned = image * np.conj(turn)
         if settings.source == "adaptive":
-            atoms = _learned(image, layout, settings, atoms, target, turn)
+            atoms = _learned(turned, layout, settings, atoms, gain * level, step)
             prepared = Prepared(atoms)
         assert prepared is not None
-        averaged = code_and_average(image, prepared, layout, limit, target)
+        target = (2 if prepared.complex else 1) * layout.length * (gain * level) ** 2
+        averaged = code_and_average(turned, prepared, layout, limit, target)
         coupling = (COUPLING * noise / level) ** 2
-        fresh = data_step(acquisition, averaged.image, coupling, turned)
+        fresh = data_step(acquisition, averaged.image * turn, coupling, unit)
         change = float(np.linalg.norm(fresh - image)) / max(float(np.linalg.norm(fresh)), 1e-30)
         image = fresh
         history["change"].append(change)
@@ -96,7 +99,7 @@ def solve(acquisition: Acquisition, settings: PatchDictionary, sigma: float) -> 
         f"{averaged.mean_atoms:.1f} atoms per patch at the last error target"
     )
     if known is not None and known.residuals.size:
-        verdict = check_domain(known, image, layout, noise)
+        verdict = check_domain(known, image * np.conj(turn), layout, noise)
         extras["domain"] = verdict.planes
         extras["domain_map"] = verdict.map
         note += f"; {verdict.sentence}"
@@ -109,7 +112,7 @@ def solve(acquisition: Acquisition, settings: PatchDictionary, sigma: float) -> 
         weight_rule="auto: error target of the noise" if settings.gain == "auto" else "given",
         note=note,
     )
-    image *= image.dtype.type(turned)
+    image *= image.dtype.type(unit)
     return Recovered(image, certificate, history, extras)
 
 
@@ -157,20 +160,21 @@ def _frames(acquisition: Acquisition) -> int:
 
 
 def _learned(
-    image: Array, layout: Layout, settings: PatchDictionary, atoms: Array | None,
-    target: float, turn: int,
+    turned: Array, layout: Layout, settings: PatchDictionary, atoms: Array | None,
+    level: float, step: int,
 ) -> Array:  # fmt: skip
     """Atoms taught by patches of the current image, from the last ones on."""
-    patches = choose(image, layout, _LEARN_PATCHES, settings.seed, ("recovery", turn))
-    number = settings.atoms
-    kind = image.dtype if settings.kind == "complex" else image.real.dtype
+    whole = settings.kind == "complex"
+    source = turned if whole else np.ascontiguousarray(turned.real)
+    patches = choose(source, layout, _LEARN_PATCHES, settings.seed, ("recovery", step))
     return learn_online(
-        patches, number, sparsity=_LEARN_ATOMS, error=target, passes=3 if atoms is None else 1,
-        seed=settings.seed, start=atoms, kind=kind,
+        patches, settings.atoms, sparsity=_LEARN_ATOMS,
+        error=(2 if whole else 1) * layout.length * level**2, passes=3 if atoms is None else 1,
+        seed=settings.seed, start=atoms,
     )  # fmt: skip
 
 
-def data_step(acquisition: Acquisition, denoised: Array, coupling: float, unit: complex) -> Array:
+def data_step(acquisition: Acquisition, denoised: Array, coupling: float, unit: float) -> Array:
     """Images that minimise ||A x - y / unit||^2 + coupling ||x - denoised||^2, block by block."""
     out = np.empty_like(denoised)
     real = denoised.real.dtype.type

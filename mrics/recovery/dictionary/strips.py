@@ -54,10 +54,11 @@ def denoise_strip(
     """Accumulate denoised patches of a strip.
 
     ``image`` (layer, U, 2 V) holds alternating real and imaginary parts; patches of ``size`` (u, v)
-    start at ``rows`` (within the strip) and ``places``. ``atoms`` (2, atom, n) (second half unused
-    where ``gram`` has two axes) synthesise. ``out`` (layer, U, 2 V) and ``weight`` (U, V) collect
-    patches weighted by 1 / (1 + atoms), ``use`` counts atoms; ``residual`` and ``used``
-    (row, place) receive squared residuals and atoms per patch.
+    start at ``rows`` (within the strip) and ``places``. Real atoms (``gram`` of two axes) code the
+    real and the imaginary part of a patch each on its own, complex ones both at once. ``atoms``
+    (2, atom, n) (second half unused where real) synthesise. ``out`` (layer, U, 2 V) and ``weight``
+    (U, 2 V) collect patches weighted by 1 / (1 + atoms), ``use`` counts atoms; ``residual`` and
+    ``used`` (row, place) receive squared residuals and atoms of both parts together.
     """
     turned = gram.ndim == 3
     pu, pv = size
@@ -66,7 +67,7 @@ def denoise_strip(
     number = gram.shape[-1]
     kind = image.dtype
     patch, estimate = np.empty((2, length), kind), np.empty((2, length), kind)
-    means = np.empty((2, layers), kind)
+    means, factors = np.empty((2, layers), kind), np.empty(2, kind)
     alpha, power = np.empty((2, number), kind), np.empty(number, kind)
     # Two branches: a compiled function has one type for each name on each of them.
     if turned:  # noqa: SIM108
@@ -79,37 +80,47 @@ def denoise_strip(
         for place in range(len(places)):
             u, v = rows[row], places[place]
             _centre(image, u, v, pu, pv, patch, means)
+            estimate[:, :] = 0
+            used[row, place] = 0
+            residual[row, place] = 0
             if turned:
                 count, left = pursue_one_complex(
                     patch, columns, gram, limit, target, alpha, power, q, z, chosen, values
                 )
-            else:
-                count, left = pursue_one(
-                    patch, columns, gram, limit, target, alpha, power, q, z, chosen, values
-                )
-            used[row, place] = count
-            residual[row, place] = left
-            estimate[:, :] = 0
-            for k in range(count):
-                use[chosen[k]] += 1
-                one = atoms[0, chosen[k]]
-                a, b = values[0, k], values[1, k]
-                for i in range(length):
-                    estimate[0, i] += a * one[i]
-                    estimate[1, i] += b * one[i]
-                if turned:
-                    two = atoms[1, chosen[k]]
+                used[row, place] = count
+                residual[row, place] = left
+                factors[:] = 1 / (1.0 + count)
+                for k in range(count):
+                    use[chosen[k]] += 1
+                    one, two = atoms[0, chosen[k]], atoms[1, chosen[k]]
+                    a, b = values[0, k], values[1, k]
                     for i in range(length):
-                        estimate[0, i] -= b * two[i]
-                        estimate[1, i] += a * two[i]
-            factor = image[0, 0, 0] * 0 + 1 / (1.0 + count)
+                        estimate[0, i] += a * one[i] - b * two[i]
+                        estimate[1, i] += b * one[i] + a * two[i]
+            else:
+                for part in range(2):
+                    count, left = pursue_one(
+                        patch[part : part + 1], columns, gram, limit, target, alpha, power, q, z,
+                        chosen, values,
+                    )  # fmt: skip
+                    used[row, place] += count
+                    residual[row, place] += left
+                    factors[part] = 1 / (1.0 + count)
+                    for k in range(count):
+                        use[chosen[k]] += 1
+                        one = atoms[0, chosen[k]]
+                        a = values[0, k]
+                        for i in range(length):
+                            estimate[part, i] += a * one[i]
             i = 0
             for layer in range(layers):
                 for y in range(u, u + pu):
                     for x in range(v, v + pv):
-                        out[layer, y, 2 * x] += factor * (estimate[0, i] + means[0, layer])
-                        out[layer, y, 2 * x + 1] += factor * (estimate[1, i] + means[1, layer])
+                        for part in range(2):
+                            value = estimate[part, i] + means[part, layer]
+                            out[layer, y, 2 * x + part] += factors[part] * value
                         i += 1
             for y in range(u, u + pu):
                 for x in range(v, v + pv):
-                    weight[y, x] += factor
+                    for part in range(2):
+                        weight[y, 2 * x + part] += factors[part]
