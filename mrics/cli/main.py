@@ -315,6 +315,53 @@ def inspect(
 
 
 @app.command()
+def train(
+    source: Annotated[
+        list[Path], typer.Argument(metavar="PROTOCOL|SCAN...", help="Protocol, or NIfTI files.")
+    ],
+    out: Annotated[Path, typer.Option("--out", help="Dictionary file to write (.npz).")],
+    patch: Annotated[int, typer.Option("--patch", help="Samples of a patch per side.")] = 8,
+    depth: Annotated[int, typer.Option("--depth", help="Planes of a 3-D patch.")] = 1,
+    joint: Annotated[
+        bool, typer.Option("--joint", help="Stack all frames of a place in one patch.")
+    ] = False,
+    kind: Annotated[str, typer.Option("--kind", help="real or complex atoms.")] = "real",
+    atoms: Annotated[int, typer.Option("--atoms", help="Atoms to learn.")] = 256,
+    method: Annotated[str, typer.Option("--method", help="online or k-svd.")] = "online",
+    axes: Annotated[
+        str, typer.Option("--axes", help="Readout, phase (and partition) of NIfTI files.")
+    ] = "ij",
+    seed: Annotated[int, typer.Option("--seed", min=0, help="Same seed, same file.")] = 0,
+    force: Force = False,
+) -> None:
+    """Learn a patch dictionary from fully sampled scans, for recovery = "dictionary".
+
+    Example: mrics train knee.toml --out knee-dictionary.npz
+    """
+    from mrics.cli.progress import progress_line
+    from mrics.cli.tables import dictionary_lines
+    from mrics.cli.writing import read_axes
+    from mrics.study import train as learn
+
+    with progress_line("steps") as progress:
+        learned = learn(
+            source,
+            out,
+            axes=read_axes(axes),
+            force=force,
+            progress=progress,
+            patch=patch,
+            depth=depth,
+            joint=joint,
+            kind=kind,
+            atoms=atoms,
+            method=method,
+            seed=seed,
+        )
+    typer.echo(f"dictionary: {out}\n{dictionary_lines(learned)}\n{RESEARCH_ONLY}")
+
+
+@app.command()
 def optimism(
     protocol: ProtocolFile,
     out: Annotated[Path, typer.Option("--out", help="Folder for both studies.")],

@@ -11,10 +11,10 @@ Report = Callable[[int, int, str], None]
 
 
 @contextmanager
-def progress_line() -> Iterator[Report]:
-    """A progress callback for ``run_study``: a bar on a terminal, a line every tenth elsewhere."""
+def progress_line(what: str = "units") -> Iterator[Report]:
+    """A progress callback: a bar on a terminal, a line every tenth elsewhere."""
     if not sys.stderr.isatty():
-        yield _Lines()
+        yield _Lines(what)
         return
     from rich.console import Console
     from rich.progress import (
@@ -27,7 +27,7 @@ def progress_line() -> Iterator[Report]:
     )
 
     bar = Progress(
-        TextColumn("units"),
+        TextColumn(what),
         BarColumn(),
         MofNCompleteColumn(),
         TimeElapsedColumn(),
@@ -48,7 +48,8 @@ def progress_line() -> Iterator[Report]:
 class _Lines:
     """One line at the start and at every tenth of the units, with an estimate of the time left."""
 
-    def __init__(self) -> None:
+    def __init__(self, what: str) -> None:
+        self._what = what
         self._started: float | None = None
         self._kept = 0
         self._next = 0.0
@@ -58,7 +59,7 @@ class _Lines:
         if self._started is None:
             self._started, self._kept = now, done
             kept = f", {done} kept from an earlier run" if done else ""
-            print(f"{total} units{kept}", file=sys.stderr, flush=True)
+            print(f"{total} {self._what}{kept}", file=sys.stderr, flush=True)
             self._next = done + max(1.0, (total - done) / 10)
             return
         if done < self._next and done < total:
@@ -67,7 +68,7 @@ class _Lines:
         rate = (now - self._started) / max(1, done - self._kept)
         left = round(rate * (total - done))
         print(
-            f"{done}/{total} units, {left // 60}:{left % 60:02d} left ({label})",
+            f"{done}/{total} {self._what}, {left // 60}:{left % 60:02d} left ({label})",
             file=sys.stderr,
             flush=True,
         )

@@ -6,9 +6,12 @@ import textwrap
 from collections.abc import Sequence
 from typing import TYPE_CHECKING, Any
 
+import numpy as np
+
 from mrics.protocol import minutes
 
 if TYPE_CHECKING:
+    from mrics.recovery.dictionary import Dictionary
     from mrics.scan import Scan
     from mrics.scan.fitness import Inspection
     from mrics.study import Difference, Ranking, StudyPlan
@@ -203,6 +206,25 @@ def certificate_lines(content: dict[str, Any]) -> str:
     if one["note"]:
         lines.append(f"note: {one['note']}")
     return "\n".join(lines)
+
+
+def dictionary_lines(dictionary: Dictionary) -> str:
+    """What a training made, in a few lines."""
+    made = dictionary.provenance
+    size = " x ".join(map(str, dictionary.patch))
+    kind = "complex" if dictionary.atoms.dtype.kind == "c" else "real"
+    half, most = np.quantile(dictionary.residuals, (0.5, 0.95))
+    where = "patches not learned from" if made["residual_of_unseen_patches"] else "patches"
+    return "\n".join(
+        [
+            f"atoms: {len(dictionary.atoms)} {kind}, patches {size}, "
+            f"{dictionary.layers} plane(s) in a patch",
+            f"learned from: {made['patches']} patches of "
+            f"{', '.join(scan['name'] for scan in made['scans'])}",
+            f"residual energy at {made['residual_sparsity']} atoms: median {100 * half:.2g} %, "
+            f"95 % of {where} below {100 * most:.2g} %",
+        ]
+    )
 
 
 def _shown(value: Any) -> str:

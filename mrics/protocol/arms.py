@@ -12,7 +12,7 @@ from mrics.errors import ProtocolError
 from mrics.protocol.messages import nearest
 from mrics.protocol.sections import Recovery, Sampling, Today
 
-FILE_KEYS = ("file", "table", "training")
+FILE_KEYS = ("file", "table", "training", "dictionary")
 
 
 @dataclass(frozen=True)
@@ -78,7 +78,7 @@ def expand_arms(
 ) -> tuple[Arm, ...]:
     """Every arm, today's first, ids unique and independent of the order of other entries.
 
-    Files that a sampling entry names are taken relative to ``folder``.
+    Files that an entry names are taken relative to ``folder``.
     """
     arms: list[Arm] = []
     if today is not None:
@@ -89,7 +89,14 @@ def expand_arms(
         for acceleration in entry.accelerations or (None,):
             for method in recovery:
                 arms.append(_arm(entry, acceleration, method, name, False))
-    return tuple(replace(arm, sampling=_with_folder(arm.sampling, folder)) for arm in _unique(arms))
+    return tuple(
+        replace(
+            arm,
+            sampling=_with_folder(arm.sampling, folder),
+            recovery_settings=_with_folder(arm.recovery_settings, folder),
+        )
+        for arm in _unique(arms)
+    )
 
 
 def with_full_scan(arms: tuple[Arm, ...]) -> tuple[Arm, ...]:
@@ -107,7 +114,7 @@ def _first(accelerations: tuple[float, ...]) -> float | None:
 
 
 def _with_folder(keys: dict[str, Any], folder: Path) -> dict[str, Any]:
-    """The keys of a sampling entry with the files they name relative to ``folder``."""
+    """The keys of an entry with the files they name relative to ``folder``."""
 
     def placed(value: Any) -> Any:
         if isinstance(value, tuple):

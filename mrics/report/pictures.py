@@ -21,7 +21,7 @@ from mrics.scan.volume import LETTERS
 PIXEL_LIMIT = 40_000_000
 """Largest number of image values held at once (four bytes each)."""
 
-_MAIN = ("reference", "recovered", "error", "body", "pattern", "order")
+_MAIN = ("reference", "recovered", "error", "body", "pattern", "order", "atoms", "atom_use")
 
 Place = tuple[int, int]
 

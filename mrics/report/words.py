@@ -59,6 +59,9 @@ _MAPS = {
     "resolution_u_mm": "resolution along phase (mm)",
     "resolution_v_mm": "resolution along the other axis (mm)",
     "coding_residual": "coding residual",
+    "residual": "residual of coded patches",
+    "atoms_per_patch": "atoms per patch",
+    "domain_map": "residual against the training's 95 % point",
 }
 
 

@@ -21,6 +21,7 @@ _HOME = {
     "rank_plan": "ranking",
     "recover_measured": "measured",
     "run_study": "run",
+    "train": "training",
 }
 
 __all__ = [
@@ -39,6 +40,7 @@ __all__ = [
     "rank_plan",
     "recover_measured",
     "run_study",
+    "train",
 ]
 
 

@@ -64,10 +64,31 @@ def write_maps(
             values = np.moveaxis(values, 0, -1)
         shape = (*pattern.grid, *(1,) * (3 - len(pattern.grid)))
         volume = values.reshape(*shape, *values.shape[len(pattern.grid) :])
-        # The phase-encode grid has no place in the patient: unit voxels at the origin.
-        place = Scan(volume, np.eye(4), (1.0, 1.0, 1.0))
-        written.append(_write(folder, label, kind, volume, place))
+        written.append(_write(folder, label, kind, volume, _nowhere(volume)))
     return written
+
+
+def write_sheets(
+    folder: Path, label: tuple[str, str, int], sheets: Mapping[str, NDArray[Any]]
+) -> list[Entry]:
+    """Write arrays of 3 or 4 axes that have no place in the patient, such as atoms.
+
+    Returns
+    -------
+    list of dict
+        As :func:`write_maps`.
+    """
+    written = []
+    for kind, sheet in sheets.items():
+        dtype = np.complex64 if np.iscomplexobj(sheet) else np.float32
+        values = sheet.astype(dtype)
+        written.append(_write(folder, label, kind, values, _nowhere(values)))
+    return written
+
+
+def _nowhere(volume: NDArray[Any]) -> Scan:
+    """Unit voxels at the origin, for what has no place in the patient."""
+    return Scan(volume, np.eye(4), (1.0, 1.0, 1.0))
 
 
 def _grid_maps(pattern: Pattern) -> dict[str, Any]:

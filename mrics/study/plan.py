@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
@@ -28,6 +28,7 @@ from mrics.scan.values import file_hash
 from mrics.study.code_version import code_version
 from mrics.study.prepare import PlaneChoice, Prepared, prepare
 from mrics.study.suitable import check_suitable
+from mrics.study.training import check_dictionaries, dictionary_hash, dictionary_notes
 from mrics.study.units import LEAST_LINES, Noise, Unit, content_key, draw_of, pattern_grid
 
 
@@ -79,7 +80,7 @@ class PlanRow:
             "sampling_settings": self.arm.sampling,
             "recovery": self.arm.recovery,
             "recovery_name": self.arm.recovery_name,
-            "recovery_settings": self.arm.recovery_settings,
+            "recovery_settings": _named(self.arm.recovery_settings),
             "acceleration_target": self.arm.acceleration,
             "calibration_share": self.calibration_share,
             "relative_snr": self.timing.relative_snr,
@@ -193,7 +194,8 @@ class StudyPlan:
                         sampling={k: v for k, v in row.arm.sampling.items() if k != "name"},
                         acceleration=row.arm.acceleration,
                         recovery=row.arm.recovery,
-                        settings=row.arm.recovery_settings,
+                        settings=_named(row.arm.recovery_settings),
+                        dictionary=dictionary_hash(row.arm.recovery_settings),
                         noise=(self.noise.sigma, self.noise.snr, self.noise.percent, ratio),
                         draw=draw,
                         seed=study.seed,
@@ -256,6 +258,8 @@ class StudyPlan:
                 for r in few
             ]
             notes.append(f"Slices without body were skipped: {', '.join(skipped)}.")
+        used = ((row.arm.label, row.arm.recovery_settings) for row in self.rows)
+        notes += dictionary_notes(used, records)
         notes.append(self._channel_note(records))
         return notes
 
@@ -352,6 +356,7 @@ def plan_study(protocol: Protocol, *, quick: bool = False) -> StudyPlan:
         else:
             choice = PlaneChoice(few if given == "all" else min(few, int(given)))
     scan_ids = _unique_ids(scans)
+    check_dictionaries(protocol.arms())
     grids: dict[tuple[int, ...], tuple[str, str]] = {}
     shapes = [read_header(scan.path).shape for scan in scans]
     for scan, scan_id, shape in zip(scans, scan_ids, shapes, strict=True):
@@ -447,6 +452,11 @@ def _calibrated(pattern: Pattern) -> int:
     return math.prod(
         min(lines, size) for lines, size in zip(pattern.calibration, pattern.grid, strict=True)
     )
+
+
+def _named(settings: Mapping[str, Any]) -> dict[str, Any]:
+    """Settings with a file's name in place of its path."""
+    return {k: Path(v).name if k == "dictionary" and v else v for k, v in settings.items()}
 
 
 def _unique_ids(scans: Sequence[ScanFiles]) -> tuple[str, ...]:

@@ -24,7 +24,7 @@ from mrics.sampling import Pattern, draw_entry
 from mrics.sampling.ordered import Ordered
 from mrics.scan import Axes
 from mrics.study.files import plain
-from mrics.study.maps import write_maps
+from mrics.study.maps import write_maps, write_sheets
 from mrics.study.prepare import PlaneChoice, Prepared, prepare
 from mrics.study.scratch import SCRATCH, read_scratch
 
@@ -231,9 +231,9 @@ def _computed(unit: Unit, scan: Prepared) -> dict[str, Any]:
             if isinstance(values, np.ndarray) and values.shape == scan.stack.shape
         }
         further |= {} if measured is None else measured.maps
-        result["maps"] = write_maps(
-            unit.folder, (unit.arm.id, unit.scan_id, unit.draw), scan, image, pattern, further
-        )
+        label = (unit.arm.id, unit.scan_id, unit.draw)
+        result["maps"] = write_maps(unit.folder, label, scan, image, pattern, further)
+        result["maps"] += write_sheets(unit.folder, label, recovered.extras.get("sheets", {}))
     if measured is not None:
         result["timing"]["measures_s"] = measured.seconds
     result["timing"]["unit_s"] = time.perf_counter() - started

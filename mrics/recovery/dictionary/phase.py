@@ -34,7 +34,7 @@ def smooth_phase(stack: Array, calibration: Sequence[int] = ()) -> Array:
     for axis, n in enumerate(stack.shape[1:]):
         size = calibration[axis] if axis < len(calibration) else 0
         half = (min(size, n) or max(2, n // _SHARE)) / 2
-        k = np.fft.fftfreq(n, 1 / n)
+        k = (np.arange(n) + n // 2) % n - n // 2
         line = np.where(np.abs(k) <= half, np.cos(np.pi * k / (2 * half + 1)) ** 2, 0)
         window = window * line.astype(window.dtype).reshape((-1, 1) if axis == 0 else (1, -1))
     low = ifft_planes(fft_planes(stack) * window)

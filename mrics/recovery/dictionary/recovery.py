@@ -85,14 +85,11 @@ def solve(acquisition: Acquisition, settings: PatchDictionary, sigma: float) -> 
         history["noise"].append(level * unit)
     assert averaged is not None
     assert prepared is not None
-    order = np.argsort(-averaged.use, kind="stable")
+    copies = acquisition.shape[0] // len(layout.groups)
     extras: dict[str, Any] = {
-        "atoms": prepared.atoms[order],
-        "usage": averaged.use[order],
-        "residual": np.sqrt(averaged.residual) * unit,
-        "atoms_per_patch": averaged.atoms_used,
-        "patch": (*layout.size,),
-        "layers": layout.layers,
+        "residual": np.tile(np.sqrt(averaged.residual / (2 * layout.length)) * unit, (copies, 1, 1)),
+        "atoms_per_patch": np.tile(np.maximum(averaged.atoms_used, 0), (copies, 1, 1)),
+        "sheets": _sheets(prepared.atoms, averaged.use, layout),
     }
     note = (
         "not certified: no fixed objective; "
@@ -101,7 +98,7 @@ def solve(acquisition: Acquisition, settings: PatchDictionary, sigma: float) -> 
     if known is not None and known.residuals.size:
         verdict = check_domain(known, image * np.conj(turn), layout, noise)
         extras["domain"] = verdict.planes
-        extras["domain_map"] = verdict.map
+        extras["domain_map"] = np.tile(verdict.map, (copies, 1, 1))
         note += f"; {verdict.sentence}"
     certificate = Certificate(
         "dictionary",
@@ -114,6 +111,13 @@ def solve(acquisition: Acquisition, settings: PatchDictionary, sigma: float) -> 
     )
     image *= image.dtype.type(unit)
     return Recovered(image, certificate, history, extras)
+
+
+def _sheets(atoms: Array, use: NDArray[np.int64], layout: Layout) -> dict[str, Array]:
+    """Atoms (u, v, layer, atom), most used first, and how often each was used (atom, 1, 1)."""
+    order = np.argsort(-use, kind="stable")
+    shaped = atoms[order].reshape(len(atoms), layout.layers, *layout.size)
+    return {"atoms": shaped.transpose(2, 3, 1, 0), "atom_use": use[order].reshape(-1, 1, 1)}
 
 
 def _start(acquisition: Acquisition, settings: PatchDictionary, sigma: float) -> Array:
