@@ -146,7 +146,7 @@ def test_recovery_beats_zero_filled_and_repeats_itself(planes, points, source):
     assert error(one.image, planes) < 0.8 * error(zero, planes)
     two = recover(points, "dictionary", **settings)
     np.testing.assert_array_equal(one.image, two.image)
-    assert one.extras["atoms"].shape[1] == 36
+    assert one.extras["sheets"]["atoms"].shape[:3] == (6, 6, 1)
     assert one.extras["residual"].shape == planes.shape
     assert not one.certificate.certified
 

@@ -37,8 +37,8 @@ class DomainCheck:
     outside : ndarray of bool, shape (group,)
         Planes outside the domain.
     map : ndarray of float32, shape (group, u, v)
-        Residual of the patch at each place divided by the training's 95 % point; 0 where the
-        patch holds little but noise.
+        Residual of the patch that starts at each place divided by the training's 95 % point; 0
+        where the patch holds little but noise.
     sentence : str
         One line for the report.
     """
@@ -103,12 +103,9 @@ def check_domain(
             continue
         ratio = relative_residuals(patches[judged], prepared, noise) / max(limit, 1e-12)
         shares[group] = float(np.mean(ratio > 1))
-        chosen = places[judged]
-        picture[
-            group,
-            (chosen[:, 1] + layout.size[0] // 2) % u,
-            (chosen[:, 2] + layout.size[1] // 2) % v,
-        ] = ratio
+        coarse = np.zeros(grid.shape[1:], np.float32)
+        coarse[judged.reshape(coarse.shape)] = ratio
+        picture[group] = coarse.repeat(stride, 0)[:u].repeat(stride, 1)[:, :v]
     outside = shares > OUTSIDE
     if outside.any():
         sentence = (

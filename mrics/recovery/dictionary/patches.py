@@ -211,20 +211,23 @@ class Averaged:
     residual : ndarray of float32, shape (group, u, v)
         Squared residual of the patch at each position, 0 between strides.
     atoms_used : ndarray of float32, shape (group, u, v)
-        Atoms per patch.
+        Atoms per patch, 0 between strides.
     use : ndarray of int64, shape (atom,)
         How often every atom was used.
+    patches : int
+        Patches coded.
     """
 
     image: Array
     residual: NDArray[np.float32]
     atoms_used: NDArray[np.float32]
     use: NDArray[np.int64]
+    patches: int
 
     @property
     def mean_atoms(self) -> float:
         """Atoms per patch, over all patches."""
-        return float(self.use.sum() / max(1, np.count_nonzero(self.atoms_used >= 0)))
+        return float(self.use.sum() / max(1, self.patches))
 
 
 def code_and_average(
@@ -233,8 +236,8 @@ def code_and_average(
     """Code every patch of a complex stack to an error or count, and average them.
 
     ``target`` is the squared residual of a patch: of its real and its imaginary part each where
-    the atoms are real, of both together where they are complex. Strips of rows are spread over the threads and added in one order; a strip's codes are gone
-    when it is done.
+    the atoms are real, of both together where they are complex. Strips of rows are spread over the
+    threads and added in one order; a strip's codes are gone when it is done.
     """
     planes, u, v = stack.shape
     pu, pv = layout.size
@@ -249,7 +252,8 @@ def code_and_average(
     cols = _starts(total.shape[2], pv, layout.stride)
     use = np.zeros(len(atoms), np.int64)
     shape = (len(layout.groups), u, v)
-    residual, used = np.zeros(shape, np.float32), np.full(shape, -1, np.float32)
+    patches = len(layout.groups) * len(rows) * len(cols)
+    residual, used = np.zeros(shape, np.float32), np.zeros(shape, np.float32)
 
     def one(task: tuple[int, int]) -> tuple[Any, ...]:
         group, first = task
@@ -278,11 +282,11 @@ def code_and_average(
             residual[group][at], used[group][at] = parts
     if layout.border == "reflect":
         inside = (slice(None), slice(before, before + u), slice(left, left + v))
-        return Averaged(_divided(total[inside], weight[inside]), residual, used, use)
+        return Averaged(_divided(total[inside], weight[inside]), residual, used, use, patches)
     for array in (total, weight):
         array[:, : pu - 1] += array[:, u:]
         array[:, :, : pv - 1] += array[:, :, v:]
-    return Averaged(_divided(total[:, :u, :v], weight[:, :u, :v]), residual, used, use)
+    return Averaged(_divided(total[:, :u, :v], weight[:, :u, :v]), residual, used, use, patches)
 
 
 def _divided(total: Array, weight: Array) -> Array:

@@ -38,6 +38,7 @@ def smooth_phase(stack: Array, calibration: Sequence[int] = ()) -> Array:
         line = np.where(np.abs(k) <= half, np.cos(np.pi * k / (2 * half + 1)) ** 2, 0)
         window = window * line.astype(window.dtype).reshape((-1, 1) if axis == 0 else (1, -1))
     low = ifft_planes(fft_planes(stack) * window)
-    size = np.abs(low)
-    factors: Array = np.where(size > 0, low / np.where(size > 0, size, 1), 1).astype(stack.dtype)
+    modulus = np.abs(low)
+    held = modulus > 0
+    factors: Array = np.where(held, low / np.where(held, modulus, 1), 1).astype(stack.dtype)
     return factors

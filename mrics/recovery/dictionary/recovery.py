@@ -87,7 +87,9 @@ def solve(acquisition: Acquisition, settings: PatchDictionary, sigma: float) -> 
     assert prepared is not None
     copies = acquisition.shape[0] // len(layout.groups)
     extras: dict[str, Any] = {
-        "residual": np.tile(np.sqrt(averaged.residual / (2 * layout.length)) * unit, (copies, 1, 1)),
+        "residual": np.tile(
+            np.sqrt(averaged.residual / (2 * layout.length)) * unit, (copies, 1, 1)
+        ),
         "atoms_per_patch": np.tile(np.maximum(averaged.atoms_used, 0), (copies, 1, 1)),
         "sheets": _sheets(prepared.atoms, averaged.use, layout),
     }
@@ -98,7 +100,7 @@ def solve(acquisition: Acquisition, settings: PatchDictionary, sigma: float) -> 
     if known is not None and known.residuals.size:
         verdict = check_domain(known, image * np.conj(turn), layout, noise)
         extras["domain"] = verdict.planes
-        extras["domain_map"] = np.tile(verdict.map, (copies, 1, 1))
+        extras["domain_map"] = _in_place(verdict.map, layout, acquisition.shape[0])
         note += f"; {verdict.sentence}"
     certificate = Certificate(
         "dictionary",
@@ -111,6 +113,12 @@ def solve(acquisition: Acquisition, settings: PatchDictionary, sigma: float) -> 
     )
     image *= image.dtype.type(unit)
     return Recovered(image, certificate, history, extras)
+
+
+def _in_place(by_start: Array, layout: Layout, planes: int) -> Array:
+    """Values by group and start of a patch, at the patch's middle and on every frame."""
+    middle = np.roll(by_start, (layout.size[0] // 2, layout.size[1] // 2), (1, 2))
+    return np.tile(middle, (planes // len(layout.groups), 1, 1))
 
 
 def _sheets(atoms: Array, use: NDArray[np.int64], layout: Layout) -> dict[str, Array]:
