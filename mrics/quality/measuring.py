@@ -33,9 +33,10 @@ class Measured:
         Plain values for results files: ``spectral``, ``error_split``, ``edges``, ``noise``,
         ``resolution``, ``features``, ``observer``, ``regions``, as far as they were asked for.
     maps : dict of str to ndarray of shape (plane, u, v), float32
-        ``missing``, ``invented`` (magnitudes), ``noise_ratio``, ``resolution_u_mm``,
-        ``resolution_v_mm``, and ``feature_1``, ``feature_2``, ... in the order of the table: what
-        inserted features change in the recovered magnitude; NaN in planes that were not measured.
+        ``measured``, ``missing``, ``invented`` (magnitudes of the parts of the error),
+        ``noise_ratio``, ``resolution_u_mm``, ``resolution_v_mm``, and ``feature_1``,
+        ``feature_2``, ... in the order of the table: what inserted features change in the recovered
+        magnitude; NaN in planes that were not measured.
     planes : tuple of int
         Planes that further recoveries were made of.
     seconds, recovery_seconds : float
@@ -206,7 +207,7 @@ class _Results:
                 "damping": split.damping,
                 "orthogonal": split.orthogonal,
             }
-            for name in ("missing", "invented"):
+            for name in PARTS:
                 self.maps[name] = np.abs(getattr(split, name)).astype(np.float32)
         if wanted.edges:
             self._edges(in_plane, edges)

@@ -170,7 +170,8 @@ METRICS: MappingProxyType[str, Metric] = MappingProxyType(
         "noise_ratio": Metric(
             "lower",
             "median over the mask of the replicas' standard deviation over that of full sampling "
-            "(Robson et al. 2008)",
+            "(Robson et al. 2008); of a recovery that is not linear it holds for this image at "
+            "this noise only",
             "1",
             "noise against the full scan",
             "Noise compared with the full scan, which takes R times as long.",

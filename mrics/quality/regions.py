@@ -58,6 +58,8 @@ class Region:
         100 (1 - (max - min) / (max + min)), per cent.
     agreement : Agreement
         Over the planes that hold the label.
+    plane_means, reference_plane_means : tuple of float
+        What it is taken of.
     """
 
     label: int
@@ -72,6 +74,8 @@ class Region:
     reference_cnr: float
     uniformity: float
     agreement: Agreement
+    plane_means: tuple[float, ...]
+    reference_plane_means: tuple[float, ...]
 
 
 def region_statistics(
@@ -194,6 +198,8 @@ def _region(
         reference_cnr=own[1][1],
         uniformity=100.0 * (1.0 - (top - bottom) / (top + bottom)) if top > 0.0 else float("nan"),
         agreement=bland_altman(np.array(means[0]), np.array(means[1])),
+        plane_means=tuple(map(float, means[0])),
+        reference_plane_means=tuple(map(float, means[1])),
     )
 
 

@@ -15,6 +15,7 @@ from mrics.report.style_figures import figure_style, new_figure
 
 _HOMES = (
     "mrics.report.feature_chart",
+    "mrics.report.region_chart",
     "mrics.report.spectral_chart",
     "mrics.report.sensitivity_panel",
     "mrics.report.singular_chart",

@@ -52,6 +52,7 @@ def metric_words(key: str) -> MetricWords:
 
 _MAPS = {
     "error_complex": "size of the complex error",
+    "measured": "error in what was measured",
     "missing": "missing detail",
     "invented": "invented detail",
     "noise_ratio": "noise against the full scan",

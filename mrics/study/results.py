@@ -21,6 +21,7 @@ from mrics.study.answer import KEPT_LEVEL, overall_verdict, smallest_kept
 from mrics.study.channels import channel_picture
 from mrics.study.code_version import code_version
 from mrics.study.files import plain
+from mrics.study.measure_notes import measure_notes
 from mrics.study.plan import PlanRow, StudyPlan
 
 SCHEMA = 1
@@ -121,7 +122,10 @@ def study_results(
         "baseline": plan.baseline,
         "verdict": overall_verdict(arms, len(records)),
         "maps": maps,
-        "notes": plan.notes(records),
+        "notes": [
+            *plan.notes(records),
+            *measure_notes(results, {row.arm.id: row.arm.label for row in rows}),
+        ],
         "provenance": provenance(protocol.study.seed),
     }
 

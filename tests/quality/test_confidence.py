@@ -114,6 +114,21 @@ def test_bootstrap_from_twenty_scans_on():
     assert summary.as_dict() == summarise(records, direction="higher").as_dict()
 
 
+def test_bootstrap_agrees_with_scipy_where_both_apply():
+    # scipy.stats.bootstrap of scan means without spread of draws: its standard error is ours up to
+    # sqrt((n - 1) / n), its bias-corrected interval lies inside the studentised one, which knows
+    # of the error's own uncertainty.
+    means = np.random.default_rng(3).normal(0.9, 0.02, 30)
+    best = estimate({i: dict.fromkeys(range(5), m) for i, m in enumerate(means)})
+    theirs = stats.bootstrap((means,), np.mean, rng=np.random.default_rng(0))
+    assert best.error * np.sqrt(29 / 30) == pytest.approx(theirs.standard_error, rel=0.03)
+    low, high = theirs.confidence_interval
+    mine = best.interval()
+    assert mine.low == pytest.approx(low, abs=0.25 * best.error)
+    assert mine.high == pytest.approx(high, abs=0.25 * best.error)
+    assert mine.high - mine.low > high - low
+
+
 def test_bootstrap_p_values_match_its_intervals():
     _, records = study(20)
     best = summarise(records, direction="higher").estimate

@@ -88,6 +88,7 @@ def test_tables_are_plain_json(measured):
 def test_maps_lie_on_the_whole_stack(measured):
     result, _ = measured
     assert set(result.maps) == {
+        "measured",
         "missing",
         "invented",
         "noise_ratio",
@@ -99,7 +100,7 @@ def test_maps_lie_on_the_whole_stack(measured):
     for name, values in result.maps.items():
         assert values.shape == SHAPE
         assert values.dtype == np.float32
-        if name not in ("missing", "invented"):
+        if name not in ("measured", "missing", "invented"):
             assert np.isnan(values[0]).all() == (0 not in result.planes)
 
 

@@ -8,6 +8,7 @@ from mrics.errors import QualityError
 from mrics.numerics import centred_ifft
 from mrics.quality.chain import Chain
 from mrics.quality.resolution import local_resolution, point_response, points
+from mrics.sampling import draw_pattern
 
 
 def spread(acquisition, site):
@@ -46,6 +47,7 @@ def test_full_sampling_has_the_width_of_the_sinc():
     np.testing.assert_allclose(result.width_mm[:, 1], 1.2067 * 1.5, rtol=1e-4)
     np.testing.assert_allclose(result.height, 1.0, atol=1e-9)
     assert result.elsewhere == pytest.approx(0.0, abs=1e-9)
+    assert result.lattice_leakage == pytest.approx(0.0, abs=1e-9)
     assert result.runs == 4
 
 
@@ -81,6 +83,21 @@ def test_channels_resolve_what_one_channel_aliases():
     # Twofold aliasing puts half of the energy elsewhere; chance overlap of about 100 sites: 0.03.
     assert alone.elsewhere == pytest.approx(0.5, abs=0.06)
     assert result.elsewhere < 0.05
+
+
+def test_lattice_leakage_is_what_other_sites_put_into_a_window():
+    # Random lines: a point's response beyond its lobe is spread along u over its own column, so
+    # what a window catches is known from the spread of one site.
+    image = phantom((1, 96, 96))
+    held = acquire(image, draw_pattern(96, law="uniform", acceleration=2, calibration=4, seed=1))
+    chain = Chain(held, "zero-filled")
+    result = local_resolution(chain, (1.0, 1.0), interleaves=2)
+    alone = np.abs(spread(held, (0, 48, 48))) ** 2
+    lobe = alone[46:51, 46:51].sum()
+    stray = alone.sum() - lobe
+    sites = len(result.sites) / 2
+    wanted = stray * 13**2 * sites / alone.size / lobe
+    assert result.lattice_leakage == pytest.approx(wanted, rel=0.25)
 
 
 def test_non_linear_recoveries_say_so():

@@ -2,7 +2,11 @@
 
 import numpy as np
 import pytest
-from skimage.metrics import peak_signal_noise_ratio, structural_similarity
+from skimage.metrics import (
+    normalized_root_mse,
+    peak_signal_noise_ratio,
+    structural_similarity,
+)
 
 from mrics.errors import QualityError
 from mrics.quality import error_maps, score, score_planes
@@ -46,6 +50,12 @@ def test_ssim_of_constant_planes_is_its_luminance_term(x, y, wanted):
     # (2xy + C1)/(x^2 + y^2 + C1), Wang et al. 2004 eq. 6 with no variance, L = 1.
     values = ssim_map(np.full((12, 15), x), np.full((12, 15), y), 1.0)
     np.testing.assert_allclose(values, wanted, atol=1e-6)
+
+
+def test_nrmse_equals_scikit_image():
+    a, b = np.random.default_rng(5).random((2, 40, 36))
+    theirs = normalized_root_mse(b, a, normalization="euclidean")
+    assert score(a, b)["nrmse"] == pytest.approx(theirs, rel=1e-12)
 
 
 def test_ssim_window_has_the_published_centre_weight():

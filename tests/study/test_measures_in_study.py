@@ -15,6 +15,7 @@ QUALITY = """
 [quality]
 planes = 1
 noise_replicas = 4
+resolution_runs = 1
 features = [{ size_mm = [6.0, 10.0], contrast = 30.0 }]
 feature_sites = 3
 """
@@ -33,10 +34,20 @@ def test_measures_reach_units_arms_and_maps(tmp_path: Path) -> None:
     }
     first, second = (u for u in results["units"] if u["arm"] == arm["id"])
     assert first["measures"]["features"]
+    resolution = first["measures"]["resolution"]
+    [told] = [note for note in results["notes"] if note.startswith("Local resolution")]
+    assert "points of 5 sigma" in told
+    leaks = [
+        u["measures"]["resolution"]["lattice_leakage"]
+        for u in results["units"]
+        if "resolution" in u["measures"]
+    ]
+    assert resolution["lattice_leakage"] in leaks
+    assert f"up to {100 * max(leaks):.2g} %" in told
     # Measures that recover again are taken on the first draw alone.
     assert "features" not in second["measures"]
     kinds = {m["kind"] for m in results["maps"] if m["arm"] == arm["id"]}
-    assert {"missing", "invented", "noise_ratio"} <= kinds
+    assert {"measured", "missing", "invented", "noise_ratio", "resolution_u_mm"} <= kinds
 
 
 def labelled(folder: Path, shape: tuple[int, ...] = (44, 40, 5), name: str = "regions") -> None:
