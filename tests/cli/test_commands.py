@@ -1,9 +1,6 @@
 """Every command as a person runs it, in a process of its own."""
 
-import contextlib
-import io
 import json
-import os
 import re
 import signal
 import subprocess
@@ -13,30 +10,11 @@ from pathlib import Path
 import nibabel
 import numpy as np
 import pytest
+from command_line import mrics, refused
 from small_study import AFFINE, PROTOCOL, small_object, write_small_study
 
 from mrics.caution import RESEARCH_ONLY
-from mrics.cli import main
 from mrics.protocol import load_protocol
-
-
-def mrics(*arguments: object, cwd: Path | None = None) -> subprocess.CompletedProcess[str]:
-    command = [sys.executable, "-c", "from mrics.cli import main; main()", *map(str, arguments)]
-    environment = {**os.environ, "COLUMNS": "100", "NO_COLOR": "1"}
-    return subprocess.run(command, capture_output=True, text=True, cwd=cwd, env=environment)
-
-
-def refused(*arguments: object, says: str) -> str:
-    """Run a command in this process; it must be refused: status 2, a message, nothing raised."""
-    complaint = io.StringIO()
-    with pytest.MonkeyPatch.context() as patch, contextlib.redirect_stderr(complaint):
-        patch.setattr(sys, "argv", ["mrics", *map(str, arguments)])
-        with pytest.raises(SystemExit) as stop:
-            main()
-    text = re.sub(r"\s+", " ", complaint.getvalue())
-    assert stop.value.code == 2, text
-    assert re.search(says, text), text
-    return text
 
 
 def test_help_names_every_command_and_says_research_only() -> None:
