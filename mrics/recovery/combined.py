@@ -6,7 +6,8 @@ differences, complex, on planes of any size:
     minimise  1/2 ||M F S x - d||^2
               + weight sigma ( sum_l 2^-l ||K_l x||_1 + variation sum_pixels |(D x)|_2 )
 
-The two penalties as in Lustig, Donoho & Pauly 2007, doi:10.1002/mrm.21391.
+The two penalties as in Lustig, Donoho & Pauly 2007, doi:10.1002/mrm.21391;
+``phase = "smooth"`` as in ``variation``.
 """
 
 from __future__ import annotations
@@ -18,7 +19,7 @@ from numpy.typing import NDArray
 
 from mrics.encoding.acquisition import Acquisition
 from mrics.recovery.contract import Recovered
-from mrics.recovery.convex import ITERATIONS, certify, run_planes
+from mrics.recovery.convex import ITERATIONS, certify, joined, phase_note, run_planes
 from mrics.recovery.frame import FrameWavelet
 from mrics.recovery.penalties import Variation, levels_for
 from mrics.recovery.settings import WaveletVariation
@@ -45,8 +46,9 @@ def solve(acquisition: Acquisition, settings: WaveletVariation, sigma: float) ->
         weight * sigma,
         settings.iterations or ITERATIONS,
         settings.tolerance,
+        phase=settings.phase,
     )
-    note = f"variation {settings.variation:g} x the weight"
+    note = joined(f"variation {settings.variation:g} x the weight", phase_note(settings.phase))
     return certify("wavelet+variation", image, results, settings.tolerance, weight, note)
 
 

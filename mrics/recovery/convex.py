@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from mrics.encoding import Encoding
 from mrics.encoding.acquisition import Acquisition
 from mrics.recovery.contract import Certificate, Recovered
-from mrics.recovery.plane import PlaneModel, each_plane, scale_unit
+from mrics.recovery.plane import PlaneModel, each_plane, phase_centre, scale_unit
 from mrics.recovery.splitting import Penalty, PlaneResult, Splitting
 
 Array = NDArray[Any]
@@ -27,6 +27,7 @@ def run_planes(
     iterations: int,
     tolerance: float,
     hybrid: bool = False,
+    phase: str = "free",
 ) -> tuple[Array, list[PlaneResult]]:
     """Minimise for every plane with the weight ``threshold`` in the data's unit.
 
@@ -36,7 +37,10 @@ def run_planes(
         (u, v) and real dtype to a penalty.
     hybrid : bool
         The penalty's symbol is a number, so that a full readout needs no transform.
+    phase : {"free", "smooth"}
+        See :func:`plane.phase_centre`.
     """
+    centre = phase_centre(acquisition, phase)
     dtype = acquisition.kspace.dtype
     unit = scale_unit(acquisition)
     grid = acquisition.shape[1:]
@@ -44,18 +48,27 @@ def run_planes(
 
     def make_worker() -> Splitting:
         penalty = make(grid, dtype.type(0).real.dtype)
-        model = PlaneModel((acquisition.channels, *grid), dtype, penalty.padded)
+        model = PlaneModel((acquisition.channels, *grid), dtype, penalty.padded, centre)
         return Splitting(model, penalty)
 
     def one(worker: Splitting, encoding: Encoding, data: Array, i: int, plane: int) -> PlaneResult:
         if not worker.model.load(encoding, data, i, unit, hybrid):
             return PlaneResult()
         result = worker.run(threshold / unit, iterations, tolerance)
-        best = worker.best[: grid[0], : grid[1]]
-        np.multiply(best, worker.model.real.type(unit), out=image[plane])
+        worker.model.write(worker.best, unit, image[plane])
         return result.scaled(unit)
 
     return image, each_plane(acquisition, make_worker, one)
+
+
+def phase_note(phase: str) -> str:
+    """What a certificate says of the setting ``phase``."""
+    return "" if phase == "free" else "real image times the phase of the calibration region"
+
+
+def joined(*notes: str) -> str:
+    """Notes that are not empty, in one line."""
+    return "; ".join(note for note in notes if note)
 
 
 def certify(

@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 from mrics.encoding import Encoding, frames_of
 from mrics.encoding.acquisition import Acquisition
-from mrics.recovery.plane import PlaneModel, each_plane, scale_unit
+from mrics.recovery.plane import PlaneModel, each_plane, phase_centre, scale_unit
 from mrics.recovery.splitting import RELAX, PlaneResult, Trace
 
 Array = NDArray[Any]
@@ -125,6 +125,7 @@ def run_places(
     iterations: int,
     tolerance: float,
     hybrid: bool = False,
+    phase: str = "free",
     finish: Callable[[JointPenalty, list[int], int, float], None] | None = None,
 ) -> tuple[Array, list[PlaneResult]]:
     """Minimise for every place with the weight ``threshold`` in the data's unit.
@@ -135,6 +136,8 @@ def run_places(
         (u, v), real dtype and number of frames to a penalty.
     hybrid : bool
         The penalty's symbol is a number, so that a full readout needs no transform.
+    phase : {"free", "smooth"}
+        See :func:`plane.phase_centre`.
     finish : callable, optional
         Penalty, its frames, place and unit of its images, after a place is done.
 
@@ -147,6 +150,7 @@ def run_places(
     """
     frames = frames_of(acquisition)
     placed = by_place(acquisition)
+    centre = phase_centre(acquisition, phase)
     dtype = acquisition.kspace.dtype
     unit = scale_unit(acquisition)
     grid = acquisition.shape[1:]
@@ -155,7 +159,8 @@ def run_places(
     def make_worker() -> JointSplitting:
         penalty = make(grid, dtype.type(0).real.dtype, frames)
         models = [
-            PlaneModel((acquisition.channels, *grid), dtype, penalty.padded) for _ in range(frames)
+            PlaneModel((acquisition.channels, *grid), dtype, penalty.padded, centre)
+            for _ in range(frames)
         ]
         return JointSplitting(models, penalty)
 
@@ -168,8 +173,8 @@ def run_places(
         if not active:
             return PlaneResult()
         result = worker.run(active, threshold / unit, iterations, tolerance)
-        best = worker.best[:, : grid[0], : grid[1]]
-        np.multiply(best, worker.models[0].real.type(unit), out=image[plane : plane + frames])
+        for f in active:
+            worker.models[f].write(worker.best[f], unit, image[plane + f])
         if finish is not None:
             finish(worker.penalty, active, plane // frames, unit)
         return result.scaled(unit)

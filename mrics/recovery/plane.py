@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 
 from mrics.encoding import Encoding, blocks
 from mrics.encoding.acquisition import Acquisition
+from mrics.errors import RecoveryError
 from mrics.numerics import fft_planes, ifft_planes, map_blocks, threads
 from mrics.recovery import kernels
 
@@ -38,10 +39,17 @@ class PlaneModel:
     dtype : complex64 or complex128
     padded : tuple of int, optional
         Size of :attr:`image`, at least (u, v); what lies outside (u, v) is not seen by the data.
+    centre : tuple of int, optional
+        Length along (u, v) of the samples that a smooth phase is taken from; :attr:`image` is then
+        real, and the recovered image is it times that phase.
     """
 
     def __init__(
-        self, shape: tuple[int, int, int], dtype: Any, padded: tuple[int, int] | None = None
+        self,
+        shape: tuple[int, int, int],
+        dtype: Any,
+        padded: tuple[int, int] | None = None,
+        centre: tuple[int, int] | None = None,
     ) -> None:
         self.dtype = np.dtype(dtype)
         self.real = np.dtype(self.dtype.type(0).real.dtype)
@@ -54,6 +62,8 @@ class PlaneModel:
         self.work = self.image if whole else np.empty((self.u, self.v), self.dtype)
         self.maps: Array | None = None
         self.bound = 1.0
+        self.centre = centre
+        self.turn: Array | None = None
         self.axes: tuple[int, ...] = (-2, -1)
 
     def load(
@@ -65,14 +75,20 @@ class PlaneModel:
         )
         self.axes = (-2,) if hybrid and self.mask.shape[1] == 1 else (-2, -1)
         self.data = data[plane]
+        self.channels = self.data.shape[0]
         if not self.data.any():
             return False
         self.data *= self.mask / self.real.type(unit)
-        if self.axes == (-2,):
-            self.data = ifft_planes(self.data, overwrite=True, axes=(-1,))
         maps = encoding.sensitivities
         if maps is not None:
-            self.maps = maps[plane if maps.shape[0] > 1 else 0]
+            maps = maps[plane if maps.shape[0] > 1 else 0]
+        if self.centre is not None:
+            self.turn = smooth_phase(self.data, maps, self.centre)
+            maps = self.turn[None] if maps is None else maps * self.turn
+        if self.axes == (-2,):
+            self.data = ifft_planes(self.data, overwrite=True, axes=(-1,))
+        if maps is not None:
+            self.maps = maps
             energy = (self.maps.real**2 + self.maps.imag**2).sum(0)
             self.bound = float(energy.max())
             self._make_channels(energy)
@@ -92,6 +108,13 @@ class PlaneModel:
                 kernels.residual(spectrum.view(self.real), self.data[c].view(self.real), self.mask)
                 self._gather(c, spectrum, self.flat)
         self._outside(0)
+        self._keep_real()
+
+    def write(self, image: Array, unit: float, out: Array) -> None:
+        """Recovered plane from :attr:`image` or a copy of it, in the data's unit."""
+        np.multiply(image[: self.u, : self.v], self.real.type(unit), out=out)
+        if self.turn is not None:
+            out *= self.turn
 
     def start(self) -> None:
         """Set :attr:`image` to A^H d / bound and make ready for :meth:`solve`."""
@@ -149,6 +172,7 @@ class PlaneModel:
             back = ifft_planes(spectrum, overwrite=True)
             if not same_memory(back, self.image):
                 self.image[...] = back
+        self._keep_real()
         moved = kernels.replace_last(self.flat, self._gap, self._last.view(self.real))
         square, p_square, product, off = self._split(relax)
         slack = np.sqrt(self.bound * off) + float(self.mu) * np.sqrt(moved)
@@ -201,10 +225,54 @@ class PlaneModel:
         if not same_memory(image, self.image):
             self.inner[...] = image
 
+    def _keep_real(self) -> None:
+        """Both halves are real operators, so the optimum over real images is the real part."""
+        if self.turn is not None:
+            self.flat[:, 1::2] = 0
+
     def _outside(self, factor: float) -> None:
         if self.work is not self.image:
             self.image[self.u :] *= self.real.type(factor)
             self.image[: self.u, self.v :] *= self.real.type(factor)
+
+
+def phase_centre(acquisition: Acquisition, phase: str) -> tuple[int, int] | None:
+    """``centre`` of :class:`PlaneModel` for a setting ``phase``.
+
+    Raises
+    ------
+    RecoveryError
+        Where a smooth phase is asked for and there is no calibration region to take it from.
+    """
+    if phase == "free":
+        return None
+    along_u, along_v = (*acquisition.calibration, acquisition.calibration[0])[:2]
+    if min(along_u, along_v) < 4:
+        raise RecoveryError(
+            f"A smooth phase needs a calibration region of at least 4 lines, got "
+            f"{acquisition.calibration}.",
+            "phase",
+            'Draw the pattern with calibration lines, or take phase = "free".',
+        )
+    return along_u, min(along_v, acquisition.shape[2])
+
+
+def smooth_phase(data: Array, maps: Array | None, centre: tuple[int, int]) -> Array:
+    """exp(i phase) of the low-resolution image of un-centred samples (channel, u, v).
+
+    The samples within ``centre`` are weighted by a Hann window and the channels combined by their
+    sensitivities (Noll, Nishimura & Macovski 1991, doi:10.1109/42.79473).
+    """
+    _, u, v = data.shape
+    window = np.ones((u, v), data.real.dtype)
+    for axis, (n, length) in enumerate(zip((u, v), centre, strict=True)):
+        k = np.minimum(np.arange(n), n - np.arange(n))
+        taper = np.where(k < length / 2, np.cos(np.pi * k / length) ** 2, 0)
+        window *= taper[:, None] if axis == 0 else taper
+    low = ifft_planes(data * window, overwrite=True)
+    combined = low[0] if maps is None else (np.conj(maps) * low).sum(0)
+    phase: Array = np.exp(1j * np.angle(combined)).astype(data.dtype)
+    return phase
 
 
 def same_memory(one: Array, other: Array) -> bool:

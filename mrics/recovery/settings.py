@@ -55,6 +55,11 @@ def _weight() -> Any:
     return _number("auto", 0.0, above=True, words=WEIGHT_WORDS)
 
 
+def _phase() -> Any:
+    """Whether the image's phase is free or that of the calibration region."""
+    return _choice("free", ("free", "smooth"))
+
+
 def _choice(default: str, choices: tuple[str, ...]) -> Any:
     """A text field with its allowed values."""
     return field(default=default, metadata={"kind": "choice", "words": choices})
@@ -120,6 +125,9 @@ class Wavelet(Settings):
         "none": one fixed transform, certified. "full": the mean over all shifts,
         translation-invariant, certified. "random": a random shift in every iteration, nearly
         translation-invariant and fast, without a fixed objective.
+    phase : str
+        "free", or "smooth": the image is real, of either sign, times the phase of the calibration
+        region.
     iterations : int or None
         Most iterations; None for 300, and for 60 where shifts are random.
     tolerance : float
@@ -136,6 +144,7 @@ class Wavelet(Settings):
     )
     joint: bool = field(default=False, metadata={"kind": "flag"})
     shift: str = _choice("random", ("none", "random", "full"))
+    phase: str = _phase()
     iterations: int | None = _number(None, 1, 100_000, whole=True, optional=True)
     tolerance: float = _number(1e-3, 0.0, 1.0, above=True)
     seed: int = _number(0, 0, whole=True)
@@ -166,6 +175,9 @@ class Variation(Settings):
     order : int
         1: total variation, which makes shading into steps. 2: second-order total generalised
         variation, which keeps slopes.
+    phase : str
+        "free", or "smooth": the image is real, of either sign, times the phase of the calibration
+        region.
     iterations : int or None
         Most iterations; None for 300.
     tolerance : float
@@ -174,6 +186,7 @@ class Variation(Settings):
 
     weight: float | str = _weight()
     order: int = _number(1, 1, 2, whole=True)
+    phase: str = _phase()
     iterations: int | None = _number(None, 1, 100_000, whole=True, optional=True)
     tolerance: float = _number(1e-3, 0.0, 1.0, above=True)
 
@@ -192,6 +205,9 @@ class WaveletVariation(Settings):
         Orthogonal wavelet.
     levels : int or None
         Levels; None for as many as leave at least 5 samples, at most 4.
+    phase : str
+        "free", or "smooth": the image is real, of either sign, times the phase of the calibration
+        region.
     iterations : int or None
         Most iterations; None for 300.
     tolerance : float
@@ -202,6 +218,7 @@ class WaveletVariation(Settings):
     variation: float = _number(1.0, 0.0, above=True)
     wavelet: str = _choice("sym4", WAVELETS)
     levels: int | None = _number(None, 1, 12, whole=True, optional=True)
+    phase: str = _phase()
     iterations: int | None = _number(None, 1, 100_000, whole=True, optional=True)
     tolerance: float = _number(1e-3, 0.0, 1.0, above=True)
 

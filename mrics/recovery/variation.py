@@ -12,13 +12,18 @@ Frobenius norm:
 
 A linear slope costs nothing at order 2, so that shading is not made into steps. The factor 2 is
 that of Knoll, Bredies, Pock & Stollberger 2011, doi:10.1002/mrm.22595 (from memory).
+
+``phase = "smooth"``: with p the phase of the low-resolution image of the calibration region, x is
+p times a real image, of either sign, over which the objective is minimised. This halves the
+unknowns; where the true phase is not smooth (air, vessels, fat beside water) the part of the signal
+out of phase with p is lost.
 """
 
 from __future__ import annotations
 
 from mrics.encoding.acquisition import Acquisition
 from mrics.recovery.contract import Recovered
-from mrics.recovery.convex import ITERATIONS, certify, run_planes
+from mrics.recovery.convex import ITERATIONS, certify, joined, phase_note, run_planes
 from mrics.recovery.penalties import Variation as VariationPenalty
 from mrics.recovery.second_order import SecondOrder
 from mrics.recovery.settings import Variation
@@ -33,6 +38,7 @@ def solve(acquisition: Acquisition, settings: Variation, sigma: float) -> Recove
         weight * sigma,
         settings.iterations or ITERATIONS,
         settings.tolerance,
+        phase=settings.phase,
     )
-    note = "" if settings.order == 1 else "second order"
+    note = joined("" if settings.order == 1 else "second order", phase_note(settings.phase))
     return certify("variation", image, results, settings.tolerance, weight, note)

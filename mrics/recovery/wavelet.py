@@ -35,13 +35,13 @@ from mrics.numerics import stream
 from mrics.numerics.wavelets import PlaneWavelet
 from mrics.recovery import kernels
 from mrics.recovery.contract import Certificate, Recovered
-from mrics.recovery.convex import ITERATIONS, certify, run_planes
+from mrics.recovery.convex import ITERATIONS, certify, joined, phase_note, run_planes
 from mrics.recovery.frame import FrameWavelet
 from mrics.recovery.joint import JointWavelet
 from mrics.recovery.joint_kernels import shrink_groups
 from mrics.recovery.penalties import OrthonormalWavelet, bands_of, levels_for, padded_shape
 from mrics.recovery.places import JointPenalty, by_frame, by_place, run_places
-from mrics.recovery.plane import PlaneModel, each_plane, scale_unit
+from mrics.recovery.plane import PlaneModel, each_plane, phase_centre, scale_unit
 from mrics.recovery.settings import Wavelet
 from mrics.recovery.splitting import PlaneResult
 
@@ -66,12 +66,18 @@ def solve(acquisition: Acquisition, settings: Wavelet, sigma: float) -> Recovere
     def make_joint(grid: tuple[int, int], real: Any, frames: int) -> JointPenalty:
         return JointWavelet(make(grid, real), frames)
 
-    limits = (weight * sigma, settings.iterations or ITERATIONS, settings.tolerance, not full)
+    limits: tuple[Any, ...] = (
+        weight * sigma,
+        settings.iterations or ITERATIONS,
+        settings.tolerance,
+        not full,
+        settings.phase,
+    )
     if settings.joint and frames_of(acquisition) > 1:
         image, results = run_places(acquisition, make_joint, *limits)
     else:
         image, results = run_planes(acquisition, make, *limits)
-    note = "full cycle spinning" if full else ""
+    note = joined("full cycle spinning" if full else "", phase_note(settings.phase))
     return certify("wavelet", image, results, settings.tolerance, weight, note)
 
 
@@ -85,9 +91,10 @@ def _shifting(
     grid = acquisition.shape[1:]
     together = frames_of(acquisition) if settings.joint else 1
     placed = by_place(acquisition) if together > 1 else acquisition
+    centre = phase_centre(acquisition, settings.phase)
 
     def make() -> ShiftingPlanes:
-        return ShiftingPlanes((acquisition.channels, *grid), dtype, settings, together)
+        return ShiftingPlanes((acquisition.channels, *grid), dtype, settings, together, centre)
 
     def one(
         worker: ShiftingPlanes, encoding: Encoding, data: Array, i: int, plane: int
@@ -98,7 +105,7 @@ def _shifting(
             return PlaneResult()
         result = worker.run(active, threshold / unit, iterations, plane // together)
         for f in active:
-            np.multiply(models[f].inner, models[f].real.type(unit), out=image[plane + f])
+            models[f].write(models[f].image, unit, image[plane + f])
         return result
 
     results = each_plane(placed, make, one, together)
@@ -109,7 +116,10 @@ def _shifting(
         certified=False,
         weight=weight,
         weight_rule="given",
-        note=f"not certified: shifting objective; change is the mean of the last {_LAST}",
+        note=joined(
+            f"not certified: shifting objective; change is the mean of the last {_LAST}",
+            phase_note(settings.phase),
+        ),
     )
     return Recovered(by_frame(image, together), certificate, results[0].history)
 
@@ -122,11 +132,16 @@ class ShiftingPlanes:
     """
 
     def __init__(
-        self, shape: tuple[int, int, int], dtype: Any, settings: Wavelet, frames: int
+        self,
+        shape: tuple[int, int, int],
+        dtype: Any,
+        settings: Wavelet,
+        frames: int,
+        centre: tuple[int, int] | None,
     ) -> None:
         levels = settings.levels or levels_for(shape[1:])
         padded = padded_shape(shape[1:], levels)
-        self.models = [PlaneModel(shape, dtype, padded) for _ in range(frames)]
+        self.models = [PlaneModel(shape, dtype, padded, centre) for _ in range(frames)]
         self.real = self.models[0].real
         self.wavelet = PlaneWavelet(padded, settings.wavelet, levels, dtype)
         self.bands = bands_of(padded, levels)
