@@ -223,7 +223,9 @@ def open_folder(directory: str | Path) -> StudyFolder:
             "with a run that was killed, and finished units are kept.",
         )
     try:
-        results = json.loads(path.read_text(encoding="utf-8"))
+        # NaN and infinity are no JSON; other writers may still put them there.
+        text = path.read_text(encoding="utf-8")
+        results = json.loads(text, parse_constant=lambda _: None)
     except (ValueError, OSError) as problem:
         raise ReportError(
             f"results.json cannot be read: {problem}.",

@@ -84,6 +84,7 @@ def page_values(study: StudyFolder) -> dict[str, Any]:
         "chart_text": _chart_text(study, charted),
         "further": [(panel, svg_uri(panel.figure())) for panel in panels(study)],
         "missing_maps": study.missing,
+        "not_finite": {name: n for scan in pictures for name, n in scan.not_finite.items()},
         "units_done": sum(1 for u in study.results["units"] if u.get("slices")),
         "units_planned": study.results.get("units_planned"),
         "unfinished": unfinished(study),

@@ -69,6 +69,8 @@ class ScanPictures:
         Maps of quality measures; read when they are packed.
     features : list of Inserted
         Features that the study inserted.
+    not_finite : dict of str to int
+        Stored maps with values that are not finite, and how many; they are drawn as 0.
     """
 
     entry: dict[str, Any]
@@ -81,6 +83,7 @@ class ScanPictures:
     recovered: list[RecoveredStack] = field(default_factory=list)
     further: list[FurtherMap] = field(default_factory=list)
     features: list[Inserted] = field(default_factory=list)
+    not_finite: dict[str, int] = field(default_factory=dict)
 
     def of_arm(self, arm: str) -> RecoveredStack | None:
         """First stored draw of an arm."""
@@ -115,7 +118,8 @@ def load_pictures(study: StudyFolder, pixel_limit: int = PIXEL_LIMIT) -> list[Sc
         first = _important(study, scan, stored, features)
         places = _spread(scan, first, max(2, int(keep * _slices(scan))))
         body = study.find("body", scan["id"])
-        truth = _magnitude(study, reference, places)
+        bad: dict[str, int] = {}
+        truth = _magnitude(study, reference, places, bad)
         pictures = ScanPictures(
             scan,
             study.view(scan),
@@ -123,11 +127,12 @@ def load_pictures(study: StudyFolder, pixel_limit: int = PIXEL_LIMIT) -> list[Sc
             [places.index(p) for p in first],
             _slices(scan),
             truth,
-            _magnitude(study, body, places) > 0 if body else np.ones(truth.shape, dtype=bool),
+            _magnitude(study, body, places, bad) > 0 if body else np.ones(truth.shape, dtype=bool),
             features=features,
+            not_finite=bad,
         )
         for one in stored:
-            image = _magnitude(study, one, places)
+            image = _magnitude(study, one, places, bad)
             pictures.recovered.append(RecoveredStack(one.arm, int(one.draw or 0), image))
         shown = {(one.arm, one.draw) for one in pictures.recovered}
         for one in study.maps:
@@ -187,13 +192,19 @@ def load_further(
     return _slices_of(study, further.stored, places)
 
 
-def _magnitude(study: StudyFolder, stored: StoredMap, places: list[Place]) -> NDArray[np.float32]:
-    """Magnitudes of a map at the slices; values that are not finite count as 0."""
+def _magnitude(
+    study: StudyFolder, stored: StoredMap, places: list[Place], bad: dict[str, int]
+) -> NDArray[np.float32]:
+    """Magnitudes of a map at the slices; values that are not finite become 0 and are counted."""
     stack = _slices_of(study, stored, places)
+    count = stack.size - int(np.isfinite(stack).sum())
+    if count:
+        bad[stored.name] = count
     return np.nan_to_num(stack, copy=False, nan=0.0, posinf=0.0, neginf=0.0)
 
 
 def _slices_of(study: StudyFolder, stored: StoredMap, places: list[Place]) -> NDArray[np.float32]:
     frames = dict.fromkeys(frame for frame, _ in places)
     parts = [study.planes(stored, [i for f, i in places if f == frame], frame) for frame in frames]
-    return np.abs(np.concatenate(parts)).astype(np.float32)
+    with np.errstate(over="ignore", invalid="ignore"):
+        return np.abs(np.concatenate(parts)).astype(np.float32)

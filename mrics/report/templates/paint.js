@@ -25,7 +25,7 @@ const ORANGE = [240, 150, 30];
 // Grey level (0-255) of every lattice number for a window, made once per window.
 function greyLevels(step, low, high) {
   const levels = new Uint8Array(32768);
-  const scale = 255 / Math.max(high - low, 1e-30);
+  const scale = high > low ? 255 / (high - low) : 0;
   for (let n = 0; n < levels.length; n += 1) {
     levels[n] = Math.max(0, Math.min(255, Math.round((n * step - low) * scale)));
   }
