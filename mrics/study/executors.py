@@ -5,7 +5,7 @@ from __future__ import annotations
 import multiprocessing
 import signal
 from collections.abc import Callable, Iterator
-from concurrent.futures import Executor, Future, ProcessPoolExecutor
+from concurrent.futures import CancelledError, Executor, Future, ProcessPoolExecutor
 from contextlib import contextmanager
 from typing import Any
 
@@ -16,6 +16,8 @@ from mrics.numerics.memory import available_memory
 # A unit holds the reference, k-space, its un-centred block, the image and the maps.
 _COPIES_OF_A_SCAN = 8
 _PROCESS_BYTES = 300 * 2**20
+# How long a scheduler may take to answer; with the rest of a start it stays under 10 s.
+TIMEOUT_S = 7.0
 
 
 class InProcess(Executor):
@@ -45,41 +47,68 @@ def _start_worker() -> None:
     set_threads(1)
 
 
-@contextmanager
-def cluster_executor(address: str, timeout_s: float = 10.0) -> Iterator[Executor]:
-    """An executor on a Dask cluster.
-
-    Parameters
-    ----------
-    address : str
-        ``tcp://host:port`` of a scheduler, or ``local`` for one made here with a worker per core.
-    timeout_s : float
-        How long to wait for an answer.
+def check_cluster(address: str) -> None:
+    """See that the package is there and that a scheduler answers; nothing is started.
 
     Raises
     ------
     StudyError
-        Where the package ``distributed`` is missing or the address does not answer.
+        As :func:`cluster_executor`.
     """
     try:
-        from distributed import Client, LocalCluster
+        from distributed import Client
     except ImportError as error:
         raise StudyError(
             "The package distributed, which a cluster needs, is not installed.",
             "--cluster",
             "Install it with: pip install 'mrics[cluster]'.",
         ) from error
-    local = None
+    if address != "local":
+        with _answering(address):
+            Client(address, timeout=TIMEOUT_S).close()
+
+
+@contextmanager
+def _answering(address: str) -> Iterator[None]:
     try:
-        if address == "local":
-            local = LocalCluster(n_workers=threads(), threads_per_worker=1, dashboard_address=None)
-        client = Client(local or address, timeout=timeout_s)
+        yield
     except (OSError, ValueError) as error:
         raise StudyError(
-            f"The cluster {address!r} does not answer within {timeout_s:g} s.",
+            f"The cluster {address!r} does not answer within {TIMEOUT_S:g} s.",
             "--cluster",
             "Check the scheduler's address (tcp://host:port) and that it runs.",
         ) from error
+
+
+def cluster_lost(error: BaseException) -> bool:
+    """Whether an error says that workers or the scheduler of a cluster are gone."""
+    return type(error).__module__.partition(".")[0] == "distributed" or isinstance(
+        error, CancelledError
+    )
+
+
+@contextmanager
+def cluster_executor(address: str) -> Iterator[Executor]:
+    """An executor on a Dask cluster.
+
+    Parameters
+    ----------
+    address : str
+        ``tcp://host:port`` of a scheduler, or ``local`` for one made here with a worker per core.
+
+    Raises
+    ------
+    StudyError
+        Where the package ``distributed`` is missing or the address does not answer.
+    """
+    check_cluster(address)
+    from distributed import Client, LocalCluster
+
+    local = None
+    with _answering(address):
+        if address == "local":
+            local = LocalCluster(n_workers=threads(), threads_per_worker=1, dashboard_address=None)
+        client = Client(local or address, timeout=TIMEOUT_S)
     try:
         client.run(set_threads, 1)
         yield client.get_executor(pure=False)

@@ -5,12 +5,16 @@ from __future__ import annotations
 import json
 import math
 import os
+import re
 import tempfile
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
 import numpy as np
+
+# A quoted string that starts as an absolute path does: / or ~, a drive, a share.
+_QUOTED = re.compile(r"""(["'])(?:~|[A-Za-z]:(?=[\\/])|[\\/])[^"'\n]*([\\/][^"'\\/\n]+)(?=\1)""")
 
 
 def plain(value: Any) -> Any:
@@ -31,6 +35,17 @@ def plain(value: Any) -> Any:
     if value is None or isinstance(value, str):
         return value
     return str(value)
+
+
+def without_folders(value: Any) -> Any:
+    """A value whose absolute paths are cut to ``.../name``, also where a text quotes them."""
+    if isinstance(value, Mapping):
+        return {k: without_folders(v) for k, v in value.items()}
+    if isinstance(value, list | tuple):
+        return [without_folders(v) for v in value]
+    if isinstance(value, str):
+        return _QUOTED.sub(r"\1...\2", f'"{value}"')[1:-1] if value else value
+    return value
 
 
 def write_text(path: Path, text: str) -> None:

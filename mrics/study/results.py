@@ -20,7 +20,7 @@ from mrics.study.aggregate import ArmNumbers, arm_numbers
 from mrics.study.answer import KEPT_LEVEL, overall_verdict, smallest_kept
 from mrics.study.channels import channel_picture
 from mrics.study.code_version import code_version
-from mrics.study.files import plain
+from mrics.study.files import plain, without_folders
 from mrics.study.measure_notes import measure_notes
 from mrics.study.plan import PlanRow, StudyPlan
 
@@ -97,7 +97,7 @@ def study_results(
     level = next(asked, KEPT_LEVEL)
     arms = [
         {
-            **row.as_dict(),
+            **without_folders(row.as_dict()),
             **_arm_record(row, by_arm[row.arm.id], numbers.get(row.arm.id)),
             "smallest_kept": smallest_kept(by_arm[row.arm.id], level),
         }
@@ -112,9 +112,9 @@ def study_results(
         "protocol": {
             "title": protocol.title,
             "question": protocol.question,
-            "text": protocol.text,
+            "text": without_folders(protocol.text),
             "sha256": protocol.sha256,
-            "values": protocol.values(),
+            "values": without_folders(protocol.values()),
         },
         "scans": records,
         "units": units_out,

@@ -5,14 +5,21 @@ from __future__ import annotations
 import shutil
 import time
 from collections.abc import Callable, Sequence
-from concurrent.futures import BrokenExecutor, Executor, as_completed
+from concurrent.futures import BrokenExecutor, Executor, Future, as_completed
 from contextlib import ExitStack, suppress
 from pathlib import Path
 from typing import Any
 
 from mrics.errors import MricsError, StudyError
 from mrics.protocol import Protocol, load_protocol
-from mrics.study.executors import InProcess, cluster_executor, fitting_workers, pool
+from mrics.study.executors import (
+    InProcess,
+    check_cluster,
+    cluster_executor,
+    cluster_lost,
+    fitting_workers,
+    pool,
+)
 from mrics.study.files import plain, write_json, write_text
 from mrics.study.folder import claim_folder
 from mrics.study.ledger import Ledger
@@ -72,14 +79,19 @@ def run_study(
         protocol = load_protocol(protocol)
     plan = plan_study(protocol, quick=quick)
     folder = Path(out)
+    if cluster is not None:
+        # Before scans are read, which may take minutes.
+        check_cluster(cluster)
     records = [scan_record(plan, number) for number in range(len(plan.scans))]
     claim_folder(folder, protocol, force)
     hashes = [record["sha256"] for record in records]
+    # Workers of a cluster stand in other folders.
+    seen = folder.absolute()
     with Ledger(folder) as ledger, _Work(plan, folder, ledger, progress, workers, cluster) as work:
         references = write_references(plan, folder)
         rows = [row for row in plan.rows if not row.arm.search]
         try:
-            results = work.run(plan.units(folder, hashes, rows))
+            results = work.run(plan.units(seen, hashes, rows))
             found = []
             for family in plan.families().values():
                 visited: dict[str, list[dict[str, Any]]] = {}
@@ -87,7 +99,7 @@ def run_study(
                 def looked_at(
                     row: PlanRow, draws: int, visited: dict[str, list[dict[str, Any]]] = visited
                 ) -> list[dict[str, Any]]:
-                    visited[row.arm.id] = work.run(plan.units(folder, hashes, [row], draws))
+                    visited[row.arm.id] = work.run(plan.units(seen, hashes, [row], draws))
                     return visited[row.arm.id]
 
                 limits, seed = protocol.acceptance, protocol.study.seed
@@ -133,8 +145,15 @@ def _write(
         "study_s": time.perf_counter() - started,
         "units": [{"key": r["key"], **r["timing"]} for r in results],
     }
-    write_json(folder / "results.json", content)
-    write_text(folder / "results.csv", slice_table(results))
+    try:
+        write_json(folder / "results.json", content)
+        write_text(folder / "results.csv", slice_table(results))
+    except OSError as error:
+        raise StudyError(
+            f"The results cannot be written ({error.strerror or error}).",
+            str(folder),
+            "Make room and run again: finished units are kept.",
+        ) from error
 
 
 def _baseline(
@@ -224,10 +243,11 @@ class _Work:
 
     def _spread(self, executor: Executor, waiting: Sequence[Unit]) -> dict[str, dict[str, Any]]:
         """Run units on an executor; a damaged scratch is made again, once for every unit."""
-        futures = {executor.submit(run_unit_shared, unit): unit for unit in waiting}
+        futures: dict[Future[Any], Unit] = {}
         again: list[Unit] = []
         done: dict[str, dict[str, Any]] = {}
         try:
+            futures = {executor.submit(run_unit_shared, unit): unit for unit in waiting}
             for future in as_completed(futures):
                 unit = futures[future]
                 try:
@@ -241,7 +261,9 @@ class _Work:
                 for unit in mine:
                     result = executor.submit(run_unit_shared, unit).result()
                     done[unit.key] = self._note(unit, result)
-        except BrokenExecutor as error:
+        except Exception as error:
+            if not isinstance(error, BrokenExecutor) and not cluster_lost(error):
+                raise
             raise StudyError(
                 "A worker process was ended from outside (out of memory, or killed).",
                 str(self._folder),
@@ -254,7 +276,16 @@ class _Work:
 
     def _write_scratch(self, number: int) -> None:
         scan = self._plan.prepared(number)
-        write_scratch(scan, self._folder / SCRATCH / self._plan.scan_ids[number])
+        folder = self._folder / SCRATCH / self._plan.scan_ids[number]
+        try:
+            write_scratch(scan, folder)
+        except OSError as error:
+            raise StudyError(
+                f"A scan cannot be laid out for the workers ({error.strerror or error}).",
+                str(folder),
+                "Make room (about the size of the unpacked scans) and run again, or run with "
+                "--workers 1, which needs none.",
+            ) from error
 
     def _note(self, unit: Unit, result: dict[str, Any]) -> dict[str, Any]:
         self._ledger.commit(unit.key, result)

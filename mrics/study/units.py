@@ -153,12 +153,6 @@ def run_unit_here(unit: Unit) -> dict[str, Any]:
         unit.protocol.study.seed,
         unit.protocol.study.virtual_channels,
     )
-    if scan.scan.sha256 != unit.sha256:
-        raise StudyError(
-            "The scan changed while the study ran.",
-            unit.files.path.name,
-            "Run the study again; units of scans that did not change are kept.",
-        )
     return run_unit(unit, scan)
 
 
@@ -173,6 +167,12 @@ def run_unit(unit: Unit, scan: Prepared) -> dict[str, Any]:
     Linear algebra runs on one thread: planes are what is spread over threads and processes, and
     sums then have one order, so that a unit gives the same bits wherever it runs.
     """
+    if scan.scan.sha256 != unit.sha256:
+        raise StudyError(
+            "The scan changed while the study ran.",
+            unit.files.path.name,
+            "Run the study again; units of scans that did not change are kept.",
+        )
     with threadpool_limits(1, user_api="blas"):
         return _computed(unit, scan)
 

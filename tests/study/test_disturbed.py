@@ -1,5 +1,6 @@
 """Scans that change, disks that fill, and what must never be written."""
 
+import multiprocessing
 import os
 import subprocess
 from pathlib import Path
@@ -41,6 +42,52 @@ def test_a_scan_that_vanishes_during_the_run_is_named(tmp_path: Path) -> None:
     assert "object_1.nii.gz" in str(caught.value)
 
 
+def test_a_scan_that_changes_before_workers_start_stops_the_run(tmp_path: Path) -> None:
+    protocol = write_small_study(tmp_path, scans=1)
+
+    def disturb(done: int, total: int, label: str) -> None:
+        nibabel.save(nibabel.Nifti1Image(small_object(9), AFFINE), tmp_path / "object_0.nii.gz")
+
+    with pytest.raises(MricsError, match="changed while the study ran"):
+        run_alone(protocol, tmp_path / "out", workers=2, progress=disturb)
+    with Ledger(tmp_path / "out") as ledger:
+        assert not ledger._base.execute("SELECT count(*) FROM units").fetchone()[0]
+
+
+def test_a_lost_worker_stops_the_run_and_its_finished_units_are_kept(tmp_path: Path) -> None:
+    protocol = write_small_study(tmp_path, scans=2)
+
+    def kill(done: int, total: int, label: str) -> None:
+        if label:
+            for child in multiprocessing.active_children():
+                child.kill()
+
+    with pytest.raises(MricsError, match="ended from outside"):
+        run_alone(protocol, tmp_path / "out", workers=2, progress=kill)
+    assert not (tmp_path / "out" / "scratch").exists()
+    counts: list[int] = []
+    resumed = run_alone(protocol, tmp_path / "out", progress=lambda done, *_: counts.append(done))
+    assert counts[0] >= 1
+    assert resumed["units"] == run_alone(protocol, tmp_path / "whole")["units"]
+
+
+@pytest.mark.parametrize("damage", ["stack.npy", "sums.json"])
+def test_scratch_damaged_during_a_run_is_made_again(tmp_path: Path, damage: str) -> None:
+    protocol = write_small_study(tmp_path, scans=2)
+    out = tmp_path / "out"
+    damaged: list[Path] = []
+
+    def disturb(done: int, total: int, label: str) -> None:
+        if label and not damaged:
+            # Units come scan by scan, so no worker has opened the second one yet.
+            damaged.append(out / "scratch" / "object-1" / damage)
+            damaged[0].write_bytes(damaged[0].read_bytes()[:-7])
+
+    results = run_alone(protocol, out, workers=2, progress=disturb)
+    assert damaged
+    assert results["units"] == run_alone(protocol, tmp_path / "whole")["units"]
+
+
 @pytest.fixture
 def small_disk(tmp_path: Path) -> Path:
     """A file system of 300 kB."""
@@ -55,14 +102,16 @@ def small_disk(tmp_path: Path) -> Path:
     subprocess.run(["umount", str(folder)], check=True)
 
 
+@pytest.mark.parametrize("workers", [1, 2])
 def test_a_full_disk_stops_cleanly_and_the_run_goes_on_when_there_is_room(
-    small_disk: Path, tmp_path: Path
+    small_disk: Path, tmp_path: Path, workers: int
 ) -> None:
     text = PROTOCOL.replace("draws = 2", "draws = 3")
     protocol = write_small_study(tmp_path, scans=2, protocol=text)
     out = small_disk / "out"
     with pytest.raises(MricsError, match=r"No space left|disk is full"):
-        run_alone(protocol, out)
+        run_alone(protocol, out, workers=workers)
+    assert not (out / "scratch").exists()
     assert not [p for p in out.rglob("*") if p.name.startswith(".") and p.name != ".running"]
     subprocess.run(["mount", "-o", "remount,size=30m", str(small_disk)], check=True)
     kept: list[int] = []
@@ -80,9 +129,10 @@ def test_nothing_private_is_written(tmp_path: Path) -> None:
             image.header[field] = b"Zebulon"
         extension = nibabel.nifti1.Nifti1Extension(6, b"Zebulon born 1950")
         image.header.extensions.append(extension)
-        nibabel.save(image, home / f"object_{number}.nii.gz")
+        nibabel.save(image, home / f"object_{number}<b>&'x.nii.gz")
     markup = "<script>alert('Small')</script>"
-    protocol.write_text(PROTOCOL.replace("Small object", markup))
+    text = PROTOCOL.replace("Small object", markup)
+    protocol.write_text(text.replace('"object_', f'"{home}/object_'))
     run_study(protocol, tmp_path / "out", workers=2)
     user = os.environ.get("USER") or "no-user-name-here"
     planted = ("Zebulon", "Quillfeather", str(tmp_path), os.uname().nodename, user)
@@ -99,4 +149,5 @@ def test_nothing_private_is_written(tmp_path: Path) -> None:
     page = (tmp_path / "out" / "report.html").read_text()
     assert markup not in page
     assert "&lt;script&gt;alert" in page
+    assert "<b>&'x" not in page
     assert (tmp_path / "out" / LEDGER).is_file()

@@ -35,6 +35,8 @@ def test_interpolated_scans_flatter(tmp_path: Path) -> None:
     assert row.high is not None
     assert row.high < 0, "the interval of the difference leaves no doubt"
     assert row.difference == pytest.approx(row.as_is - row.remedied, rel=1e-6)
+    for path in (tmp_path / "out").rglob("*.json"):
+        assert str(tmp_path) not in path.read_text(), path.name
 
 
 def test_clean_scans_have_nothing_to_compare(tmp_path: Path) -> None:
