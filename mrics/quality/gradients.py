@@ -21,7 +21,7 @@ def gradient_similarity(image: Plane, reference: Plane, data_range: float) -> Pl
     Parameters
     ----------
     image, reference : ndarray of shape (u, v), float64
-        Magnitudes, at least 2 x 2.
+        Magnitudes; a plane of one line is not halved.
     data_range : float
         L.
 
@@ -29,7 +29,7 @@ def gradient_similarity(image: Plane, reference: Plane, data_range: float) -> Pl
     ----------
     Xue, Zhang, Mou, Bovik 2014, IEEE Trans Image Process 23:684-695 (constants from memory).
     """
-    first, second = (_gradient(halved(plane)) for plane in (image, reference))
+    first, second = (_gradient(_coarse(plane)) for plane in (image, reference))
     c = CONSTANT * data_range**2
     return (2.0 * first * second + c) / (first**2 + second**2 + c)
 
@@ -41,9 +41,14 @@ def gradient_deviation(
     similarity = gradient_similarity(image, reference, data_range)
     if mask is None:
         return float(similarity.std())
-    share = halved(mask.astype(np.float64))
+    share = _coarse(mask.astype(np.float64))
     inside = share >= 0.5 if (share >= 0.5).any() else share > 0.0
     return float(similarity[inside].std()) if inside.any() else 0.0
+
+
+def _coarse(plane: Plane) -> Plane:
+    """At half resolution; a plane of one line as it is."""
+    return halved(plane) if min(plane.shape) > 1 else plane
 
 
 def _gradient(plane: Plane) -> Plane:

@@ -168,8 +168,10 @@ def _scores(sums: _Sums, data_range: float, both_complex: bool) -> dict[str, flo
         scores["nrmse"] = (sums.error / sums.reference) ** 0.5
         if both_complex:
             scores["nrmse_complex"] = (sums.complex_error / sums.reference) ** 0.5
-        if sums.log_reference > 0.0:
+        # Below this the filter's answer to a flat reference is rounding.
+        if sums.log_reference > 1e-24 * sums.reference:
             scores["hfen"] = (sums.log_error / sums.log_reference) ** 0.5
         else:
-            scores["hfen"] = 0.0 if sums.log_error == 0.0 else float("inf")
+            flat = sums.log_error <= 1e-24 * sums.reference
+            scores["hfen"] = 0.0 if flat else float("inf")
     return scores

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import time
 from dataclasses import replace
 from typing import Any
@@ -11,6 +12,7 @@ from numpy.typing import NDArray
 
 from mrics.encoding.acquisition import Acquisition
 from mrics.errors import RecoveryError
+from mrics.numerics.scaling import exponent_for, largest_part, times_power_of_two
 from mrics.recovery.contract import Recovered
 from mrics.recovery.registry import solver
 from mrics.recovery.settings import check_settings
@@ -62,7 +64,12 @@ def recover(
     """
     chosen = check_settings(method, settings)
     started = time.perf_counter()
-    empty = _survey(acquisition)
+    largest = _survey(acquisition)
+    empty = largest == 0
+    exponent = exponent_for(largest)
+    acquisition = _times_power_of_two(acquisition, exponent)
+    if reference is not None:
+        reference = times_power_of_two(reference, exponent)
     sigma, note = reference_sigma(acquisition)
     if empty:
         sigma, note = 0.0, "all acquired samples are zero; the image is zero"
@@ -84,7 +91,38 @@ def recover(
         sigma=sigma,
         wall_s=time.perf_counter() - started,
     )
-    return replace(result, certificate=certificate)
+    return _scaled_back(replace(result, certificate=certificate), exponent)
+
+
+def _times_power_of_two(acquisition: Acquisition, exponent: int) -> Acquisition:
+    """The acquisition at another scale; methods square samples in single precision."""
+    if exponent == 0:
+        return acquisition
+    covariance = acquisition.covariance
+    return replace(
+        acquisition,
+        kspace=times_power_of_two(np.asarray(acquisition.kspace), exponent),
+        sigma_scan=math.ldexp(acquisition.sigma_scan, exponent),
+        sigma_added=math.ldexp(acquisition.sigma_added, exponent),
+        covariance=None if covariance is None else times_power_of_two(covariance, 2 * exponent),
+    )
+
+
+def _scaled_back(result: Recovered, exponent: int) -> Recovered:
+    """What was recovered at the scale 2**exponent, at the data's own."""
+    if exponent == 0:
+        return result
+    own, history = result.certificate, dict(result.history)
+    if "objective" in history:
+        history["objective"] = [math.ldexp(one, -2 * exponent) for one in history["objective"]]
+    objective = None if own.objective is None else math.ldexp(own.objective, -2 * exponent)
+    sigma = math.ldexp(own.sigma, -exponent)
+    return replace(
+        result,
+        image=times_power_of_two(result.image, -exponent),
+        certificate=replace(own, objective=objective, sigma=sigma),
+        history=history,
+    )
 
 
 def reference_sigma(acquisition: Acquisition) -> tuple[float, str]:
@@ -110,9 +148,9 @@ def reference_sigma(acquisition: Acquisition) -> tuple[float, str]:
     return floor, f"noise level unknown (0): a floor of {SIGMA_FLOOR:g} x the RMS of the samples"
 
 
-def _survey(acquisition: Acquisition) -> bool:
-    """Check the samples plane by plane; True where all are zero."""
-    empty = True
+def _survey(acquisition: Acquisition) -> float:
+    """Check the samples plane by plane; their largest real or imaginary part."""
+    largest = 0.0
     for plane in range(acquisition.kspace.shape[0]):
         samples = np.asarray(acquisition.kspace[plane])
         if not np.isfinite(samples).all():
@@ -124,5 +162,5 @@ def _survey(acquisition: Acquisition) -> bool:
                 "kspace, index (plane, channel, u, v)",
                 "Remove or repair these samples before recovery.",
             )
-        empty = empty and not samples.any()
-    return empty
+        largest = max(largest, largest_part(samples))
+    return largest

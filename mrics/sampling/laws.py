@@ -130,7 +130,33 @@ def law_density(
         Product over axes instead of a function of the radius.
     source : ndarray, optional
         Map of the law that takes one (see :mod:`mrics.sampling.source`).
+
+    Raises
+    ------
+    PatternError
+        For parameters out of range, and a density that is negative or not finite anywhere.
     """
+    density = _density(shape, law, settings, elliptical, per_axis, source)
+    usable = np.isfinite(density) & (density >= 0)
+    if not usable.all():
+        at = tuple(int(i) for i in np.argwhere(~usable)[0])
+        raise PatternError(
+            f"The law {law!r} gives {int((~usable).sum())} densities that are negative or not "
+            f"finite, the first {density[at]:g}.",
+            f"law {law!r}, index {at}",
+            "Give the law other parameters, or a density of 0 or more everywhere.",
+        )
+    return density
+
+
+def _density(
+    shape: tuple[int, ...],
+    law: str,
+    settings: dict[str, Any],
+    elliptical: bool,
+    per_axis: bool,
+    source: Field | None,
+) -> Field:
     parameters = law_parameters(law, settings)
     function = LAWS[law].density
     if source is not None:

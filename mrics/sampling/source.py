@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 from mrics.errors import PatternError
 from mrics.numerics import centred_fft
 from mrics.numerics.arrays import open_array
+from mrics.numerics.scaling import usual_size
 from mrics.sampling.grid import Field
 from mrics.scan.volume import Axes, Scan
 
@@ -105,7 +106,8 @@ def training_energy(
         count += len(stack)
     if count == 0:
         raise PatternError("There is no training scan.", "training", "Name at least one scan.")
-    return (total / count).astype(np.float32).astype(np.float64)
+    # Only the shape counts, and single precision does not hold the squares of every scale.
+    return usual_size(total / count)[0].astype(np.float32).astype(np.float64)
 
 
 def _stack_scan(stack: NDArray[Any], axes: Axes) -> Scan:

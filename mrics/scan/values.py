@@ -12,11 +12,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from mrics.errors import ScanError
+from mrics.numerics.scaling import largest_part
 from mrics.scan.header import Header, damaged, open_stream
 
 SLAB_BYTES = 4 * 1024**2
 # Padding after the last voxel that some writers leave; more than this is refused unread.
 MAX_TRAILING = 1024**2
+# A Fourier transform of larger values would leave single precision.
+LARGEST = 1e33
 
 
 def read_values(header: Header, *, zero_allowed: bool = False) -> NDArray[Any]:
@@ -38,7 +41,7 @@ def read_values(header: Header, *, zero_allowed: bool = False) -> NDArray[Any]:
     Raises
     ------
     ScanError
-        File truncated or damaged, NaN or infinite values (also those beyond float32), only zeros.
+        File truncated or damaged, NaN or infinite values (also those above 1e33), only zeros.
     """
     wide = header.dtype.kind == "c" and header.dtype.itemsize > 8
     kind = np.complex128 if wide else np.complex64 if header.is_complex else np.float32
@@ -57,6 +60,8 @@ def read_values(header: Header, *, zero_allowed: bool = False) -> NDArray[Any]:
                 with np.errstate(over="ignore", invalid="ignore"):
                     slab[...] = _scale(np.frombuffer(view, dtype=header.dtype), header)
                 wrong = ~np.isfinite(slab)
+                if largest_part(slab) > LARGEST:
+                    wrong |= (np.abs(slab.real) > LARGEST) | (np.abs(slab.imag) > LARGEST)
                 if wrong.any():
                     if first_bad < 0:
                         first_bad = start + int(np.argmax(wrong))
