@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+import math
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from mrics.numerics.scaling import times_power_of_two
 from mrics.sampling.pattern import Pattern
 from mrics.scan.volume import Axes
 
@@ -61,6 +63,19 @@ class Acquisition:
     volume_shape: tuple[int, ...] = ()
     calibration: tuple[int, ...] = (0,)
     notes: tuple[str, ...] = field(default=())
+
+    def at_scale(self, exponent: int) -> Acquisition:
+        """The acquisition with samples and noise times 2**exponent; itself where that is 0."""
+        if exponent == 0:
+            return self
+        psi = self.covariance
+        return replace(
+            self,
+            kspace=times_power_of_two(np.asarray(self.kspace), exponent),
+            sigma_scan=math.ldexp(self.sigma_scan, exponent),
+            sigma_added=math.ldexp(self.sigma_added, exponent),
+            covariance=None if psi is None else times_power_of_two(psi, 2 * exponent),
+        )
 
     @property
     def sigma(self) -> float:

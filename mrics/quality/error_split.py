@@ -158,7 +158,9 @@ def _by_window(a: Array, b: Array) -> tuple[Array, Array]:
     import pywt
 
     levels = _levels(a.shape)
-    grid = tuple(-(-n // 2**levels) * 2**levels for n in a.shape)
+    # The coarsest level must be as long as the filter.
+    least = pywt.Wavelet(WAVELET).dec_len - 1
+    grid = tuple(max(-(-n // 2**levels), least) * 2**levels for n in a.shape)
     padded = [np.zeros(grid, dtype=np.complex128) for _ in range(2)]
     for plane, own in zip(padded, (a, b), strict=True):
         plane[: own.shape[0], : own.shape[1]] = own

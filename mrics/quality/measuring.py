@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
 from dataclasses import asdict, dataclass
 from time import perf_counter
@@ -13,6 +14,7 @@ from numpy.typing import NDArray
 from mrics.encoding import Acquisition, some_planes
 from mrics.errors import QualityError
 from mrics.numerics import map_blocks
+from mrics.numerics.scaling import exponent_for, largest_part, times_power_of_two
 from mrics.quality.chain import Chain
 from mrics.quality.measures import Measures
 
@@ -31,7 +33,8 @@ class Measured:
         taken of that plane, None where it has no value.
     tables : dict
         Plain values for results files: ``spectral``, ``error_split``, ``edges``, ``noise``,
-        ``resolution``, ``features``, ``observer``, ``regions``, as far as they were asked for.
+        ``resolution``, ``features``, ``observer``, ``regions``, as far as they were asked for. The
+        observer's spectrum is that of values brought to a usual size by a power of 2.
     maps : dict of str to ndarray of shape (plane, u, v), float32
         ``measured``, ``missing``, ``invented`` (magnitudes of the parts of the error),
         ``noise_ratio``, ``resolution_u_mm``, ``resolution_v_mm``, and ``feature_1``,
@@ -103,7 +106,13 @@ def measure(
     """
     wanted = measures or Measures()
     started = perf_counter()
-    result = _Results(image, reference, voxel_mm, mask, data_range)
+    # Measures square values in single precision; regions alone are told in the scan's unit.
+    exponent = exponent_for(largest_part(reference))
+    acquisition = acquisition.at_scale(exponent)
+    image, reference = (times_power_of_two(one, exponent) for one in (image, reference))
+    if data_range is not None:
+        data_range = math.ldexp(data_range, exponent)
+    result = _Results(image, reference, voxel_mm, mask, data_range, exponent)
     result.whole_stack(acquisition, wanted, labels, edges)
     planes: tuple[int, ...] = ()
     recovery_s = 0.0
@@ -166,8 +175,10 @@ class _Results:
         voxel_mm: tuple[float, float, float],
         mask: NDArray[np.bool_] | None,
         data_range: float | None,
+        exponent: int,
     ) -> None:
         self.image, self.reference, self.voxel_mm = image, reference, voxel_mm
+        self.exponent = exponent
         self.mask, self.data_range = mask, data_range
         self.by_plane: list[dict[str, float | None]] = [{} for _ in range(len(reference))]
         self.tables: dict[str, Any] = {}
@@ -208,16 +219,19 @@ class _Results:
                 "orthogonal": split.orthogonal,
             }
             for name in PARTS:
-                self.maps[name] = np.abs(getattr(split, name)).astype(np.float32)
+                part = np.abs(getattr(split, name)).astype(np.float32)
+                self.maps[name] = times_power_of_two(part, -self.exponent)
         if wanted.edges:
             self._edges(in_plane, edges)
         if labels is not None:
             from mrics.quality.regions import region_planes, region_statistics
 
             against = wanted.background_label
-            regions = region_statistics(self.image, self.reference, labels, background=against)
+            ours = times_power_of_two(self.image, -self.exponent)
+            theirs = times_power_of_two(self.reference, -self.exponent)
+            regions = region_statistics(ours, theirs, labels, background=against)
             self.tables["regions"] = [_plain(asdict(region)) for region in regions]
-            by_plane = region_planes(self.image, self.reference, labels, background=against)
+            by_plane = region_planes(ours, theirs, labels, background=against)
             for mine, values in zip(self.by_plane, by_plane, strict=True):
                 mine.update(values)
 
@@ -299,7 +313,7 @@ class _Results:
             "gain_percentiles": {str(p): v for p, v in found.gain_percentiles.items()},
             "acceleration": found.acceleration,
             "replicas": found.replicas,
-            "sigma": found.sigma,
+            "sigma": math.ldexp(found.sigma, -self.exponent),
             "note": found.note,
         }
 
@@ -360,7 +374,8 @@ class _Results:
             self.by_plane[plane]["feature_shift_mm"] = shift if np.isfinite(shift) else None
         self.tables["features"] = [_plain(_feature_row(one, chosen)) for one in found]
         for number, one in enumerate(found, start=1):
-            self._map(f"feature_{number}", chosen, one.change)
+            change = times_power_of_two(one.change, -self.exponent)
+            self._map(f"feature_{number}", chosen, change)
 
     def _observer(self, chain: Chain, chosen: list[int], mask: Any, wanted: Measures, seed: int,
                   note: Any) -> None:  # fmt: skip

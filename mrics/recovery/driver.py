@@ -20,6 +20,8 @@ from mrics.recovery.weights import choose_weight
 
 #: noise level taken where the data's own is 0, relative to the RMS of the calibration samples
 SIGMA_FLOOR = 1e-4
+#: extras and history of methods that are in the signal's unit
+_SIGNALS = ("low_rank", "sparse", "residual", "noise")
 
 
 def recover(
@@ -67,7 +69,8 @@ def recover(
     largest = _survey(acquisition)
     empty = largest == 0
     exponent = exponent_for(largest)
-    acquisition = _times_power_of_two(acquisition, exponent)
+    # Methods square samples in single precision.
+    acquisition = acquisition.at_scale(exponent)
     if reference is not None:
         reference = times_power_of_two(reference, exponent)
     sigma, note = reference_sigma(acquisition)
@@ -94,27 +97,16 @@ def recover(
     return _scaled_back(replace(result, certificate=certificate), exponent)
 
 
-def _times_power_of_two(acquisition: Acquisition, exponent: int) -> Acquisition:
-    """The acquisition at another scale; methods square samples in single precision."""
-    if exponent == 0:
-        return acquisition
-    covariance = acquisition.covariance
-    return replace(
-        acquisition,
-        kspace=times_power_of_two(np.asarray(acquisition.kspace), exponent),
-        sigma_scan=math.ldexp(acquisition.sigma_scan, exponent),
-        sigma_added=math.ldexp(acquisition.sigma_added, exponent),
-        covariance=None if covariance is None else times_power_of_two(covariance, 2 * exponent),
-    )
-
-
 def _scaled_back(result: Recovered, exponent: int) -> Recovered:
     """What was recovered at the scale 2**exponent, at the data's own."""
     if exponent == 0:
         return result
-    own, history = result.certificate, dict(result.history)
-    if "objective" in history:
-        history["objective"] = [math.ldexp(one, -2 * exponent) for one in history["objective"]]
+    own, history, extras = result.certificate, dict(result.history), dict(result.extras)
+    for name, power in (("objective", 2), *((one, 1) for one in _SIGNALS)):
+        if name in history:
+            history[name] = [math.ldexp(one, -power * exponent) for one in history[name]]
+    for name in set(_SIGNALS) & set(extras):
+        extras[name] = times_power_of_two(extras[name], -exponent)
     objective = None if own.objective is None else math.ldexp(own.objective, -2 * exponent)
     sigma = math.ldexp(own.sigma, -exponent)
     return replace(
@@ -122,6 +114,7 @@ def _scaled_back(result: Recovered, exponent: int) -> Recovered:
         image=times_power_of_two(result.image, -exponent),
         certificate=replace(own, objective=objective, sigma=sigma),
         history=history,
+        extras=extras,
     )
 
 

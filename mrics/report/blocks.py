@@ -110,7 +110,7 @@ def pack_map(values: NDArray[np.float32], low: float, top: float) -> Block:
 def pack_change(values: NDArray[np.float32], step: float) -> Block:
     """Signed changes of image values as lattice numbers."""
     return _encode(
-        np.clip(np.rint(values / np.float32(step)), -_LARGEST, _LARGEST).astype(np.int32)
+        np.clip(np.rint(values.astype(np.float64) / step), -_LARGEST, _LARGEST).astype(np.int32)
     )
 
 

@@ -4,7 +4,7 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
-from conftest import blobs
+from invented_planes import blobs
 from scipy import integrate, stats
 
 from mrics.encoding import estimate_sigma, some_planes, undersample
