@@ -193,10 +193,12 @@ def _confidence(summaries: Mapping[str, Summary | None], level: float) -> str:
     estimates = [one.estimate for one in summaries.values() if one is not None]
     if not estimates:
         return "Nothing was measured."
-    least = min(estimates, key=lambda one: (one.scans, one.draws))
-    if least.claims:
-        return f"{100 * level:g} % intervals of the mean over {least.over} ({least.method})."
-    which = "this scan" if least.scans == 1 else "these 2 scans"
-    if least.draws < 2:
+    best = max(estimates, key=lambda one: (one.scans, one.draws))
+    if best.claims:
+        return f"{100 * level:g} % intervals of the mean over {best.over} ({best.method})."
+    which = "this scan" if best.scans == 1 else "these 2 scans"
+    if best.draws < 2:
         return f"One draw of {which}: no interval, and no claim beyond {which}."
-    return f"{100 * level:g} % intervals over {least.over}; no claim beyond {which}."
+    single = any(one.draws < 2 for one in estimates)
+    rest = " Measures of one draw have no interval." if single else ""
+    return f"{100 * level:g} % intervals over {best.over}; no claim beyond {which}.{rest}"

@@ -245,7 +245,8 @@ METRICS: MappingProxyType[str, Metric] = MappingProxyType(
         ),
         "observer_efficiency": Metric(
             "higher",
-            "(d' of that observer / d' of the ideal observer on the k-space samples)^2",
+            "(d' of that observer / d' of the ideal observer on the k-space samples)^2, one task "
+            "and the same backgrounds; an estimate from few images may pass 1 by chance",
             "1",
             "observer efficiency",
             "Share of what the data hold on the feature that the image shows.",

@@ -45,7 +45,8 @@ def regions(study: StudyFolder) -> dict[str, Regions]:
     for arm in study.arms:
         for table in study.measures(arm["id"]):
             for row in table.get("regions") or []:
-                out.setdefault(arm["id"], {}).setdefault(int(row["label"]), []).append(row)
+                if row.get("plane_means") and row.get("reference_plane_means"):
+                    out.setdefault(arm["id"], {}).setdefault(int(row["label"]), []).append(row)
     return out
 
 

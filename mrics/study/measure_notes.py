@@ -5,6 +5,8 @@ from __future__ import annotations
 from collections.abc import Sequence
 from typing import Any
 
+_AGAIN = frozenset({"noise_ratio", "resolution_u_mm", "feature_retention", "observer_auc"})
+
 
 def measure_notes(results: Sequence[dict[str, Any]], labels: dict[str, str]) -> list[str]:
     """Notes on the measures that units carry.
@@ -17,6 +19,16 @@ def measure_notes(results: Sequence[dict[str, Any]], labels: dict[str, str]) -> 
     """
     tables = [(unit["arm"], unit["measures"]) for unit in results if unit.get("measures")]
     notes = []
+    again = [
+        sum(not _AGAIN.isdisjoint(part) for part in unit["slices"])
+        for unit in results
+        if unit.get("measures") and any(not _AGAIN.isdisjoint(p) for p in unit["slices"])
+    ]
+    if again:
+        notes.append(
+            "Noise gain, local resolution, inserted features and observer were measured on the "
+            f"first draw alone, on {max(again)} slice(s) of each scan."
+        )
     resolved = [t["resolution"] for _, t in tables if t.get("resolution")]
     leaks = [one["lattice_leakage"] for one in resolved if one["lattice_leakage"] is not None]
     if resolved:

@@ -311,6 +311,17 @@ def test_one_draw_of_one_scan_passes_on_this_scan():
     assert result.confidence.startswith("One draw of this scan")
 
 
+def test_confidence_speaks_of_the_measures_with_most_draws():
+    _, records = study(1, draws=4)
+    summaries = {
+        "ssim": summarise(records, direction="higher"),
+        "noise_ratio": summarise([r for r in records if r[1] == 0], direction="lower"),
+    }
+    told = verdict(summaries, {}).confidence
+    assert "luck of the draw (4 draws)" in told
+    assert told.endswith("Measures of one draw have no interval.")
+
+
 def test_margins_compare_with_the_baseline():
     _, ours = study(8, seed=3)
     _, theirs = study(8, seed=4)
