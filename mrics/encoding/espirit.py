@@ -23,8 +23,6 @@ from numpy.typing import NDArray
 from mrics.errors import AcquisitionError
 
 Array = NDArray[Any]
-#: eigenvalue of G above which a pixel counts as holding signal
-SUPPORT = 0.8
 _RELATIVE_CUT = 0.003
 _NOISE_CUT = 1.1
 

@@ -1,6 +1,6 @@
 """Cost of receive channels: recoveries against their FFTs, estimation, memory.
 
-Run with ``pytest -n 0 -s tests/benchmarks/test_encoding_speed.py``; prints figures, asserts none.
+Run with ``pytest tests/benchmarks/test_encoding_speed.py``; prints figures, asserts none.
 """
 
 import resource
@@ -17,7 +17,7 @@ import scipy.fft
 from mrics.encoding import estimate_sensitivities, undersample
 from mrics.encoding.coils import simulate_coils
 from mrics.recovery import METHODS, recover
-from mrics.sampling import draw_pattern
+from mrics.sampling import Pattern, draw_pattern
 
 PLANES, SIDE, CHANNELS, ITERATIONS = 16, 256, 8, 20
 
@@ -53,7 +53,7 @@ def acquired(pattern, planes=PLANES, known=True):
 
 
 @pytest.mark.parametrize("axes", [1, 2])
-def test_least_squares_against_its_ffts(axes):
+def test_least_squares_against_its_ffts(axes, figure):
     """Bar: at most 1.7. A pattern along u alone needs transforms along u alone."""
     pattern = draw_pattern((SIDE,) * axes, acceleration=4, calibration=24, seed=1)
     data = acquired(pattern)
@@ -76,32 +76,37 @@ def test_least_squares_against_its_ffts(axes):
     for which, one in needed.items():
         if axes == 2 and which == (-2,):
             continue
-        print(
-            f"\nleast-squares, {axes}-D pattern, {ITERATIONS} iterations: {wall:.3f} s, "
-            f"{wall / (ITERATIONS * one):.2f} x its FFT pairs along axes {which} "
-            f"({ITERATIONS * one:.3f} s)"
-        )
+        along = "u" if len(which) == 1 else "u and v"
+        name = f"least-squares, 8 channels, {axes}-D pattern / its FFT pairs along {along}"
+        figure(name, f"{wall / (ITERATIONS * one):.2f} x ({wall:.2f} s)", "1.7 x")
 
 
-def test_sensitivities_by_plane():
+def test_sensitivities_by_plane(figure):
     """Bar: 1.5 s for one plane, and batches in proportion."""
     data = acquired(draw_pattern((SIDE,) * 2, acceleration=4, calibration=24, seed=1), known=False)
     estimate_sensitivities(data, slice(0, 1))
     for planes in (1, 2, 4, 8, 16):
         part = slice(0, planes)
+        begun = time.process_time()
         wall = fastest(lambda part=part: estimate_sensitivities(data, part), 3)
-        print(f"\nmaps of {planes} planes: {wall:.3f} s, {wall / planes:.3f} s a plane")
+        busy = (time.process_time() - begun) / (3 * planes)
+        figure(
+            f"maps of {planes} plane(s) of 256 x 256, 8 channels, a plane",
+            f"{wall / planes:.2f} s ({busy:.2f} s of processor)",
+            "1.5 s for one",
+        )
 
 
 @pytest.mark.parametrize("known", [True, False])
-def test_kernel_by_plane(known):
+def test_kernel_by_plane(known, figure):
     """Bar: 0.5 s a plane (R = 3)."""
     pattern = draw_pattern((SIDE,), pattern="equispaced", acceleration=3, calibration=24)
     data = acquired(pattern, known=known)
     for combine in ("sensitivities", "root-sum-of-squares"):
         recover(data, "kernel", combine=combine)
         wall = fastest(lambda combine=combine: recover(data, "kernel", combine=combine), 3)
-        print(f"\nkernel R = 3, {combine}, maps known {known}: {wall / PLANES:.3f} s a plane")
+        maps = "maps given" if known else "maps estimated"
+        figure(f"kernel, R = 3, {combine}, {maps}, a plane", f"{wall / PLANES:.2f} s", "0.5 s")
 
 
 SHAPE = (256, CHANNELS, 256, 160)
@@ -111,6 +116,8 @@ FEW = {
     "pocs": {"iterations": 2},
     "wavelet": {"iterations": 2, "weight": 1.0},
     "variation": {"iterations": 2, "weight": 1.0},
+    "wavelet+variation": {"iterations": 2, "weight": 1.0},
+    "low-rank": {"iterations": 2, "weight": 1.0},
     "dictionary": {"iterations": 1, "source": "dct", "start": "zero-filled", "most_atoms": 1},
 }
 
@@ -118,14 +125,17 @@ FEW = {
 def _pattern(method):
     if method in ("homodyne", "pocs"):
         return draw_pattern(SHAPE[2:], pattern="full", acceleration=1, partial_fourier=[0.75, 1.0])
-    return draw_pattern(
+    made = draw_pattern(
         SHAPE[2:], pattern="equispaced", steps=[2, 1], acceleration=2, calibration=24
     )
+    if method == "low-rank":  # two frames of 128 planes, alike
+        return Pattern(np.stack([made.mask, made.mask]), calibration=made.calibration)
+    return made
 
 
 def _write(path, method):
     """A 256 x 256 x 160 object of 8 channels under the pattern, 671 MB, readout by readout."""
-    pattern = _pattern(method)
+    pattern = _pattern(method if method in ("homodyne", "pocs") else "")
     coils = simulate_coils((SHAPE[0], *SHAPE[2:]), (1.0, 1.0, 1.0), number=CHANNELS).sensitivities
     whole = np.lib.format.open_memmap(path, mode="w+", dtype=np.complex64, shape=SHAPE)
     y, x = np.mgrid[-1:1:256j, -1:1:160j]
@@ -161,14 +171,13 @@ def _peak_of(path, method):
     done.set()
     whole = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
     print(
-        f"{method}: {peak[0] / 2**20:.2f} GiB beyond the mapped file; resident at most "
-        f"{whole / 2**20:.2f} GiB, pages of the file (0.62 GiB) among them; "
-        f"{time.perf_counter() - started:.0f} s"
+        f"{method}: {peak[0] / 2**20:.2f} GiB (resident with the file's pages "
+        f"{whole / 2**20:.2f} GiB; {time.perf_counter() - started:.0f} s)"
     )
 
 
 @pytest.mark.parametrize("method", sorted(METHODS))
-def test_memory_beside_a_mapped_file(method, tmp_path):
+def test_memory_beside_a_mapped_file(method, tmp_path, figure):
     """Bar: 1 GiB beside the 671 MB of the file; anonymous memory leaves the file's pages out."""
     path = tmp_path / "kspace.npy"
     for task in ("write", "recover"):
@@ -177,7 +186,8 @@ def test_memory_beside_a_mapped_file(method, tmp_path):
         )
         assert done.returncode == 0, done.stderr[-2000:]
     path.unlink()
-    print(f"\n{done.stdout.strip()}")
+    _, _, said = done.stdout.strip().partition(": ")
+    figure(f"{method}, memory beside a mapped file of 0.62 GiB", said, "1 GiB")
 
 
 if __name__ == "__main__":

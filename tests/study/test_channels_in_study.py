@@ -108,6 +108,35 @@ def test_virtual_channels_serve_every_arm(tmp_path: Path) -> None:
     assert today["metrics"]["nrmse"]["mean"] < 0.15
 
 
+@pytest.mark.parametrize("own", [False, True])
+def test_a_3d_scan_is_compressed_for_every_readout_position(tmp_path: Path, own: bool) -> None:
+    shape = (12, 40, 36)
+    text = (
+        UNFOLDED.replace("gradient-echo-2d", "gradient-echo-3d")
+        .replace('phase_axis = "j"', 'phase_axis = "j"\npartition_axis = "k"')
+        .replace('sampling = "equispaced"', 'sampling = { pattern = "equispaced", steps = [2, 1] }')
+        .replace("seed = 7", "seed = 7\nvirtual_channels = 4")
+    )
+    if own:
+        protocol = write_small_study(
+            tmp_path, 0, text.replace('"k"', '"k"\nchannel_axis = 3'), shape
+        )
+        planes = Axes("i", "j", "k").to_planes(small_object(0, shape))
+        maps = simulate_coils(planes.shape, (1.0, 1.2, 3.0), number=6, bore=2).sensitivities[:]
+        noise = np.random.default_rng(5).standard_normal((*maps.shape, 2)) @ [1.0, 1.0j]
+        channels = (maps * planes[:, None] + noise).transpose(0, 2, 3, 1).astype(np.complex64)
+        nibabel.save(nibabel.Nifti1Image(channels, AFFINE), tmp_path / "object_0.nii.gz")
+    else:
+        protocol = write_small_study(tmp_path, 1, text + "\n[coils]\nnumber = 6\n", shape)
+    results = run_study(protocol, tmp_path / "out")
+    today = next(a for a in results["arms"] if a["today"])
+    assert "6 channels compressed to 4" in today["certificates"]["note"]
+    [unit] = [u for u in results["units"] if u["arm"] == today["id"]]
+    # The outermost readout positions hold noise alone, and no sensitivities.
+    inner = [one["nrmse"] for one in unit["slices"] if 2 <= one["index"] <= 9]
+    assert max(inner) < 0.1
+
+
 @pytest.mark.parametrize(
     ("change", "says"),
     [
