@@ -200,7 +200,7 @@ def certificate_lines(content: dict[str, Any]) -> str:
     ]
     lines += [f"data: {text}" for text in content["notes"]]
     if one["weight"] is not None:
-        lines.append(f"weight: {one['weight']:.4g} sigma ({one['weight_rule']})")
+        lines.append(f"weight: {one['weight']:.4g} {one['weight_unit']} ({one['weight_rule']})")
     if one["optimality"] is not None:
         lines.append(f"optimality: {one['optimality']:.3g}, {one['tolerance']:.3g} {reached}")
     if one["note"]:

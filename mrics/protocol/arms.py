@@ -45,6 +45,8 @@ class Arm:
         Label of the search that may choose this arm; empty for arms that are always run.
     full_scan : bool
         True for the arm that acquires everything and that margins are taken against.
+    weight_rule : str
+        How a weight was trained, once it was; else empty.
     """
 
     id: str
@@ -59,6 +61,7 @@ class Arm:
     averages: int | None = None
     search: str = ""
     full_scan: bool = False
+    weight_rule: str = ""
 
 
 def sampling_name(entry: Sampling, others: tuple[Sampling, ...] = ()) -> str:

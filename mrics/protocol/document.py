@@ -113,6 +113,20 @@ class Protocol:
         where = place(self.path, self.text, ("quality", "labels"))
         return _files.with_labels(scans, measures.labels, folder, where)
 
+    def training_files(self) -> tuple[_files.ScanFiles, ...]:
+        """Files of the training scans; raises ProtocolError where one is studied as well."""
+        where = place(self.path, self.text, ("study", "training_scans"))
+        found = _files.expand(self.study.training_scans, self.path.parent, where)
+        studied = {scan.path.resolve() for scan in self.scan_files()}
+        for scan in found:
+            if scan.path.resolve() in studied:
+                raise ProtocolError(
+                    f"Scan {scan.path} is a training scan and is studied too.",
+                    where,
+                    "Judge a trained weight on scans it was not chosen on.",
+                )
+        return found
+
     def measures(self) -> Measures | None:
         """Which measures beside the scores are taken; None where ``[quality]`` is not given."""
         from mrics.quality.measures import measures_from
@@ -372,6 +386,12 @@ def _check_arms(protocol: Protocol, fail: Fail) -> None:
             )
     for at, method in enumerate(protocol.recovery):
         _ask_room(protocol, ("recovery", at), _check_settings, method)
+        if method.extra.get("weight") == "trained" and not protocol.study.training_scans:
+            fail(
+                'weight = "trained" needs scans to train on, and there are none.',
+                ("recovery", at, "weight"),
+                "Add training_scans to [study].",
+            )
     if protocol.today is not None:
         _ask_room(protocol, ("today",), _check_today, protocol)
 

@@ -296,6 +296,9 @@ class Study(Section):
     scans: Annotated[
         tuple[Annotated[ScanEntry, BeforeValidator(_as_entry)], ...], BeforeValidator(_as_list)
     ] = Field(description="scan files, patterns or pairs, relative to the protocol file")
+    training_scans: Annotated[
+        tuple[Annotated[ScanEntry, BeforeValidator(_as_entry)], ...], BeforeValidator(_as_list)
+    ] = Field((), description='scans that weight = "trained" is chosen on; none of them is studied')
     draws: Annotated[int, Field(ge=1, le=10000)] = Field(1, description="draws of each pattern")
     seed: Annotated[int, Field(ge=0, le=2**63 - 1)] = Field(0, description="seed of the study")
     slices: Annotated[Any, BeforeValidator(_slices)] = Field(

@@ -17,6 +17,7 @@ if TYPE_CHECKING:
     from mrics.recovery.registry import METHODS as METHODS
     from mrics.recovery.settings import check_settings as check_settings
     from mrics.recovery.weights import frozen as frozen
+    from mrics.recovery.weights import search_weight as search_weight
 
 _HOMES = {
     "METHODS": "registry",
@@ -26,6 +27,7 @@ _HOMES = {
     "frozen": "weights",
     "recover": "driver",
     "reference_sigma": "driver",
+    "search_weight": "weights",
 }
 
 __all__ = [
@@ -36,6 +38,7 @@ __all__ = [
     "frozen",
     "recover",
     "reference_sigma",
+    "search_weight",
 ]
 
 

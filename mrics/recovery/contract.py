@@ -32,7 +32,9 @@ class Certificate:
     certified : bool
         False for variants without a fixed objective; ``note`` then says why.
     weight : float or None
-        Weight of the penalty, in units of the total sigma.
+        Weight of the penalty.
+    weight_unit : str
+        What it is counted in: "sigma" is the total noise level.
     weight_rule : str
         How it was chosen: "given", "none", or the word of the settings, the rule it stands for
         and what it cost ("auto: held-out samples and misfit, 6 trials on 4 of 91 planes").
@@ -53,6 +55,7 @@ class Certificate:
     reached: bool = True
     certified: bool = True
     weight: float | None = None
+    weight_unit: str = "sigma"
     weight_rule: str = "none"
     sigma: float = 0.0
     note: str = ""

@@ -91,16 +91,16 @@ class LeastSquares(Settings):
 
     Attributes
     ----------
-    damping : float
+    damping : float or "auto"
         Tikhonov term, relative to the largest eigenvalue of A^H A; 0 gives the solution of
-        minimum norm.
+        minimum norm. "auto": by noise and signal energy where there are several channels.
     iterations : int
         Most iterations.
     tolerance : float
         Relative residual of the normal equations to stop at.
     """
 
-    damping: float = _number(0.0, 0.0)
+    damping: float | str = _number("auto", 0.0, words=("auto",))
     iterations: int = _number(100, 1, 100_000, whole=True)
     tolerance: float = _number(1e-5, 0.0, 1.0, above=True)
 

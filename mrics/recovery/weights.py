@@ -92,12 +92,12 @@ def choose_weight(
             "Name training_scans in the protocol, or give the trained weight as a number.",
         )
     if word == "best":
-        weight, trials = search(_error_to(reference, mask, acquisition, run))
+        weight, trials = search_weight(_error_to(reference, mask, acquisition, run))
         return Choice(weight, f"best: chosen with the answer in hand, {trials} trials", trials)
     part, places = _representative(acquisition)
     looked = f"on {places} of {acquisition.shape[0] // frames_of(acquisition)} planes"
     function, name = _rule(word, part, run, sigma)
-    weight, trials = search(function)
+    weight, trials = search_weight(function)
     name = name if name.startswith(word) else f"{word}: {name}"
     return Choice(weight, f"{name}, {trials} trials {looked}", trials)
 
@@ -112,7 +112,7 @@ def frozen(method: str, settings: Mapping[str, Any], certificate: Certificate) -
     return fixed
 
 
-def search(function: Callable[[float], float], start: float = START) -> tuple[float, int]:
+def search_weight(function: Callable[[float], float], start: float = START) -> tuple[float, int]:
     """Weight of least ``function`` on a logarithmic grid: steps of 4, then 2, then a parabola.
 
     Parameters
@@ -178,7 +178,7 @@ def _rule(
     split = risk.split_samples(part)
     if word == "held-out":
         return risk.held_out_risk(split, run), "held-out samples"
-    return risk.whole_risk(split, run), "held-out samples and misfit"
+    return risk.whole_risk(split, run, sigma), "held-out samples and misfit"
 
 
 def _representative(acquisition: Acquisition) -> tuple[Acquisition, int]:
@@ -197,7 +197,8 @@ def _representative(acquisition: Acquisition) -> tuple[Acquisition, int]:
     wanted = max(1, PLANES // frames)
     count = min(wanted, len(full))
     spread = full[((np.arange(count) + 0.5) * len(full) / count).astype(int)]
-    places = np.tile(spread, -(-wanted // count))
+    # The middle first: its divergence stands for that of the others.
+    places = np.tile(np.roll(spread, -(count // 2)), -(-wanted // count))
     chosen = [frame * apart + int(place) for frame in range(frames) for place in places]
     part = some_planes(acquisition, chosen)
     if part.channels > 1 and part.sensitivities is None:

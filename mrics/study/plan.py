@@ -113,6 +113,8 @@ class StudyPlan:
         Noise added to every arm.
     channel_axis : int or None
         File axis of receive channels.
+    training : tuple of ScanFiles
+        Scans that weights are trained on.
     """
 
     protocol: Protocol
@@ -123,6 +125,7 @@ class StudyPlan:
     choice: PlaneChoice
     noise: Noise
     channel_axis: int | None
+    training: tuple[ScanFiles, ...] = ()
 
     def prepared(self, number: int) -> Prepared:
         """One of the scans, read and made ready."""
@@ -143,6 +146,11 @@ class StudyPlan:
         if self.protocol.baseline == "today":
             return next((row.arm.id for row in self.rows if row.arm.today), None)
         return next((row.arm.id for row in self.rows if row.arm.full_scan), None)
+
+    def on_training_scans(self) -> StudyPlan:
+        """The same arms on the training scans."""
+        ids = _unique_ids(self.training)
+        return replace(self, scans=self.training, scan_ids=ids, training=())
 
     def scan_bytes(self) -> int:
         """Memory one scan takes as complex64 with its channels, the largest of them."""
@@ -196,6 +204,7 @@ class StudyPlan:
                         recovery=row.arm.recovery,
                         settings=_named(row.arm.recovery_settings),
                         dictionary=dictionary_hash(row.arm.recovery_settings),
+                        weight_rule=row.arm.weight_rule,
                         noise=(self.noise.sigma, self.noise.snr, self.noise.percent, ratio),
                         draw=draw,
                         seed=study.seed,
@@ -261,6 +270,12 @@ class StudyPlan:
         used = ((row.arm.label, row.arm.recovery_settings) for row in self.rows)
         notes += dictionary_notes(used, records)
         notes.append(self._channel_note(records))
+        best = [r.arm.label for r in self.rows if r.arm.recovery_settings.get("weight") == "best"]
+        if best:
+            notes.append(
+                "Weights chosen with the answer in hand, so that these arms are optimistic: "
+                f"{'; '.join(best)}."
+            )
         return notes
 
     def _channel_note(self, records: Sequence[dict[str, Any]]) -> str:
@@ -394,6 +409,7 @@ def plan_study(protocol: Protocol, *, quick: bool = False) -> StudyPlan:
         choice=choice,
         noise=noise,
         channel_axis=protocol.grid.channel_axis,
+        training=protocol.training_files(),
     )
 
 

@@ -148,6 +148,7 @@ def _arm_record(
                 "confidence": "No unit of an arm is finished.",
             },
             "certificates": {"reached": 0, "of": 0, "certified": True, "note": ""},
+            "weight": "",
         }
     certificates = [u["certificate"] for u in units]
     acquired = sorted({note for u in units for note in u["acquisition"]})
@@ -165,7 +166,20 @@ def _arm_record(
             "certified": all(c["certified"] for c in certificates),
             "note": "; ".join([*acquired, *sorted({c["note"] for c in certificates if c["note"]})]),
         },
+        "weight": _weight_words(certificates),
     }
+
+
+def _weight_words(certificates: Sequence[dict[str, Any]]) -> str:
+    """Weights of an arm's units and how they were chosen, for the report."""
+    weights = [c["weight"] for c in certificates if c["weight"] is not None]
+    if not weights:
+        return ""
+    ends = dict.fromkeys(f"{end(weights):.3g}" for end in (min, max))
+    unit = certificates[0]["weight_unit"]
+    # What follows the first comma is the search's cost, which differs from unit to unit.
+    rules = sorted({c["weight_rule"].split(",")[0] for c in certificates})
+    return f"{' to '.join(ends)} {unit} ({'; '.join(rules)})"
 
 
 def provenance(seed: int) -> dict[str, Any]:

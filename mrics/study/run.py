@@ -27,6 +27,7 @@ from mrics.study.plan import PlanRow, StudyPlan, plan_study
 from mrics.study.results import scan_record, slice_table, study_results, write_references
 from mrics.study.scratch import SCRATCH, ScratchError, write_scratch
 from mrics.study.search import search_family
+from mrics.study.trained_weights import trained_rows
 from mrics.study.units import Unit, run_unit_here, run_unit_shared
 
 Progress = Callable[[int, int, str], None]
@@ -91,22 +92,28 @@ def run_study(
         references = write_references(plan, folder)
         rows = [row for row in plan.rows if not row.arm.search]
         try:
+            rows = trained_rows(plan, rows, folder, ledger)
             results = work.run(plan.units(seen, hashes, rows))
             found = []
             for family in plan.families().values():
-                visited: dict[str, list[dict[str, Any]]] = {}
+                visited: dict[str, tuple[PlanRow, list[dict[str, Any]]]] = {}
 
                 def looked_at(
-                    row: PlanRow, draws: int, visited: dict[str, list[dict[str, Any]]] = visited
+                    row: PlanRow,
+                    draws: int,
+                    visited: dict[str, tuple[PlanRow, list[dict[str, Any]]]] = visited,
                 ) -> list[dict[str, Any]]:
-                    visited[row.arm.id] = work.run(plan.units(seen, hashes, [row], draws))
-                    return visited[row.arm.id]
+                    [row] = trained_rows(plan, [row], folder, ledger)
+                    done = work.run(plan.units(seen, hashes, [row], draws))
+                    visited[row.arm.id] = (row, done)
+                    return done
 
                 limits, seed = protocol.acceptance, protocol.study.seed
                 held = _baseline(plan, results)
                 found.append(search_family(family, looked_at, limits, held, seed))
-                rows += [row for row in family if row.arm.id in visited]
-                results += [result for row in family for result in visited.get(row.arm.id, [])]
+                looked = [visited[row.arm.id] for row in family if row.arm.id in visited]
+                rows += [row for row, _ in looked]
+                results += [result for _, done in looked for result in done]
         except BaseException:
             # What is finished can be looked at; the cause is what the caller hears of.
             with suppress(OSError, MricsError):

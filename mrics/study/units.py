@@ -177,8 +177,8 @@ def run_unit(unit: Unit, scan: Prepared) -> dict[str, Any]:
         return _computed(unit, scan)
 
 
-def _computed(unit: Unit, scan: Prepared) -> dict[str, Any]:
-    started = time.perf_counter()
+def acquire(unit: Unit, scan: Prepared) -> tuple[Pattern, Acquisition]:
+    """The pattern a unit plays and what it acquires of its scan."""
     grid = pattern_grid(unit.axes, scan.scan.shape)
     frames = scan.scan.frames if scan.scan.frames > 1 else 0
     pattern = draw_of(
@@ -187,7 +187,12 @@ def _computed(unit: Unit, scan: Prepared) -> dict[str, Any]:
     # Fewer averages than the reference: its noise is raised by what the missing averages add.
     fewer = scan.sigma * float(np.sqrt(max(0.0, unit.averages_ratio - 1.0)))
     added = float(np.hypot(unit.noise.added(scan), fewer))
-    acquisition = _acquire(unit, scan, pattern, added)
+    return pattern, _acquire(unit, scan, pattern, added)
+
+
+def _computed(unit: Unit, scan: Prepared) -> dict[str, Any]:
+    started = time.perf_counter()
+    pattern, acquisition = acquire(unit, scan)
     method, settings = unit.arm.recovery, unit.arm.recovery_settings
     recovered = recover(acquisition, method, reference=scan.stack, mask=scan.body, **settings)
     image = recovered.image
@@ -200,6 +205,8 @@ def _computed(unit: Unit, scan: Prepared) -> dict[str, Any]:
         slices = [{**one, **more} for one, more in zip(slices, measured.by_plane, strict=True)]
     certificate = recovered.certificate.as_dict()
     wall_s = certificate.pop("wall_s")
+    if unit.arm.weight_rule:
+        certificate["weight_rule"] = unit.arm.weight_rule
     result: dict[str, Any] = {
         "key": unit.key,
         "arm": unit.arm.id,
@@ -207,7 +214,7 @@ def _computed(unit: Unit, scan: Prepared) -> dict[str, Any]:
         "draw": unit.draw,
         "seed": unit.protocol.study.seed,
         "sigma": acquisition.sigma,
-        "sigma_added": added,
+        "sigma_added": acquisition.sigma_added,
         "weight": certificate["weight"],
         "acceleration": pattern.acceleration,
         "acceleration_in_shutter": pattern.acceleration_in_shutter,

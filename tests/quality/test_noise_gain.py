@@ -46,7 +46,7 @@ def test_least_squares_gain_is_the_geometry_factor():
     acquisition = undersample(
         image, equispaced(u, step), 0.05, seed=2, sensitivities=maps, covariance=psi
     )
-    chain = Chain(acquisition, "least-squares", iterations=200, tolerance=1e-10)
+    chain = Chain(acquisition, "least-squares", damping=0.0, iterations=200, tolerance=1e-10)
     gain = noise_gain(chain, 300, seed=4)
     inverse = np.linalg.inv(psi)
     wanted = np.empty((u, v))

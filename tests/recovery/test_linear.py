@@ -1,7 +1,10 @@
 """Zero-filled and least-squares recoveries against linear algebra done by numpy."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
+from conftest import blobs
 
 from mrics.encoding import undersample
 from mrics.numerics import centred_fft
@@ -38,7 +41,7 @@ def case():
 def test_minimum_norm_solution_equals_pinv(case):
     """numpy.linalg.pinv gives the least-squares solution of minimum norm."""
     acquisition, matrix = case
-    result = recover(acquisition, "least-squares", tolerance=1e-10, iterations=500)
+    result = recover(acquisition, "least-squares", damping=0.0, tolerance=1e-10, iterations=500)
     expected = (np.linalg.pinv(matrix) @ acquisition.kspace.reshape(2, -1).T).T
     np.testing.assert_allclose(result.image.reshape(2, -1), expected, rtol=0, atol=1e-7)
     assert result.certificate.reached
@@ -74,3 +77,31 @@ def test_fully_sampled_zero_filled_image_is_the_image(planes):
     maps = np.array([1 + x, 1 + y * 1j])[None]
     image = recover(undersample(planes, pattern, sensitivities=maps), "zero-filled").image
     np.testing.assert_allclose(image, planes, atol=1e-12)
+
+
+@pytest.mark.parametrize("sigma", [0.02, 0.1])
+def test_damping_follows_from_the_noise(sigma):
+    """Eight channels at R = 4: near the best damping, where none amplifies the noise."""
+    truth = blobs((2, 48, 40))
+    angles = 2 * np.pi * np.arange(8) / 8
+    y, x = np.mgrid[-1:1:48j, -1:1:40j]
+    maps = np.exp(
+        -((x - 1.1 * np.cos(angles)[:, None, None]) ** 2)
+        - (y - 1.1 * np.sin(angles)[:, None, None]) ** 2
+    )[None].astype(complex)
+    pattern = draw_pattern((48,), acceleration=4, calibration=8, seed=1)
+    held = undersample(truth, pattern, sigma=sigma, seed=2, sensitivities=maps)
+
+    def error(damping):
+        image = recover(held, "least-squares", damping=damping).image
+        return float(np.sum(np.abs(image - truth) ** 2))
+
+    found = recover(held, "least-squares").certificate
+    assert found.weight_rule == "auto: noise over signal energy"
+    assert found.reached
+    tried = [error(found.weight * factor) for factor in (0.1, 0.3, 1, 3, 10)]
+    assert error("auto") == pytest.approx(tried[2])
+    assert tried[2] <= 1.2 * min(tried)
+    assert tried[2] < 0.5 * error(0.0)
+    scaled = replace(held, kspace=5j * held.kspace, sigma_added=5 * sigma)
+    assert recover(scaled, "least-squares").certificate.weight == pytest.approx(found.weight)
