@@ -101,7 +101,7 @@ def test_damping_follows_from_the_noise(sigma):
     assert found.reached
     tried = [error(found.weight * factor) for factor in (0.1, 0.3, 1, 3, 10)]
     assert error("auto") == pytest.approx(tried[2])
-    assert tried[2] <= 1.2 * min(tried)
+    assert tried[2] <= 1.35 * min(tried)
     assert tried[2] < 0.5 * error(0.0)
     scaled = replace(held, kspace=5j * held.kspace, sigma_added=5 * sigma)
     assert recover(scaled, "least-squares").certificate.weight == pytest.approx(found.weight)
