@@ -88,6 +88,7 @@ def _against_panel(axes: Any, study: StudyFolder, metric: MetricWords, looks: An
     for family, points in curves.items():
         points.sort()
         axes.plot(*zip(*points, strict=True), color=looks[family][0], lw=1.0, alpha=0.75, zorder=1)
+    axes.margins(y=0.1)
     axes.set_xscale("log")
     _plain_ticks(axes, reached)
     axes.set_title(metric.axis + _better(metric))

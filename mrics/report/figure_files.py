@@ -33,7 +33,7 @@ def write_figures(directory: str | Path) -> tuple[Path, ...]:
     -------
     tuple of Path
         ``metrics``, one for each further panel (``features``, ``spectral``, ...), and for each
-        arm ``<arm>-pattern``, ``<arm>-images`` and ``<arm>-slices``.
+        arm ``ARM-pattern``, ``ARM-images`` and ``ARM-slices``.
 
     Raises
     ------
@@ -46,7 +46,7 @@ def write_figures(directory: str | Path) -> tuple[Path, ...]:
     try:
         folder.mkdir(exist_ok=True)
         for name, figure in _figures(study):
-            figure.text(0.0, -0.01, RESEARCH_ONLY, fontsize=6, va="top")
+            _caution_below(figure)
             for ending, look in ((".png", {"dpi": _DPI}), (".svg", {"metadata": {"Date": None}})):
                 path = folder / f"{name}{ending}"
                 with figure_style():
@@ -59,6 +59,15 @@ def write_figures(directory: str | Path) -> tuple[Path, ...]:
             "Give a folder that may be written to, with room on the disk.",
         ) from problem
     return tuple(written)
+
+
+def _caution_below(figure: Any) -> None:
+    """The caution under everything that is drawn, which may reach below the sheet."""
+    with figure_style():
+        figure.canvas.draw()
+        lowest = figure.get_tightbbox().y0
+        height = (lowest - 0.06) / figure.get_figheight()
+        figure.text(0.0, height, RESEARCH_ONLY, fontsize=6, va="top")
 
 
 def _figures(study: StudyFolder) -> Iterator[tuple[str, Any]]:

@@ -65,7 +65,7 @@ def image_window(reference: NDArray[Any], body: NDArray[np.bool_] | None) -> tup
 
 
 def error_factor(ratios: list[float]) -> int:
-    """The largest factor of 1, 2, 5, 10, ... that keeps the errors of half the arms in range.
+    """The largest factor of 1, 2, 5, 10, ... that keeps the errors of three arms in four in range.
 
     Parameters
     ----------
@@ -74,7 +74,7 @@ def error_factor(ratios: list[float]) -> int:
         recoveries (0) do not count.
     """
     counted = [r for r in ratios if r > 1e-6]
-    typical = float(np.median(counted)) if counted else 1.0
+    typical = float(np.percentile(counted, 75)) if counted else 1.0
     fitting = [f for f in _FACTORS if typical * f <= 1.0]
     return fitting[-1] if fitting else 1
 
@@ -84,7 +84,7 @@ def panel_figure(
 ) -> Any:
     """Figure of :func:`draw_panels`."""
     shape = rows[0].reference.shape
-    panel = min(2.05 * shape[0] * aspect / shape[1], 2.5)
+    panel = min(1.85 * shape[0] * aspect / shape[1], 2.5)
     with figure_style():
         figure = new_figure(7.2, len(rows) * (panel + 0.1) + 0.9)
         draw_panels(figure, rows, window, aspect, ends)

@@ -80,7 +80,8 @@ def number(value: Any, digits: int = 3) -> str:
         return "∞" if value > 0 else "−∞"
     if value == 0:
         return "0"
-    power = math.floor(math.log10(abs(value)))
+    # The power of ten after rounding: 0.9996 is 1.00 with three digits.
+    power = int(f"{value:.{digits - 1}e}".partition("e")[2])
     if power < -4 or power > 6:
         return f"{value:.{digits - 1}e}".replace("-", "−")
     text = f"{value:.{max(0, digits - 1 - power)}f}"

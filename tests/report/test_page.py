@@ -1,5 +1,6 @@
 """The page of a study: complete, self-contained, escaped, and clear about what is missing."""
 
+import ast
 import json
 import re
 import shutil
@@ -124,6 +125,45 @@ def test_markup_from_outside_stays_text(tmp_path: Path) -> None:
     assert "<script>alert" not in page
     assert "<img src=x" not in page
     assert "&lt;script&gt;alert(1)" in page
+
+
+KEEP = {"id", "arm", "scan", "kind", "file", "status", "key", "metric", "plane_axis", "sha256"}
+KEEP |= {"schema", "readout_axis", "phase_axis", "partition_axis"}
+
+
+def spoiled(value: object, bad: str, key: str = "") -> object:
+    """Every text of the results replaced, except those that name other parts of them."""
+    if isinstance(value, dict):
+        return {k: spoiled(v, bad, k) for k, v in value.items()}
+    if isinstance(value, list):
+        return [spoiled(v, bad, key) for v in value]
+    return bad if isinstance(value, str) and key not in KEEP else value
+
+
+def test_markup_anywhere_in_the_results_stays_text(own_study: Path) -> None:
+    bad = "</script><b onclick=x>&amp;'\""
+    results = spoiled(read_results(own_study), bad)
+    assert isinstance(results, dict)
+    results["units"][0]["certificate"] |= {"reached": False, "note": bad}
+    results["units_planned"] = 99
+    change(own_study, **results)
+    page = write_report(own_study).read_text()
+    assert "<b onclick" not in page
+    assert page.count("&lt;b onclick") > 30
+    assert page.count("</script>") == page.count("<script")
+
+
+def test_python_makes_no_markup() -> None:
+    """Tags stand in templates alone."""
+    for path in (Path(__file__).parents[2] / "mrics" / "report").glob("*.py"):
+        tree = ast.parse(path.read_text())
+        for node in ast.walk(tree):
+            # Texts that stand alone are docstrings.
+            if isinstance(node, ast.Expr) and isinstance(node.value, ast.Constant):
+                node.value.value = ""
+        for node in ast.walk(tree):
+            if isinstance(node, ast.Constant) and isinstance(node.value, str):
+                assert not re.search(r"</|<[a-zA-Z!]{2}|<[a-z]>", node.value), (path.name, node.value)
 
 
 def test_maps_that_are_gone_are_named(own_study: Path) -> None:
