@@ -68,8 +68,8 @@ def planes(volume: str) -> tuple[Any, Any]:
     return (stack * phase).astype(np.complex64), mask
 
 
-def loss(case: Case, slices: slice = slice(None)) -> Loss:
-    """Recover with "auto" and with "best"; both in-plane axes are phase and partition in 2-D."""
+def losses(case: Case, rules: tuple[str, ...] = ("auto",), slices: slice = slice(None)) -> Any:
+    """A :class:`Loss` for every rule; both in-plane axes are phase and partition in 2-D."""
     stack, mask = (part[slices] for part in planes(case.volume))
     sigma = float(np.abs(stack)[mask].mean()) / case.snr
     rows = stack.shape[1]
@@ -86,7 +86,13 @@ def loss(case: Case, slices: slice = slice(None)) -> Loss:
         seed=seed,
     )
     acquisition = undersample(stack, pattern, sigma=sigma, seed=seed)
-    auto = recover(acquisition, case.method)
     best = recover(acquisition, case.method, weight="best", reference=stack, mask=mask)
-    psnr = [score(one.image, stack, mask)["psnr"] for one in (auto, best)]
-    return Loss(case, psnr[0], psnr[1], auto.certificate.weight, best.certificate.weight)
+    reached = score(best.image, stack, mask)["psnr"]
+    found = {}
+    for rule in rules:
+        one = recover(acquisition, case.method, weight=rule)
+        psnr = score(one.image, stack, mask)["psnr"]
+        found[rule] = Loss(
+            case, psnr, reached, one.certificate.weight or 0.0, best.certificate.weight or 0.0
+        )
+    return found

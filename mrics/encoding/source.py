@@ -43,6 +43,7 @@ class Source:
         if isinstance(given, Scan):
             self._from_scan(given)
         else:
+            _check_array(given)
             self._from_array(given, pattern, channel_axis)
         kind = self.stack.dtype
         double = kind in (np.dtype(np.float64), np.dtype(np.complex128))
@@ -133,6 +134,26 @@ class Source:
             for start in range(0, self.frame_planes, step):
                 stop = min(start + step, self.frame_planes)
                 yield slice(first + start, first + stop), self.stack[frame, start:stop]
+
+
+def _check_array(given: Any) -> None:
+    """Refuse what is neither scan nor array; frames given one by one are told apart."""
+    if isinstance(given, np.ndarray):
+        return
+    shapes = [np.shape(part) for part in given] if isinstance(given, list | tuple) else []
+    for frame, shape in enumerate(shapes):
+        if shape != shapes[0]:
+            raise AcquisitionError(
+                f"Frames are on different grids: frame 0 has shape {shapes[0]}, frame {frame} has "
+                f"{shape}.",
+                f"frame {frame}",
+                "Bring all frames to one grid and stack them in one array.",
+            )
+    raise AcquisitionError(
+        f"A scan or an array is needed, got {type(given).__name__}.",
+        "data",
+        "Give a stack (plane, u, v), frames one after the other.",
+    )
 
 
 def pattern_masks(source: Source, pattern: Pattern) -> tuple[NDArray[np.bool_], NDArray[np.intp]]:

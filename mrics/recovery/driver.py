@@ -15,7 +15,7 @@ from mrics.errors import RecoveryError
 from mrics.numerics.scaling import exponent_for, largest_part, times_power_of_two
 from mrics.recovery.contract import Recovered
 from mrics.recovery.registry import solver
-from mrics.recovery.settings import check_settings
+from mrics.recovery.settings import Settings, check_settings
 from mrics.recovery.weights import choose_weight
 
 #: noise level taken where the data's own is 0, relative to the RMS of the calibration samples
@@ -76,6 +76,7 @@ def recover(
     sigma, note = reference_sigma(acquisition)
     if empty:
         sigma, note = 0.0, "all acquired samples are zero; the image is zero"
+    note = "; ".join(text for text in (note, _beyond_precision(acquisition, chosen)) if text)
     solve = solver(method)
     rule = ""
     if isinstance(getattr(chosen, "weight", None), str):
@@ -139,6 +140,16 @@ def reference_sigma(acquisition: Acquisition) -> tuple[float, str]:
         count += int(acquired[region].sum()) * kspace.shape[1]
     floor = SIGMA_FLOOR * float(np.sqrt(energy / max(1, count)))
     return floor, f"noise level unknown (0): a floor of {SIGMA_FLOOR:g} x the RMS of the samples"
+
+
+def _beyond_precision(acquisition: Acquisition, settings: Settings) -> str:
+    """A note where a tolerance is asked for that rounding does not let anyone see."""
+    tolerance = getattr(settings, "tolerance", None)
+    least = 4 * float(np.finfo(acquisition.kspace.dtype).eps)
+    if tolerance is None or tolerance >= least:
+        return ""
+    kind = acquisition.kspace.dtype
+    return f"tolerance {tolerance:g} lies below the precision of {kind}, {least:.1g}"
 
 
 def _survey(acquisition: Acquisition) -> float:

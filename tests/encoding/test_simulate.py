@@ -274,3 +274,12 @@ def test_sensitivities_may_be_computed_on_demand_and_shared_by_frames():
         seen += len(data)
     assert seen == 6
     assert all(part.stop - part.start <= 3 for part in lazy.asked)
+
+
+def test_frames_on_different_grids_are_refused():
+    pattern = Pattern(np.ones((2, 16), bool), frames=2, calibration=(0,))
+    frames = [np.ones((3, 16, 12)), np.ones((3, 16, 10))]
+    with pytest.raises(AcquisitionError, match=r"frame 0 has shape \(3, 16, 12\), frame 1 has"):
+        undersample(frames, pattern)
+    with pytest.raises(AcquisitionError, match="got list"):
+        undersample(frames[:1], pattern)

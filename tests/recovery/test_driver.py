@@ -97,6 +97,13 @@ def test_types_are_kept(lines, points, method, settings):
     assert recover(points, method, **settings).image.dtype == np.complex64
 
 
+def test_a_tolerance_below_precision_is_named(lines, points):
+    settings = {"weight": 0.5, "tolerance": 1e-9, "iterations": 5}
+    note = recover(points, "variation", **settings).certificate.note
+    assert "tolerance 1e-09 lies below the precision of complex64, 5e-07" in note
+    assert "precision" not in recover(lines, "variation", **settings).certificate.note
+
+
 def test_unknown_noise_uses_the_stated_floor(lines):
     result = recover(replace(lines, sigma_added=0.0), "wavelet")
     region = lines.kspace[:, :, 16:24]
