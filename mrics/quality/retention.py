@@ -130,13 +130,17 @@ def feature_retention(
     phased = chain.base if chain.phase_free else reference
     phase = _unit(smoothed(phased, 1.0)) if np.iscomplexobj(phased) else None
     placed = []
+    by_radii: dict[tuple[int, int, int], NDArray[np.intp]] = {}
     for feature in features:
         radii = feature.radii(voxel_mm)
-        mine = (
-            choose_sites(allowed, radii, count, seed=seed)
-            if sites is None
-            else check_sites(sites, reference.shape, radii)
-        )
+        if radii not in by_radii:
+            # Features of one size sit at the same sites, whatever their contrast.
+            by_radii[radii] = (
+                choose_sites(allowed, radii, count, seed=seed)
+                if sites is None
+                else check_sites(sites, reference.shape, radii)
+            )
+        mine = by_radii[radii]
         levels = signal[tuple(mine.T)]
         if not levels.all():
             where = tuple(int(i) for i in mine[levels == 0.0][0])

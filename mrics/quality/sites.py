@@ -47,8 +47,9 @@ def choose_sites(
     labels = np.asarray(region).astype(np.int32)
     size = tuple(2 * r + 1 for r in radii)
     least = minimum_filter(labels, size, mode="constant", cval=0)
-    most = maximum_filter(labels, size, mode="constant", cval=0)
-    fits = (least > 0) & (least == most)
+    fits = least > 0
+    if labels.max() > 1:
+        fits &= least == maximum_filter(labels, size, mode="constant", cval=0)
     if planes is not None:
         allowed = np.zeros(labels.shape[0], dtype=bool)
         allowed[np.asarray(planes, dtype=np.intp)] = True
