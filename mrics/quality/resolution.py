@@ -29,6 +29,7 @@ from mrics.quality.widths import half_widths
 Array = NDArray[Any]
 #: voxels around a site, along each axis, that count as its main lobe
 LOBE = 2
+_STRETCH = 512
 
 
 @dataclass(frozen=True)
@@ -234,11 +235,16 @@ def _lattice(
             _clear(free, u, v, spacing // 4)
         candidates = np.argwhere(free)
         order = candidates[generator.permutation(len(candidates))]
-        while len(order):
-            u, v = order[0]
-            chosen.append((plane, u, v))
-            _clear(free, u, v, spacing)
-            order = order[free[tuple(order.T)]]
+        at = 0
+        while at < len(order):
+            # A stretch at a time: most candidates lie too near to a site that was taken before.
+            ahead = order[at : at + _STRETCH]
+            left = np.flatnonzero(free[tuple(ahead.T)])
+            at += int(left[0]) + 1 if left.size else len(ahead)
+            if left.size:
+                u, v = ahead[left[0]]
+                chosen.append((plane, u, v))
+                _clear(free, u, v, spacing)
     return np.array(chosen, dtype=np.intp).reshape(-1, 3)
 
 

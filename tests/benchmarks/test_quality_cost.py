@@ -82,7 +82,7 @@ def test_ideal_observer(channels):
     print(f"\n20 patterns x 6 tasks, {channels} channels: {time.perf_counter() - start:.2f} s")
 
 
-@pytest.mark.parametrize("method", ["wavelet", "variation", "least-squares"])
+@pytest.mark.parametrize("method", ["wavelet", "variation", "least-squares", "zero-filled"])
 def test_measures_against_the_recoveries_they_need(method):
     image, body = stack()
     held = undersample(image, draw_pattern(256, acceleration=3, calibration=20), sigma=0.03)
