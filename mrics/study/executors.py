@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 import multiprocessing
+import os
 import signal
 from collections.abc import Callable, Iterator
 from concurrent.futures import CancelledError, Executor, Future, ProcessPoolExecutor
 from contextlib import contextmanager
+from threading import Thread
 from typing import Any
 
 from mrics.errors import StudyError
@@ -45,6 +47,15 @@ def pool(workers: int) -> Executor:
 def _start_worker() -> None:
     signal.signal(signal.SIGINT, signal.SIG_IGN)
     set_threads(1)
+    Thread(target=_end_with_parent, daemon=True).start()
+
+
+def _end_with_parent() -> None:
+    """End this process when its parent does: a killed run must leave no workers behind."""
+    parent = multiprocessing.parent_process()
+    if parent is not None:
+        parent.join()
+        os._exit(1)
 
 
 def check_cluster(address: str) -> None:

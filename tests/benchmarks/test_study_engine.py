@@ -1,9 +1,12 @@
 """The study engine against the work it organises: printed, not asserted.
 
-``python -m pytest -s tests/benchmarks/test_study_engine.py``
+Beside wall times stand CPU seconds of all processes: on a machine that others use, two processes
+get no second core, and what the engine allows is then told by the work that only one process does.
 """
 
 import json
+import subprocess
+import sys
 import time
 from pathlib import Path
 
@@ -19,50 +22,81 @@ TEXT = (
     .replace("draws = 2", "draws = 10")
     .replace('[[recovery]]\nmethod = "zero-filled"', '[[recovery]]\nmethod = "wavelet"')
 )
+CODE = """
+import resource, sys, time
+from mrics.numerics import set_threads
+from mrics.study import run_study
+
+def used(who):
+    state = resource.getrusage(who)
+    return state.ru_utime + state.ru_stime
+
+set_threads(1)
+started = time.perf_counter()
+run_study(sys.argv[1], sys.argv[2], workers=int(sys.argv[3]))
+print(time.perf_counter() - started, used(resource.RUSAGE_SELF), used(resource.RUSAGE_CHILDREN))
+"""
 
 
-def test_two_processes_against_one(tmp_path: Path) -> None:
+def measured(protocol: Path, out: Path, workers: int) -> tuple[float, float, float]:
+    """Wall seconds, CPU seconds of the main process (imports included), and of the workers."""
+    command = [sys.executable, "-c", CODE, str(protocol), str(out), str(workers)]
+    done = subprocess.run(command, check=True, capture_output=True, text=True)
+    wall, main, children = (float(x) for x in done.stdout.split())
+    return wall, main, children
+
+
+def test_two_processes_against_one(tmp_path: Path, figure) -> None:
     protocol = write_small_study(tmp_path, 2, TEXT, (192, 160, 24))
     run_study(protocol, tmp_path / "warm", quick=True)
-    walls = {}
-    for workers in (1, 2):
-        out = tmp_path / f"by{workers}"
-        started = time.perf_counter()
-        code = (
-            "from mrics.numerics import set_threads; from mrics.study import run_study; "
-            f"set_threads(1); run_study({str(protocol)!r}, {str(out)!r}, workers={workers})"
-        )
-        import subprocess
-        import sys
-
-        subprocess.run([sys.executable, "-c", code], check=True)
-        walls[workers] = time.perf_counter() - started
+    runs = {workers: measured(protocol, tmp_path / f"by{workers}", workers) for workers in (1, 2)}
     timing = json.loads((tmp_path / "by1" / "results.json").read_text())["timing"]
     units = sum(u["unit_s"] for u in timing["units"])
     recoveries = sum(u["recovery_s"] for u in timing["units"])
-    print(
-        f"\n{len(timing['units'])} units; one process, one thread {walls[1]:.1f} s, two processes "
-        f"{walls[2]:.1f} s: {walls[1] / walls[2]:.2f} x"
+    (wall, alone, _), (wall_of_two, main, workers) = runs[1], runs[2]
+    figure(
+        f"{len(timing['units'])} units, two processes against one, wall",
+        f"{wall / wall_of_two:.2f} ({wall:.1f} s, {wall_of_two:.1f} s)",
+        "1.8 on two free cores",
     )
-    print(
-        f"inside one process: study {timing['study_s']:.2f} s, units {units:.2f} s, recoveries "
-        f"{recoveries:.2f} s; outside units {100 * (timing['study_s'] - units) / recoveries:.1f} % "
-        "of the recoveries"
+    figure(
+        "the same from CPU seconds: all of one process / (main process + half of the workers)",
+        f"{alone / (main + workers / 2):.2f} ({alone:.1f} s; {main:.1f} s, {workers:.1f} s)",
+        "1.8",
+    )
+    figure(
+        "time outside units (scans prepared and inspected, plan, results) / recoveries",
+        f"{(timing['study_s'] - units) / recoveries:.3f}",
+        "0.05",
     )
 
 
-def test_a_ledger_of_ten_thousand_units(tmp_path: Path) -> None:
+def test_overhead_of_the_engine(tmp_path: Path, figure) -> None:
+    """Time outside units that grows with them: 62 units less 8 units of the same study."""
+    outside, recoveries = {}, {}
+    for draws in (1, 10):
+        folder = tmp_path / str(draws)
+        text = TEXT.replace("draws = 10", f"draws = {draws}")
+        protocol = write_small_study(folder, 2, text, (192, 160, 24))
+        run_study(protocol, folder / "out")
+        timing = json.loads((folder / "out" / "results.json").read_text())["timing"]
+        units = [u["unit_s"] for u in timing["units"]]
+        outside[draws] = timing["study_s"] - sum(units)
+        recoveries[draws] = sum(u["recovery_s"] for u in timing["units"])
+    grown = (outside[10] - outside[1]) / (recoveries[10] - recoveries[1])
+    figure("engine's time per unit / recovery's", f"{grown:.3f}", "0.05")
+
+
+def test_a_ledger_of_ten_thousand_units(tmp_path: Path, figure) -> None:
+    result = {"slices": [{"nrmse": 0.1}] * 16}
     with Ledger(tmp_path) as ledger:
-        ledger._base.executemany(
-            "INSERT INTO units VALUES (?, '', ?)",
-            [(f"{n:024d}", json.dumps({"slices": [{"nrmse": 0.1}] * 16})) for n in range(10_000)],
-        )
-        ledger._base.commit()
+        ledger._base.execute("PRAGMA synchronous = OFF")
+        for n in range(10_000):
+            ledger.commit(f"{n:024d}", result)
     started = time.perf_counter()
     with Ledger(tmp_path) as ledger:
         opened = time.perf_counter() - started
         ledger.finished(f"{n:024d}" for n in range(10_000))
-    print(
-        f"\nledger of 10,000 units: opened in {opened:.3f} s, all read in "
-        f"{time.perf_counter() - started:.2f} s"
-    )
+    whole = time.perf_counter() - started
+    figure("ledger of 10,000 units: opened", f"{opened:.3f} s", "1 s")
+    figure("the same: opened and every unit read", f"{whole:.2f} s")

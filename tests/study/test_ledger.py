@@ -3,7 +3,6 @@
 import json
 import os
 import random
-import signal
 import sqlite3
 import subprocess
 import sys
@@ -82,30 +81,64 @@ def numbers(results: dict[str, Any]) -> str:
     return json.dumps({k: v for k, v in results.items() if k != "timing"}, sort_keys=True)
 
 
-# A study long enough to be killed in: many units, each with a few milliseconds of work.
-LONG = PROTOCOL.replace("draws = 2", "draws = 12")
+# Enough units to be killed in five times.
+LONG = PROTOCOL.replace("draws = 2", "draws = 16")
+
+
+CHILD = """
+import multiprocessing, sys
+from mrics.study import run_study
+
+def told(done, total, label):
+    if label:
+        print(*(child.pid for child in multiprocessing.active_children()), flush=True)
+
+if __name__ == "__main__":
+    run_study(sys.argv[1], sys.argv[2], workers=int(sys.argv[3]), progress=told)
+"""
 
 
 def kill_and_resume(folder: Path, kills: int, seed: int) -> None:
+    """Kill a run some units and some milliseconds after it starts, again and again."""
     protocol = write_small_study(folder, scans=2, protocol=LONG)
+    (folder / "child.py").write_text(CHILD)
     out = folder / "out"
-    code = f"from mrics.study import run_study; run_study({str(protocol)!r}, {str(out)!r})"
-    pause = random.Random(seed)
+    moment = random.Random(seed)
     kept: set[str] = set()
-    for _ in range(kills):
-        child = subprocess.Popen([sys.executable, "-c", code])
-        time.sleep(pause.uniform(0.8, 2.2))
-        child.send_signal(signal.SIGKILL)
+    for number in range(kills):
+        command = [sys.executable, str(folder / "child.py"), str(protocol), str(out)]
+        child = subprocess.Popen([*command, str(1 + number % 2)], stdout=subprocess.PIPE, text=True)
+        finished = moment.randrange(1, 8)
+        told = [child.stdout.readline() for _ in range(finished)]
+        time.sleep(moment.uniform(0.0, 0.05))
+        child.kill()
         child.wait()
-        if (out / LEDGER).is_file():
-            with Ledger(out) as ledger:
-                now = {row[0] for row in ledger._base.execute("SELECT key FROM units")}
-            assert kept <= now, "a finished unit was lost"
-            kept = now
+        child.stdout.close()
+        for pid in told[-1].split():
+            wait_for_end(int(pid))
+        with Ledger(out) as ledger:
+            now = {row[0] for row in ledger._base.execute("SELECT key FROM units")}
+        assert kept <= now, "a finished unit was lost"
+        assert len(now) >= len(kept) + finished, "a unit was told as finished and was not kept"
+        kept = now
     first: list[int] = []
     resumed = run_study(protocol, out, progress=lambda done, *_: first.append(done))
     assert first[0] == len(kept), "every finished unit is used, and only those"
     assert numbers(resumed) == numbers(run_study(protocol, folder / "whole"))
+
+
+def wait_for_end(pid: int) -> None:
+    """Wait until a process has ended (a zombie has)."""
+    until = time.monotonic() + 60
+    while time.monotonic() < until:
+        try:
+            state = Path(f"/proc/{pid}/stat").read_text().rpartition(")")[2].split()[0]
+        except OSError:
+            return
+        if state == "Z":
+            return
+        time.sleep(0.02)
+    raise AssertionError(f"worker {pid} outlived its run")
 
 
 def test_a_killed_study_loses_no_finished_unit(tmp_path: Path) -> None:
