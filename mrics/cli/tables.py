@@ -151,6 +151,14 @@ def difference_lines(difference: Difference) -> str:
     return "\n".join(lines) if lines else "no difference"
 
 
+_REMEDIES = {
+    "crop_kspace": "k-space cropped to what was measured",
+    "acquired_region": "k-space mirrored where its higher side is empty",
+    "add_phase": "an invented smooth phase",
+    "add_noise": "white noise of the scan's own sigma",
+}
+
+
 def inspection_lines(scan: Scan, inspection: Inspection) -> str:
     """A scan's findings: what, where, how sure, which way it biases a study, what to do."""
     shape = " x ".join(str(n) for n in scan.shape)
@@ -169,6 +177,14 @@ def inspection_lines(scan: Scan, inspection: Inspection) -> str:
         lines.append("  nothing found")
     for text in inspection.cannot_be_told:
         lines += _wrapped(f"cannot be told: {text}", "  ")
+    asked = {finding.remedy for finding in inspection.findings}
+    offered = [words for remedy, words in _REMEDIES.items() if remedy in asked]
+    if offered:
+        lines += _wrapped(
+            f"remedies: --remedied FILE writes the scan with {', '.join(offered)}; nothing of it "
+            "is done to a study unasked",
+            "  ",
+        )
     return "\n".join(lines)
 
 
@@ -178,6 +194,8 @@ def optimism_lines(rows: Sequence[Optimism]) -> str:
     for row in rows:
         interval = "" if row.low is None else f" [{row.low:.4g}, {row.high:.4g}]"
         side = "flattered" if row.flatters else "not flattered"
+        if row.low is not None and row.high is not None and row.low <= 0 <= row.high:
+            side = "no clear difference"
         lines.append(
             f"{row.arm}, {row.metric}: {row.as_is:.4g}, {row.remedied:.4g}, "
             f"{row.difference:+.4g}{interval}, {side}"

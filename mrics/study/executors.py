@@ -19,7 +19,7 @@ from mrics.numerics.memory import available_memory
 _COPIES_OF_A_SCAN = 8
 _PROCESS_BYTES = 300 * 2**20
 # How long a scheduler may take to answer; with the rest of a start it stays under 10 s.
-TIMEOUT_S = 7.0
+TIMEOUT_S = 5.0
 
 
 class InProcess(Executor):

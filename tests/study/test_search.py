@@ -1,13 +1,16 @@
 """The search for the fastest acceleration against running every one."""
 
 from pathlib import Path
+from typing import Any
 
 import pytest
 from small_study import PROTOCOL, write_small_study
 
 from mrics.errors import ProtocolError
 from mrics.protocol import from_text
-from mrics.study import run_study
+from mrics.study import plan_study, run_study
+from mrics.study.plan import PlanRow
+from mrics.study.search import search_family
 
 GRID = "search_from = 1.2\nsearch_to = 4.2\n"
 ACCELERATIONS = [round(1.2 + 0.2 * n, 4) for n in range(16)]
@@ -46,6 +49,53 @@ def test_it_finds_what_the_full_grid_finds(limit: float, tmp_path: Path) -> None
     shared = {(u["arm"], u["scan"], u["draw"]): u["pattern_hash"] for u in full["units"]}
     for unit in results["units"]:
         assert shared[unit["arm"], unit["scan"], unit["draw"]] == unit["pattern_hash"]
+
+
+def test_a_quality_that_does_not_fall_steadily_is_reported(tmp_path: Path) -> None:
+    plan = plan_study(from_text(searched(0.12), write_small_study(tmp_path, 3)))
+    [family] = plan.families().values()
+
+    def run(row: PlanRow, draws: int) -> list[dict[str, Any]]:
+        # Error falls with acceleration from R = 2.6 on, as no recovery's should.
+        level = 0.1 - 0.01 * float(row.arm.acceleration)
+        return [
+            {
+                "scan": scan,
+                "draw": draw,
+                "slices": [{"index": 0, "frame": 0, "nrmse": level + 0.0001 * draw}],
+            }
+            for scan in ("one", "two", "three")
+            for draw in range(draws)
+        ]
+
+    found = search_family(family, run, plan.protocol.acceptance, None, seed=1)
+    assert found.acceleration == 4.2
+    assert found.findings
+    assert all("quality does not fall steadily here" in text for text in found.findings)
+    assert "nrmse is better at R = 4.2 than at R = 4" in found.findings[-1]
+
+
+def test_an_undecided_first_look_takes_all_draws_and_stops(tmp_path: Path) -> None:
+    plan = plan_study(from_text(searched(0.12), write_small_study(tmp_path, 3)))
+    [family] = plan.families().values()
+
+    def run(row: PlanRow, draws: int) -> list[dict[str, Any]]:
+        # Scans lie on both sides of the limit, so no number of draws decides.
+        return [
+            {
+                "scan": scan,
+                "draw": draw,
+                "slices": [{"index": 0, "frame": 0, "nrmse": 0.12 + shift}],
+            }
+            for scan, shift in (("one", -0.05), ("two", 0.0), ("three", 0.05))
+            for draw in range(draws)
+        ]
+
+    found = search_family(family, run, plan.protocol.acceptance, None, seed=1)
+    assert found.arm is None
+    looks = [(d.acceleration, d.draws) for d in found.decisions]
+    assert len({acceleration for acceleration, _ in looks}) * 2 == len(looks)
+    assert [draws for _, draws in looks[:2]] == [2, 4]
 
 
 def test_searching_without_limits_is_refused(tmp_path: Path) -> None:
