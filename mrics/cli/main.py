@@ -320,7 +320,7 @@ def train(
         list[Path], typer.Argument(metavar="PROTOCOL|SCAN...", help="Protocol, or NIfTI files.")
     ],
     out: Annotated[Path, typer.Option("--out", help="Dictionary file to write (.npz).")],
-    patch: Annotated[int, typer.Option("--patch", help="Samples of a patch per side.")] = 8,
+    patch: Annotated[int, typer.Option("--patch", help="Samples of a patch per side.")] = 5,
     depth: Annotated[int, typer.Option("--depth", help="Planes of a 3-D patch.")] = 1,
     joint: Annotated[
         bool, typer.Option("--joint", help="Stack all frames of a place in one patch.")

@@ -336,7 +336,7 @@ class PatchDictionary(Settings):
 
     source: str = _choice("adaptive", ("adaptive", "trained", "dct", "wavelets", "union"))
     dictionary: str | None = field(default=None, metadata={"kind": "text", "optional": True})
-    patch: int = _number(8, 2, 32, whole=True)
+    patch: int = _number(5, 2, 32, whole=True)
     depth: int = _number(1, 1, 16, whole=True)
     atoms: int = _number(256, 2, 4096, whole=True)
     kind: str = _choice("real", ("real", "complex"))

@@ -84,7 +84,7 @@ class Training:
     """
 
     method: str = "online"
-    patch: int = 8
+    patch: int = 5
     depth: int = 1
     joint: bool = False
     kind: str = "real"
