@@ -131,7 +131,9 @@ class Variation:
         energy = float(np.vdot(self.state, self.state))
         count = self.padded[0] * self.padded[1]
         self.weight = self.real.type(weight)
-        self.rho = self.real.type(weight / (_GRADIENT_THRESHOLD * np.sqrt(energy / count)))
+        # A constant image has no gradient: any step will do.
+        typical = float(np.sqrt(energy / count)) or 1.0
+        self.rho = self.real.type(weight / (_GRADIENT_THRESHOLD * typical))
         np.multiply(self.differences, self.rho, out=self.symbol)
         self.pulled[...] = image
         penalty_kernels.split_gradient(

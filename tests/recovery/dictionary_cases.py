@@ -27,11 +27,12 @@ Array = NDArray[Any]
 PATTERNS = {"1-D R 3": (1, 3, 2.0, 20), "2-D R 4": (2, 4, 3.0, 24), "2-D R 6": (2, 6, 3.0, 24)}
 
 
-def planes_of(identity: str, which: Sequence[int], frame: int = 0) -> Array:
-    """Axial slices (plane, u, v) of a volume divided by its largest value."""
+def planes_of(identity: str, which: Sequence[int], frames: int = 1) -> Array:
+    """Axial slices (frame * plane, u, v) of a volume's first frames divided by their largest."""
     volume = np.asarray(nibabel.load(open_volume(identity)).dataobj, np.float64)
-    volume = volume[..., frame] if volume.ndim == 4 else volume
-    return np.moveaxis(volume, 2, 0)[list(which)] / volume.max()
+    volume = volume[..., :frames] if volume.ndim == 4 else volume[..., None]
+    stack = volume.transpose(3, 2, 0, 1)[:, list(which)] / volume.max()
+    return stack.reshape(-1, *stack.shape[2:])
 
 
 def with_phase(planes: Array) -> Array:
@@ -40,12 +41,12 @@ def with_phase(planes: Array) -> Array:
     return (planes * np.exp(1j * (0.6 * x + 0.9 * y * x - 0.7 * y * y + 0.3))).astype(np.complex64)
 
 
-def acquired(planes: Array, pattern: str, seed: int = 1) -> Acquisition:
-    """The planes undersampled, noise 1 % of their maximum."""
+def acquired(planes: Array, pattern: str, seed: int = 1, frames: int = 0) -> Acquisition:
+    """The planes undersampled, noise 1 % of their maximum; frames have complementary patterns."""
     axes, acceleration, exponent, calibration = PATTERNS[pattern]
     drawn = draw_pattern(
         planes.shape[1 : 1 + axes], law="power", exponent=exponent, acceleration=acceleration,
-        calibration=calibration, seed=seed,
+        calibration=calibration, seed=seed, frames=frames,
     )  # fmt: skip
     return undersample(with_phase(planes), drawn, sigma=0.01 * float(planes.max()), seed=seed)
 
@@ -65,6 +66,7 @@ def judged(data: Acquisition, planes: Array, method: str, **settings: Any) -> di
     ]
     return {
         "psnr": float(np.mean([one["psnr"] for one in scores])),
+        "each": [one["psnr"] for one in scores],
         "hfen": float(np.mean([one["hfen"] for one in scores])),
         "note": result.certificate.note,
     }

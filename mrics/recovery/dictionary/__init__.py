@@ -13,6 +13,7 @@ if TYPE_CHECKING:
     from mrics.recovery.dictionary.fixed import fixed_atoms as fixed_atoms
     from mrics.recovery.dictionary.learning import learn_ksvd as learn_ksvd
     from mrics.recovery.dictionary.learning import learn_online as learn_online
+    from mrics.recovery.dictionary.ridge import recover_ridge as recover_ridge
     from mrics.recovery.dictionary.store import Dictionary as Dictionary
     from mrics.recovery.dictionary.store import load_dictionary as load_dictionary
     from mrics.recovery.dictionary.store import save_dictionary as save_dictionary
@@ -27,6 +28,7 @@ _HOMES = {
     "learn_ksvd": "learning",
     "learn_online": "learning",
     "load_dictionary": "store",
+    "recover_ridge": "ridge",
     "save_dictionary": "store",
 }
 
@@ -40,6 +42,7 @@ __all__ = [
     "learn_ksvd",
     "learn_online",
     "load_dictionary",
+    "recover_ridge",
     "save_dictionary",
 ]
 

@@ -92,7 +92,8 @@ def start_atoms(patches: Array, number: int, seed: int, kind: Any = None) -> Arr
         )
     order = stream(seed, "first atoms").permutation(len(patches))
     chosen = real_rows(patches[order[:number]], kind)
-    chosen = chosen + 1e-6 * stream(seed, "tilt").standard_normal(chosen.shape)
+    tilt = 1e-6 * scale_of(patches)
+    chosen = chosen + tilt * stream(seed, "tilt").standard_normal(chosen.shape)
     # A patch's mean stays apart from atoms.
     norms = np.linalg.norm(chosen, axis=1, keepdims=True)
     return (chosen / np.maximum(norms, 1e-30)).astype(kind)

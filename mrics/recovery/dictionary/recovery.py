@@ -108,7 +108,9 @@ def solve(acquisition: Acquisition, settings: PatchDictionary, sigma: float) -> 
         final_change=history["change"][-1],
         certified=False,
         weight=gain,
-        weight_rule=f"auto: error target of {GAIN:g} x the noise" if settings.gain == "auto" else "given",
+        weight_rule=f"auto: error target of {GAIN:g} x the noise"
+        if settings.gain == "auto"
+        else "given",
         note=note,
     )
     image *= image.dtype.type(unit)
