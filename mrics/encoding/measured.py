@@ -110,7 +110,11 @@ def _described(acquisition: Acquisition) -> Acquisition:
     """With a noise covariance from the image border where none was measured, and notes on both."""
     psi, text = acquisition.covariance, "noise covariance from noise samples"
     if psi is None and acquisition.channels > 1:
-        psi, text = border_noise(acquisition)
+        # Planes of a 2-D pattern are readout positions, whether or not a file names the axes.
+        named = acquisition.axes or (
+            Axes("i", "j", "k") if len(acquisition.pattern.grid) == 2 else None
+        )
+        psi, text = border_noise(replace(acquisition, axes=named))
     notes = (*acquisition.notes, text)
     if acquisition.channels > 1:
         notes = (*notes, "sensitivities estimated from the calibration region of each plane")

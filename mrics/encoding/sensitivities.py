@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import tempfile
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
@@ -18,6 +19,7 @@ from mrics.numerics import centred_fft, map_blocks
 Array = NDArray[Any]
 METHODS = ("adaptive", "espirit")
 KERNEL = 6
+_IN_MEMORY = 256 * 2**20
 
 
 def estimate_sensitivities(
@@ -127,8 +129,8 @@ def with_sensitivities(
     acquisition : Acquisition
         Multi-channel data; a compression is taken up again by ``blocks``.
     scratch : path, optional
-        A .npy file to keep the maps in, memory-mapped, written plane by plane; in memory if left
-        out.
+        A .npy file to keep the maps in, memory-mapped, written plane by plane. If left out, in
+        memory up to 256 MiB, beyond that in a temporary file that goes with the maps.
     **settings
         For :func:`estimate_sensitivities` (one map set).
 
@@ -156,8 +158,11 @@ def with_sensitivities(
 
 
 def _store(scratch: Path | str | None, shape: tuple[int, ...], dtype: Any) -> Array:
-    if scratch is None:
+    if scratch is None and np.prod(shape) * np.dtype(dtype).itemsize <= _IN_MEMORY:
         return np.empty(shape, dtype)
+    if scratch is None:
+        with tempfile.TemporaryFile() as file:
+            return np.memmap(file, dtype=dtype, mode="w+", shape=shape)
     return np.lib.format.open_memmap(scratch, mode="w+", dtype=dtype, shape=shape)
 
 

@@ -289,10 +289,10 @@ class StudyPlan:
         for scan, one in received:
             told.setdefault(f"{one['note']}; {one['noise']}", []).append(scan)
         note = " ".join(f"Receive channels of {', '.join(ids)}: {t}." for t, ids in told.items())
-        given = "true" if self.protocol.coils else "full scan's"
+        given = "the true ones" if self.protocol.coils else "those of the full scan"
         note += (
             " Every arm estimates sensitivities from its own calibration region; an arm with fewer "
-            f"than {LEAST_LINES} lines of it is given the {given} ones. Scores compare magnitudes."
+            f"than {LEAST_LINES} lines of it is given {given}. Scores compare magnitudes."
         )
         coils = self.protocol.coils
         if coils is not None:

@@ -94,6 +94,23 @@ def test_noise_samples_whiten_the_channels(tmp_path):
     assert encoding.channels == 2
 
 
+@pytest.mark.parametrize("steps", [(2,), (2, 1)])
+def test_without_noise_samples_the_border_tells_the_covariance(steps):
+    maps, _, images = scene(48, 40, 3, 60)
+    wide = np.zeros((60, 48, 80), complex)
+    wide[8:52, :, 20:60] = images[8:52]
+    wide_maps = np.pad(maps, ((0, 0), (0, 0), (20, 20)), mode="edge")[None]
+    psi = np.array([[1, 0.4, 0], [0.4, 1, 0.4j], [0, -0.4j, 1]])
+    pattern = regular((48,) if len(steps) == 1 else (48, 80), steps, 16)
+    data = undersample(wide, pattern, 0.05, 3, sensitivities=wide_maps, covariance=psi)
+    made = acquisition_from_kspace(
+        data.kspace, pattern, channel_axis=1, readout_transformed=len(steps) == 2
+    )
+    np.testing.assert_allclose(made.covariance, 0.05**2 * psi, atol=0.05**2 * 0.08)
+    assert made.sigma == pytest.approx(0.05, rel=0.03)
+    assert any("from the border of the image along the readout" in n for n in made.notes)
+
+
 def test_the_image_is_that_of_the_simulated_acquisition():
     maps, _, images = scene(32, 40, 4, 2)
     pattern = regular((32,), (2,), 12)

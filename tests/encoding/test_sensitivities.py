@@ -158,6 +158,16 @@ def test_kept_maps_are_those_of_the_blocks(tmp_path):
         np.testing.assert_allclose(one.sensitivities, two.sensitivities, atol=1e-6)
 
 
+def test_large_maps_are_kept_in_a_file(monkeypatch):
+    data, _, _, _ = acquired(40, u=48, v=48)
+    small = with_sensitivities(data).sensitivities
+    assert not isinstance(small, np.memmap)
+    monkeypatch.setattr("mrics.encoding.sensitivities._IN_MEMORY", 1000)
+    large = with_sensitivities(data).sensitivities
+    assert isinstance(large, np.memmap)
+    np.testing.assert_array_equal(large, small)
+
+
 def test_recovery_with_estimated_maps_follows_the_combined_image():
     # The estimate has unit norm, so the image is the true one up to the maps' phase.
     data, _, rim, _ = acquired(0)
