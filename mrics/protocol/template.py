@@ -198,8 +198,25 @@ def _candidates(guess: _Guess) -> list[str]:
         "[acceptance]                       # CHANGE: agree on limits before looking at results",
         "ssim_min = 0.90                    # mean over slices, draws and scans",
         "ssim_worst = 0.80                  # worst single slice",
+        "# ssim_margin = 0.02               # largest loss: no worse than the baseline by more",
+        '# baseline = "full"                # the full scan; "today" where [today] is given',
+        "",
+        *_QUALITY,
         "",
     ]
+
+
+_QUALITY = (
+    "# [quality]                        # further measures; take the # away to have them",
+    "# noise_replicas = 40              # noise gain: recoveries with noise added again",
+    "# resolution_runs = 4              # local resolution: recoveries with small points added",
+    "# features = [{ size_mm = [2, 3, 4], contrast = [10, 20] }]   # discs inserted, % of signal",
+    "# observer_images = 200            # Hotelling observer: recovered images, at least 80",
+    "# planes = 2                       # slices these are taken on, first draw of each scan",
+    "# edges = true                     # edge blur; or [{ i = 40, j = 52, k = 9, angle_deg = 0 }]",
+    '# labels = "labels.nii.gz"         # regions on the grid of the scan, or one file for each',
+    "# background_label = 1             # what contrast and CNR of the others refer to",
+)
 
 
 def _calibration(guess: _Guess, acceleration: int) -> int:

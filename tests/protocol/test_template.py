@@ -7,7 +7,7 @@ import numpy as np
 import pytest
 
 from mrics.errors import ProtocolError, ScanError
-from mrics.protocol import load_protocol, new_protocol, scan_time
+from mrics.protocol import from_text, load_protocol, new_protocol, scan_time
 from mrics.sampling import draw_entry
 
 
@@ -112,3 +112,23 @@ def test_bad_input(tmp_path):
         new_protocol([])
     with pytest.raises(ScanError, match=r"nothing\.nii"):
         new_protocol([tmp_path / "nothing.nii"])
+
+
+def test_the_measures_it_offers_are_valid(tmp_path):
+    scan = write(tmp_path / "knee.nii.gz", (96, 80, 40), (1.0, 1.0, 1.2))
+    text = new_protocol([scan], out=tmp_path / "new.toml")
+    assert from_text(text).measures() is None
+    lines = text.splitlines()
+    first = next(n for n, line in enumerate(lines) if line.startswith("# ssim_margin"))
+    offered = [line.removeprefix("# ") for line in lines[first:] if line.startswith("# ")]
+    rest = [line for line in lines if not line.startswith("# ")]
+    at = rest.index(next(line for line in rest if line.startswith("ssim_worst"))) + 1
+    protocol = from_text("\n".join([*rest[:at], *offered, *rest[at:]]), tmp_path / "new.toml")
+    measures = protocol.measures()
+    assert protocol.baseline == "full"
+    assert measures.labels == ("labels.nii.gz",)
+    assert measures.noise_replicas == 40
+    assert len(measures.features) == 6
+    # 1 + 40 + 4 + 6 + 100 recoveries of two slices.
+    assert measures.recoveries == 151
+    assert protocol.arms()[-1].full_scan

@@ -163,7 +163,10 @@ def test_python_makes_no_markup() -> None:
                 node.value.value = ""
         for node in ast.walk(tree):
             if isinstance(node, ast.Constant) and isinstance(node.value, str):
-                assert not re.search(r"</|<[a-zA-Z!]{2}|<[a-z]>", node.value), (path.name, node.value)
+                assert not re.search(r"</|<[a-zA-Z!]{2}|<[a-z]>", node.value), (
+                    path.name,
+                    node.value,
+                )
 
 
 def test_maps_that_are_gone_are_named(own_study: Path) -> None:
