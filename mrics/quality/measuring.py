@@ -17,6 +17,7 @@ from mrics.numerics import map_blocks
 from mrics.numerics.scaling import exponent_for, largest_part, times_power_of_two
 from mrics.quality.chain import Chain
 from mrics.quality.measures import Measures
+from mrics.quality.planes import choose_planes
 
 Array = NDArray[Any]
 Note = Callable[[str, int, int], None]
@@ -130,39 +131,6 @@ def measure(
         seconds=perf_counter() - started,
         recovery_seconds=recovery_s,
     )
-
-
-def choose_planes(
-    reference: Array,
-    mask: NDArray[np.bool_] | None,
-    measures: Measures,
-    voxel_mm: tuple[float, float, float],
-) -> tuple[int, ...]:
-    """Planes spread over those that hold at least half as much of the mask as the fullest one.
-
-    Features that reach over planes need neighbours: then it is one block around the fullest plane.
-
-    Raises
-    ------
-    QualityError
-        Where such a feature needs more planes than there are.
-    """
-    count = len(reference)
-    area = np.full(count, 1.0) if mask is None else mask.sum(axis=(1, 2)).astype(float)
-    reach = max((one.radii(voxel_mm)[0] for one in measures.features), default=0)
-    if reach:
-        length = max(measures.planes, 2 * reach + 1)
-        if length > count:
-            raise QualityError(
-                f"A sphere reaches over {length} planes, the stack has {count}.",
-                "[quality] features",
-                "Study more planes, or use discs.",
-            )
-        first = int(np.clip(int(area.argmax()) - length // 2, 0, count - length))
-        return tuple(range(first, first + length))
-    full = np.flatnonzero(area >= 0.5 * area.max())
-    take = np.linspace(0, full.size - 1, min(measures.planes, full.size) + 2)[1:-1]
-    return tuple(sorted({int(full[round(float(at))]) for at in take}))
 
 
 class _Results:

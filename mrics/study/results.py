@@ -15,6 +15,8 @@ import numpy as np
 
 import mrics
 from mrics.caution import RESEARCH_ONLY
+from mrics.errors import QualityError
+from mrics.quality.planes import check_regions
 from mrics.scan import Scan, write_nifti
 from mrics.study.aggregate import ArmNumbers, arm_numbers
 from mrics.study.answer import KEPT_LEVEL, overall_verdict, smallest_kept
@@ -23,6 +25,7 @@ from mrics.study.code_version import code_version
 from mrics.study.files import plain, without_folders
 from mrics.study.measure_notes import measure_notes
 from mrics.study.plan import PlanRow, StudyPlan
+from mrics.study.prepare import Prepared
 
 SCHEMA = 1
 
@@ -30,6 +33,7 @@ SCHEMA = 1
 def scan_record(plan: StudyPlan, number: int) -> dict[str, Any]:
     """What is known of a scan before any line is left out."""
     scan = plan.prepared(number)
+    _check_regions(plan, number, scan)
     return {
         "id": plan.scan_ids[number],
         "name": plan.scans[number].name,
@@ -49,6 +53,20 @@ def scan_record(plan: StudyPlan, number: int) -> dict[str, Any]:
         "nrmse_floor": scan.nrmse_floor,
         "findings": [asdict(finding) for finding in scan.findings],
     }
+
+
+def _check_regions(plan: StudyPlan, number: int, scan: Prepared) -> None:
+    """Whether the measures asked for fit the scan; told before the study starts."""
+    measures = plan.protocol.measures()
+    if measures is None:
+        return
+    mm = scan.scan.voxel_mm
+    plane, u, v = (mm[axis] for axis in plan.axes.order)
+    try:
+        check_regions(scan.stack, scan.body, scan.labels, measures, (plane, u, v))
+    except QualityError as error:
+        where = f"{plan.protocol.path}: scan {plan.scan_ids[number]}; {error.where}"
+        raise QualityError(error.what, where, error.fix) from error
 
 
 def write_references(plan: StudyPlan, folder: Path) -> list[dict[str, Any]]:

@@ -9,8 +9,8 @@ from chains import acquire, body, phantom
 from mrics.errors import QualityError
 from mrics.quality import METRICS, Measures, measure, measures_from
 from mrics.quality.features import Feature
-from mrics.quality.measuring import choose_planes
 from mrics.quality.metrics import SCORES
+from mrics.quality.planes import choose_planes
 from mrics.recovery import recover
 
 MM = (3.0, 1.0, 1.0)

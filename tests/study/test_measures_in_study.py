@@ -7,7 +7,7 @@ import numpy as np
 import pytest
 from small_study import AFFINE, PROTOCOL, small_object, write_small_study
 
-from mrics.errors import ProtocolError, ScanError, StudyError
+from mrics.errors import ProtocolError, QualityError, ScanError, StudyError
 from mrics.protocol import from_text
 from mrics.study import run_study
 
@@ -129,6 +129,26 @@ def test_bad_label_values_and_edges_are_told(tmp_path: Path) -> None:
     protocol.write_text(named)
     with pytest.raises(StudyError, match="There is no scan 'knee'"):
         run_study(protocol, tmp_path / "out")
+    assert not (tmp_path / "out").exists()
+
+
+@pytest.mark.parametrize(
+    ("before", "after", "message"),
+    [
+        ("background_label = 2", "background_label = 7", r"background_label = 7 is not in the"),
+        ("size_mm = [2.4]", "size_mm = [30.0]", "larger than the region"),
+        ("size_mm = [2.4]", 'shape = "sphere", size_mm = [9.0]', "sphere reaches over"),
+    ],
+)
+def test_measures_that_do_not_fit_a_scan_stop_before_the_study(
+    before: str, after: str, message: str, tmp_path: Path
+) -> None:
+    text = (PROTOCOL + REGIONS).replace(before, after)
+    protocol = write_small_study(tmp_path, scans=1, protocol=text)
+    labelled(tmp_path)
+    with pytest.raises(QualityError, match=message) as caught:
+        run_study(protocol, tmp_path / "out")
+    assert "scan object-0" in caught.value.where
     assert not (tmp_path / "out").exists()
 
 
