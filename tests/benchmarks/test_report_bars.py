@@ -33,8 +33,9 @@ started = time.perf_counter()
 from mrics.report import write_report
 page = write_report(sys.argv[1])
 seconds = time.perf_counter() - started
-peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024
-print(json.dumps({"s": seconds, "MiB": peak, "MB": page.stat().st_size / 1e6}))
+used = resource.getrusage(resource.RUSAGE_SELF)
+peak, cpu = used.ru_maxrss / 1024, used.ru_utime + used.ru_stime
+print(json.dumps({"s": seconds, "cpu_s": cpu, "MiB": peak, "MB": page.stat().st_size / 1e6}))
 """
 SCROLL = """
 const done = arguments[arguments.length - 1];
@@ -78,7 +79,10 @@ def test_drawing_the_report(study: Path) -> None:
         [sys.executable, "-c", DRAW, str(study)], capture_output=True, text=True, check=True
     )
     figures = json.loads(run.stdout)
-    print(f"\ndrawn in {figures['s']:.1f} s, {figures['MiB']:.0f} MiB, {figures['MB']:.2f} MB")
+    print(
+        f"\ndrawn in {figures['s']:.1f} s ({figures['cpu_s']:.1f} s of processor), "
+        f"{figures['MiB']:.0f} MiB, {figures['MB']:.2f} MB"
+    )
     assert figures["MB"] < 25
     assert figures["MiB"] < 1024
     assert figures["s"] < 20
