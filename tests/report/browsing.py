@@ -13,6 +13,8 @@ from typing import Any
 import numpy as np
 import pytest
 
+AXE = Path(__file__).parent / "vendor" / "axe.min.js"  # axe-core 4.14.1 (npm), MPL-2.0
+
 _FLAGS = (
     "--headless=new",
     "--no-sandbox",
@@ -138,3 +140,16 @@ class Page:
         )
         raw = np.frombuffer(base64.b64decode(text), dtype=np.uint8)
         return raw.reshape(rows, columns, 3)
+
+
+def faults(page: Page) -> Any:
+    """What axe-core finds by the WCAG 2.1 A and AA rules and its own, folded parts opened."""
+    page.script("document.querySelectorAll('details').forEach((d) => { d.open = true; })")
+    page.script(AXE.read_text())
+    return page.browser.execute_async_script(
+        "const done = arguments[arguments.length - 1];"
+        "const rules = ['wcag2a', 'wcag2aa', 'wcag21a', 'wcag21aa', 'best-practice'];"
+        "axe.run(document, {runOnly: rules})"
+        ".then((r) => done(r.violations.map((v) => [v.id, v.impact, v.nodes.length, "
+        "v.nodes[0].html.slice(0, 160)])))"
+    )

@@ -7,14 +7,17 @@ from typing import Any
 import nibabel
 import numpy as np
 import pytest
-from browsing import Page
+from browsing import Page, faults
 from small_study import PROTOCOL, write_small_study
 from study_building import read_results
 
 from mrics.quality.features import Feature
 from mrics.report import run_study
+from mrics.report.arms import windows
 from mrics.report.folder import open_folder
 from mrics.report.inserted import inserted_features, reference_change
+from mrics.report.pictures import load_pictures
+from mrics.report.viewer_data import viewer_values
 
 FEATURES = """\
 [quality]
@@ -65,6 +68,31 @@ def test_study_without_features_has_none(tiny_study: Path) -> None:
     assert inserted_features(open_folder(tiny_study), "scan-1") == []
 
 
+def test_slices_with_features_are_kept_where_room_is_short(study: Path) -> None:
+    """With room for some slices, the worst, the median and those with features are there."""
+    folder = open_folder(study)
+    pictures = load_pictures(folder)
+    whole = viewer_values(folder, pictures, windows(folder, pictures), 10_000_000)
+    assert whole is not None
+    assert whole["left_out"] == []
+    wanted = {pictures[0].places[p] for p in pictures[0].important}
+    assert wanted >= {place for one in pictures[0].features for place in one.places}
+    assert len(wanted) < len(pictures[0].places)
+    size = sum(len(text) for text in whole["blocks"].values())
+    for share in (0.4, 0.35, 0.3, 0.25, 0.2, 0.15, 0.1):
+        values = viewer_values(folder, pictures, windows(folder, pictures), int(share * size))
+        assert values is not None
+        scan = values["data"]["scans"][0]
+        held = {(s["frame"], s["plane"]) for s in scan["slices"]}
+        if len(held) < len(pictures[0].places):
+            assert f"{len(held)} of 5 slices are in this page" in values["left_out"][0]
+            assert "inserted features" in values["left_out"][0]
+            assert held <= wanted or wanted <= held
+            break
+    else:
+        pytest.fail("no slice was left out")
+
+
 @pytest.mark.browser
 def test_viewer_jumps_to_every_site_and_shows_the_feature(browser: Any, study: Path) -> None:
     page = Page(browser, study / "report.html")
@@ -109,6 +137,7 @@ def test_viewer_jumps_to_every_site_and_shows_the_feature(browser: Any, study: P
             grey = np.clip(np.round(lattice / (high - low) * 255), 0, 255)
             seen = page.pixels(panel, *grey.shape)[..., 0].astype(int)
             assert np.abs(seen - grey).max() <= 1
+    assert faults(page) == []
     page.choose("#v-feature", 0)
     assert page.script("return document.querySelectorAll('.ring').length") == 0
     assert page.errors() == []

@@ -8,7 +8,7 @@ from pathlib import Path
 from typing import Any
 
 import pytest
-from browsing import Page
+from browsing import Page, faults
 from study_building import StudyPlan, build_study, read_results
 
 from mrics.protocol import load_protocol
@@ -17,7 +17,6 @@ from mrics.study import plan_study
 
 pytestmark = pytest.mark.browser
 
-AXE = Path(__file__).parent / "vendor" / "axe.min.js"  # axe-core 4.14.1 (npm), MPL-2.0
 PROTOCOL = Path(__file__).parents[2] / "protocols" / "knee_tse2d.toml"
 MM = 96 / 25.4
 
@@ -120,19 +119,6 @@ def test_markup_in_names_stays_text(browser: Any, tmp_path: Path) -> None:
     assert page.script("return document.querySelectorAll('img[src=x]').length") == 0
     assert page.script("return document.getElementById('v-scan').options[0].text") == bad
     assert bad in page.script("return document.querySelector('.panel:nth-child(2) p').textContent")
-
-
-def faults(page: Page) -> Any:
-    """What axe-core finds by the WCAG 2.1 A and AA rules and its own, folded parts opened."""
-    page.script("document.querySelectorAll('details').forEach((d) => { d.open = true; })")
-    page.script(AXE.read_text())
-    return page.browser.execute_async_script(
-        "const done = arguments[arguments.length - 1];"
-        "const rules = ['wcag2a', 'wcag2aa', 'wcag21a', 'wcag21aa', 'best-practice'];"
-        "axe.run(document, {runOnly: rules})"
-        ".then((r) => done(r.violations.map((v) => [v.id, v.impact, v.nodes.length, "
-        "v.nodes[0].html.slice(0, 160)])))"
-    )
 
 
 @pytest.mark.parametrize("scheme", ["light", "dark"])

@@ -239,6 +239,30 @@ def test_zoom_is_linked_and_keeps_the_pixels(page: Page, truth: Truth) -> None:
         assert (np.abs(seen - expected) <= 1).mean() > 0.97
 
 
+def test_moving_a_zoomed_image_moves_every_panel(page: Page, truth: Truth) -> None:
+    from selenium.webdriver.common.action_chains import ActionChains
+
+    scan = facts(page)["scans"][0]
+    arm = page.script("return document.getElementById('v-arm').value")
+    page.keys(HOME, UP, UP, "+", "+")
+    canvas = page.one("#v-stage canvas")
+    width = page.script("return arguments[0].getBoundingClientRect().width", canvas)
+    ActionChains(page.browser).key_down(SHIFT).move_to_element(
+        canvas
+    ).click_and_hold().move_by_offset(60, 0).release().key_up(SHIFT).perform()
+    page.painted()
+    zoom = 2.25
+    for panel, kind, which in ((0, "reference", None), (1, "recovered", arm)):
+        whole = grey_of(truth.plane(kind, 2, arm=which), scan["step"], *scan["window"])
+        rows, columns = whole.shape
+        seen = page.pixels(panel, 40, 40)[..., 0].astype(int)
+        middle = columns * (0.5 - 60 / width / zoom)
+        r = np.floor(rows / 2 - rows / zoom / 2 + (np.arange(40) + 0.5) * rows / zoom / 40)
+        c = np.floor(middle - columns / zoom / 2 + (np.arange(40) + 0.5) * columns / zoom / 40)
+        expected = whole[np.ix_(r.astype(int), c.astype(int))]
+        assert (np.abs(seen - expected) <= 1).mean() > 0.93
+
+
 def test_worst_and_median_buttons_go_where_the_results_say(page: Page, truth: Truth) -> None:
     arm = arm_ids(truth)[3]
     page.choose("#v-arm", arm)
