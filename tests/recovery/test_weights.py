@@ -20,13 +20,6 @@ ELSEWHERE = ("low-rank", "wavelet+variation")
 WEIGHTED = sorted(m for m in METHODS if hasattr(SETTINGS[m], "weight") and m not in ELSEWHERE)
 
 
-def framed(acquisition, method):
-    """Two frames of two places for methods over frames."""
-    if method != "low-rank":
-        return acquisition
-    return replace(acquisition, volume_shape=(2, *acquisition.shape[1:], 2))
-
-
 def shrunk(acquisition, threshold):
     """Soft threshold of real and imaginary k-space parts on their own: closed-form risk."""
     parts = np.ascontiguousarray(acquisition.kspace[:, 0]).view(float)
@@ -175,7 +168,6 @@ def test_search_stays_in_its_range():
 @pytest.mark.parametrize("method", WEIGHTED)
 @pytest.mark.parametrize("word", [w for w in WEIGHT_WORDS if w != "trained"])
 def test_every_rule_names_itself_and_its_cost(points, method, word):
-    points = framed(points, method)
     result = recover(points, method, weight=word, reference=blobs(), iterations=15)
     rule = result.certificate.weight_rule
     assert rule.startswith(word)
@@ -188,7 +180,7 @@ def test_every_rule_names_itself_and_its_cost(points, method, word):
 
 @pytest.mark.parametrize("method", WEIGHTED)
 def test_best_is_no_worse_than_any_number(points, method):
-    truth, points = blobs(), framed(points, method)
+    truth = blobs()
 
     def error(image):
         return np.sum((np.abs(image) - np.abs(truth)) ** 2)
@@ -215,7 +207,6 @@ def test_best_counts_the_mask_alone(points):
 @pytest.mark.parametrize("method", WEIGHTED)
 def test_scaling_data_and_sigma_keeps_the_weight(lines, method):
     """Also where sigma is estimated from the data."""
-    lines = framed(lines, method)
     factor = 3e7 * np.exp(0.7j)
     scaled = replace(lines, kspace=factor * lines.kspace, sigma_added=abs(factor) * 0.02)
     for word in ("auto", "sure", "discrepancy"):
