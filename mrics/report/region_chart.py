@@ -30,7 +30,20 @@ def panel(study: StudyFolder) -> Panel | None:
         "limits of agreement, bias less and plus 1.96 standard deviations (Bland and Altman).",
         size_in=(7.2, 0.7 + 2.0 * -(-len(found) // 3)),
         draw=lambda figure: _draw(figure, labels, found),
-        head=("Arm", "Region", "Mean", "Reference", "SD", "CNR", "Reference CNR", "Bias", "Limits"),
+        head=(
+            "Arm",
+            "Region",
+            "Mean",
+            "Reference mean",
+            "SD",
+            "Reference SD",
+            "Contrast",
+            "Reference contrast",
+            "CNR",
+            "Reference CNR",
+            "Bias",
+            "Limits of agreement",
+        ),
         rows=[
             _row(labels[arm], label, rows)
             for arm, mine in found.items()
@@ -64,7 +77,8 @@ def _row(arm: str, label: int, rows: list[dict[str, Any]]) -> tuple[str, ...]:
         return number(float(np.mean(values)) if values else None)
 
     agreement = bland_altman(*_pairs(rows))
-    keys = ("mean", "reference_mean", "sd", "cnr", "reference_cnr")
+    kinds = ("mean", "sd", "contrast", "cnr")
+    keys = [key for kind in kinds for key in (kind, f"reference_{kind}")]
     limits = f"{number(agreement.low)} to {number(agreement.high)}"
     return (arm, str(label), *(mean(key) for key in keys), number(agreement.bias), limits)
 

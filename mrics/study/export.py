@@ -162,10 +162,13 @@ def _on_every_scan(
     row = next(row for row in plan.rows if row.arm.id == exported.arm)
     records = {record["id"]: record for record in results["scans"]}
     table, units = exported.played.pattern.hash, []
+    measures = protocol.measures()
+    # Draws after the first lack the measures that recover again: then every scan runs anew.
+    complete = exported.draw == 0 or measures is None or not measures.recoveries
     for scan_id in plan.scan_ids:
         record = records.get(scan_id)
         kept = next((u for u in ran if (u["scan"], u["pattern_hash"]) == (scan_id, table)), None)
-        if kept is not None:
+        if kept is not None and complete:
             units.append(kept)
         elif record is not None:
             if pattern_grid(plan.axes, tuple(record["shape"])) != exported.played.pattern.grid:

@@ -269,12 +269,15 @@ def _analytic_gain(extras: dict[str, Any], scan: Prepared) -> dict[str, Any] | N
 def _measure(
     unit: Unit, scan: Prepared, acquisition: Acquisition, recovered: Recovered
 ) -> Measured | None:
-    """The further measures the protocol asks for; those that recover again on the first draw."""
+    """The further measures the protocol asks for; those that recover again on the first draw.
+
+    A pattern given by its scan (an exported table) is measured in full, whatever its number.
+    """
     image = recovered.image
     wanted = unit.protocol.measures()
     if wanted is None:
         return None
-    if unit.draw > 0:
+    if unit.draw > 0 and not unit.pattern_of:
         wanted = replace(
             wanted, noise_replicas=0, resolution_runs=0, features=(), observer_images=0
         )

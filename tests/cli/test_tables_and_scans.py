@@ -49,6 +49,18 @@ def test_the_exported_table_is_the_studys_draw_and_has_a_row(tmp_path: Path) -> 
     assert used in exported.files[0].read_text()
 
 
+def test_an_exported_draw_is_measured_in_full(tmp_path: Path) -> None:
+    text = PROTOCOL.replace("nrmse_max = 0.5", "nrmse_max = 0.5\nnoise_ratio_max = 2.0")
+    text += "[quality]\nmore_scores = false\nnoise_replicas = 4\n"
+    protocol = write_small_study(tmp_path, protocol=text)
+    run_study(protocol, tmp_path / "study")
+    export_table(load_protocol(protocol), ARM, 1, tmp_path / "table", tmp_path / "study")
+    row = json.loads((tmp_path / "study" / "results.json").read_text())["arms"][-1]
+    [limit] = [one for one in row["verdict"]["limits"] if one["key"] == "noise_ratio_max"]
+    # Zero-filled: the root of the sampled share, 13 of 40 lines.
+    assert limit["value"] == pytest.approx((13 / 40) ** 0.5, rel=0.1)
+
+
 def test_an_unknown_arm_or_draw_is_refused(tmp_path: Path) -> None:
     protocol = load_protocol(write_small_study(tmp_path, scans=1))
     with pytest.raises(MricsError, match="no arm 'wavelets'"):
