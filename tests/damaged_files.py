@@ -191,6 +191,7 @@ VALUES = (
     "1979-05-27", "07:32:00", "9999999999999999999999", "[[1]]", "[{}]", "'i'", "'power'",
     "[1.5,'x']", "{pattern='full'}", "{method=3}", "{law='table'}", "65536", "100000", "1000000000",
     "'object_0.nii.gz'", "'/dev/zero'", "'..'", "'search'", "[" * 3000, "1e-320", "1000", "[2, 2]",
+    "'~nobody-here/x'",
 )  # fmt: skip
 LINES = (
     "pattern = 'full'", "pattern = 'spokes'", "steps = [2, 2]", "law = 'energy'", "frames = 3",

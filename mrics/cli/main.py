@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import io
 import sys
 from pathlib import Path
 from typing import Annotated, Any
@@ -39,14 +40,22 @@ StudyFolder = Annotated[Path, typer.Argument(metavar="DIR", help="Folder of a fi
 def main() -> None:
     """Run the command line; bad input is told in three lines and exits with status 2."""
     arguments = sys.argv[1:]
-    debug = "--debug" in arguments
-    arguments = [a for a in arguments if a != "--debug"]
+    debug, verbose = "--debug" in arguments, "--verbose" in arguments
+    arguments = [a for a in arguments if a not in ("--debug", "--verbose")]
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):
+            # A terminal that lacks a letter of a title or a file name shows a question mark.
+            stream.reconfigure(errors="replace")
+    if verbose:
+        from mrics.cli.log import log_to_terminal
+
+        log_to_terminal()
     try:
         app(args=arguments, standalone_mode=True)
-    except MricsError as error:
+    except (MricsError, OSError, MemoryError) as error:
         if debug:
             raise
-        typer.echo(f"mrics: {error}", err=True)
+        typer.echo(f"mrics: {_told(error)}", err=True)
         sys.exit(2)
     except (KeyboardInterrupt, SystemExit) as stop:
         # typer turns Ctrl-C into status 130.
@@ -54,6 +63,19 @@ def main() -> None:
             raise
         typer.echo("\nmrics: stopped; finished units are kept, run again to go on", err=True)
         sys.exit(_STOPPED)
+
+
+def _told(error: MricsError | OSError | MemoryError) -> MricsError:
+    """What a person is told of bad input, a full disk or too little memory."""
+    if isinstance(error, MricsError):
+        return error
+    if isinstance(error, MemoryError):
+        return MricsError("There is not enough memory.", "", "Take fewer --workers or a crop.")
+    return MricsError(
+        f"A file cannot be read or written ({error.strerror or error}).",
+        str(error.filename or ""),
+        "Check the disk's room and your permissions.",
+    )
 
 
 def _version(wanted: bool) -> None:
@@ -70,6 +92,7 @@ def options(
         bool, typer.Option("--version", callback=_version, is_eager=True, help="Print the version.")
     ] = False,
     debug: Annotated[bool, typer.Option("--debug", help="Show the traceback of an error.")] = False,
+    verbose: Annotated[bool, typer.Option("--verbose", help="Log what is done, and when.")] = False,
 ) -> None:
     """Options of every command."""
 
@@ -372,12 +395,12 @@ def optimism(
 
     Example: mrics optimism knee.toml --out knee-optimism
     """
-    from mrics.cli.progress import progress_line
+    from mrics.cli.stopping import stoppable
     from mrics.cli.tables import optimism_lines
     from mrics.protocol import load_protocol
     from mrics.study import optimism as compare_with_remedied
 
-    with progress_line() as progress:
+    with stoppable() as progress:
         rows = compare_with_remedied(
             load_protocol(protocol), out, quick=quick, workers=workers, progress=progress
         )
@@ -392,12 +415,12 @@ def _say_compiling() -> None:
 
 
 def _run(protocol: Path, out: Path, **settings: Any) -> dict[str, Any]:
-    from mrics.cli.progress import progress_line
+    from mrics.cli.stopping import stoppable
     from mrics.cli.tables import verdict_lines
     from mrics.report import run_study
 
     _say_compiling()
-    with progress_line() as progress:
+    with stoppable() as progress:
         results = run_study(protocol, out, progress=progress, **settings)
     typer.echo(verdict_lines(results))
     typer.echo(f"report:  {out / 'report.html'}\n{RESEARCH_ONLY}")

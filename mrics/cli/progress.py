@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import logging
 import sys
 import time
 from collections.abc import Callable, Iterator
@@ -12,8 +13,8 @@ Report = Callable[[int, int, str], None]
 
 @contextmanager
 def progress_line(what: str = "units") -> Iterator[Report]:
-    """A progress callback: a bar on a terminal, a line every tenth elsewhere."""
-    if not sys.stderr.isatty():
+    """A progress callback: a bar on a terminal, a line every tenth elsewhere or among a log."""
+    if not sys.stderr.isatty() or logging.getLogger("mrics").isEnabledFor(logging.INFO):
         yield _Lines(what)
         return
     from rich.console import Console

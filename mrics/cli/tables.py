@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import shutil
 import textwrap
 from collections.abc import Sequence
 from typing import TYPE_CHECKING, Any
@@ -17,11 +18,33 @@ if TYPE_CHECKING:
     from mrics.study import Difference, Ranking, StudyPlan
     from mrics.study.as_is import Optimism
 
-WIDTH = 100
+_WIDEST = 100
+
+
+def columns() -> int:
+    """Columns of a table: those of the terminal, 60 to 100; 100 where there is none."""
+    return max(60, min(_WIDEST, shutil.get_terminal_size((_WIDEST, 24)).columns))
+
+
+def _folded(lines: Sequence[str]) -> str:
+    """Lines joined, those wider than the terminal folded; left whole where there is none."""
+    width = max(60, shutil.get_terminal_size((10**6, 24)).columns)
+    folded: list[str] = []
+    for line in lines:
+        indent = " " * (len(line) - len(line.lstrip()) + 4)
+        folded += [line] if len(line) <= width else _wrap(line, width, indent)
+    return "\n".join(folded)
+
+
+def _wrap(line: str, width: int, indent: str) -> list[str]:
+    return textwrap.wrap(
+        line, width, subsequent_indent=indent, drop_whitespace=True, break_on_hyphens=False
+    )
 
 
 def plan_table(plan: StudyPlan) -> str:
-    """The arms of a plan, at most 100 columns wide."""
+    """The arms of a plan, as wide as :func:`columns` says."""
+    width = columns()
     head = ("arm", "acquired", "R", "calib.", "time", "full", "saved")
     rows = []
     for row in plan.rows:
@@ -39,15 +62,15 @@ def plan_table(plan: StudyPlan) -> str:
             )
         )
     widths = [max(len(line[c]) for line in (head, *rows)) for c in range(len(head))]
-    widths[0] = min(widths[0], WIDTH - sum(widths[1:]) - 2 * (len(head) - 1))
-    lines = [plan.protocol.title[:WIDTH]]
+    widths[0] = min(widths[0], width - sum(widths[1:]) - 2 * (len(head) - 1))
+    lines = [plan.protocol.title[:width]]
     for line in (head, *rows):
         first = line[0] if len(line[0]) <= widths[0] else line[0][: widths[0] - 1] + "…"
         cells = [first.ljust(widths[0])]
-        cells += [text.rjust(width) for text, width in zip(line[1:], widths[1:], strict=True)]
+        cells += [text.rjust(size) for text, size in zip(line[1:], widths[1:], strict=True)]
         lines.append("  ".join(cells).rstrip())
     for text in plan.findings():
-        lines += textwrap.wrap(f"note: {text}", WIDTH, subsequent_indent="      ")
+        lines += textwrap.wrap(f"note: {text}", width, subsequent_indent="      ")
     return "\n".join(lines)
 
 
@@ -55,12 +78,12 @@ def ranking_table(ranking: Ranking) -> str:
     """Every pattern's d' and rank for both tasks, with the d' of noise alone below it."""
     tasks = ranking.tasks()
     number = max(len(row["pattern"]) for row in ranking.rows)
-    name = max(14, min(number, WIDTH - 6 - 12 * len(tasks)))
+    name = max(14, min(number, columns() - 6 - 12 * len(tasks)))
     lines = textwrap.wrap(
         "Ideal observer on the data themselves, no recovery: d' and rank of every pattern "
         f"(first draw; features of {ranking.contrast:g} %; background and noise of "
         f"{ranking.scan}, sigma {ranking.sigma:.3g}; {ranking.channels} channel(s))",
-        WIDTH,
+        columns(),
     )
     kinds = list(dict.fromkeys(kind for kind, _ in tasks))
     sizes = [size for kind, size in tasks if kind == kinds[0]]
@@ -79,7 +102,7 @@ def ranking_table(ranking: Ranking) -> str:
     lines += textwrap.wrap(
         "Ranked by d' in an anatomical background. \"Noise only\" is d' in a known background: it "
         "always prefers the centre of k-space and ranks nothing.",
-        WIDTH,
+        columns(),
     )
     return "\n".join(lines)
 
@@ -115,14 +138,14 @@ def verdict_lines(results: dict[str, Any]) -> str:
         best = "none passes" if search["arm"] is None else f"R = {search['acceleration']:g}"
         lines += textwrap.wrap(
             f"search {search['family']}: {looks}; fastest that passes: {best}",
-            WIDTH,
+            columns(),
             subsequent_indent="    ",
         )
         lines += [f"    {text}" for text in search["findings"]]
     for scan in results["scans"]:
         for finding in scan["findings"]:
             lines.append(f"warning: {scan['id']}: {finding['what']} ({finding['where']})")
-    return "\n".join(lines)
+    return _folded(lines)
 
 
 def difference_lines(difference: Difference) -> str:
@@ -148,7 +171,7 @@ def difference_lines(difference: Difference) -> str:
             if move.beyond is not None:
                 how = "the intervals do not overlap" if move.beyond else "within the intervals"
             lines.append(f"  {move.arm}, {move.metric}: {move.before:g} -> {move.after:g}, {how}")
-    return "\n".join(lines) if lines else "no difference"
+    return _folded(lines) if lines else "no difference"
 
 
 _REMEDIES = {
@@ -200,11 +223,11 @@ def optimism_lines(rows: Sequence[Optimism]) -> str:
             f"{row.arm}, {row.metric}: {row.as_is:.4g}, {row.remedied:.4g}, "
             f"{row.difference:+.4g}{interval}, {side}"
         )
-    return "\n".join(lines)
+    return _folded(lines)
 
 
 def _wrapped(text: str, indent: str) -> list[str]:
-    return textwrap.wrap(text, WIDTH, initial_indent=indent, subsequent_indent=indent + "  ")
+    return textwrap.wrap(text, columns(), initial_indent=indent, subsequent_indent=indent + "  ")
 
 
 def certificate_lines(content: dict[str, Any]) -> str:
@@ -223,7 +246,7 @@ def certificate_lines(content: dict[str, Any]) -> str:
         lines.append(f"optimality: {one['optimality']:.3g}, {one['tolerance']:.3g} {reached}")
     if one["note"]:
         lines.append(f"note: {one['note']}")
-    return "\n".join(lines)
+    return _folded(lines)
 
 
 def dictionary_lines(dictionary: Dictionary) -> str:
@@ -233,7 +256,7 @@ def dictionary_lines(dictionary: Dictionary) -> str:
     kind = "complex" if dictionary.atoms.dtype.kind == "c" else "real"
     half, most = np.quantile(dictionary.residuals, (0.5, 0.95))
     where = "patches not learned from" if made["residual_of_unseen_patches"] else "patches"
-    return "\n".join(
+    return _folded(
         [
             f"atoms: {len(dictionary.atoms)} {kind}, patches {size}, "
             f"{dictionary.layers} plane(s) in a patch",

@@ -4,9 +4,10 @@ from __future__ import annotations
 
 from typing import Any
 
-import numba
 import numpy as np
 from numpy.typing import NDArray
+
+from mrics.numerics.kernel_cache import numba
 
 Array = NDArray[Any]
 

@@ -9,7 +9,7 @@ _CGROUP = Path("/sys/fs/cgroup")
 
 
 def available_memory() -> int:
-    """Bytes that can be allocated now: the system's figure, capped by a container's limit.
+    """Bytes that can be allocated now: the system's figure, capped by limits of container and user.
 
     Where the system does not say (no ``/proc/meminfo``), half of the physical memory, and 4 GiB
     where that is unknown too.
@@ -18,7 +18,21 @@ def available_memory() -> int:
     limit = _number(_CGROUP / "memory.max")
     if limit is not None:
         system = min(system, max(limit - (_number(_CGROUP / "memory.current") or 0), 0))
-    return system
+    return min(system, _address_space_left(system))
+
+
+def _address_space_left(otherwise: int) -> int:
+    """What ``ulimit -v`` leaves this process; ``otherwise`` where there is no such limit."""
+    try:
+        import resource
+
+        limit = resource.getrlimit(resource.RLIMIT_AS)[0]
+        if limit == resource.RLIM_INFINITY:
+            return otherwise
+        pages = int(Path("/proc/self/statm").read_text().split()[0])
+        return max(limit - pages * os.sysconf("SC_PAGE_SIZE"), 0)
+    except (ImportError, OSError, ValueError):
+        return otherwise
 
 
 def _system_available() -> int:

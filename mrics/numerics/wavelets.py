@@ -17,10 +17,11 @@ from functools import lru_cache
 from pathlib import Path
 from typing import Any
 
-import numba
 import numpy as np
 import pywt
 from numpy.typing import NDArray
+
+from mrics.numerics.kernel_cache import numba
 
 Array = NDArray[Any]
 compiled = numba.njit(

@@ -122,7 +122,13 @@ def _with_folder(keys: dict[str, Any], folder: Path) -> dict[str, Any]:
     def placed(value: Any) -> Any:
         if isinstance(value, tuple):
             return tuple(placed(item) for item in value)
-        return str(folder / Path(value).expanduser()) if isinstance(value, str) else value
+        if not isinstance(value, str):
+            return value
+        try:
+            return str(folder / Path(value).expanduser())
+        except RuntimeError:
+            # There is no such user; the file is then reported as missing under this name.
+            return str(folder / value)
 
     return {key: placed(value) if key in FILE_KEYS else value for key, value in keys.items()}
 

@@ -166,8 +166,9 @@ def load_protocol(path: str | Path) -> Protocol:
         Where the file cannot be read or a key is unknown, missing or out of range; the message
         names file, line and key.
     """
-    file = Path(path).expanduser()
+    file = Path(path)
     try:
+        file = file.expanduser()
         if file.stat().st_size > LARGEST_FILE:
             raise ProtocolError(
                 f"The file has {file.stat().st_size} bytes; a protocol has at most {LARGEST_FILE}.",
@@ -175,7 +176,7 @@ def load_protocol(path: str | Path) -> Protocol:
                 "Give the protocol file, not a scan.",
             )
         text = file.read_bytes().decode("utf-8-sig")
-    except (OSError, ValueError) as error:
+    except (OSError, ValueError, RuntimeError) as error:
         if isinstance(error, UnicodeDecodeError):
             raise ProtocolError(
                 "The file is not UTF-8 text.", str(file), "Save it as plain UTF-8 text."

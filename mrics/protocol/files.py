@@ -108,7 +108,12 @@ def _scans(given: dict[str, str], folder: Path, where: str) -> list[ScanFiles]:
 
 def _matches(pattern: str, folder: Path, where: str) -> dict[tuple[str, ...], Path]:
     """Files a pattern matches, by what its wild cards stand for, in natural order of names."""
-    full = str(folder / Path(pattern).expanduser())
+    try:
+        full = str(folder / Path(pattern).expanduser())
+    except RuntimeError as error:
+        raise ProtocolError(
+            f"{pattern!r} cannot be read: {error}", where, "Write the path in full."
+        ) from error
     if "\0" in full:
         raise ProtocolError(f"{pattern!r} is not a path.", where, "Remove the zero character.")
     if not glob.has_magic(pattern) or Path(full).exists():

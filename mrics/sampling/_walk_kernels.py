@@ -4,8 +4,9 @@ from __future__ import annotations
 
 from typing import Any
 
-import numba
 import numpy as np
+
+from mrics.numerics.kernel_cache import numba
 
 _ONE = 1 << 30
 

@@ -44,6 +44,13 @@ def pool(workers: int) -> Executor:
     )
 
 
+def end_workers(executor: Executor) -> None:
+    """End a pool's processes without waiting for their units."""
+    processes: dict[int, Any] = getattr(executor, "_processes", None) or {}
+    for process in list(processes.values()):
+        process.terminate()
+
+
 def _start_worker() -> None:
     signal.signal(signal.SIGINT, signal.SIG_IGN)
     set_threads(1)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import logging
 from collections import OrderedDict
 from dataclasses import dataclass
 from typing import Any, NamedTuple
@@ -24,6 +25,8 @@ from mrics.scan import (
 )
 from mrics.scan.remedies import add_phase
 from mrics.study.channels import Receive, loud_channels, with_own_channels, with_simulated_channels
+
+_log = logging.getLogger(__name__)
 
 
 @dataclass(frozen=True)
@@ -244,6 +247,11 @@ def _prepare(
         labels=None
         if labels is None
         else np.ascontiguousarray(np.tile(labels[list(planes)], (scan.frames, 1, 1))),
+    )
+    _log.info(
+        "read %s: %s, %s, sigma %.4g, SNR %.3g, %d planes, %d findings",
+        *(files.name, " x ".join(map(str, scan.shape)), scan.complex_source),
+        *(prepared.sigma, prepared.snr, len(planes), len(prepared.findings)),
     )
     if scan.channels > 1:
         return with_own_channels(prepared, virtual_channels)

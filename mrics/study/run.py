@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import logging
 import shutil
 import time
 from collections.abc import Callable, Sequence
@@ -17,6 +18,7 @@ from mrics.study.executors import (
     check_cluster,
     cluster_executor,
     cluster_lost,
+    end_workers,
     fitting_workers,
     pool,
 )
@@ -31,6 +33,7 @@ from mrics.study.trained_weights import trained_rows
 from mrics.study.units import Unit, run_unit_here, run_unit_shared
 
 Progress = Callable[[int, int, str], None]
+_log = logging.getLogger(__name__)
 
 
 def run_study(
@@ -79,6 +82,7 @@ def run_study(
     if not isinstance(protocol, Protocol):
         protocol = load_protocol(protocol)
     plan = plan_study(protocol, quick=quick)
+    _log.info("planned %d arms on %d scans", len(plan.rows), len(plan.scans))
     folder = Path(out)
     if cluster is not None:
         # Before scans are read, which may take minutes.
@@ -122,6 +126,7 @@ def run_study(
         content = study_results(plan, rows, records, results, references)
         content["searches"] = [one.as_dict() for one in found]
         _write(folder, content, results, started)
+    _log.info("results.json is written, %d units", len(results))
     loaded: dict[str, Any] = plain(content)
     return loaded
 
@@ -215,6 +220,7 @@ class _Work:
             self._progress(self._count, self._total, "")
             self._said = True
         waiting = {unit.key: unit for unit in units if unit.key not in done}
+        _log.info("%d units are kept, %d to compute", len(done), len(waiting))
         done |= self._compute(list(waiting.values()))
         return [_labelled(done[unit.key], unit) for unit in units]
 
@@ -239,6 +245,7 @@ class _Work:
         workers = self._workers
         if workers is None:
             workers = fitting_workers(self._plan.scan_bytes(), units)
+        _log.info("computing with %s", self._cluster or f"{workers} process(es)")
         if self._cluster is None and workers == 1:
             self._executor = self._resources.enter_context(InProcess())
             return self._executor
@@ -268,6 +275,9 @@ class _Work:
                 for unit in mine:
                     result = executor.submit(run_unit_shared, unit).result()
                     done[unit.key] = self._note(unit, result)
+        except KeyboardInterrupt:
+            self._keep_what_is_at_work(executor, futures)
+            raise
         except Exception as error:
             if not isinstance(error, BrokenExecutor) and not cluster_lost(error):
                 raise
@@ -280,6 +290,17 @@ class _Work:
             for future in futures:
                 future.cancel()
         return done
+
+    def _keep_what_is_at_work(self, executor: Executor, futures: dict[Future[Any], Unit]) -> None:
+        """Wait for the units that have begun; a second stop ends their processes."""
+        try:
+            begun = [future for future in futures if not future.cancel()]
+            for future in as_completed(begun):
+                with suppress(ScratchError):
+                    self._ledger.commit(futures[future].key, future.result())
+        except KeyboardInterrupt:
+            end_workers(executor)
+            raise
 
     def _write_scratch(self, number: int) -> None:
         scan = self._plan.prepared(number)
@@ -297,6 +318,13 @@ class _Work:
     def _note(self, unit: Unit, result: dict[str, Any]) -> dict[str, Any]:
         self._ledger.commit(unit.key, result)
         self._count += 1
+        certificate = result["certificate"]
+        _log.info(
+            "unit %d: %s on %s, draw %d: %.2f s, %d iterations, weight %s%s",
+            *(self._count, unit.arm.label, unit.scan_id, unit.draw, result["timing"]["unit_s"]),
+            *(certificate["iterations"], certificate["weight"]),
+            "" if certificate["reached"] else ", tolerance not reached",
+        )
         if self._progress is not None:
             label = f"{unit.arm.label}, {unit.scan_id}, draw {unit.draw}"
             self._progress(self._count, self._total, label)

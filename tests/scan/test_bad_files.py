@@ -11,6 +11,7 @@ from pathlib import Path
 import nibabel as nib
 import numpy as np
 import pytest
+from limits import MIB, memory_for
 from nifti_files import blob, nifti_bytes, save, write
 
 from mrics.errors import ScanError
@@ -225,3 +226,10 @@ def test_phase_outside_its_range(tmp_path: Path, low: float, high: float, whole:
 def test_channel_axis(tmp_path: Path, shape: tuple[int, ...], axis: int, message: str) -> None:
     with pytest.raises(ScanError, match=message):
         read_scan(save(tmp_path / "c.nii", np.ones(shape, np.float32)), channel_axis=axis)
+
+
+def test_a_limit_of_the_users_memory_is_kept(tmp_path: Path) -> None:
+    path = write(tmp_path / "large.nii.gz", nifti_bytes(np.ones((200, 200, 200), np.int16), 4))
+    assert available_memory() > 32 * MIB
+    with memory_for(32 * MIB), pytest.raises(ScanError, match="GiB in memory"):
+        read_scan(path)

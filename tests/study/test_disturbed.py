@@ -3,10 +3,12 @@
 import multiprocessing
 import os
 import subprocess
+from collections.abc import Iterator
 from pathlib import Path
 
 import nibabel
 import pytest
+from small_disk import mounted
 from small_study import AFFINE, PROTOCOL, small_object, write_small_study
 
 from mrics.errors import MricsError
@@ -89,20 +91,11 @@ def test_scratch_damaged_during_a_run_is_made_again(tmp_path: Path, damage: str)
 
 
 @pytest.fixture
-def small_disk(tmp_path: Path) -> Path:
-    """A file system of 300 kB."""
-    folder = tmp_path / "disk"
-    folder.mkdir()
-    made = subprocess.run(
-        ["mount", "-t", "tmpfs", "-o", "size=300k", "tmpfs", str(folder)], capture_output=True
-    )
-    if made.returncode:
-        pytest.skip("needs the right to mount a small tmpfs")
-    yield folder
-    subprocess.run(["umount", str(folder)], check=True)
+def small_disk(tmp_path: Path) -> Iterator[Path]:
+    with mounted(tmp_path / "disk") as folder:
+        yield folder
 
 
-@pytest.mark.parametrize("workers", [1, 2])
 def test_a_full_disk_stops_cleanly_and_the_run_goes_on_when_there_is_room(
     small_disk: Path, tmp_path: Path, workers: int
 ) -> None:

@@ -17,8 +17,9 @@ from __future__ import annotations
 
 from typing import Any
 
-import numba
 import numpy as np
+
+from mrics.numerics.kernel_cache import numba
 
 compiled = numba.njit(
     nogil=True,
