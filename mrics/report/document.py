@@ -28,6 +28,7 @@ _WIDTH, _HEIGHT = 8.27, 11.69
 _LEFT, _RIGHT, _TOP, _BOTTOM = 0.085, 0.915, 0.945, 0.06
 _LINE = 0.0148
 _COLUMNS = 104
+_SHORT = {"feature_retention": "retained"}
 
 
 @dataclass(frozen=True)
@@ -131,7 +132,7 @@ def _table(study: StudyFolder) -> Iterator[Line]:
     labels = [str(a["label"]) + (" *" if a.get("today") else "") for a in study.arms]
     width = min(34, max((len(x) for x in labels), default=10))
     head = f"{'arm':<{width}} {'R':>5} {'time':>6} {'saved':>6}"
-    head += "".join(f" {m.label[:8]:>8}" for m in metrics) + "  verdict"
+    head += "".join(f" {_SHORT.get(m.key, m.label[:8].strip()):>8}" for m in metrics) + "  verdict"
     mono: Any = {"size": 8.0, "family": "monospace"}
     yield Line(head, weight="bold", **mono)
     for arm, label in zip(study.arms, labels, strict=True):

@@ -6,7 +6,7 @@ import csv
 import io
 import os
 import platform
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import asdict
 from pathlib import Path
 from typing import Any
@@ -229,3 +229,32 @@ def slice_table(results: Sequence[dict[str, Any]]) -> str:
             row += [plain(part.get(name)) for name in scored]
             writer.writerow(["" if value is None else value for value in row])
     return stream.getvalue()
+
+
+def measure_table(results: Sequence[dict[str, Any]]) -> str:
+    """Tables of further measures as one line per value, named by its path ("features.0.retained").
+
+    Empty where no unit has any.
+    """
+    rows = [
+        [result["arm"], result["scan"], result["draw"], path, plain(value)]
+        for result in results
+        for path, value in _values(result.get("measures") or {})
+    ]
+    if not rows:
+        return ""
+    stream = io.StringIO()
+    writer = csv.writer(stream, lineterminator="\n")
+    writer.writerow(["arm", "scan", "draw", "measure", "value"])
+    writer.writerows(["" if value is None else value for value in row] for row in rows)
+    return stream.getvalue()
+
+
+def _values(table: Any, path: str = "") -> Iterator[tuple[str, Any]]:
+    """Every single value inside tables and lists, with the way to it."""
+    if isinstance(table, dict | list):
+        pairs = table.items() if isinstance(table, dict) else enumerate(table)
+        for key, value in pairs:
+            yield from _values(value, f"{path}.{key}" if path else str(key))
+    else:
+        yield path, table

@@ -26,7 +26,13 @@ from mrics.study.files import plain, write_json, write_text
 from mrics.study.folder import claim_folder
 from mrics.study.ledger import Ledger
 from mrics.study.plan import PlanRow, StudyPlan, plan_study
-from mrics.study.results import scan_record, slice_table, study_results, write_references
+from mrics.study.results import (
+    measure_table,
+    scan_record,
+    slice_table,
+    study_results,
+    write_references,
+)
 from mrics.study.scratch import SCRATCH, ScratchError, write_scratch
 from mrics.study.search import search_family
 from mrics.study.trained_weights import trained_rows
@@ -152,7 +158,7 @@ def _write_partial(
 def _write(
     folder: Path, content: dict[str, Any], results: list[dict[str, Any]], started: float
 ) -> None:
-    """Write results.json and results.csv; times stand apart from what is compared."""
+    """Write results.json, results.csv and measures.csv; times stand apart from what is compared."""
     content["timing"] = {
         "study_s": time.perf_counter() - started,
         "units": [{"key": r["key"], **r["timing"]} for r in results],
@@ -160,6 +166,11 @@ def _write(
     try:
         write_json(folder / "results.json", content)
         write_text(folder / "results.csv", slice_table(results))
+        measured = measure_table(results)
+        if measured:
+            write_text(folder / "measures.csv", measured)
+        else:
+            (folder / "measures.csv").unlink(missing_ok=True)
     except OSError as error:
         raise StudyError(
             f"The results cannot be written ({error.strerror or error}).",

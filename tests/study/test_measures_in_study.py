@@ -1,5 +1,6 @@
 """A protocol's [quality] table: measures beside the scores, in results, verdict and maps."""
 
+import csv
 from pathlib import Path
 
 import nibabel
@@ -44,6 +45,21 @@ def test_measures_reach_units_arms_and_maps(tmp_path: Path) -> None:
     ]
     assert resolution["lattice_leakage"] in leaks
     assert f"up to {100 * max(leaks):.2g} %" in told
+    with (tmp_path / "out" / "measures.csv").open(newline="") as stream:
+        lines = list(csv.DictReader(stream))
+    kept = [
+        float(line["value"])
+        for line in lines
+        if (line["arm"], line["measure"]) == (arm["id"], "features.1.retained")
+    ]
+    assert kept == [pytest.approx(first["measures"]["features"][1]["retained"], rel=1e-6)]
+    spectral = [
+        line
+        for line in lines
+        if (line["arm"], line["draw"]) == (arm["id"], "1")
+        and line["measure"].startswith("spectral.relative.")
+    ]
+    assert len(spectral) == len(second["measures"]["spectral"]["relative"])
     # Measures that recover again are taken on the first draw alone.
     assert "features" not in second["measures"]
     kinds = {m["kind"] for m in results["maps"] if m["arm"] == arm["id"]}
