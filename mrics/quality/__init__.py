@@ -11,6 +11,7 @@ from mrics.quality.metrics import (
     Metric,
     acceptance_key,
     acceptance_keys,
+    taken_alone,
 )
 
 _LAZY = {
@@ -65,6 +66,7 @@ __all__ = [
     "score",
     "score_planes",
     "summarise",
+    "taken_alone",
     "verdict",
 ]
 

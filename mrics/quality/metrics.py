@@ -10,9 +10,15 @@ from __future__ import annotations
 
 import difflib
 from dataclasses import dataclass
+from importlib import import_module
 from types import MappingProxyType
+from typing import TYPE_CHECKING, Any
 
 from mrics.errors import QualityError
+
+if TYPE_CHECKING:
+    import numpy as np
+    from numpy.typing import NDArray
 
 
 @dataclass(frozen=True)
@@ -31,6 +37,10 @@ class Metric:
         Name as a report prints it.
     plain : str
         One sentence on what it tells, for a reader who is no specialist.
+    function : str
+        "module:function" of this room where the measure is taken by itself: called with image and
+        reference (plane, u, v), mask and data range, it gives a value, or None, for every plane.
+        Empty for measures that come out of one computation with others.
     """
 
     direction: str
@@ -38,6 +48,7 @@ class Metric:
     unit: str
     label: str
     plain: str
+    function: str = ""
 
 
 @dataclass(frozen=True)
@@ -256,7 +267,33 @@ METRICS: MappingProxyType[str, Metric] = MappingProxyType(
 
 
 #: taken in every study; the others where ``[quality]`` asks for them
-SCORES = frozenset({"nrmse", "psnr", "ssim", "hfen", "nrmse_complex"})
+SCORES = frozenset({"nrmse", "psnr", "ssim", "hfen", "nrmse_complex"}) | {
+    name for name, metric in METRICS.items() if metric.function
+}
+
+
+def taken_alone(
+    image: NDArray[Any],
+    reference: NDArray[Any],
+    mask: NDArray[np.bool_] | None = None,
+    data_range: float | None = None,
+) -> list[dict[str, float | None]]:
+    """Values of every plane of those measures that have a function of their own.
+
+    Parameters
+    ----------
+    image, reference, mask, data_range
+        As for :func:`mrics.quality.score_planes`.
+    """
+    rows: list[dict[str, float | None]] = [{} for _ in reference]
+    for name, metric in METRICS.items():
+        if metric.function:
+            module, _, function = metric.function.partition(":")
+            measure = getattr(import_module(f"mrics.quality.{module}"), function)
+            values = measure(image, reference, mask, data_range)
+            for row, value in zip(rows, values, strict=True):
+                row[name] = None if value is None else float(value)
+    return rows
 
 
 def acceptance_keys() -> dict[str, AcceptanceKey]:

@@ -4,10 +4,12 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from importlib import import_module
+from typing import TYPE_CHECKING
 
-from mrics.encoding.acquisition import Acquisition
-from mrics.recovery.contract import Recovered
-from mrics.recovery.settings import Settings
+if TYPE_CHECKING:
+    from mrics.encoding.acquisition import Acquisition
+    from mrics.recovery.contract import Recovered
+    from mrics.recovery.settings import Settings
 
 #: name -> module of mrics.recovery holding ``solve(acquisition, settings, sigma) -> Recovered``
 METHODS: dict[str, str] = {

@@ -13,9 +13,11 @@ import difflib
 import math
 from collections.abc import Mapping
 from dataclasses import dataclass, field, fields
+from importlib import import_module
 from typing import Any
 
 from mrics.errors import RecoveryError
+from mrics.recovery.registry import METHODS
 
 WAVELETS = (
     "haar",
@@ -376,6 +378,16 @@ SETTINGS: dict[str, type[Settings]] = {
 }
 
 
+def settings_in_module(method: str) -> type[Settings]:
+    """The ``SETTINGS`` of a method's own module; :class:`Settings`, which has none, without them.
+
+    Settings listed above are known without loading the module, which keeps plans fast.
+    """
+    module = import_module(f"mrics.recovery.{METHODS[method]}")
+    kind: type[Settings] = getattr(module, "SETTINGS", Settings)
+    return kind
+
+
 def check_settings(method: str, settings: Mapping[str, Any]) -> Settings:
     """The settings of a method as its dataclass.
 
@@ -391,13 +403,13 @@ def check_settings(method: str, settings: Mapping[str, Any]) -> Settings:
     RecoveryError
         For an unknown method or key (the nearest one is named) or a value out of range.
     """
-    if method not in SETTINGS:
+    if method not in METHODS:
         raise RecoveryError(
-            f"There is no recovery called {method!r}{_nearest(method, SETTINGS)}.",
+            f"There is no recovery called {method!r}{_nearest(method, METHODS)}.",
             "method",
-            f"Choose one of: {', '.join(sorted(SETTINGS))}.",
+            f"Choose one of: {', '.join(sorted(METHODS))}.",
         )
-    kind = SETTINGS[method]
+    kind = SETTINGS.get(method) or settings_in_module(method)
     known = [entry.name for entry in fields(kind)]
     for key in settings:
         if key not in known:

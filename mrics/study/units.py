@@ -16,7 +16,7 @@ from mrics.encoding import Acquisition, compress, echo_weights, undersample
 from mrics.encoding.sensitivities import KERNEL
 from mrics.errors import StudyError
 from mrics.protocol import Arm, Protocol, ScanFiles, play_pattern
-from mrics.quality import score_planes
+from mrics.quality import score_planes, taken_alone
 from mrics.quality.measures import Measures
 from mrics.quality.measuring import Measured, measure
 from mrics.recovery import Recovered, frozen, recover
@@ -199,7 +199,11 @@ def _computed(unit: Unit, scan: Prepared) -> dict[str, Any]:
     if scan.sensitivities is not None:
         # The phase of estimated sensitivities is free: magnitudes alone compare.
         image = np.abs(image)
-    slices = score_planes(image, scan.stack, scan.body, scan.data_range)
+    compared = (image, scan.stack, scan.body, scan.data_range)
+    slices = [
+        {**one, **more}
+        for one, more in zip(score_planes(*compared), taken_alone(*compared), strict=True)
+    ]
     measured = _measure(unit, scan, acquisition, recovered)
     if measured is not None:
         slices = [{**one, **more} for one, more in zip(slices, measured.by_plane, strict=True)]
