@@ -18,8 +18,9 @@ from mrics.recovery.dictionary import (
     load_dictionary,
     recover_ridge,
 )
+from mrics.recovery.dictionary.coding import Prepared
 from mrics.recovery.dictionary.learning import _replace, start_atoms
-from mrics.recovery.dictionary.patches import choose, lay_out
+from mrics.recovery.dictionary.patches import choose, code_and_average, lay_out
 from mrics.recovery.dictionary.store import Dictionary, save_dictionary
 
 
@@ -138,6 +139,51 @@ def test_a_real_recovery_of_an_open_slice_beats_wavelet_and_variation():
         linear = judged(data, planes, other, **settings)
         assert learned["psnr"] > linear["psnr"] + 0.5
         assert learned["hfen"] < linear["hfen"]
+
+
+@pytest.mark.parametrize("border", ["wrap", "reflect"])
+@pytest.mark.parametrize("kind", [np.float64, np.complex128])
+def test_averaged_patches_are_those_of_the_codes(kind, border):
+    rng = np.random.default_rng(10)
+    stack = rng.standard_normal((2, 9, 11)) + 1j * rng.standard_normal((2, 9, 11))
+    atoms = unit_rows((24, 12), 11).astype(kind)
+    if kind is np.complex128:
+        atoms = (atoms + 1j * unit_rows((24, 12), 12)) / 2**0.5
+    layout = lay_out((2, 9, 11), (3, 4), border=border)
+    found = code_and_average(stack, Prepared(atoms), layout, 4, 2.0)
+    ends = ((0, 0), (0, 2), (0, 3)) if border == "wrap" else ((0, 0), (2, 2), (3, 3))
+    wide = np.pad(stack, ends, mode="wrap" if border == "wrap" else "symmetric")
+    total = np.zeros(wide.shape, complex)
+    weight = np.zeros(wide.shape, complex)
+    used = 0
+    for plane in range(2):
+        for u in range(wide.shape[1] - 2):
+            for v in range(wide.shape[2] - 3):
+                at = (plane, slice(u, u + 3), slice(v, v + 4))
+                patch = wide[at].reshape(1, -1)
+                mean = patch.mean()
+                parts = [patch - mean]
+                if kind is np.float64:
+                    parts = [(patch - mean).real, (patch - mean).imag]
+                for part, turn in zip(parts, (1, 1j), strict=False):
+                    codes = code(part, atoms, "omp", sparsity=4, error=2.0)
+                    share = 1 / (1 + codes.counts[0])
+                    own = (
+                        mean if kind is np.complex128 else (mean.imag if turn == 1j else mean.real)
+                    )
+                    total[at] += turn * share * (codes.synthesise(atoms) + own).reshape(3, 4)
+                    weight[at] += (1 + 1j if kind is np.complex128 else turn) * share
+                    used += codes.counts[0]
+    if border == "wrap":
+        for array in (total, weight):
+            array[:, :2] += array[:, 9:]
+            array[:, :, :3] += array[:, :, 11:]
+        inside = (slice(None), slice(9), slice(11))
+    else:
+        inside = (slice(None), slice(2, 11), slice(3, 14))
+    expected = total.real / weight.real + 1j * total.imag / weight.imag
+    np.testing.assert_allclose(found.image, expected[inside], atol=1e-9)
+    assert found.use.sum() == used
 
 
 def test_too_few_or_constant_patches_are_refused():

@@ -30,6 +30,8 @@ compiled = numba.njit(
 #: squared length of an atom beyond the atoms chosen, below which it counts as dependent on them
 _DEPENDENT = 1e-5
 _BLOCK = 32
+#: patches whose correlations are taken together
+_TOGETHER = 8
 
 
 @compiled
@@ -58,14 +60,17 @@ def _largest(power: Any) -> Any:
 def _correlate(patch: Any, columns: Any, out: Any) -> None:
     """Make ``out`` the sum over samples i of patch[i] times row i of ``columns`` (sample, atom)."""
     length = len(patch)
-    whole = length - length % 4
+    whole = length - length % 8
     for n in range(len(out)):
         out[n] = 0
-    for i in range(0, whole, 4):
+    for i in range(0, whole, 8):
         a, b, c, d = patch[i], patch[i + 1], patch[i + 2], patch[i + 3]
+        e, f, g, h = patch[i + 4], patch[i + 5], patch[i + 6], patch[i + 7]
         one, two, three, four = columns[i], columns[i + 1], columns[i + 2], columns[i + 3]
+        five, six, seven, eight = columns[i + 4], columns[i + 5], columns[i + 6], columns[i + 7]
         for n in range(len(out)):
-            out[n] += a * one[n] + b * two[n] + c * three[n] + d * four[n]
+            near = a * one[n] + b * two[n] + c * three[n] + d * four[n]
+            out[n] += near + (e * five[n] + f * six[n] + g * seven[n] + h * eight[n])
     for i in range(whole, length):
         a = patch[i]
         row = columns[i]
@@ -92,16 +97,40 @@ def pursue_one(
     ``chosen`` and ``values`` (sides, limit) receive the atoms and coefficients; the others are
     workspace. It stops at ``limit`` atoms or at a squared residual of ``target``.
     """
-    sides, atoms = patch.shape[0], len(power)
-    energy = 0.0
-    for r in range(sides):
-        for i in range(patch.shape[1]):
-            energy += patch[r, i] * patch[r, i]
-    floor = 1e-12 * energy
+    energy = _energy(patch)
     if energy <= target or energy <= 0 or limit == 0:
         return 0, energy
-    for r in range(sides):
+    for r in range(patch.shape[0]):
         _correlate(patch[r], columns, alpha[r])
+    own = values[: patch.shape[0]]
+    return _follow(energy, gram, limit, target, alpha, power, q, z, chosen, own)
+
+
+@compiled
+def _energy(patch: Any) -> Any:
+    energy = 0.0
+    for r in range(patch.shape[0]):
+        for i in range(patch.shape[1]):
+            energy += patch[r, i] * patch[r, i]
+    return energy
+
+
+@compiled
+def _follow(
+    energy: Any,
+    gram: Any,
+    limit: Any,
+    target: Any,
+    alpha: Any,
+    power: Any,
+    q: Any,
+    z: Any,
+    chosen: Any,
+    values: Any,
+) -> Any:
+    """Choose atoms one by one, given a patch's energy and its correlations ``alpha``."""
+    sides, atoms = len(values), len(power)
+    floor = 1e-12 * energy
     count = 0
     while count < limit and energy > target and energy > floor:
         row = alpha[0]
@@ -130,11 +159,17 @@ def pursue_one(
             source = gram[j]
             for n in range(atoms):
                 fresh[n] = source[n] * scale
-            for t in range(count):
-                factor = q[t, j] * scale
+            pairs = count - count % 2
+            for t in range(0, pairs, 2):
+                a, b = q[t, j] * scale, q[t + 1, j] * scale
+                old, older = q[t], q[t + 1]
+                for n in range(atoms):
+                    fresh[n] -= a * old[n] + b * older[n]
+            for t in range(pairs, count):
+                a = q[t, j] * scale
                 old = q[t]
                 for n in range(atoms):
-                    fresh[n] -= factor * old[n]
+                    fresh[n] -= a * old[n]
             for r in range(sides):
                 factor = z[r, count]
                 row = alpha[r]
@@ -246,14 +281,44 @@ def pursue_rows(
     """Code (patch, side, n) over real atoms: index (patch, limit), values (patch, side, limit)."""
     sides, atoms = patches.shape[1], columns.shape[1]
     kind = patches.dtype
-    alpha = np.empty((sides, atoms), kind)
+    alpha = np.empty((_TOGETHER, sides, atoms), kind)
     power = np.empty(atoms, kind)
     q = np.empty((limit, atoms), kind)
     z = np.empty((sides + 1, limit), kind)
-    for p in range(patches.shape[0]):
-        counts[p], residual[p] = pursue_one(
-            patches[p], columns, gram, limit, targets[p], alpha, power, q, z, index[p], values[p]
-        )
+    for start in range(0, patches.shape[0], _TOGETHER):
+        stop = min(start + _TOGETHER, patches.shape[0])
+        _correlate_some(patches[start:stop], columns, alpha)
+        for p in range(start, stop):
+            energy = _energy(patches[p])
+            counts[p], residual[p] = 0, energy
+            if energy > targets[p] and energy > 0:
+                counts[p], residual[p] = _follow(
+                    energy, gram, limit, targets[p], alpha[p - start], power, q, z, index[p],
+                    values[p],
+                )  # fmt: skip
+
+
+@compiled
+def _correlate_some(patches: Any, columns: Any, out: Any) -> None:
+    """Correlations of a few patches: a row of ``columns`` serves all of them while in cache."""
+    length = patches.shape[2]
+    whole = length - length % 4
+    out[:] = 0
+    for i in range(0, whole, 4):
+        one, two, three, four = columns[i], columns[i + 1], columns[i + 2], columns[i + 3]
+        for p in range(patches.shape[0]):
+            for r in range(patches.shape[1]):
+                patch, row = patches[p, r], out[p, r]
+                a, b, c, d = patch[i], patch[i + 1], patch[i + 2], patch[i + 3]
+                for n in range(len(row)):
+                    row[n] += a * one[n] + b * two[n] + c * three[n] + d * four[n]
+    for i in range(whole, length):
+        one = columns[i]
+        for p in range(patches.shape[0]):
+            for r in range(patches.shape[1]):
+                row, a = out[p, r], patches[p, r, i]
+                for n in range(len(row)):
+                    row[n] += a * one[n]
 
 
 @compiled

@@ -16,6 +16,7 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
+from threadpoolctl import threadpool_limits
 
 from mrics.errors import RecoveryError
 from mrics.numerics import stream
@@ -165,21 +166,23 @@ def learn_online(
     limit = min(sparsity, *atoms.shape)
     generator = stream(seed, "passes")
     use = np.zeros(number, np.int64)
-    for turn in range(passes):
-        order = generator.permutation(len(patches))
-        use[:] = 0
-        worst = np.zeros((0, atoms.shape[1]), patches.dtype)
-        first *= kind.type(KEEP)
-        second *= kind.type(KEEP)
-        for begin in range(0, len(patches), BATCH):
-            block = patches[order[begin : begin + BATCH]]
-            codes = pursue(block, Prepared(atoms), limit, error)
-            _add(codes, block, kind, first, second)
-            _update(atoms, first, second, work)
-            use += np.bincount(_used(codes), minlength=number)
-            worst = block[np.argsort(-codes.residual, kind="stable")[:number]]
-        if turn + 1 < passes:
-            _replace(atoms, use, worst, first, second)
+    # Threads of linear algebra only get in the way of matrices this small.
+    with threadpool_limits(1, user_api="blas"):
+        for turn in range(passes):
+            order = generator.permutation(len(patches))
+            use[:] = 0
+            worst = np.zeros((0, atoms.shape[1]), patches.dtype)
+            first *= kind.type(KEEP)
+            second *= kind.type(KEEP)
+            for begin in range(0, len(patches), BATCH):
+                block = patches[order[begin : begin + BATCH]]
+                codes = pursue(block, Prepared(atoms), limit, error)
+                _add(codes, block, kind, first, second)
+                _update(atoms, first, second, work)
+                use += np.bincount(_used(codes), minlength=number)
+                worst = block[np.argsort(-codes.residual, kind="stable")[:number]]
+            if turn + 1 < passes:
+                _replace(atoms, use, worst, first, second)
     return atoms[np.argsort(-use, kind="stable")]
 
 
@@ -249,15 +252,16 @@ def learn_ksvd(
     limit = min(sparsity, *atoms.shape)
     size = max(float(np.linalg.norm(patches)), 1e-30)
     history: list[float] = []
-    for turn in range(rounds):
-        codes = pursue(patches, Prepared(atoms), limit, error)
-        dense = codes.dense(number)
-        left = sweep(patches, atoms, dense)
-        history.append(float(np.linalg.norm(left)) / size)
-        if turn + 1 < rounds:
-            energy = np.sum(np.abs(left) ** 2, axis=1)
-            worst = patches[np.argsort(-energy, kind="stable")[:number]]
-            _replace(atoms, np.count_nonzero(dense, axis=0), worst)
+    with threadpool_limits(1, user_api="blas"):
+        for turn in range(rounds):
+            codes = pursue(patches, Prepared(atoms), limit, error)
+            dense = codes.dense(number)
+            left = sweep(patches, atoms, dense)
+            history.append(float(np.linalg.norm(left)) / size)
+            if turn + 1 < rounds:
+                energy = np.sum(np.abs(left) ** 2, axis=1)
+                worst = patches[np.argsort(-energy, kind="stable")[:number]]
+                _replace(atoms, np.count_nonzero(dense, axis=0), worst)
     return atoms, history
 
 
