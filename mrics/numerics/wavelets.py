@@ -24,7 +24,7 @@ from numpy.typing import NDArray
 from mrics.numerics.kernel_cache import numba
 
 Array = NDArray[Any]
-compiled = numba.njit(
+compiled: Any = numba.njit(
     nogil=True, cache=True, error_model="numpy", fastmath={"contract", "reassoc", "nsz", "arcp"}
 )
 
