@@ -40,6 +40,11 @@ def what_would_decide(
     within = _within(scans)
     if gap == 0:
         return "The mean lies on the limit: no number of scans or draws decides it."
+    if count < 3 and draws == 1:
+        return (
+            "One draw tells no spread: several draws of a random pattern, or 3 scans or more, "
+            "would."
+        )
     if count < 3:
         needed = _enough(within, gap, level, 2)
         more = f"About {needed} draws" if needed else "More draws than is practical"

@@ -49,6 +49,11 @@ def test_one_scan_claims_nothing_beyond_it() -> None:
     assert "3 scans or more" in advice
 
 
+def test_one_draw_of_one_scan_tells_no_spread() -> None:
+    advice = what_would_decide({"only": {0: 0.9}}, 0.95)
+    assert advice.startswith("One draw tells no spread")
+
+
 def test_a_mean_on_the_limit_cannot_be_decided() -> None:
     assert "no number" in what_would_decide({"s": {0: 1.0, 1: 1.0}}, 1.0)
 
