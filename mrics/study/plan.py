@@ -23,13 +23,12 @@ from mrics.protocol.arms import slug
 from mrics.sampling import Pattern
 from mrics.sampling.ordered import Ordered
 from mrics.scan import Axes, read_header
-from mrics.scan.remedies import INVENTED
 from mrics.scan.values import file_hash
 from mrics.study.code_version import code_version
 from mrics.study.prepare import PlaneChoice, Prepared, prepare
-from mrics.study.suitable import check_suitable
-from mrics.study.training import check_dictionaries, dictionary_hash, dictionary_notes
-from mrics.study.units import LEAST_LINES, Noise, Unit, content_key, draw_of, pattern_grid
+from mrics.study.suitable import check_channels, check_edges, check_suitable
+from mrics.study.training import check_dictionaries, dictionary_hash
+from mrics.study.units import Noise, Unit, content_key, draw_of, pattern_grid
 
 
 @dataclass(frozen=True)
@@ -235,78 +234,6 @@ class StudyPlan:
                     )
         return units
 
-    def notes(self, records: Sequence[dict[str, Any]]) -> list[str]:
-        """What a reader must know before the numbers: simulation, noise, planes."""
-        notes = [
-            "Lines were left out after the scan: measured samples share the reference's noise, "
-            "which is optimistic."
-        ]
-        magnitude = [r["id"] for r in records if r["complex_source"] == "magnitude"]
-        if magnitude:
-            notes.append(
-                f"Magnitude only ({', '.join(magnitude)}): the phase is unknown, k-space is "
-                "Hermitian, and recovery is easier than on a complex scan."
-            )
-        added = [r for r in records if r["sigma_added"] > 0]
-        if added:
-            notes.append(
-                "Noise was added: "
-                + ", ".join(f"{r['id']} sigma {r['sigma_added']:.4g}" for r in added)
-                + "."
-            )
-        few = [r for r in records if len(r["planes"]) < r["shape"]["ijk".index(r["plane_axis"])]]
-        if few and self.choice.spec != "all":
-            notes.append(
-                "Only part of the slices was studied: "
-                + ", ".join(f"{r['id']} {len(r['planes'])}" for r in few)
-                + "."
-            )
-        elif few:
-            skipped = [
-                f"{r['id']} {r['shape']['ijk'.index(r['plane_axis'])] - len(r['planes'])}"
-                for r in few
-            ]
-            notes.append(f"Slices without body were skipped: {', '.join(skipped)}.")
-        used = ((row.arm.label, row.arm.recovery_settings) for row in self.rows)
-        notes += dictionary_notes(used, records)
-        notes.append(self._channel_note(records))
-        best = [r.arm.label for r in self.rows if r.arm.recovery_settings.get("weight") == "best"]
-        if best:
-            notes.append(
-                "Weights chosen with the answer in hand, so that these arms are optimistic: "
-                f"{'; '.join(best)}."
-            )
-        return notes
-
-    def _channel_note(self, records: Sequence[dict[str, Any]]) -> str:
-        received = [(r["id"], r["receive"]) for r in records if r["receive"]]
-        if not received:
-            return (
-                "One receive channel: the image is taken as the combined image of the array, so "
-                "parallel imaging has nothing to work with."
-            )
-        told: dict[str, list[str]] = {}
-        for scan, one in received:
-            told.setdefault(f"{one['note']}; {one['noise']}", []).append(scan)
-        note = " ".join(f"Receive channels of {', '.join(ids)}: {t}." for t, ids in told.items())
-        given = "the true ones" if self.protocol.coils else "those of the full scan"
-        note += (
-            " Every arm estimates sensitivities from its own calibration region; an arm with fewer "
-            f"than {LEAST_LINES} lines of it is given {given}. Scores compare magnitudes."
-        )
-        coils = self.protocol.coils
-        if coils is not None:
-            note += (
-                " The noise of the scan itself reaches all loops alike, so noise gain shows only "
-                "in noise that is added."
-            )
-            if coils.phase > 0 and any(r["complex_source"] == INVENTED for r in records):
-                note += (
-                    f" Phase simulated: a smooth random phase of {coils.phase:g} rad was put on "
-                    "magnitude scans."
-                )
-        return note
-
     def findings(self) -> list[str]:
         """What the timing rests on, each said once, and how it compares with the console."""
         said = [text for row in self.rows for text in row.timing.findings]
@@ -359,7 +286,7 @@ def plan_study(protocol: Protocol, *, quick: bool = False) -> StudyPlan:
         impossible.
     """
     study = protocol.study
-    _check_channels(protocol)
+    check_channels(protocol)
     axes = protocol.axes()
     scans = protocol.scan_files()
     choice = PlaneChoice(study.slices)
@@ -376,7 +303,7 @@ def plan_study(protocol: Protocol, *, quick: bool = False) -> StudyPlan:
     shapes = [read_header(scan.path).shape for scan in scans]
     for scan, scan_id, shape in zip(scans, scan_ids, shapes, strict=True):
         grids.setdefault(pattern_grid(axes, shape), (scan.path.name, scan_id))
-    _check_edges(protocol, scan_ids, shapes)
+    check_edges(protocol, scan_ids, shapes)
     slices = None if axes.partition else shapes[0][axes.order[0]]
     noise = Noise(study.sigma_added, study.snr, study.noise_percent)
     rows: list[PlanRow] = []
@@ -411,54 +338,6 @@ def plan_study(protocol: Protocol, *, quick: bool = False) -> StudyPlan:
         channel_axis=protocol.grid.channel_axis,
         training=protocol.training_files(),
     )
-
-
-def _check_channels(protocol: Protocol) -> None:
-    """Channels are the scan's own or simulated, and there must be some to compress."""
-    own, coils = protocol.grid.channel_axis is not None, protocol.coils
-    if own and coils is not None:
-        raise StudyError(
-            f"[coils] simulates an array, but channel_axis = {protocol.grid.channel_axis} names "
-            "the scans' own channels.",
-            f"{protocol.path}: [coils], grid.channel_axis",
-            "Remove one of the two.",
-        )
-    virtual = protocol.study.virtual_channels
-    if virtual is None or own:
-        return
-    most = coils.number if coils is not None else 1
-    if virtual > most:
-        raise StudyError(
-            f"{virtual} virtual channels cannot be made of {most}.",
-            f"{protocol.path}: study.virtual_channels",
-            f"Give a number from 1 to {most}."
-            if coils is not None
-            else "Name the scans' channel_axis, add [coils], or remove virtual_channels.",
-        )
-
-
-def _check_edges(
-    protocol: Protocol, scan_ids: Sequence[str], shapes: Sequence[tuple[int, ...]]
-) -> None:
-    """Whether every edge of ``[quality]`` lies in a scan of the study."""
-    measures = protocol.measures()
-    if measures is None or isinstance(measures.edges, bool):
-        return
-    for number, edge in enumerate(measures.edges):
-        where = f"{protocol.path}: quality.edges[{number}]"
-        if edge.scan and edge.scan not in scan_ids:
-            raise StudyError(
-                f"There is no scan {edge.scan!r}.", where, f"Scans: {', '.join(scan_ids)}."
-            )
-        for scan_id, shape in zip(scan_ids, shapes, strict=True):
-            at = (edge.i, edge.j, edge.k)
-            inside = all(0 <= x <= n - 1 for x, n in zip(at, shape[:3], strict=True))
-            if edge.scan in ("", scan_id) and not inside:
-                raise StudyError(
-                    f"The edge at voxel {at} lies outside scan {scan_id} of shape {shape[:3]}.",
-                    where,
-                    "Give voxels of the file counted from 0, or name the scan it lies in.",
-                )
 
 
 def _calibrated(pattern: Pattern) -> int:

@@ -24,6 +24,7 @@ from mrics.study.channels import channel_picture
 from mrics.study.code_version import code_version
 from mrics.study.files import plain, without_folders
 from mrics.study.measure_notes import measure_notes
+from mrics.study.notes import study_notes
 from mrics.study.plan import PlanRow, StudyPlan
 from mrics.study.prepare import Prepared
 
@@ -141,7 +142,7 @@ def study_results(
         "verdict": overall_verdict(arms, len(records)),
         "maps": maps,
         "notes": [
-            *plan.notes(records),
+            *study_notes(plan, records),
             *measure_notes(results, {row.arm.id: row.arm.label for row in rows}),
         ],
         "provenance": provenance(protocol.study.seed),
