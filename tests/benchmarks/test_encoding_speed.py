@@ -8,6 +8,7 @@ import subprocess
 import sys
 import threading
 import time
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -17,7 +18,7 @@ import scipy.fft
 from mrics.encoding import estimate_sensitivities, undersample
 from mrics.encoding.coils import simulate_coils
 from mrics.recovery import METHODS, recover
-from mrics.sampling import Pattern, draw_pattern
+from mrics.sampling import draw_pattern
 
 PLANES, SIDE, CHANNELS, ITERATIONS = 16, 256, 8, 20
 
@@ -129,7 +130,7 @@ def _pattern(method):
         SHAPE[2:], pattern="equispaced", steps=[2, 1], acceleration=2, calibration=24
     )
     if method == "low-rank":  # two frames of 128 planes, alike
-        return Pattern(np.stack([made.mask, made.mask]), calibration=made.calibration)
+        return replace(made, mask=np.stack([made.mask, made.mask]), frames=2, order=None)
     return made
 
 
