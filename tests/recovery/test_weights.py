@@ -303,7 +303,7 @@ def array_data(acceleration, sigma):
     psi = np.eye(4) + 0.3 * (np.eye(4, k=1) + np.eye(4, k=-1))
     pattern = draw_pattern((40, 48), acceleration=acceleration, calibration=14, seed=2)
     held = undersample(
-        blobs((3, 40, 48)), pattern, sigma=sigma, seed=1, sensitivities=maps[None], covariance=psi
+        blobs((2, 40, 48)), pattern, sigma=sigma, seed=1, sensitivities=maps[None], covariance=psi
     )
     return replace(held, sensitivities=None)
 
