@@ -145,6 +145,9 @@ def test_what_cannot_be_told_is_said() -> None:
     assert any("homodyne" in line for line in told)
     masked = read_scan(open_volume("A"))
     assert any("no air" in line for line in inspect_fully(masked).cannot_be_told)
+    short = as_scan(np.abs(noisy(sample(GRE)[:44, :44], 2.0, 0)))
+    told = inspect_fully(short, axes_of(GRE)).cannot_be_told
+    assert any("shorter than 48 voxels" in line for line in told)
     thin = as_scan(np.abs(sample(GRE, 4)))
     assert any("along k" in line for line in inspect_fully(thin, axes_of(GRE)).cannot_be_told)
 

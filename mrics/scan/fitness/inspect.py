@@ -18,7 +18,7 @@ from mrics.scan.fitness.levels import clipped, coarse_levels
 from mrics.scan.fitness.negative import negative_values
 from mrics.scan.fitness.noise_level import low_snr, noise_disagrees, signal, template_like
 from mrics.scan.fitness.noise_map import noise_varies
-from mrics.scan.fitness.partial import partial_fourier
+from mrics.scan.fitness.partial import LEAST_SAMPLES, partial_fourier
 from mrics.scan.fitness.phase import magnitude_only
 from mrics.scan.fitness.smoothing import smoothed_noise
 from mrics.scan.fitness.spectrum import LEAST_BLOCKS
@@ -112,10 +112,16 @@ def _cannot_be_told(view: ScanView) -> tuple[str, ...]:
             "a magnitude image."
         )
         for axis in view.encoded:
-            if view.detail_spectrum(axis) is None:
+            spectrum = view.detail_spectrum(axis)
+            if spectrum is None:
                 told.append(
                     f"Zero-filling and partial Fourier along {LETTERS[axis]}: no lines of 32 "
                     "voxels lie inside the body."
+                )
+            elif len(spectrum.frequency) < LEAST_SAMPLES:
+                told.append(
+                    f"Partial Fourier along {LETTERS[axis]}: lines inside the body are shorter "
+                    f"than {2 * LEAST_SAMPLES} voxels."
                 )
     for axis in range(3):
         if view.correlation(axis) is None:
