@@ -15,6 +15,11 @@ from mrics.errors import ReportError
 from mrics.report.arms import ArmView, arm_views, windows
 from mrics.report.charts import draw_against_acceleration, draw_by_slice
 from mrics.report.colours import FAIL, INK, MUTED
+from mrics.report.dictionary_figures import (
+    DictionaryPicture,
+    dictionary_picture,
+    draw_dictionary,
+)
 from mrics.report.folder import StudyFolder, open_folder
 from mrics.report.image_figures import draw_panels
 from mrics.report.panels import Panel, panels
@@ -106,6 +111,9 @@ def _pages(study: StudyFolder) -> Iterator[Callable[[Any], None]]:
         yield partial(_panel_page, together=together)
     for view in arm_views(study, pictures, windows(study, pictures)):
         yield partial(_arm_page, study=study, view=view)
+        dictionary = dictionary_picture(study, view)
+        if dictionary is not None:
+            yield partial(_dictionary_page, row=view.row, picture=dictionary)
     yield from _text_pages(list(_appendix(study)))
 
 
@@ -245,6 +253,16 @@ def _arm_page(figure: Any, study: StudyFolder, view: ArmView) -> None:
         figure.text(_LEFT, 0.5, "No images of this arm are stored.", fontsize=9)
     if view.metrics:
         draw_by_slice(slices, study, row, view.metrics)
+
+
+def _dictionary_page(figure: Any, row: dict[str, Any], picture: DictionaryPicture) -> None:
+    heading = f"{textwrap.shorten(str(row['label']), 60, placeholder='…')}: dictionary"
+    figure.text(_LEFT, _TOP, heading, fontsize=12, weight="bold", va="top")
+    figure.text(
+        _LEFT, 0.922, "\n".join(textwrap.wrap(picture.text, 118)), fontsize=8, color=MUTED, va="top"
+    )
+    (band,) = _bands(figure, 0.8, 0.35)
+    draw_dictionary(band, picture)
 
 
 def _bands(figure: Any, *edges: float) -> list[Any]:

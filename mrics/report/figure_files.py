@@ -10,6 +10,7 @@ from mrics.caution import RESEARCH_ONLY
 from mrics.errors import ReportError
 from mrics.report.arms import arm_views, windows
 from mrics.report.charts import against_acceleration, by_slice
+from mrics.report.dictionary_figures import dictionary_figure, dictionary_picture
 from mrics.report.folder import StudyFolder, open_folder
 from mrics.report.image_figures import panel_figure
 from mrics.report.panels import panels
@@ -85,5 +86,8 @@ def _figures(study: StudyFolder) -> Iterator[tuple[str, Any]]:
             shown = view.pictures
             ends = shown.scan.view.ends
             yield f"{name}-images", panel_figure(shown.rows, view.window, view.aspect, ends)
+        dictionary = dictionary_picture(study, view)
+        if dictionary is not None:
+            yield f"{name}-dictionary", dictionary_figure(dictionary)
         if view.metrics:
             yield f"{name}-slices", by_slice(study, view.row, view.metrics)

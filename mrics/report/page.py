@@ -7,7 +7,7 @@ from typing import Any
 
 from mrics.report.arms import ArmPictures, ArmView, arm_views, windows
 from mrics.report.charts import against_acceleration, by_slice
-from mrics.report.dictionary_figures import dictionary_values
+from mrics.report.dictionary_figures import dictionary_figure, dictionary_picture
 from mrics.report.folder import StudyFolder, open_folder
 from mrics.report.image_figures import Window, panel_figure
 from mrics.report.panels import panels
@@ -107,7 +107,11 @@ def _arm(study: StudyFolder, view: ArmView) -> dict[str, Any]:
         figure = panel_figure(shown.rows, window, view.aspect, shown.scan.view.ends)
         out["images"] = svg_uri(figure)
         out["images_text"] = _images_text(view.row, shown, window)
-    out["dictionary"] = dictionary_values(study, view)
+    out["dictionary"] = None
+    dictionary = dictionary_picture(study, view)
+    if dictionary is not None:
+        out["dictionary"] = svg_uri(dictionary_figure(dictionary))
+        out["dictionary_text"] = dictionary.text
     out["worst"] = worst_slices(study, view.row["id"])
     out["exact"] = view.row["id"] in exact_arms(study)
     if view.metrics:

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 import mrics
 from mrics.errors import RecoveryError
 from mrics.recovery.dictionary.coding import Prepared
-from mrics.recovery.dictionary.domain import relative_residuals
+from mrics.recovery.dictionary.domain import relative_residuals, worth_judging
 from mrics.recovery.dictionary.learning import learn_ksvd, learn_online
 from mrics.recovery.dictionary.patches import Layout, choose, lay_out
 from mrics.recovery.dictionary.phase import smooth_phase
@@ -142,7 +142,10 @@ def train_dictionary(scans: Sequence[TrainingScan], settings: Training) -> Dicti
         # Too few to spare any: all of them teach, and all are judged.
         spare = extra if len(patches) >= count // 2 + extra else 0
         learned.append(patches[spare:][:count])
-        judged.append((patches[: spare or None], scan.sigma / (scan.largest or 1.0)))
+        some, noise = patches[: spare or None], scan.sigma / (scan.largest or 1.0)
+        energy = np.sum(np.abs(some) ** 2, axis=1)
+        parts = 2 if np.iscomplexobj(some) else 1
+        judged.append((some[worth_judging(energy, layout.length, parts, noise)], noise))
     if len(layers) > 1:
         raise RecoveryError(
             f"Scans stack {' and '.join(map(str, layers))} planes in a patch.",
