@@ -15,8 +15,8 @@ Array = NDArray[Any]
 _LEAST_COARSE = 5
 _MOST_LEVELS = 4
 #: shrinkage threshold of the splitting relative to the RMS of the first image's coefficients
-_THRESHOLD = 1.5
-_GRADIENT_THRESHOLD = 1.0
+_THRESHOLD = 1.0
+_GRADIENT_THRESHOLD = 0.7
 
 
 def levels_for(shape: tuple[int, int]) -> int:
