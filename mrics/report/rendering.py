@@ -50,10 +50,14 @@ def write_page(path: Path, text: str) -> Path:
     """Write a page whole or not at all."""
     try:
         handle, temporary = tempfile.mkstemp(dir=path.parent, prefix=".page", suffix=".tmp")
-        with os.fdopen(handle, "w", encoding="utf-8", newline="\n") as stream:
-            stream.write(text)
-        os.chmod(temporary, 0o644)
-        os.replace(temporary, path)
+        try:
+            with os.fdopen(handle, "w", encoding="utf-8", newline="\n") as stream:
+                stream.write(text)
+            os.chmod(temporary, 0o644)
+            os.replace(temporary, path)
+        except BaseException:
+            Path(temporary).unlink(missing_ok=True)
+            raise
     except OSError as problem:
         raise ReportError(
             f"{path.name} cannot be written ({problem.strerror}).",

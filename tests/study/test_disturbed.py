@@ -2,6 +2,7 @@
 
 import multiprocessing
 import os
+import shutil
 import subprocess
 from collections.abc import Iterator
 from pathlib import Path
@@ -12,7 +13,7 @@ from small_disk import mounted
 from small_study import AFFINE, PROTOCOL, small_object, write_small_study
 
 from mrics.errors import MricsError
-from mrics.report import run_study
+from mrics.report import run_study, write_report
 from mrics.study import run_study as run_alone
 from mrics.study.ledger import LEDGER, Ledger
 
@@ -96,6 +97,7 @@ def small_disk(tmp_path: Path) -> Iterator[Path]:
         yield folder
 
 
+@pytest.mark.parametrize("workers", [1, 2])
 def test_a_full_disk_stops_cleanly_and_the_run_goes_on_when_there_is_room(
     small_disk: Path, tmp_path: Path, workers: int
 ) -> None:
@@ -111,6 +113,19 @@ def test_a_full_disk_stops_cleanly_and_the_run_goes_on_when_there_is_room(
     resumed = run_alone(protocol, out, progress=lambda done, *_: kept.append(done))
     whole = run_alone(protocol, tmp_path / "whole")
     assert resumed["units"] == whole["units"]
+
+
+def test_a_page_that_finds_no_room_leaves_nothing_half_written(
+    small_disk: Path, tmp_path: Path
+) -> None:
+    subprocess.run(["mount", "-o", "remount,size=30m", str(small_disk)], check=True)
+    out = small_disk / "out"
+    run_alone(write_small_study(tmp_path, scans=1), out)
+    room = shutil.disk_usage(small_disk).free
+    (small_disk / "filler").write_bytes(b"\0" * (room - 50_000))
+    with pytest.raises(MricsError, match=r"report\.html cannot be written"):
+        write_report(out)
+    assert not [p for p in out.rglob(".*") if p.name != ".running"]
 
 
 def test_nothing_private_is_written(tmp_path: Path) -> None:
