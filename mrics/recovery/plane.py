@@ -151,6 +151,8 @@ class PlaneModel:
             return self._solve_channels(symbol, relax)
         if self.work is not self.image:
             self._outside(1 / float(symbol[0, 0]))
+        if symbol[0, 0] == 0 and self.mask[0, 0] == 0:
+            symbol[0, 0] = symbol[0, 1]  # nothing tells the mean: it stays 0
         self._enter()
         spectrum = fft_planes(self.work, overwrite=True, axes=self.axes)
         square, product = kernels.solve_samples(

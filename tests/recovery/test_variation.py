@@ -111,3 +111,15 @@ def test_phantom_from_22_radial_lines_is_exact():
     zero = np.linalg.norm(recover(acquisition, "zero-filled").image[0] - image)
     assert error < 1e-3
     assert zero / np.linalg.norm(image) > 0.4
+
+
+@pytest.mark.parametrize("order", [1, 2])
+def test_a_pattern_without_zero_frequency_gives_mean_zero(points, order):
+    """Neither data nor penalty see the mean."""
+    mask = points.mask.copy()
+    mask[:, 20, 24] = False
+    holed = replace(points, mask=mask, kspace=points.kspace * mask[:, None], calibration=(0, 0))
+    found = recover(holed, "variation", weight=0.5, order=order, iterations=1000, tolerance=2e-3)
+    assert found.certificate.reached
+    assert np.isfinite(found.image).all()
+    assert np.abs(found.image.mean((1, 2))).max() < 1e-3
