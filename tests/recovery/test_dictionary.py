@@ -138,15 +138,17 @@ def error(image, reference):
     return np.linalg.norm(image - reference) / np.linalg.norm(reference)
 
 
-@pytest.mark.parametrize("source", ["adaptive", "dct"])
-def test_recovery_beats_zero_filled_and_repeats_itself(planes, points, source):
-    settings = {"patch": 6, "atoms": 64, "iterations": 4, "source": source}
+@pytest.mark.parametrize(
+    ("source", "patch"), [("adaptive", 6), ("dct", 6), ("wavelets", 5), ("union", 8)]
+)
+def test_recovery_beats_zero_filled_and_repeats_itself(planes, points, source, patch):
+    settings = {"patch": patch, "atoms": 64, "iterations": 4, "source": source}
     one = recover(points, "dictionary", **settings)
     zero = recover(points, "zero-filled").image
     assert error(one.image, planes) < 0.8 * error(zero, planes)
     two = recover(points, "dictionary", **settings)
     np.testing.assert_array_equal(one.image, two.image)
-    assert one.extras["sheets"]["atoms"].shape[:3] == (6, 6, 1)
+    assert one.extras["sheets"]["atoms"].shape[:3] == (patch, patch, 1)
     assert one.extras["residual"].shape == planes.shape
     assert not one.certificate.certified
 
