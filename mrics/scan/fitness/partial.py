@@ -18,7 +18,7 @@ LEAST_SAMPLES = 24
 # Steepest decline on either side of the step, dB from zero to the largest frequency, and largest
 # exponent of a power law before it: what was smoothed falls more, and ends in the noise floor.
 STEEPEST_DB = -46.0
-LARGEST_EXPONENT = 2.8
+LARGEST_EXPONENT = 3.6
 # Without noise there is nothing that was measured to tell a step from a shape.
 MOST_SNR = 300.0
 _BIAS = (
