@@ -197,7 +197,7 @@ LINES = (
     "pattern = 'full'", "pattern = 'spokes'", "steps = [2, 2]", "law = 'energy'", "frames = 3",
     "averages = 2", "order = 'linear'", "name = 'x'", "table = 'x'", "training = []", "[coils]",
     "number = 3", "[[sampling]]", "[[recovery]]", "weight = 'auto'", "calibration = [3, 4]",
-    "draw = 'poisson-disc'", "draw = 'low-discrepancy'", "best_of = 100000", "pattern = 'spiral'",
+    "draw = 'poisson-disc'", "draw = 'low-discrepancy'", "best_of = 20", "pattern = 'spiral'",
     "pattern = 'shifted lattice'", "shift = 1", "partial_fourier = 0.75", "elliptical = true",
     "per_axis = true", "acceleration = 'search'", "search_steps = 64", "law = 'table'", "[quality]",
     "pattern = 'file'", "file = 'object_0.nii.gz'", "table = 'object_0.nii.gz'", "channel_axis = 3",
