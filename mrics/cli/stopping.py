@@ -21,6 +21,8 @@ def stoppable() -> Iterator[Report]:
     A second Ctrl-C raises where it strikes. An order to terminate (as batch systems send it)
     counts as a Ctrl-C.
     """
+    from mrics.study.executors import StopAfterUnits
+
     asked = False
 
     def on_signal(_number: int, _frame: Any) -> None:
@@ -38,7 +40,7 @@ def stoppable() -> Iterator[Report]:
             def report(done: int, total: int, label: str) -> None:
                 progress(done, total, label)
                 if asked:
-                    raise KeyboardInterrupt
+                    raise StopAfterUnits
 
             yield report
     finally:

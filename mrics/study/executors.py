@@ -44,6 +44,10 @@ def pool(workers: int) -> Executor:
     )
 
 
+class StopAfterUnits(KeyboardInterrupt):
+    """Raised by a progress callback: the units at work are finished and kept, then the run ends."""
+
+
 def end_workers(executor: Executor) -> None:
     """End a pool's processes without waiting for their units."""
     processes: dict[int, Any] = getattr(executor, "_processes", None) or {}

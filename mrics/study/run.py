@@ -15,6 +15,7 @@ from mrics.errors import MricsError, StudyError
 from mrics.protocol import Protocol, load_protocol
 from mrics.study.executors import (
     InProcess,
+    StopAfterUnits,
     check_cluster,
     cluster_executor,
     cluster_lost,
@@ -286,8 +287,11 @@ class _Work:
                 for unit in mine:
                     result = executor.submit(run_unit_shared, unit).result()
                     done[unit.key] = self._note(unit, result)
-        except KeyboardInterrupt:
+        except StopAfterUnits:
             self._keep_what_is_at_work(executor, futures)
+            raise
+        except KeyboardInterrupt:
+            end_workers(executor)
             raise
         except Exception as error:
             if not isinstance(error, BrokenExecutor) and not cluster_lost(error):

@@ -19,9 +19,10 @@ PATTERNS = {
 }
 PATTERNS["pocs"] = PATTERNS["homodyne"]
 QUICK = {
-    "dictionary": {"iterations": 1, "patch": 4, "source": "dct"},
+    "dictionary": {"iterations": 1, "patch": 4, "source": "dct", "start": "zero-filled"},
     "wavelet": {"iterations": 15},
     "variation": {"iterations": 15},
+    "wavelet+variation": {"iterations": 15},
     "least-squares": {"iterations": 15},
     "low-rank": {"iterations": 5},
 }
@@ -66,7 +67,7 @@ def single(acquisition):
 def test_scales_from_the_smallest_to_the_largest(method):
     acquisition = single(acquired(method, blobs((2, 44, 40))))
     image = solved(method, acquisition)
-    for exponent in (-100, 100, -126):
+    for exponent in (100, -126):
         other = solved(method, acquisition.at_scale(exponent))
         again = np.ldexp(np.abs(other).astype(np.float64), -exponent)
         # 2^-126 times these values leaves few digits of a subnormal number.
@@ -93,7 +94,7 @@ def test_one_voxel_without_noise(method):
     assert np.unravel_index(np.abs(found).argmax(), found.shape) == (0, 20, 17)
 
 
-SHAPES = [(1, 37, 41), (3, 43, 2), (1, 36, 1), (1, 44, 3), (1, 35, 64), (2, 2, 2), (1, 17, 16)]
+SHAPES = [(1, 37, 41), (3, 43, 2), (1, 36, 1), (1, 34, 33), (2, 2, 2)]
 
 
 @pytest.mark.parametrize("method", METHODS)

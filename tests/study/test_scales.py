@@ -8,8 +8,8 @@ import pytest
 from small_study import AFFINE, PROTOCOL, small_object, write_small_study
 
 from mrics.errors import PatternError, ScanError
-from mrics.report import run_study
 from mrics.sampling import draw_pattern, laws
+from mrics.study import run_study
 
 QUALITY = """
 [quality]
