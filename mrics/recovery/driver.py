@@ -14,8 +14,9 @@ from mrics.encoding.acquisition import Acquisition
 from mrics.errors import RecoveryError
 from mrics.numerics.scaling import exponent_for, largest_part, times_power_of_two
 from mrics.recovery.contract import Recovered
+from mrics.recovery.fields import Settings
 from mrics.recovery.registry import solver
-from mrics.recovery.settings import Settings, check_settings
+from mrics.recovery.settings import check_settings
 from mrics.recovery.weights import choose_weight
 
 #: noise level taken where the data's own is 0, relative to the RMS of the calibration samples

@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING
 if TYPE_CHECKING:
     from mrics.encoding.acquisition import Acquisition
     from mrics.recovery.contract import Recovered
-    from mrics.recovery.settings import Settings
+    from mrics.recovery.fields import Settings
 
 #: name -> module of mrics.recovery holding ``solve(acquisition, settings, sigma) -> Recovered``
 METHODS: dict[str, str] = {

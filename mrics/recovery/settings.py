@@ -9,14 +9,13 @@ in hand), "trained" (on a study's training scans), or a single rule: "held-out",
 
 from __future__ import annotations
 
-import difflib
-import math
 from collections.abc import Mapping
 from dataclasses import dataclass, field, fields
 from importlib import import_module
 from typing import Any
 
 from mrics.errors import RecoveryError
+from mrics.recovery.fields import Settings, choice, nearest, number, phase_field, weight_field
 from mrics.recovery.registry import METHODS
 
 WAVELETS = (
@@ -24,62 +23,6 @@ WAVELETS = (
     *(f"db{n}" for n in range(2, 11)),
     *(f"sym{n}" for n in range(2, 11)),
 )
-
-
-#: ways of choosing a weight (see ``weights``) in place of a number
-WEIGHT_WORDS = ("auto", "best", "trained", "held-out", "sure", "discrepancy")
-
-
-def _number(
-    default: Any,
-    low: float = -math.inf,
-    high: float = math.inf,
-    *,
-    above: bool = False,
-    words: tuple[str, ...] = (),
-    whole: bool = False,
-    optional: bool = False,
-) -> Any:
-    """A number field with its range; ``above`` excludes ``low``; ``words`` are also allowed."""
-    rule = {
-        "kind": "whole number" if whole else "number",
-        "low": low,
-        "high": high,
-        "above": above,
-        "words": words,
-        "optional": optional,
-    }
-    return field(default=default, metadata=rule)
-
-
-def _weight() -> Any:
-    """A weight in units of sigma, or how to choose it; the driver puts the number in its place."""
-    return _number("auto", 0.0, above=True, words=WEIGHT_WORDS)
-
-
-def _phase() -> Any:
-    """Whether the image's phase is free or that of the calibration region."""
-    return _choice("free", ("free", "smooth"))
-
-
-def _choice(default: str, choices: tuple[str, ...]) -> Any:
-    """A text field with its allowed values."""
-    return field(default=default, metadata={"kind": "choice", "words": choices})
-
-
-@dataclass(frozen=True)
-class Settings:
-    """Base of all settings; checks every field against its declared range.
-
-    Raises
-    ------
-    RecoveryError
-        Where a value is of the wrong kind or out of range.
-    """
-
-    def __post_init__(self) -> None:
-        for entry in fields(self):
-            _check_value(entry.name, getattr(self, entry.name), entry.metadata)
 
 
 @dataclass(frozen=True)
@@ -102,9 +45,9 @@ class LeastSquares(Settings):
         Relative residual of the normal equations to stop at.
     """
 
-    damping: float | str = _number("auto", 0.0, words=("auto",))
-    iterations: int = _number(100, 1, 100_000, whole=True)
-    tolerance: float = _number(1e-5, 0.0, 1.0, above=True)
+    damping: float | str = number("auto", 0.0, words=("auto",))
+    iterations: int = number(100, 1, 100_000, whole=True)
+    tolerance: float = number(1e-5, 0.0, 1.0, above=True)
 
 
 @dataclass(frozen=True)
@@ -138,18 +81,18 @@ class Wavelet(Settings):
         Seed of the random shifts.
     """
 
-    weight: float | str = _weight()
-    wavelet: str = _choice("sym4", WAVELETS)
-    levels: int | None = _number(None, 1, 12, whole=True, optional=True)
+    weight: float | str = weight_field()
+    wavelet: str = choice("sym4", WAVELETS)
+    levels: int | None = number(None, 1, 12, whole=True, optional=True)
     scales: tuple[float, ...] | None = field(
         default=None, metadata={"kind": "numbers", "optional": True}
     )
     joint: bool = field(default=False, metadata={"kind": "flag"})
-    shift: str = _choice("random", ("none", "random", "full"))
-    phase: str = _phase()
-    iterations: int | None = _number(None, 1, 100_000, whole=True, optional=True)
-    tolerance: float = _number(1e-3, 0.0, 1.0, above=True)
-    seed: int = _number(0, 0, whole=True)
+    shift: str = choice("random", ("none", "random", "full"))
+    phase: str = phase_field()
+    iterations: int | None = number(None, 1, 100_000, whole=True, optional=True)
+    tolerance: float = number(1e-3, 0.0, 1.0, above=True)
+    seed: int = number(0, 0, whole=True)
 
     def __post_init__(self) -> None:
         super().__post_init__()
@@ -186,11 +129,11 @@ class Variation(Settings):
         Duality gap, relative to the objective, to stop at.
     """
 
-    weight: float | str = _weight()
-    order: int = _number(1, 1, 2, whole=True)
-    phase: str = _phase()
-    iterations: int | None = _number(None, 1, 100_000, whole=True, optional=True)
-    tolerance: float = _number(1e-3, 0.0, 1.0, above=True)
+    weight: float | str = weight_field()
+    order: int = number(1, 1, 2, whole=True)
+    phase: str = phase_field()
+    iterations: int | None = number(None, 1, 100_000, whole=True, optional=True)
+    tolerance: float = number(1e-3, 0.0, 1.0, above=True)
 
 
 @dataclass(frozen=True)
@@ -216,13 +159,13 @@ class WaveletVariation(Settings):
         Duality gap, relative to the objective, to stop at.
     """
 
-    weight: float | str = _weight()
-    variation: float = _number(1.0, 0.0, above=True)
-    wavelet: str = _choice("sym4", WAVELETS)
-    levels: int | None = _number(None, 1, 12, whole=True, optional=True)
-    phase: str = _phase()
-    iterations: int | None = _number(None, 1, 100_000, whole=True, optional=True)
-    tolerance: float = _number(1e-3, 0.0, 1.0, above=True)
+    weight: float | str = weight_field()
+    variation: float = number(1.0, 0.0, above=True)
+    wavelet: str = choice("sym4", WAVELETS)
+    levels: int | None = number(None, 1, 12, whole=True, optional=True)
+    phase: str = phase_field()
+    iterations: int | None = number(None, 1, 100_000, whole=True, optional=True)
+    tolerance: float = number(1e-3, 0.0, 1.0, above=True)
 
 
 @dataclass(frozen=True)
@@ -246,12 +189,12 @@ class LowRank(Settings):
         Duality gap, relative to the objective, to stop at.
     """
 
-    weight: float | str = _weight()
-    model: str = _choice("local", ("local", "low-rank+sparse"))
-    block: int = _number(8, 2, 512, whole=True)
-    sparse: float = _number(2.0, 0.0, above=True)
-    iterations: int | None = _number(None, 1, 100_000, whole=True, optional=True)
-    tolerance: float = _number(1e-3, 0.0, 1.0, above=True)
+    weight: float | str = weight_field()
+    model: str = choice("local", ("local", "low-rank+sparse"))
+    block: int = number(8, 2, 512, whole=True)
+    sparse: float = number(2.0, 0.0, above=True)
+    iterations: int | None = number(None, 1, 100_000, whole=True, optional=True)
+    tolerance: float = number(1e-3, 0.0, 1.0, above=True)
 
 
 @dataclass(frozen=True)
@@ -275,10 +218,10 @@ class Kernel(Settings):
         "sensitivities" (highest SNR) or "root-sum-of-squares".
     """
 
-    lines: int = _number(4, 1, 16, whole=True)
-    samples: int = _number(5, 1, 31, whole=True)
-    damping: float = _number(1e-5, 0.0, 1.0)
-    combine: str = _choice("sensitivities", ("sensitivities", "root-sum-of-squares"))
+    lines: int = number(4, 1, 16, whole=True)
+    samples: int = number(5, 1, 31, whole=True)
+    damping: float = number(1e-5, 0.0, 1.0)
+    combine: str = choice("sensitivities", ("sensitivities", "root-sum-of-squares"))
 
 
 @dataclass(frozen=True)
@@ -298,8 +241,8 @@ class Pocs(Settings):
         Relative change of the image to stop at.
     """
 
-    iterations: int = _number(50, 1, 10_000, whole=True)
-    tolerance: float = _number(1e-4, 0.0, 1.0, above=True)
+    iterations: int = number(50, 1, 10_000, whole=True)
+    tolerance: float = number(1e-4, 0.0, 1.0, above=True)
 
 
 @dataclass(frozen=True)
@@ -336,20 +279,20 @@ class PatchDictionary(Settings):
         Seed of the choice of patches.
     """
 
-    source: str = _choice("adaptive", ("adaptive", "trained", "dct", "wavelets", "union"))
+    source: str = choice("adaptive", ("adaptive", "trained", "dct", "wavelets", "union"))
     dictionary: str | None = field(default=None, metadata={"kind": "text", "optional": True})
-    patch: int = _number(5, 2, 32, whole=True)
-    depth: int = _number(1, 1, 16, whole=True)
-    atoms: int = _number(256, 2, 4096, whole=True)
-    kind: str = _choice("real", ("real", "complex"))
+    patch: int = number(5, 2, 32, whole=True)
+    depth: int = number(1, 1, 16, whole=True)
+    atoms: int = number(256, 2, 4096, whole=True)
+    kind: str = choice("real", ("real", "complex"))
     joint: bool = field(default=False, metadata={"kind": "flag"})
-    gain: float | str = _number("auto", 0.0, above=True, words=("auto",))
-    most_atoms: int | None = _number(None, 1, 4096, whole=True, optional=True)
-    iterations: int = _number(10, 1, 1000, whole=True)
-    stride: int = _number(1, 1, 32, whole=True)
-    border: str = _choice("wrap", ("wrap", "reflect"))
-    start: str = _choice("variation", ("variation", "zero-filled"))
-    seed: int = _number(0, 0, whole=True)
+    gain: float | str = number("auto", 0.0, above=True, words=("auto",))
+    most_atoms: int | None = number(None, 1, 4096, whole=True, optional=True)
+    iterations: int = number(10, 1, 1000, whole=True)
+    stride: int = number(1, 1, 32, whole=True)
+    border: str = choice("wrap", ("wrap", "reflect"))
+    start: str = choice("variation", ("variation", "zero-filled"))
+    seed: int = number(0, 0, whole=True)
 
     def __post_init__(self) -> None:
         if self.dictionary is not None and self.source == "adaptive":
@@ -405,7 +348,7 @@ def check_settings(method: str, settings: Mapping[str, Any]) -> Settings:
     """
     if method not in METHODS:
         raise RecoveryError(
-            f"There is no recovery called {method!r}{_nearest(method, METHODS)}.",
+            f"There is no recovery called {method!r}{nearest(method, METHODS)}.",
             "method",
             f"Choose one of: {', '.join(sorted(METHODS))}.",
         )
@@ -414,60 +357,8 @@ def check_settings(method: str, settings: Mapping[str, Any]) -> Settings:
     for key in settings:
         if key not in known:
             raise RecoveryError(
-                f"Recovery {method!r} has no setting {key!r}{_nearest(key, known)}.",
+                f"Recovery {method!r} has no setting {key!r}{nearest(key, known)}.",
                 key,
                 f"Its settings are: {', '.join(known) or 'none'}.",
             )
     return kind(**settings)
-
-
-def _nearest(name: object, known: Any) -> str:
-    close = difflib.get_close_matches(str(name), list(known), 1, 0.5)
-    return f"; did you mean {close[0]!r}?" if close else ""
-
-
-def _check_value(name: str, value: Any, rule: Mapping[str, Any]) -> None:
-    words = rule.get("words", ())
-    if rule.get("optional") and value is None:
-        return
-    if isinstance(value, str) and value in words:
-        return
-    if rule["kind"] == "flag":
-        good = isinstance(value, bool)
-        wanted = "true or false"
-    elif rule["kind"] == "numbers":
-        good = isinstance(value, list | tuple) and 0 < len(value) <= 12
-        good = good and all(_is_number(one) and one > 0 for one in value)
-        wanted = "a list of 1 to 12 numbers above 0"
-    elif rule["kind"] == "text":
-        good = isinstance(value, str)
-        wanted = "a text"
-    elif rule["kind"] == "choice":
-        good = False
-        wanted = f"one of {', '.join(map(repr, words))}"
-    else:
-        low, high = rule["low"], rule["high"]
-        whole = rule["kind"] == "whole number"
-        good = (
-            _is_number(value)
-            and (isinstance(value, int) or not whole)
-            and (value > low if rule["above"] else value >= low)
-            and value <= high
-        )
-        wanted = f"a {rule['kind']}"
-        if low > -math.inf:
-            wanted += f" {'above' if rule['above'] else 'of at least'} {low:g}"
-        if high < math.inf:
-            wanted += f" and at most {high:g}"
-        wanted = "".join([wanted, *(f" or {word!r}" for word in words)])
-    if not good:
-        hint = _nearest(value, words) if isinstance(value, str) else ""
-        raise RecoveryError(
-            f"Setting {name} must be {wanted}, got {value!r}{hint}.",
-            name,
-            "Change it or leave it out for the default.",
-        )
-
-
-def _is_number(value: Any) -> bool:
-    return isinstance(value, int | float) and not isinstance(value, bool) and math.isfinite(value)

@@ -27,7 +27,7 @@ from mrics.encoding.lattice import Lattice, find_lattice
 from mrics.errors import AcquisitionError, MricsWarning, RecoveryError
 from mrics.numerics import ifft_planes, map_blocks
 from mrics.recovery.contract import Certificate, Recovered
-from mrics.recovery.settings import Settings
+from mrics.recovery.fields import Settings
 
 Array = NDArray[Any]
 #: condition number of E above which the certificate warns

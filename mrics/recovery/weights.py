@@ -23,7 +23,8 @@ from mrics.encoding import Acquisition, frames_of, some_planes, with_sensitiviti
 from mrics.errors import RecoveryError
 from mrics.recovery import risk
 from mrics.recovery.contract import Certificate, Recovered
-from mrics.recovery.settings import Settings, check_settings
+from mrics.recovery.fields import Settings
+from mrics.recovery.settings import check_settings
 
 Array = NDArray[Any]
 Solve = Callable[[Acquisition, Settings, float], Recovered]

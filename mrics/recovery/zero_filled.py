@@ -7,8 +7,8 @@ import numpy as np
 from mrics.encoding import Encoding
 from mrics.encoding.acquisition import Acquisition
 from mrics.recovery.contract import Certificate, Recovered
+from mrics.recovery.fields import Settings
 from mrics.recovery.plane import Array, each_plane
-from mrics.recovery.settings import Settings
 
 
 def solve(acquisition: Acquisition, settings: Settings, sigma: float) -> Recovered:

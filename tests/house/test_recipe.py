@@ -29,7 +29,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from mrics.recovery.settings import Settings, _number
+from mrics.recovery.fields import Settings, number
 from mrics.recovery.zero_filled import solve as adjoint
 
 
@@ -37,7 +37,7 @@ from mrics.recovery.zero_filled import solve as adjoint
 class SETTINGS(Settings):
     """One number."""
 
-    strength: float = _number(1.0, 0.0, 10.0)
+    strength: float = number(1.0, 0.0, 10.0)
 
 
 def solve(acquisition, settings, sigma):

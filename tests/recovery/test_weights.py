@@ -17,7 +17,8 @@ from mrics.encoding import (
 from mrics.errors import RecoveryError
 from mrics.numerics import centred_ifft
 from mrics.recovery import METHODS, frozen, recover, risk
-from mrics.recovery.settings import SETTINGS, WEIGHT_WORDS
+from mrics.recovery.fields import WEIGHT_WORDS
+from mrics.recovery.settings import SETTINGS
 from mrics.recovery.weights import LEAST, MOST, search_weight
 from mrics.sampling import draw_pattern
 
