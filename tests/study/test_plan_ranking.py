@@ -9,7 +9,7 @@ from small_study import AFFINE, PROTOCOL, small_object, write_small_study
 from typer.testing import CliRunner
 
 from mrics.cli.main import app
-from mrics.cli.tables import WIDTH, ranking_table
+from mrics.cli.tables import columns, ranking_table
 from mrics.errors import StudyError
 from mrics.protocol import load_protocol
 from mrics.quality import rank_patterns
@@ -44,7 +44,7 @@ def test_the_ranking_is_that_of_the_scan_and_its_noise(tmp_path: Path) -> None:
         assert mine["d_prime"] == pytest.approx(theirs["d_prime"], rel=1e-5)
         assert mine["rank"] == theirs["rank"]
     table = ranking_table(ranking)
-    assert max(map(len, table.splitlines())) <= WIDTH
+    assert max(map(len, table.splitlines())) <= columns()
     assert "noise only" in table
     printed = CliRunner().invoke(app, ["plan", str(protocol), "--rank"]).stdout
     assert table in printed
