@@ -132,7 +132,7 @@ def first_within(values, best):
 
 @pytest.mark.parametrize("planes", [1, 16])
 @pytest.mark.parametrize("method", ["wavelet", "variation"])
-def test_against_general_library(method, planes):
+def test_against_general_library(method, planes, figure):
     acquired, one = acquisition(planes), acquisition(1)
     settings = {"shift": "none", "wavelet": "sym4", "levels": 4} if method == "wavelet" else {}
     settings["weight"] = WEIGHT
@@ -157,8 +157,9 @@ def test_against_general_library(method, planes):
             ),
         )
         gap = min(gap, fastest(lambda: recover(acquired, method, tolerance=WITHIN, **settings), 1))
-    print(
-        f"\n{method}, {planes} plane(s): theirs {theirs:.3f} s ({needed} iterations), ours "
-        f"{ours:.3f} s ({own} iterations): {theirs / ours:.1f} x faster; ours to a certified gap "
-        f"{gap:.3f} s ({certified.iterations} iterations): {theirs / gap:.1f} x"
+    figure(
+        f"PyLops and PyProximal / ours, {method}, {planes} planes, objective within 1e-3",
+        f"{theirs / ours:.1f} ({needed} against {own} iterations); ours to a certified gap: "
+        f"{theirs / gap:.1f} ({certified.iterations} iterations)",
+        "6" if planes == 1 else "12",
     )

@@ -50,5 +50,4 @@ def test_inspection_of_a_large_scan(kind: str, figure) -> None:
     )
     wall, cpu, peak, size = (float(x) for x in done.stdout.split())
     text = f"{wall:.1f} s wall, {cpu:.1f} s CPU, {peak:.0f} MiB on top of the scan's {size:.0f}"
-    print(f"\n{kind}: {text}")
     figure(f"inspection of 256 x 256 x 160, {kind}", text, "under 10 s")

@@ -44,7 +44,7 @@ def stack():
     return image * np.exp(1j * (x + y * y)).astype(np.complex64), np.broadcast_to(body, SHAPE)
 
 
-def test_ssim_against_scikit_image():
+def test_ssim_against_scikit_image(figure):
     image, body = stack()
     reference = np.abs(image).astype(float)
     rng = np.random.default_rng(1)
@@ -58,12 +58,12 @@ def test_ssim_against_scikit_image():
     )
     ours = fastest(lambda: [ssim_map(a, b, 1.5) for a, b in pairs])
     everything = fastest(lambda: score(found, reference, body))
-    print(f"\nSSIM of {SHAPE}: scikit-image {theirs:.3f} s, ours {ours:.3f} s, one thread")
-    print(f"all scores, {threads()} threads: {everything:.3f} s")
+    figure("SSIM: scikit-image / ours, one thread", f"{theirs / ours:.1f}")
+    figure("all scores / SSIM of scikit-image", f"{everything / theirs:.2f}")
 
 
 @pytest.mark.parametrize("channels", [1, 8])
-def test_ideal_observer(channels):
+def test_ideal_observer(channels, figure):
     shape = SHAPE[1:]
     patterns = [draw_pattern(shape, acceleration=4, calibration=16, seed=s) for s in range(20)]
     kinds = ("detection", "two-against-one")
@@ -79,11 +79,15 @@ def test_ideal_observer(channels):
     ideal_observer(
         patterns, tasks, shape, (1.0, 1.0), 0.1, Spectrum(50.0, 1 / 64, 3.0), sensitivities=maps
     )
-    print(f"\n20 patterns x 6 tasks, {channels} channels: {time.perf_counter() - start:.2f} s")
+    figure(
+        f"ideal observer, 20 patterns x 6 tasks, 256 x 256, {channels} channels",
+        f"{time.perf_counter() - start:.2f} s",
+        "1 s" if channels == 1 else "20 s",
+    )
 
 
 @pytest.mark.parametrize("method", ["wavelet", "variation", "least-squares", "zero-filled"])
-def test_measures_against_the_recoveries_they_need(method):
+def test_measures_against_the_recoveries_they_need(method, figure):
     image, body = stack()
     held = undersample(image, draw_pattern(256, acceleration=3, calibration=20), sigma=0.03)
     wanted = measures_from(
@@ -105,18 +109,19 @@ def test_measures_against_the_recoveries_they_need(method):
     once()
     result = once()
     ratio = result.seconds / result.recovery_seconds
-    print(
-        f"\n{method}: all measures {result.seconds:.2f} s, {wanted.recoveries} recoveries of "
-        f"{wanted.planes} planes {result.recovery_seconds:.2f} s, ratio {ratio:.2f}"
+    figure(
+        f"all measures / the recoveries they need, {method}",
+        f"{ratio:.2f} ({wanted.recoveries} recoveries of {wanted.planes} planes)",
+        "3",
     )
 
 
-def test_one_thread_scores():
+def test_one_thread_scores(figure):
     image, body = stack()
     before = threads()
     set_threads(1)
     try:
         seconds = fastest(lambda: score(image, image, body))
-        print(f"\nall scores of {SHAPE}, one thread: {seconds:.3f} s")
+        figure("all scores of 16 planes of 256 x 256, one thread", f"{seconds:.3f} s")
     finally:
         set_threads(before)

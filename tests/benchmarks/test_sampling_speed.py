@@ -1,4 +1,4 @@
-"""Times of the draws, printed: run with ``pytest -s tests/benchmarks/test_sampling_speed.py``."""
+"""Times of the draws."""
 
 import time
 
@@ -22,20 +22,20 @@ def seconds(function, repeats=5):
     return min(times)
 
 
-def test_poisson_disc_sizes():
-    print("\nvariable-density Poisson-disc, R = 6, power law, elliptical; draw_pattern in all")
-    print(f"{'grid':>12} {'s':>8} {'us per grid point':>18}")
+def test_poisson_disc_sizes(figure):
     for shape in [(128, 128), (256, 192), (256, 256), (512, 512), (1024, 1024)]:
 
         def draw(shape=shape):
             return draw_pattern(shape, draw="poisson-disc", acceleration=6, elliptical=True)
 
         taken = seconds(draw, 3)
-        print(f"{shape[0]:>6} x{shape[1]:>5} {taken:8.3f} {1e6 * taken / np.prod(shape):18.3f}")
+        figure(
+            f"variable-density Poisson disc, {shape[0]} x {shape[1]}, R = 6",
+            f"{1e6 * taken / np.prod(shape):.3f} us a grid point ({taken:.3f} s)",
+        )
 
 
-def test_poisson_disc_against_reference():
-    print("\nconstant radius, equal number of points: mrics and scipy.stats.qmc.PoissonDisk")
+def test_poisson_disc_against_reference(figure):
     for side, acceleration in [(64, 8), (128, 8), (128, 16)]:
         pattern = draw_pattern(
             (side, side), law="uniform", draw="poisson-disc", calibration=0,
@@ -58,21 +58,19 @@ def test_poisson_disc_against_reference():
 
         found = len(reference())
         theirs = seconds(reference, 1)
-        print(
-            f"{side:>4} x {side:<4} {count:>5} points (reference {found}): "
-            f"{ours:.4f} s, reference {theirs:.3f} s, ratio {theirs / ours:.0f}"
+        figure(
+            f"scipy.stats.qmc.PoissonDisk / ours, {side} x {side}, constant radius",
+            f"{theirs / ours:.0f} ({count} points; theirs {found})",
         )
 
 
-def test_every_draw():
-    print("\none draw of 256 x 256, R = 4")
+def test_every_draw(figure):
     for draw in DRAWS:
         taken = seconds(lambda d=draw: draw_pattern((256, 256), draw=d), 5)
-        print(f"{draw:>16} {1e3 * taken:8.1f} ms")
+        figure(f"one draw, {draw}, 256 x 256, R = 4", f"{1e3 * taken:.1f} ms")
 
 
-def test_best_of_64():
-    print("\nbest of 64 draws, 256 x 256, R = 6")
+def test_best_of_64(figure):
     for draw in DRAWS:
         for by in ("point-spread", "wavelet-scales"):
             taken = seconds(
@@ -81,4 +79,4 @@ def test_best_of_64():
                 ),
                 1,
             )
-            print(f"{draw:>16} by {by:<15} {taken:6.2f} s")
+            figure(f"best of 64 draws by {by}, {draw}, 256 x 256", f"{taken:.2f} s")

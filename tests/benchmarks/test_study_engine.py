@@ -22,6 +22,25 @@ TEXT = (
     .replace("draws = 2", "draws = 10")
     .replace('[[recovery]]\nmethod = "zero-filled"', '[[recovery]]\nmethod = "wavelet"')
 )
+#: what the machine gives two processes that share nothing: FFTs of a plane in cache
+BARE = """
+import multiprocessing, time
+import numpy as np
+import scipy.fft
+
+def work(times):
+    x = np.ones((256, 256), np.complex64)
+    started = time.perf_counter()
+    for _ in range(times):
+        x = scipy.fft.ifft2(scipy.fft.fft2(x))
+    return time.perf_counter() - started
+
+if __name__ == "__main__":
+    work(50)
+    alone = work(1000)
+    with multiprocessing.get_context("fork").Pool(2) as pool:
+        print(2 * alone / max(pool.map(work, [1000, 1000], chunksize=1)))
+"""
 CODE = """
 import resource, sys, time
 from mrics.numerics import set_threads
@@ -53,6 +72,8 @@ def test_two_processes_against_one(tmp_path: Path, figure) -> None:
     timing = json.loads((tmp_path / "by1" / "results.json").read_text())["timing"]
     units = sum(u["unit_s"] for u in timing["units"])
     recoveries = sum(u["recovery_s"] for u in timing["units"])
+    bare = subprocess.run([sys.executable, "-c", BARE], check=True, capture_output=True, text=True)
+    figure("the same FFTs in two processes and in one, nothing shared", f"{float(bare.stdout):.2f}")
     (wall, alone, _), (wall_of_two, main, workers) = runs[1], runs[2]
     figure(
         f"{len(timing['units'])} units, two processes against one, wall",

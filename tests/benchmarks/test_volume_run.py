@@ -11,6 +11,7 @@ import json
 import subprocess
 import sys
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 
@@ -95,16 +96,17 @@ def run(folder: Path, planes: int) -> dict[str, float]:
         capture_output=True, text=True, check=True,
     )  # fmt: skip
     found: dict[str, float] = json.loads(done.stdout)
-    print(
-        f"\n{planes} planes of {PHASE} x {PARTITION}, {CHANNELS} channels: {found['wall_s']:.0f} s "
-        f"wall, {found['cpu_s']:.0f} s processor, {found['iterations']} iterations, gap "
-        f"{found['gap']:.1e}, {found['peak_bytes'] / 2**20:.0f} MiB beyond the data, relative "
-        f"error {found['error']:.3f}"
-    )
     return found
 
 
-def test_whole_volume(tmp_path: Path) -> None:
+def test_whole_volume(tmp_path: Path, figure: Any) -> None:
     found = run(tmp_path, READOUT)
+    name = f"wavelet, {READOUT} x {PHASE} x {PARTITION}, {CHANNELS} channels, R = 6, to tolerance"
+    figure(
+        name,
+        f"{found['wall_s']:.0f} s ({found['cpu_s']:.0f} s CPU, {found['iterations']} iterations)",
+        "240 s",
+    )
+    figure(f"{name}: memory", f"{found['peak_bytes'] / 2**20:.0f} MiB", "1024 MiB")
     assert found["reached"]
     assert found["error"] < 0.3
