@@ -51,13 +51,30 @@ class LeastSquares(Settings):
 
 
 @dataclass(frozen=True)
-class Wavelet(Settings):
-    """L1 of orthonormal wavelet coefficients.
+class Convex(Settings):
+    """What every recovery by one convex objective takes.
 
     Attributes
     ----------
     weight : float or str
-        Threshold in units of sigma, or one of ``WEIGHT_WORDS``.
+        Weight of the penalty in units of sigma, or one of ``WEIGHT_WORDS``.
+    iterations : int or None
+        Most iterations; None for 300, and for 60 where shifts are random.
+    tolerance : float
+        Duality gap, relative to the objective, to stop at.
+    """
+
+    weight: float | str = weight_field()
+    iterations: int | None = number(None, 1, 100_000, whole=True, optional=True)
+    tolerance: float = number(1e-3, 0.0, 1.0, above=True)
+
+
+@dataclass(frozen=True)
+class Wavelet(Convex):
+    """L1 of orthonormal wavelet coefficients.
+
+    Attributes
+    ----------
     wavelet : str
         Orthogonal wavelet.
     levels : int or None
@@ -73,15 +90,10 @@ class Wavelet(Settings):
     phase : str
         "free", or "smooth": the image is real, of either sign, times the phase of the calibration
         region.
-    iterations : int or None
-        Most iterations; None for 300, and for 60 where shifts are random.
-    tolerance : float
-        Duality gap, relative to the objective, to stop at.
     seed : int
         Seed of the random shifts.
     """
 
-    weight: float | str = weight_field()
     wavelet: str = choice("sym4", WAVELETS)
     levels: int | None = number(None, 1, 12, whole=True, optional=True)
     scales: tuple[float, ...] | None = field(
@@ -90,8 +102,6 @@ class Wavelet(Settings):
     joint: bool = field(default=False, metadata={"kind": "flag"})
     shift: str = choice("random", ("none", "random", "full"))
     phase: str = phase_field()
-    iterations: int | None = number(None, 1, 100_000, whole=True, optional=True)
-    tolerance: float = number(1e-3, 0.0, 1.0, above=True)
     seed: int = number(0, 0, whole=True)
 
     def __post_init__(self) -> None:
@@ -110,40 +120,29 @@ class Wavelet(Settings):
 
 
 @dataclass(frozen=True)
-class Variation(Settings):
+class Variation(Convex):
     """Total variation.
 
     Attributes
     ----------
-    weight : float or str
-        Weight in units of sigma, or one of ``WEIGHT_WORDS``.
     order : int
         1: total variation, which makes shading into steps. 2: second-order total generalised
         variation, which keeps slopes.
     phase : str
         "free", or "smooth": the image is real, of either sign, times the phase of the calibration
         region.
-    iterations : int or None
-        Most iterations; None for 300.
-    tolerance : float
-        Duality gap, relative to the objective, to stop at.
     """
 
-    weight: float | str = weight_field()
     order: int = number(1, 1, 2, whole=True)
     phase: str = phase_field()
-    iterations: int | None = number(None, 1, 100_000, whole=True, optional=True)
-    tolerance: float = number(1e-3, 0.0, 1.0, above=True)
 
 
 @dataclass(frozen=True)
-class WaveletVariation(Settings):
+class WaveletVariation(Convex):
     """L1 of wavelet coefficients over all shifts, and total variation.
 
     Attributes
     ----------
-    weight : float or str
-        Weight of the coefficients in units of sigma, or one of ``WEIGHT_WORDS``.
     variation : float
         Weight of the total variation relative to ``weight``.
     wavelet : str
@@ -153,29 +152,20 @@ class WaveletVariation(Settings):
     phase : str
         "free", or "smooth": the image is real, of either sign, times the phase of the calibration
         region.
-    iterations : int or None
-        Most iterations; None for 300.
-    tolerance : float
-        Duality gap, relative to the objective, to stop at.
     """
 
-    weight: float | str = weight_field()
     variation: float = number(1.0, 0.0, above=True)
     wavelet: str = choice("sym4", WAVELETS)
     levels: int | None = number(None, 1, 12, whole=True, optional=True)
     phase: str = phase_field()
-    iterations: int | None = number(None, 1, 100_000, whole=True, optional=True)
-    tolerance: float = number(1e-3, 0.0, 1.0, above=True)
 
 
 @dataclass(frozen=True)
-class LowRank(Settings):
-    """Low rank over frames.
+class LowRank(Convex):
+    """Low rank over frames; noise alone is removed at a weight of 1.5.
 
     Attributes
     ----------
-    weight : float or str
-        Weight in units of sigma, or one of ``WEIGHT_WORDS``; noise alone is removed at 1.5.
     model : str
         "local": blocks of low rank. "low-rank+sparse": the plane as a part of low rank and a part
         of few temporal frequencies.
@@ -183,18 +173,11 @@ class LowRank(Settings):
         Side of a block in pixels, for "local".
     sparse : float
         Weight of the temporal frequencies relative to ``weight``, for "low-rank+sparse".
-    iterations : int or None
-        Most iterations; None for 300.
-    tolerance : float
-        Duality gap, relative to the objective, to stop at.
     """
 
-    weight: float | str = weight_field()
     model: str = choice("local", ("local", "low-rank+sparse"))
     block: int = number(8, 2, 512, whole=True)
     sparse: float = number(2.0, 0.0, above=True)
-    iterations: int | None = number(None, 1, 100_000, whole=True, optional=True)
-    tolerance: float = number(1e-3, 0.0, 1.0, above=True)
 
 
 @dataclass(frozen=True)

@@ -21,7 +21,8 @@ import numpy as np
 import pytest
 
 sys.path.insert(0, str(Path(__file__).parent))
-from test_recovery_iteration import SIDE, fastest, stack
+from test_recovery_iteration import SIDE, stack
+from timing import fastest
 
 from mrics.encoding import undersample
 from mrics.recovery import recover

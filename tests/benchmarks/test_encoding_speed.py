@@ -14,6 +14,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 import scipy.fft
+from timing import fastest
 
 from mrics.encoding import estimate_sensitivities, undersample
 from mrics.encoding.coils import simulate_coils
@@ -21,15 +22,6 @@ from mrics.recovery import METHODS, recover
 from mrics.sampling import draw_pattern
 
 PLANES, SIDE, CHANNELS, ITERATIONS = 16, 256, 8, 20
-
-
-def fastest(function, repeats=5):
-    best = np.inf
-    for _ in range(repeats):
-        start = time.perf_counter()
-        function()
-        best = min(best, time.perf_counter() - start)
-    return best
 
 
 def objects(planes=PLANES):

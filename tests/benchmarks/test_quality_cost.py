@@ -8,6 +8,7 @@ import time
 import numpy as np
 import pytest
 from skimage.metrics import structural_similarity
+from timing import fastest
 
 from mrics.encoding import undersample
 from mrics.numerics import set_threads, threads
@@ -19,15 +20,6 @@ from mrics.recovery import recover
 from mrics.sampling import draw_pattern
 
 SHAPE = (8, 256, 256)
-
-
-def fastest(function, repeats=5):
-    best = np.inf
-    for _ in range(repeats):
-        start = time.perf_counter()
-        function()
-        best = min(best, time.perf_counter() - start)
-    return best
 
 
 def stack():

@@ -4,11 +4,10 @@ The measure is scipy.fft.fft2 and ifft2 with 2 workers on the same stack (times 
 Nothing is asserted.
 """
 
-import time
-
 import numpy as np
 import pytest
 import scipy.fft
+from timing import fastest
 
 from mrics.encoding import undersample
 from mrics.recovery import recover
@@ -27,15 +26,6 @@ def stack():
             r, a = rng.uniform(0.03, 0.3), rng.uniform(0.1, 0.5)
             image[plane] += a * ((x - cx) ** 2 + (y - cy) ** 2 < r**2)
     return image * np.exp(1j * (x + y * y)).astype(np.complex64)
-
-
-def fastest(function, repeats):
-    best = np.inf
-    for _ in range(repeats):
-        start = time.perf_counter()
-        function()
-        best = min(best, time.perf_counter() - start)
-    return best
 
 
 def pair(channels):
