@@ -77,8 +77,7 @@ def plan_table(plan: StudyPlan) -> str:
 def ranking_table(ranking: Ranking) -> str:
     """Every pattern's d' and rank for both tasks, with the d' of noise alone below it."""
     tasks = ranking.tasks()
-    number = max(len(row["pattern"]) for row in ranking.rows)
-    name = max(14, min(number, columns() - 6 - 12 * len(tasks)))
+    least_name, rate, least_cell = 14, 6, 10
     lines = textwrap.wrap(
         "Ideal observer on the data themselves, no recovery: d' and rank of every pattern "
         f"(first draw; features of {ranking.contrast:g} %; background and noise of "
@@ -86,19 +85,25 @@ def ranking_table(ranking: Ranking) -> str:
         columns(),
     )
     kinds = list(dict.fromkeys(kind for kind, _ in tasks))
-    sizes = [size for kind, size in tasks if kind == kinds[0]]
-    lines.append((" " * (name + 6) + "".join(k.center(12 * len(sizes)) for k in kinds)).rstrip())
-    heads = "".join(f"{size:g} mm".rjust(12) for _, size in tasks)
-    lines.append(f"{'pattern'.ljust(name)}{'R'.rjust(6)}{heads}")
-    for pattern, rows in ranking.by_pattern().items():
-        short = pattern if len(pattern) <= name else pattern[: name - 1] + "…"
-        cells = [f"{row['d_prime']:.3g} #{row['rank']}" for row in rows]
-        lines.append(
-            f"{short.ljust(name)}{rows[0]['acceleration']:6.2f}"
-            + "".join(cell.rjust(12) for cell in cells)
-        )
-        known = "".join(f"{row['noise_only']:.3g}   ".rjust(12) for row in rows)
-        lines.append(f"{'  noise only'.ljust(name + 6)}{known}".rstrip())
+    beside = least_name + rate + least_cell * len(tasks) <= columns()
+    for group in [kinds] if beside else [[kind] for kind in kinds]:
+        taken = [number for number, (kind, _) in enumerate(tasks) if kind in group]
+        cell = min(12, (columns() - least_name - rate) // len(taken))
+        longest = max(len(row["pattern"]) for row in ranking.rows)
+        name = max(least_name, min(longest, columns() - rate - cell * len(taken)))
+        each = cell * len(taken) // len(group)
+        lines.append((" " * (name + rate) + "".join(kind.center(each) for kind in group)).rstrip())
+        heads = "".join(f"{tasks[number][1]:g} mm".rjust(cell) for number in taken)
+        lines.append(f"{'pattern'.ljust(name)}{'R'.rjust(rate)}{heads}")
+        for pattern, rows in ranking.by_pattern().items():
+            short = pattern if len(pattern) <= name else pattern[: name - 1] + "…"
+            cells = [f"{rows[n]['d_prime']:.3g} #{rows[n]['rank']}" for n in taken]
+            lines.append(
+                f"{short.ljust(name)}{rows[0]['acceleration']:{rate}.2f}"
+                + "".join(text.rjust(cell) for text in cells)
+            )
+            known = "".join(f"{rows[n]['noise_only']:.3g}   ".rjust(cell) for n in taken)
+            lines.append(f"{'  noise only'.ljust(name + rate)}{known}".rstrip())
     lines += textwrap.wrap(
         "Ranked by d' in an anatomical background. \"Noise only\" is d' in a known background: it "
         "always prefers the centre of k-space and ranks nothing.",

@@ -21,7 +21,9 @@ SHAPE = (64, 64, 5)
 QUALITY = "[quality]\nfeatures = [{ size_mm = [2.5, 4.0], contrast = 15.0 }]\n"
 
 
-def test_the_ranking_is_that_of_the_scan_and_its_noise(tmp_path: Path) -> None:
+def test_the_ranking_is_that_of_the_scan_and_its_noise(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
     text = PROTOCOL.replace("draws = 2", "draws = 2\nsnr = 10.0")
     protocol = write_small_study(tmp_path, scans=1, protocol=text, shape=SHAPE)
     plan = plan_study(load_protocol(protocol))
@@ -43,9 +45,11 @@ def test_the_ranking_is_that_of_the_scan_and_its_noise(tmp_path: Path) -> None:
     for mine, theirs in zip(ranking.rows, direct, strict=True):
         assert mine["d_prime"] == pytest.approx(theirs["d_prime"], rel=1e-5)
         assert mine["rank"] == theirs["rank"]
-    table = ranking_table(ranking)
-    assert max(map(len, table.splitlines())) <= columns()
-    assert "noise only" in table
+    for width in (60, 80, 100):
+        monkeypatch.setenv("COLUMNS", str(width))
+        table = ranking_table(ranking)
+        assert max(map(len, table.splitlines())) <= columns() == width
+        assert table.count("noise only") == len(plan.rows) * (2 if width == 60 else 1)
     printed = CliRunner().invoke(app, ["plan", str(protocol), "--rank"]).stdout
     assert table in printed
     assert "noise only" not in CliRunner().invoke(app, ["plan", str(protocol)]).stdout
