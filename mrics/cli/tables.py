@@ -267,8 +267,8 @@ def dictionary_lines(dictionary: Dictionary) -> str:
             f"{dictionary.layers} plane(s) in a patch",
             f"learned from: {made['patches']} patches of "
             f"{', '.join(scan['name'] for scan in made['scans'])}",
-            f"residual energy at {made['residual_sparsity']} atoms: median {100 * half:.2g} %, "
-            f"95 % of {where} below {100 * most:.2g} %",
+            f"residual energy above noise at {made['residual_sparsity']} atoms: "
+            f"median {100 * half:.2g} %, 95 % of {where} below {100 * most:.2g} %",
         ]
     )
 
