@@ -16,3 +16,13 @@ def blobs(shape=(4, 40, 48), seed=0):
             image = image + a * ((x - cx) ** 2 + (y - cy) ** 2 < r**2)
         planes.append(image * np.exp(1j * (0.5 * x + 0.8 * y * x)))
     return np.array(planes)
+
+
+def written_out(images, maps, mask):
+    """The encoding as a matrix, with numpy's FFT: a column of acquired samples for every image.
+
+    ``images`` (n, u, v), ``maps`` (channel, u, v), ``mask`` (u, v).
+    """
+    seen = np.fft.ifftshift(images[:, None] * maps, axes=(2, 3))
+    kspace = np.fft.fftshift(np.fft.fft2(seen, norm="ortho"), axes=(2, 3))
+    return kspace[:, :, mask].reshape(len(images), -1).T

@@ -6,6 +6,7 @@ import cvxpy
 import numpy as np
 import pytest
 import pywt
+from invented_planes import written_out
 
 from mrics.encoding import undersample
 from mrics.errors import RecoveryError
@@ -35,11 +36,7 @@ def test_optimum_equals_an_independent_solver(channels):
         )[1:]  # fmt: skip
         rows += [band.reshape(96, -1).T for level in details for band in level]
     analysis = np.concatenate(rows)
-    kspace = np.fft.fftshift(
-        np.fft.fft2(np.fft.ifftshift(plain[:, None] * maps, axes=(2, 3)), norm="ortho"),
-        axes=(2, 3),
-    )
-    matrix = kspace[:, :, pattern.mask].reshape(96, -1).T
+    matrix = written_out(plain, maps, pattern.mask)
     data = acquisition.kspace[0][:, pattern.mask].ravel()
     steps = [(np.roll(plain, -1, a) - plain).reshape(96, 96).T for a in (1, 2)]
     unknown = cvxpy.Variable(96, complex=True)

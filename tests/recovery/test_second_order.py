@@ -3,6 +3,7 @@
 import cvxpy
 import numpy as np
 import pytest
+from invented_planes import written_out
 
 from mrics.encoding import undersample
 from mrics.recovery import recover
@@ -37,11 +38,7 @@ def test_optimum_equals_an_independent_solver(channels):
     )
     if channels == 1:
         maps = np.ones((1, *shape))
-    basis = np.eye(72).reshape(72, 1, *shape) * maps
-    kspace = np.fft.fftshift(
-        np.fft.fft2(np.fft.ifftshift(basis, axes=(2, 3)), norm="ortho"), axes=(2, 3)
-    )
-    matrix = kspace[:, :, pattern.mask].reshape(72, -1).T
+    matrix = written_out(np.eye(72).reshape(72, *shape), maps, pattern.mask)
     data = acquisition.kspace[0][:, pattern.mask].ravel()
     (down, right), (back_down, back_right) = differences(shape)
     unknown, first, second = (cvxpy.Variable(72, complex=True) for _ in range(3))
