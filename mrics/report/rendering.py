@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import os
-import tempfile
 from pathlib import Path
 from typing import Any
 
@@ -20,6 +18,7 @@ from mrics.report.words import (
     percent,
     settings_text,
 )
+from mrics.study.files import replace_text
 
 
 def render(template: str, **values: Any) -> str:
@@ -49,15 +48,7 @@ def render(template: str, **values: Any) -> str:
 def write_page(path: Path, text: str) -> Path:
     """Write a page whole or not at all."""
     try:
-        handle, temporary = tempfile.mkstemp(dir=path.parent, prefix=".page", suffix=".tmp")
-        try:
-            with os.fdopen(handle, "w", encoding="utf-8", newline="\n") as stream:
-                stream.write(text)
-            os.chmod(temporary, 0o644)
-            os.replace(temporary, path)
-        except BaseException:
-            Path(temporary).unlink(missing_ok=True)
-            raise
+        replace_text(path, text)
     except OSError as problem:
         raise ReportError(
             f"{path.name} cannot be written ({problem.strerror}).",

@@ -49,11 +49,16 @@ def without_folders(value: Any) -> Any:
 
 
 def write_text(path: Path, text: str) -> None:
-    """Write a file whole or not at all: a temporary name in the same folder, then a rename."""
+    """Write a file whole or not at all, making its folder."""
     path.parent.mkdir(parents=True, exist_ok=True)
+    replace_text(path, text)
+
+
+def replace_text(path: Path, text: str) -> None:
+    """A temporary name in the same folder, which must exist, then a rename."""
     handle, temporary = tempfile.mkstemp(dir=path.parent, prefix=f".{path.name}.")
     try:
-        with os.fdopen(handle, "w", encoding="utf-8") as stream:
+        with os.fdopen(handle, "w", encoding="utf-8", newline="\n") as stream:
             stream.write(text)
         os.chmod(temporary, 0o644)
         os.replace(temporary, path)
