@@ -72,7 +72,7 @@ def recover(
     exponent = exponent_for(largest)
     # Methods square samples in single precision.
     acquisition = acquisition.at_scale(exponent)
-    if reference is not None:
+    if reference is not None and getattr(chosen, "weight", None) == "best":
         reference = times_power_of_two(reference, exponent)
     sigma, note = reference_sigma(acquisition)
     if empty:
