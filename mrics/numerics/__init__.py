@@ -10,7 +10,7 @@ from mrics.numerics.fourier import (
     uncentre,
 )
 from mrics.numerics.rng import stream, uniforms
-from mrics.numerics.threads import map_blocks, set_threads, threads
+from mrics.numerics.threads import map_blocks, one_blas_thread, set_threads, threads
 
 __all__ = [
     "centred_fft",
@@ -19,6 +19,7 @@ __all__ = [
     "fft_planes",
     "ifft_planes",
     "map_blocks",
+    "one_blas_thread",
     "recentre",
     "set_threads",
     "stream",

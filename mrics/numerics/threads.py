@@ -5,9 +5,11 @@ from __future__ import annotations
 import os
 from collections.abc import Callable, Iterable
 from concurrent.futures import ThreadPoolExecutor
+from contextlib import AbstractContextManager
+from functools import lru_cache
 from typing import Any
 
-from threadpoolctl import threadpool_limits
+from threadpoolctl import ThreadpoolController
 
 _threads = max(1, len(os.sched_getaffinity(0)) if hasattr(os, "sched_getaffinity") else 1)
 
@@ -25,6 +27,20 @@ def set_threads(count: int) -> None:
     _threads = int(count)
 
 
+@lru_cache(maxsize=1)
+def _libraries() -> ThreadpoolController:
+    # Finding them takes a millisecond; scipy brings one of its own, found only once it is loaded.
+    import scipy.linalg  # noqa: F401
+
+    return ThreadpoolController()
+
+
+def one_blas_thread() -> AbstractContextManager[Any]:
+    """Context in which linear algebra runs on one thread."""
+    limit: AbstractContextManager[Any] = _libraries().limit(limits=1, user_api="blas")
+    return limit
+
+
 def map_blocks(function: Callable[[Any], Any], blocks: Iterable[Any]) -> list[Any]:
     """Run ``function`` on every block, over the compute threads, results in the order given.
 
@@ -33,7 +49,7 @@ def map_blocks(function: Callable[[Any], Any], blocks: Iterable[Any]) -> list[An
     """
     items = list(blocks)
     count = min(_threads, len(items))
-    with threadpool_limits(1, user_api="blas"):
+    with one_blas_thread():
         if count <= 1:
             return [function(item) for item in items]
         with ThreadPoolExecutor(count) as pool:

@@ -75,6 +75,8 @@ class PlaneWavelet:
         n0, n1 = shape
         self._rows = np.empty((taps, 2 * n1), real)
         self._lines = np.empty((4, 2 * n1 + 4 * taps), real)
+        # What one loop reads and writes must not lie in one array: it would not become vectors.
+        self._even, self._odd = np.empty(2 * n1, real), np.empty(2 * n1, real)
         self._near = np.empty((n0 // 2, n1), real)
         self._far = np.empty((max(1, n0 // 4), max(2, n1 // 2)), real)
         self._plane = np.empty((n0, 2 * n1), real)
@@ -90,7 +92,7 @@ class PlaneWavelet:
         """Image of ``coefficients``, the inverse and the adjoint of :meth:`analyse`."""
         _synthesise(
             coefficients, image, *self.shape, self.levels, self.low, self.high,
-            self._near, self._far, self._plane, self._rows, self._lines,
+            self._near, self._far, self._plane, self._rows, self._lines, self._even, self._odd,
         )  # fmt: skip
 
 
@@ -196,13 +198,22 @@ def _analyse(
 
 @compiled
 def _row_synthesise(
-    row_low: Any, row_high: Any, at: Any, length: Any, low: Any, high: Any, lines: Any, out: Any
+    row_low: Any,
+    row_high: Any,
+    at: Any,
+    length: Any,
+    low: Any,
+    high: Any,
+    lines: Any,
+    even: Any,
+    odd: Any,
+    out: Any,
 ) -> None:
     """Inverse of :func:`_row_analyse` for one row of ``length`` complex samples."""
     half = len(low) // 2
     count = length // 2
     before = half - 1
-    ext_low, ext_high, even, odd = lines[0], lines[1], lines[2], lines[3]
+    ext_low, ext_high = lines[0], lines[1]
     for k in range(before):
         index = (k - before) % count
         ext_low[2 * k] = row_low[2 * index]
@@ -278,6 +289,8 @@ def _synthesise(
     plane: Any,
     rows: Any,
     lines: Any,
+    even: Any,
+    odd: Any,
 ) -> None:
     half = len(low) // 2
     before = half - 1
@@ -292,25 +305,25 @@ def _synthesise(
         if level > 0:
             target = near if level % 2 == 1 else far
         for k in range(half0):
-            _row_synthesise(approximation[k], coefficients[k], n1, n1, low, high, lines, plane[k])
             _row_synthesise(
-                coefficients[half0 + k], coefficients[half0 + k], n1, n1, low, high, lines,
-                plane[half0 + k],
+                approximation[k], coefficients[k], n1, n1, low, high, lines, even, odd, plane[k]
+            )
+            _row_synthesise(
+                coefficients[half0 + k], coefficients[half0 + k], n1, n1, low, high, lines, even,
+                odd, plane[half0 + k],
             )  # fmt: skip
-        for q in range(half0):
-            first = (2 * q - before) % n0
-            second = (2 * q - before + 1) % n0
-            if q >= before:
-                _column_synthesise(
-                    plane, plane, q, half0 + q, width, low, high, target[first], target[second]
-                )
-            else:
-                for s in range(half):
-                    index = (q - s) % half0
-                    for j in range(width):
-                        rows[half - 1 - s, j] = plane[index, j]
-                        rows[2 * half - 1 - s, j] = plane[half0 + index, j]
-                _column_synthesise(
-                    rows, rows, half - 1, 2 * half - 1, width, low, high,
-                    target[first], target[second],
-                )  # fmt: skip
+        for q in range(min(before, half0)):
+            for s in range(half):
+                index = (q - s) % half0
+                for j in range(width):
+                    rows[half - 1 - s, j] = plane[index, j]
+                    rows[2 * half - 1 - s, j] = plane[half0 + index, j]
+            first, second = (2 * q - before) % n0, (2 * q - before + 1) % n0
+            _column_synthesise(
+                rows, rows, half - 1, 2 * half - 1, width, low, high, target[first], target[second]
+            )
+        for q in range(before, half0):
+            first = 2 * q - before
+            _column_synthesise(
+                plane, plane, q, half0 + q, width, low, high, target[first], target[first + 1]
+            )

@@ -55,7 +55,9 @@ class FrameWavelet:
         self.state = np.empty((levels, 3, *size), self.real)
         self._planes = np.empty((4, *size), self.real)
         self._taps = np.empty((2 * taps, 2 * n1), self.real)
-        self._lines = np.empty((5, 2 * (n1 + (taps - 1) * 2 ** (levels - 1))), self.real)
+        reach = 2 * (n1 + (taps - 1) * 2 ** (levels - 1))
+        # Arrays of their own: a loop that reads and writes one array would not become vectors.
+        self._lines = tuple(np.empty(reach, self.real) for _ in range(5))
         self._power = self._bands_power()
         self.symbol = np.empty(shape, self.real)
         self.rho = np.ones(levels, self.real)

@@ -63,19 +63,28 @@ def _rows_forward(
 
 
 @compiled
-def _columns_forward(
-    row: Any, gap: Any, width: Any, low: Any, high: Any, out_low: Any, out_high: Any
-) -> None:
-    """Filter along an extended row."""
+def _add_taps(row: Any, near: Any, far: Any, one: Any, two: Any, first: Any, out: Any) -> None:
+    """Out (+)= one * row[near:] + two * row[far:], set where ``first``.
+
+    Two taps a pass on slices: a loop over all taps at run-time offsets does not become vectors.
+    """
+    a, b = row[near:], row[far:]
+    if first:
+        for j in range(len(out)):
+            out[j] = one * a[j] + two * b[j]
+    else:
+        for j in range(len(out)):
+            out[j] += one * a[j] + two * b[j]
+
+
+@compiled
+def _columns_forward(row: Any, gap: Any, low: Any, high: Any, out_low: Any, out_high: Any) -> None:
+    """Filter along an extended row; filters of orthogonal wavelets have an even length."""
     step = 2 * gap
-    for j in range(width):
-        a = row[j] * low[0]
-        b = row[j] * high[0]
-        for t in range(1, len(low)):
-            a += row[j + t * step] * low[t]
-            b += row[j + t * step] * high[t]
-        out_low[j] = a
-        out_high[j] = b
+    for t in range(0, len(low), 2):
+        near, far = t * step, (t + 1) * step
+        _add_taps(row, near, far, low[t], low[t + 1], t == 0, out_low)
+        _add_taps(row, near, far, high[t], high[t + 1], t == 0, out_high)
 
 
 @compiled
@@ -121,15 +130,15 @@ def frame_push(
     tiny = np.full(1, 1e-36, source.dtype)[0]
     cut = weight / rho
     top = np.zeros(length, source.dtype)
-    low_row, high_row = lines[0, :width], lines[1, :width]
-    extended, detail, other = lines[2], lines[3, :width], lines[4, :width]
+    low_row, high_row = lines[0][:width], lines[1][:width]
+    extended, detail, other = lines[2], lines[3][:width], lines[4][:width]
     for i in range(rows):
         _rows_forward(source, i, gap, rows, width, low, high, taps, low_row, high_row)
         _spread(low_row, length, 0, reach, extended)
-        _columns_forward(extended, gap, width, low, high, approximation[i], detail)
+        _columns_forward(extended, gap, low, high, approximation[i], detail)
         a1, b1, c1 = _update(state[0, i], detail, cut, rho, relax, one, tiny, zero, top)
         _spread(high_row, length, 0, reach, extended)
-        _columns_forward(extended, gap, width, low, high, other, detail)
+        _columns_forward(extended, gap, low, high, other, detail)
         a2, b2, c2 = _update(state[1, i], other, cut, rho, relax, one, tiny, zero, top)
         a3, b3, c3 = _update(state[2, i], detail, cut, rho, relax, one, tiny, zero, top)
         sums[0] += weight * (a1 + a2 + a3)
@@ -150,18 +159,14 @@ def _dual_row(v: Any, cut: Any, rho: Any, one: Any, tiny: Any, out: Any) -> None
 
 
 @compiled
-def _columns_adjoint(
-    row_low: Any, row_high: Any, gap: Any, width: Any, low: Any, high: Any, out: Any
-) -> None:
+def _columns_adjoint(row_low: Any, row_high: Any, gap: Any, low: Any, high: Any, out: Any) -> None:
     """out[j] = sum_t low[t] row_low[j - t gap] + high[t] row_high[...], rows extended before."""
     step = 2 * gap
     before = (len(low) - 1) * step
-    for j in range(width):
-        a = row_low[before + j] * low[0] + row_high[before + j] * high[0]
-        for t in range(1, len(low)):
-            a += row_low[before - t * step + j] * low[t]
-            a += row_high[before - t * step + j] * high[t]
-        out[j] = a
+    for t in range(0, len(low), 2):
+        near, far = before - t * step, before - (t + 1) * step
+        _add_taps(row_low, near, far, low[t], low[t + 1], t == 0, out)
+        _add_taps(row_high, near, far, high[t], high[t + 1], False, out)
 
 
 @compiled
@@ -180,7 +185,7 @@ def frame_pull(
     one = np.ones(1, out.dtype)[0]
     tiny = np.full(1, 1e-36, out.dtype)[0]
     cut = weight / rho
-    dual, first, second = lines[0, :width], lines[1], lines[2]
+    dual, first, second = lines[0][:width], lines[1], lines[2]
     for i in range(rows):
         if empty:
             first[:] = 0
@@ -188,12 +193,12 @@ def frame_pull(
             _spread(approximation[i], length, start, reach, first)
         _dual_row(state[0, i], cut, rho, one, tiny, dual)
         _spread(dual, length, start, reach, second)
-        _columns_adjoint(first, second, gap, width, low, high, plane_low[i])
+        _columns_adjoint(first, second, gap, low, high, plane_low[i])
         _dual_row(state[1, i], cut, rho, one, tiny, dual)
         _spread(dual, length, start, reach, first)
         _dual_row(state[2, i], cut, rho, one, tiny, dual)
         _spread(dual, length, start, reach, second)
-        _columns_adjoint(first, second, gap, width, low, high, plane_high[i])
+        _columns_adjoint(first, second, gap, low, high, plane_high[i])
     count = len(low)
     for i in range(rows):
         if i - (count - 1) * gap >= 0:

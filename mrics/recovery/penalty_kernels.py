@@ -10,6 +10,14 @@ from typing import Any
 
 import numpy as np
 
+from mrics.recovery.group_kernels import (
+    add_squares,
+    dual_row,
+    move_row,
+    raise_top,
+    sums_of,
+    to_factors,
+)
 from mrics.recovery.kernels import compiled
 
 
@@ -92,72 +100,43 @@ def split_gradient(state: Any, image: Any, weight: Any, rho: Any, relax: Any, su
     ``sums`` as for :func:`split_bands`.
     """
     rows, width = image.shape
-    one_norm = 0.0
-    change = 0.0
-    norm = 0.0
-    zero = image[0, 0] * 0
-    one = np.ones(1, image.dtype)[0]
-    tiny = np.full(1, 1e-36, image.dtype)[0]
+    sums[:] = 0
     cut = weight / rho
     top = np.zeros(width // 2, image.dtype)
+    c2, q2, factor = np.empty_like(top), np.empty_like(top), np.empty_like(top)
     first = image[0].copy()
-    here = np.empty(width + 2, image.dtype)
-    down = np.empty(width, image.dtype)
+    down, over, above = np.empty_like(first), np.empty_like(first), np.zeros_like(first)
     right = np.empty(width + 2, image.dtype)
-    above = np.zeros(width, image.dtype)
     for i in range(rows):
         x = image[i]
         below = image[i + 1] if i + 1 < rows else first
-        here[:width] = x
-        here[width] = x[0]
-        here[width + 1] = x[1]
-        v = state[0, i]
-        w = state[1, i]
-        row_norm1 = zero
-        row_change = zero
-        row_norm = zero
-        for j in range(width // 2):
-            vr, vi = v[2 * j], v[2 * j + 1]
-            wr, wi = w[2 * j], w[2 * j + 1]
-            xr, xi = here[2 * j], here[2 * j + 1]
-            ar, ai = below[2 * j] - xr, below[2 * j + 1] - xi
-            br, bi = here[2 * j + 2] - xr, here[2 * j + 3] - xi
-            f = min(one, cut / np.sqrt(vr * vr + vi * vi + wr * wr + wi * wi + tiny))
-            pr, pi, sr, si = f * vr, f * vi, f * wr, f * wi
-            dr, di, er, ei = ar - vr + pr, ai - vi + pi, br - wr + sr, bi - wi + si
-            qr, qi, tr, ti = dr + pr, di + pi, er + sr, ei + si
-            top[j] = max(top[j], qr * qr + qi * qi + tr * tr + ti * ti)
-            g2 = ar * ar + ai * ai + br * br + bi * bi
-            row_norm1 += np.sqrt(g2)
-            row_norm += g2
-            row_change += dr * dr + di * di + er * er + ei * ei
-            vr += relax * dr
-            vi += relax * di
-            wr += relax * er
-            wi += relax * ei
-            v[2 * j] = vr
-            v[2 * j + 1] = vi
-            w[2 * j] = wr
-            w[2 * j + 1] = wi
-            f = min(one, cut / np.sqrt(vr * vr + vi * vi + wr * wr + wi * wi + tiny))
-            h = rho * (one - f - f)
-            down[2 * j] = h * vr
-            down[2 * j + 1] = h * vi
-            right[2 * j + 2] = h * wr
-            right[2 * j + 3] = h * wi
-        right[0] = right[width]
-        right[1] = right[width + 1]
+        v, w = state[0, i], state[1, i]
+        for j in range(width):
+            down[j] = below[j] - x[j]
+        for j in range(width - 2):
+            over[j] = x[j + 2] - x[j]
+        over[width - 2] = x[0] - x[width - 2]
+        over[width - 1] = x[1] - x[width - 1]
+        add_squares(down, True, c2)
+        add_squares(over, False, c2)
+        add_squares(v, True, factor)
+        add_squares(w, False, factor)
+        to_factors(factor, cut)
+        sums[4] += move_row(v, down, factor, relax, True, q2)
+        sums[4] += move_row(w, over, factor, relax, False, q2)
+        norm1, norm = sums_of(c2)
+        sums[0] += weight * norm1
+        sums[5] += norm
+        raise_top(q2, top)
+        add_squares(v, True, factor)
+        add_squares(w, False, factor)
+        to_factors(factor, cut)
+        dual_row(v, factor, rho, down)
+        dual_row(w, factor, rho, right[2:])
+        right[0], right[1] = right[width], right[width + 1]
         for j in range(width):
             x[j] = above[j] - down[j] + right[j] - right[j + 2]
-            above[j] = down[j]
-        one_norm += row_norm1
-        change += row_change
-        norm += row_norm
+        above[:] = down
     for j in range(width):
         image[0, j] += above[j]
-    sums[0] = weight * one_norm
     sums[1] = rho * np.sqrt(top.max()) / weight
-    sums[2] = 0.0
-    sums[3] = 0.0
-    sums[4] = change
-    sums[5] = norm

@@ -10,6 +10,14 @@ from typing import Any
 
 import numpy as np
 
+from mrics.recovery.group_kernels import (
+    add_squares,
+    dual_row,
+    move_row,
+    raise_top,
+    sums_of,
+    to_factors,
+)
 from mrics.recovery.kernels import compiled
 
 
@@ -24,49 +32,28 @@ def _wrapped(row: Any, out: Any) -> None:
 
 @compiled
 def _shrink_together(
-    state: Any, i: Any, bands: Any, cut: Any, rho: Any, relax: Any, top: Any, dual: Any
-) -> Any:
+    state: Any, i: Any, bands: Any, cut: Any, rho: Any, relax: Any, top: Any, dual: Any,
+    factor: Any, c2: Any, q2: Any,
+) -> Any:  # fmt: skip
     """One row of some bands, shrunk by their joint modulus.
 
     ``dual`` holds K x on entry, rho h on return; the state moves. Gives the sums of |K x|,
     |K x - z|^2 and |K x|^2; ``top`` gains the largest |K x - h|^2.
     """
-    zero = state[0, 0, 0] * 0
-    one = np.ones(1, state.dtype)[0]
-    tiny = np.full(1, 1e-36, state.dtype)[0]
-    norm1 = zero
-    change = zero
-    norm = zero
-    for j in range(state.shape[2] // 2):
-        v2 = tiny
-        for b in bands:
-            v2 += state[b, i, 2 * j] ** 2 + state[b, i, 2 * j + 1] ** 2
-        f = min(one, cut / np.sqrt(v2))
-        q2 = zero
-        c2 = zero
-        d2 = zero
-        n2 = tiny
-        for b in bands:
-            for part in range(2):
-                at = 2 * j + part
-                v, c = state[b, i, at], dual[b, i, at]
-                d = c - v + f * v
-                q = d + f * v
-                q2 += q * q
-                c2 += c * c
-                d2 += d * d
-                v += relax * d
-                state[b, i, at] = v
-                n2 += v * v
-        f = min(one, cut / np.sqrt(n2))
-        h = rho * (one - f - f)
-        for b in bands:
-            dual[b, i, 2 * j] = h * state[b, i, 2 * j]
-            dual[b, i, 2 * j + 1] = h * state[b, i, 2 * j + 1]
-        top[j] = max(top[j], q2)
-        norm1 += np.sqrt(c2)
-        change += d2
-        norm += c2
+    change = 0.0
+    for b in bands:
+        add_squares(state[b, i], b == bands[0], factor)
+        add_squares(dual[b, i], b == bands[0], c2)
+    to_factors(factor, cut)
+    for b in bands:
+        change += move_row(state[b, i], dual[b, i], factor, relax, b == bands[0], q2)
+    for b in bands:
+        add_squares(state[b, i], b == bands[0], factor)
+    to_factors(factor, cut)
+    for b in bands:
+        dual_row(state[b, i], factor, rho, dual[b, i])
+    raise_top(q2, top)
+    norm1, norm = sums_of(c2)
     return norm1, change, norm
 
 
@@ -84,6 +71,7 @@ def push_second(
     x = np.empty(width + 4, image.dtype)
     w = np.empty((2, width + 4), image.dtype)
     top = np.zeros((2, width // 2), image.dtype)
+    factor, c2, q2 = np.empty_like(top[0]), np.empty_like(top[0]), np.empty_like(top[0])
     sums[:] = 0
     for i in range(rows):
         below = image[(i + 1) % rows]
@@ -100,10 +88,30 @@ def push_second(
             dual[3, i, j] = here_1 - w[1, j]
             dual[4, i, j] = half * (here_0 - w[0, j] + here_1 - over_1[j])
         a, b, c = _shrink_together(
-            state, i, (0, 1), weights[0] / rhos[0], rhos[0], relax, top[0], dual
+            state,
+            i,
+            (0, 1),
+            weights[0] / rhos[0],
+            rhos[0],
+            relax,
+            top[0],
+            dual,
+            factor,
+            c2,
+            q2,
         )
         d, e, f = _shrink_together(
-            state, i, (2, 3, 4), weights[1] / rhos[1], rhos[1], relax, top[1], dual
+            state,
+            i,
+            (2, 3, 4),
+            weights[1] / rhos[1],
+            rhos[1],
+            relax,
+            top[1],
+            dual,
+            factor,
+            c2,
+            q2,
         )
         sums[0] += weights[0] * a + weights[1] * d
         sums[4] += b + e

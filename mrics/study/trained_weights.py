@@ -7,8 +7,8 @@ from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
-from threadpoolctl import threadpool_limits
 
+from mrics.numerics import one_blas_thread
 from mrics.recovery import recover, search_weight
 from mrics.study.ledger import Ledger
 from mrics.study.plan import PlanRow, StudyPlan
@@ -39,7 +39,7 @@ def _trained(plan: StudyPlan, row: PlanRow, folder: Path, ledger: Ledger) -> Pla
     key = content_key(trained=[unit.key for unit in units])
     kept = ledger.finished([key]).get(key)
     if kept is None:
-        with threadpool_limits(1, user_api="blas"):
+        with one_blas_thread():
             errors = [_error(unit, scan) for unit, scan in zip(units, scans, strict=True)]
             weight, trials = search_weight(lambda w: sum(error(w) for error in errors))
         kept = {"weight": weight, "trials": trials}

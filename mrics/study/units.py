@@ -10,11 +10,11 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
-from threadpoolctl import threadpool_limits
 
 from mrics.encoding import Acquisition, compress, echo_weights, undersample
 from mrics.encoding.sensitivities import KERNEL
 from mrics.errors import StudyError
+from mrics.numerics import one_blas_thread
 from mrics.protocol import Arm, Protocol, ScanFiles, play_pattern
 from mrics.quality import score_planes, taken_alone
 from mrics.quality.measures import Measures
@@ -173,7 +173,7 @@ def run_unit(unit: Unit, scan: Prepared) -> dict[str, Any]:
             unit.files.path.name,
             "Run the study again; units of scans that did not change are kept.",
         )
-    with threadpool_limits(1, user_api="blas"):
+    with one_blas_thread():
         return _computed(unit, scan)
 
 

@@ -16,10 +16,9 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
-from threadpoolctl import threadpool_limits
 
 from mrics.errors import RecoveryError
-from mrics.numerics import stream
+from mrics.numerics import one_blas_thread, stream
 from mrics.recovery.dictionary.coding import Codes, Prepared, pursue
 from mrics.recovery.dictionary.kernels import compiled
 
@@ -167,7 +166,7 @@ def learn_online(
     generator = stream(seed, "passes")
     use = np.zeros(number, np.int64)
     # Threads of linear algebra only get in the way of matrices this small.
-    with threadpool_limits(1, user_api="blas"):
+    with one_blas_thread():
         for turn in range(passes):
             order = generator.permutation(len(patches))
             use[:] = 0
@@ -252,7 +251,7 @@ def learn_ksvd(
     limit = min(sparsity, *atoms.shape)
     size = max(float(np.linalg.norm(patches)), 1e-30)
     history: list[float] = []
-    with threadpool_limits(1, user_api="blas"):
+    with one_blas_thread():
         for turn in range(rounds):
             codes = pursue(patches, Prepared(atoms), limit, error)
             dense = codes.dense(number)

@@ -6,8 +6,7 @@ import math
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 
-from threadpoolctl import threadpool_limits
-
+from mrics.numerics import one_blas_thread
 from mrics.scan.fitness.background import exact_zeros
 from mrics.scan.fitness.borders import ghosting, wrapped
 from mrics.scan.fitness.combined import root_sum_of_squares
@@ -92,7 +91,7 @@ def inspect_fully(scan: Scan, axes: Axes | None = None) -> Inspection:
     """
     view = ScanView(scan, axes if axes is not None else Axes())
     # Products are small: waiting for threads of linear algebra would cost more than they bring.
-    with threadpool_limits(1, user_api="blas"):
+    with one_blas_thread():
         findings = tuple(finding for check in CHECKS for finding in check(view))
     sigma = view.noise.sigma
     snr = signal(view) / sigma if sigma > 0 else float("inf")
