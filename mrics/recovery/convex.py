@@ -55,7 +55,7 @@ def run_planes(
         if not worker.model.load(encoding, data, i, unit, hybrid):
             return PlaneResult()
         result = worker.run(threshold / unit, iterations, tolerance)
-        worker.model.write(worker.best, unit, image[plane])
+        worker.model.write(worker.model.image, unit, image[plane])
         return result.scaled(unit)
 
     return image, each_plane(acquisition, make_worker, one)

@@ -131,6 +131,65 @@ def solve_samples(spectrum: Any, data: Any, mask: Any, symbol: Any) -> tuple[flo
 
 
 @compiled
+def solve_followed(
+    spectrum: Any, state: Any, data: Any, mask: Any, rho: Any, relax: Any
+) -> tuple[float, float, float]:
+    """:func:`solve_samples` for a number ``rho``, keeping the spectrum V of the penalty's state v.
+
+    On entry ``spectrum`` is rho times that of h = 2 z - v, so that Z = (spectrum / rho + V) / 2;
+    with X the result, V moves on by relax (X - Z). Returns ||mask Z - data||^2 besides.
+    """
+    rows, width = spectrum.shape
+    half = np.full(1, 0.5, spectrum.dtype)[0]
+    over = half / rho
+    one_mask = mask.shape[1] == 1
+    square = 0.0
+    product = 0.0
+    shrunk = 0.0
+    for i in range(rows):
+        r2 = spectrum[0, 0] * 0
+        rd = r2
+        z2 = r2
+        s, v, d, k = spectrum[i], state[i], data[i], mask[i]
+        if one_mask:
+            m = k[0]
+            scale = 1 / (m + rho)
+            for j in range(width):
+                z = over * s[j] + half * v[j]
+                x = scale * (d[j] + s[j])
+                s[j] = x
+                v[j] += relax * (x - z)
+                z = m * z - d[j]
+                z2 += z * z
+                x = m * x - d[j]
+                r2 += x * x
+                rd += x * d[j]
+        else:
+            for j in range(width // 2):
+                m = k[j]
+                scale = 1 / (m + rho)
+                zr = over * s[2 * j] + half * v[2 * j]
+                zi = over * s[2 * j + 1] + half * v[2 * j + 1]
+                xr = scale * (d[2 * j] + s[2 * j])
+                xi = scale * (d[2 * j + 1] + s[2 * j + 1])
+                s[2 * j] = xr
+                s[2 * j + 1] = xi
+                v[2 * j] += relax * (xr - zr)
+                v[2 * j + 1] += relax * (xi - zi)
+                zr = m * zr - d[2 * j]
+                zi = m * zi - d[2 * j + 1]
+                z2 += zr * zr + zi * zi
+                xr = m * xr - d[2 * j]
+                xi = m * xi - d[2 * j + 1]
+                r2 += xr * xr + xi * xi
+                rd += xr * d[2 * j] + xi * d[2 * j + 1]
+        square += r2
+        product += rd
+        shrunk += z2
+    return square, product, shrunk
+
+
+@compiled
 def split_samples(
     spectrum: Any, state: Any, data: Any, mask: Any, mu: Any, relax: Any, sums: Any
 ) -> None:

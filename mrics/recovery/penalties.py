@@ -90,10 +90,7 @@ class OrthonormalWavelet:
         self.analyse(image, self.state)
         self.balance(weight, self.state)
         self.coefficients[...] = self.state
-        penalty_kernels.split_bands(
-            self.state, self.coefficients, self.bands, self.weights, self.rho,
-            self.real.type(0), self.sums,
-        )  # fmt: skip
+        self._split(0.0)
 
     def pull(self, image: Array) -> None:
         """See :class:`splitting.Penalty`."""
@@ -102,11 +99,21 @@ class OrthonormalWavelet:
     def push(self, image: Array, relax: float) -> Array:
         """See :class:`splitting.Penalty`."""
         self.transform.analyse(image, self.coefficients)
-        penalty_kernels.split_bands(
+        self._split(relax)
+        return self.sums
+
+    def shrunk(self, image: Array) -> None:
+        """Fill ``image`` with K^H z; :attr:`shrunk_norm` is the penalty of z."""
+        self.coefficients *= 1 / self.rho
+        self.coefficients += self.state
+        self.coefficients *= self.real.type(0.5)
+        self.transform.synthesise(self.coefficients, image)
+
+    def _split(self, relax: float) -> None:
+        self.shrunk_norm = penalty_kernels.split_bands(
             self.state, self.coefficients, self.bands, self.weights, self.rho,
             self.real.type(relax), self.sums,
         )  # fmt: skip
-        return self.sums
 
 
 class Variation:

@@ -24,13 +24,15 @@ from mrics.recovery.kernels import compiled
 @compiled
 def split_bands(
     state: Any, coefficients: Any, bands: Any, weights: Any, rho: Any, relax: Any, sums: Any
-) -> None:
+) -> float:
     """Packed wavelet bands, shrunk by modulus with thresholds ``weights / rho``.
 
     ``coefficients`` hold K x on entry, rho h on return. ``sums`` (6,) is filled with the sum of
     weight * |K x|; the largest rho |K x - h| / weight over penalised bands; ||rho (K x - h)||^2
-    and ||K x||^2 over the band of weight 0; ||K x - z||^2; ||K x||^2.
+    and ||K x||^2 over the band of weight 0; ||K x - z||^2; ||K x||^2. Returns the sum of
+    weight * |z| of the state that is left.
     """
+    shrunk = 0.0
     one_norm = 0.0
     excess = 0.0
     free_dual = 0.0
@@ -53,6 +55,7 @@ def split_bands(
             row_dual = zero
             row_change = zero
             row_norm = zero
+            row_shrunk = zero
             for j in range(len(v) // 2):
                 vr, vi = v[2 * j], v[2 * j + 1]
                 cr, ci = c[2 * j], c[2 * j + 1]
@@ -71,12 +74,15 @@ def split_bands(
                 vi += relax * di
                 v[2 * j] = vr
                 v[2 * j + 1] = vi
-                f = min(one, cut / np.sqrt(vr * vr + vi * vi + tiny))
+                modulus = np.sqrt(vr * vr + vi * vi + tiny)
+                f = min(one, cut / modulus)
+                row_shrunk += modulus - f * modulus
                 h = rho * (one - f - f)
                 c[2 * j] = h * vr
                 c[2 * j + 1] = h * vi
             if weight > 0:
                 one_norm += weight * row_norm1
+                shrunk += weight * row_shrunk
             else:
                 free_dual += row_dual
                 free_point += row_norm
@@ -90,6 +96,7 @@ def split_bands(
     sums[3] = free_point
     sums[4] = change
     sums[5] = norm
+    return shrunk
 
 
 @compiled

@@ -119,12 +119,41 @@ class PlaneModel:
     def start(self) -> None:
         """Set :attr:`image` to A^H d / bound and make ready for :meth:`solve`."""
         self.image[...] = 0
+        if self.maps is None:
+            self.work[...] = self.data[0]
+            self._leave(ifft_planes(self.work, overwrite=True, axes=self.axes))
+            return
         self.gradient()
         self.image *= self.real.type(-1 / self.bound)
-        if self.maps is not None:
-            self.mu = self.real.type(_CHANNEL_PENALTY)
-            self._last[...] = self.image
-            self._split(0.0, fill=True)
+        self.mu = self.real.type(_CHANNEL_PENALTY)
+        self._last[...] = self.image
+        self._split(0.0, fill=True)
+
+    def follow(self) -> None:
+        """From :meth:`start` on, keep the spectrum of the penalty's state for :meth:`solve_both`.
+
+        One channel only: the spectrum of A^H d is d.
+        """
+        if not hasattr(self, "_followed"):
+            self._followed = np.empty((self.u, self.v), self.dtype)
+        self._followed[...] = self.data[0]
+
+    def solve_both(
+        self, symbol: Array, relax: float
+    ) -> tuple[tuple[float, float, float, float], float]:
+        """:meth:`solve` for one channel and a number ``symbol``, and ||A K^H z - d||^2 before it.
+
+        K^H K is 1, and ``relax`` what the penalty will move its state by.
+        """
+        self._outside(1 / float(symbol[0, 0]))
+        self._enter()
+        spectrum = fft_planes(self.work, overwrite=True, axes=self.axes)
+        square, product, shrunk = kernels.solve_followed(
+            spectrum.view(self.real), self._followed.view(self.real),
+            self.data[0].view(self.real), self.mask, symbol[0, 0], self.real.type(relax),
+        )  # fmt: skip
+        self._leave(ifft_planes(spectrum, overwrite=True, axes=self.axes))
+        return (square, square, product, 0.0), shrunk
 
     def solve(self, symbol: Array, relax: float) -> tuple[float, float, float, float]:
         """Data half of a splitting: :attr:`image` holds rho K^H h on entry, x on return.
