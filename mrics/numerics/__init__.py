@@ -10,7 +10,13 @@ from mrics.numerics.fourier import (
     uncentre,
 )
 from mrics.numerics.rng import stream, uniforms
-from mrics.numerics.threads import map_blocks, one_blas_thread, set_threads, threads
+from mrics.numerics.threads import (
+    map_blocks,
+    one_blas_thread,
+    set_threads,
+    stream_blocks,
+    threads,
+)
 
 __all__ = [
     "centred_fft",
@@ -23,6 +29,7 @@ __all__ = [
     "recentre",
     "set_threads",
     "stream",
+    "stream_blocks",
     "threads",
     "uncentre",
     "uniforms",

@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 import os
-from collections.abc import Callable, Iterable
-from concurrent.futures import ThreadPoolExecutor
+from collections import deque
+from collections.abc import Callable, Iterable, Iterator
+from concurrent.futures import Future, ThreadPoolExecutor
 from contextlib import AbstractContextManager
 from functools import lru_cache
 from typing import Any
@@ -54,3 +55,15 @@ def map_blocks(function: Callable[[Any], Any], blocks: Iterable[Any]) -> list[An
             return [function(item) for item in items]
         with ThreadPoolExecutor(count) as pool:
             return list(pool.map(function, items))
+
+
+def stream_blocks(function: Callable[[Any], Any], blocks: Iterable[Any]) -> Iterator[Any]:
+    """:func:`map_blocks` that hands results on while others are computed; few are held."""
+    waiting: deque[Future[Any]] = deque()
+    with one_blas_thread(), ThreadPoolExecutor(_threads) as pool:
+        for item in blocks:
+            waiting.append(pool.submit(function, item))
+            if len(waiting) > 2 * _threads:
+                yield waiting.popleft().result()
+        while waiting:
+            yield waiting.popleft().result()

@@ -125,9 +125,9 @@ def frame_push(
     rows, width = source.shape
     length = width // 2
     reach = length + (len(low) - 1) * gap
-    zero = source[0, 0] * 0
-    one = np.ones(1, source.dtype)[0]
-    tiny = np.full(1, 1e-36, source.dtype)[0]
+    zero = source.dtype.type(0)
+    one = source.dtype.type(1)
+    tiny = source.dtype.type(1e-36)
     cut = weight / rho
     top = np.zeros(length, source.dtype)
     low_row, high_row = lines[0][:width], lines[1][:width]
@@ -182,8 +182,8 @@ def frame_pull(
     length = width // 2
     reach = length + (len(low) - 1) * gap
     start = -(len(low) - 1) * gap
-    one = np.ones(1, out.dtype)[0]
-    tiny = np.full(1, 1e-36, out.dtype)[0]
+    one = out.dtype.type(1)
+    tiny = out.dtype.type(1e-36)
     cut = weight / rho
     dual, first, second = lines[0][:width], lines[1], lines[2]
     for i in range(rows):

@@ -27,8 +27,8 @@ def add_squares(row: Any, first: Any, out: Any) -> None:
 @compiled
 def to_factors(squares: Any, cut: Any) -> None:
     """Squared moduli become the part that shrinking takes off: min(1, cut / modulus)."""
-    one = np.ones(1, squares.dtype)[0]
-    tiny = np.full(1, 1e-36, squares.dtype)[0]
+    one = squares.dtype.type(1)
+    tiny = squares.dtype.type(1e-36)
     for j in range(len(squares)):
         squares[j] = min(one, cut / np.sqrt(squares[j] + tiny))
 
@@ -39,7 +39,7 @@ def move_row(v: Any, c: Any, factor: Any, relax: Any, first: Any, q2: Any) -> An
 
     ``q2`` (+)= |c - h|^2 with h = 2 z - v, set where ``first``.
     """
-    change = v[0] * 0
+    change = v.dtype.type(0)
     if first:
         for j in range(len(factor)):
             q2[j] = 0
@@ -58,7 +58,7 @@ def move_row(v: Any, c: Any, factor: Any, relax: Any, first: Any, q2: Any) -> An
 @compiled
 def dual_row(v: Any, factor: Any, rho: Any, out: Any) -> None:
     """Out = rho h of the state v."""
-    one = np.ones(1, v.dtype)[0]
+    one = v.dtype.type(1)
     for j in range(len(factor)):
         h = rho * (one - factor[j] - factor[j])
         out[2 * j] = h * v[2 * j]
@@ -68,7 +68,7 @@ def dual_row(v: Any, factor: Any, rho: Any, out: Any) -> None:
 @compiled
 def sums_of(squares: Any) -> Any:
     """Sum of the square roots, and sum."""
-    roots = squares[0] * 0
+    roots = squares.dtype.type(0)
     total = roots
     for j in range(len(squares)):
         roots += np.sqrt(squares[j])

@@ -12,8 +12,8 @@ from mrics.recovery.kernels import compiled
 @compiled
 def _group_factor(values: Any, i: Any, left: Any, right: Any, cut: Any, out: Any) -> None:
     """Out[j] = the part that shrinking takes off group j of a row: min(1, cut / modulus)."""
-    one = np.ones(1, values.dtype)[0]
-    tiny = np.full(1, 1e-36, values.dtype)[0]
+    one = values.dtype.type(1)
+    tiny = values.dtype.type(1e-36)
     out[:] = tiny
     for frame in range(values.shape[0]):
         row = values[frame, i, left:right]
@@ -47,7 +47,7 @@ def split_groups(
 
     ``rhos``: one for each band. ``sums`` (6,) alike, moduli taken over frames.
     """
-    one = np.ones(1, weights.dtype)[0]
+    one = weights.dtype.type(1)
     sums[:] = 0
     for band in range(bands.shape[0]):
         weight, rho = weights[band], rhos[band]

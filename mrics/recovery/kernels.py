@@ -31,7 +31,7 @@ def residual(spectrum: Any, data: Any, mask: Any) -> tuple[float, float]:
     square = 0.0
     product = 0.0
     for i in range(rows):
-        r2 = spectrum[0, 0] * 0
+        r2 = spectrum.dtype.type(0)
         rd = r2
         if mask.shape[1] == 1:
             m = mask[i, 0]
@@ -88,18 +88,19 @@ def solve_samples(spectrum: Any, data: Any, mask: Any, symbol: Any) -> tuple[flo
     ``mask`` is ``(rows, columns)`` or ``(rows, 1)``, and so is ``symbol``, or ``(1, 1)``.
     """
     rows, width = spectrum.shape
+    one = spectrum.dtype.type(1)
     square = 0.0
     product = 0.0
     one_mask = mask.shape[1] == 1
     one_symbol = symbol.shape[1] == 1
     for i in range(rows):
-        r2 = spectrum[0, 0] * 0
+        r2 = spectrum.dtype.type(0)
         rd = r2
         s = spectrum[i]
         d = data[i]
         if one_symbol and one_mask:
             m = mask[i, 0]
-            scale = 1 / (m + symbol[i if symbol.shape[0] > 1 else 0, 0])
+            scale = one / (m + symbol[i if symbol.shape[0] > 1 else 0, 0])
             for j in range(width):
                 x = scale * (d[j] + s[j])
                 r = m * x - d[j]
@@ -116,7 +117,7 @@ def solve_samples(spectrum: Any, data: Any, mask: Any, symbol: Any) -> tuple[flo
                     m = k[j]
                 if not one_symbol:
                     t = y[j]
-                scale = 1 / (m + t)
+                scale = one / (m + t)
                 re = scale * (d[2 * j] + s[2 * j])
                 im = scale * (d[2 * j + 1] + s[2 * j + 1])
                 s[2 * j] = re
@@ -140,20 +141,21 @@ def solve_followed(
     with X the result, V moves on by relax (X - Z). Returns ||mask Z - data||^2 besides.
     """
     rows, width = spectrum.shape
-    half = np.full(1, 0.5, spectrum.dtype)[0]
+    one = spectrum.dtype.type(1)
+    half = spectrum.dtype.type(0.5)
     over = half / rho
     one_mask = mask.shape[1] == 1
     square = 0.0
     product = 0.0
     shrunk = 0.0
     for i in range(rows):
-        r2 = spectrum[0, 0] * 0
+        r2 = spectrum.dtype.type(0)
         rd = r2
         z2 = r2
         s, v, d, k = spectrum[i], state[i], data[i], mask[i]
         if one_mask:
             m = k[0]
-            scale = 1 / (m + rho)
+            scale = one / (m + rho)
             for j in range(width):
                 z = over * s[j] + half * v[j]
                 x = scale * (d[j] + s[j])
@@ -167,7 +169,7 @@ def solve_followed(
         else:
             for j in range(width // 2):
                 m = k[j]
-                scale = 1 / (m + rho)
+                scale = one / (m + rho)
                 zr = over * s[2 * j] + half * v[2 * j]
                 zi = over * s[2 * j + 1] + half * v[2 * j + 1]
                 xr = scale * (d[2 * j] + s[2 * j])
@@ -202,8 +204,9 @@ def split_samples(
     Re<p, data> over acquired samples, ||p||^2 over the others.
     """
     rows, width = spectrum.shape
+    one = spectrum.dtype.type(1)
     for i in range(rows):
-        r2 = spectrum[0, 0] * 0
+        r2 = spectrum.dtype.type(0)
         p2 = r2
         pd = r2
         off = r2
@@ -215,22 +218,23 @@ def split_samples(
         for j in range(width // 2):
             if mask.shape[1] > 1:
                 m = k[j]
-            scale = 1 / (m + mu)
+            scale = one / (m + mu)
             for part in range(2):
                 at = 2 * j + part
                 x = g[at]
                 old = v[at]
                 data_here = d[at]
                 u = scale * (data_here + mu * old)
-                p = mu * (x - 2 * u + old)
+                p = mu * (x - u - u + old)
                 r = m * x - data_here
                 r2 += r * r
                 p2 += m * p * p
                 pd += m * p * data_here
-                off += (1 - m) * p * p
+                off += (one - m) * p * p
                 new = old + relax * (x - u)
                 v[at] = new
-                g[at] = 2 * scale * (data_here + mu * new) - new
+                fresh = scale * (data_here + mu * new)
+                g[at] = fresh + fresh - new
         sums[0] += r2
         sums[1] += p2
         sums[2] += pd
@@ -252,10 +256,11 @@ def blend(image: Any, gathered: Any, last: Any, gap: Any, mu: Any, scale: Any) -
 def divide_symbol(spectrum: Any, symbol: Any, plus: Any) -> None:
     """Spectrum /= symbol + plus, ``symbol`` real (rows, columns)."""
     rows, width = spectrum.shape
+    one = spectrum.dtype.type(1)
     for i in range(rows):
         s, t = spectrum[i], symbol[i]
         for j in range(width // 2):
-            scale = 1 / (t[j] + plus)
+            scale = one / (t[j] + plus)
             s[2 * j] *= scale
             s[2 * j + 1] *= scale
 
@@ -267,7 +272,7 @@ def replace_last(image: Any, gap: Any, last: Any) -> float:
     total = 0.0
     for i in range(rows):
         x, o, w = image[i], last[i], gap[i]
-        row = image[0, 0] * 0
+        row = image.dtype.type(0)
         for j in range(width // 2):
             re = w[j] * (x[2 * j] - o[2 * j])
             im = w[j] * (x[2 * j + 1] - o[2 * j + 1])
@@ -281,8 +286,8 @@ def replace_last(image: Any, gap: Any, last: Any) -> float:
 @compiled
 def shrink(values: Any, bands: Any, thresholds: Any) -> None:
     """Shrink coefficients by modulus in place, band by band."""
-    one = np.ones(1, thresholds.dtype)[0]
-    tiny = np.full(1, 1e-36, thresholds.dtype)[0]
+    one = thresholds.dtype.type(1)
+    tiny = thresholds.dtype.type(1e-36)
     for band in range(bands.shape[0]):
         cut = thresholds[band]
         if cut > 0:
@@ -327,7 +332,7 @@ def shifted_momentum(
     total_turn = 0.0
     for i in range(rows):
         source = moved[(i + down) % rows]
-        change = point[0, 0] * 0
+        change = point.dtype.type(0)
         norm = change
         turn = change
         for part in range(2):

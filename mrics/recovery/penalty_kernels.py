@@ -39,9 +39,9 @@ def split_bands(
     free_point = 0.0
     change = 0.0
     norm = 0.0
-    zero = state[0, 0] * 0
-    one = np.ones(1, weights.dtype)[0]
-    tiny = np.full(1, 1e-36, weights.dtype)[0]
+    zero = state.dtype.type(0)
+    one = weights.dtype.type(1)
+    tiny = weights.dtype.type(1e-36)
     top = np.empty(state.shape[1] // 2, state.dtype)  # running maxima per column vectorise
     for band in range(bands.shape[0]):
         weight = weights[band]

@@ -67,7 +67,7 @@ def push_second(
     :func:`penalty_kernels.split_bands`.
     """
     rows, width = image.shape
-    half = np.full(1, np.sqrt(0.5), image.dtype)[0]
+    half = image.dtype.type(np.sqrt(0.5))
     x = np.empty(width + 4, image.dtype)
     w = np.empty((2, width + 4), image.dtype)
     top = np.zeros((2, width // 2), image.dtype)
@@ -140,8 +140,8 @@ def _add_along(row: Any, factor: Any, ahead: Any, out: Any) -> None:
 def pull_second(dual: Any, image: Any, field: Any) -> None:
     """Adjoint of the bands: the x part to ``image``, the w part to ``field``."""
     rows, width = image.shape
-    one = np.ones(1, image.dtype)[0]
-    half = np.full(1, np.sqrt(0.5), image.dtype)[0]
+    one = image.dtype.type(1)
+    half = image.dtype.type(np.sqrt(0.5))
     for i in range(rows):
         above, below = (i - 1) % rows, (i + 1) % rows
         for j in range(width):
@@ -179,7 +179,7 @@ def eliminate(field: Any, down: Any, right: Any, rhos: Any, out: Any) -> None:
     the forward ones are -conj(b). ``rhos`` holds rho_1, rho_2 and half of rho_2.
     """
     rows, width = out.shape
-    one = np.ones(1, out.dtype)[0]
+    one = out.dtype.type(1)
     for i in range(rows):
         r, p, q, o = down[i], field[0, i], field[1, i], out[i]
         for j in range(width // 2):
@@ -195,7 +195,7 @@ def eliminate(field: Any, down: Any, right: Any, rhos: Any, out: Any) -> None:
 def substitute(spectrum: Any, field: Any, down: Any, right: Any, rhos: Any) -> None:
     """Field = (rho_1 I + rho_2 E^H E)^-1 (field + rho_1 D spectrum), all in k-space."""
     rows, width = spectrum.shape
-    one = np.ones(1, spectrum.dtype)[0]
+    one = spectrum.dtype.type(1)
     for i in range(rows):
         r, p, q, x = down[i], field[0, i], field[1, i], spectrum[i]
         for j in range(width // 2):

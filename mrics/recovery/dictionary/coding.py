@@ -65,14 +65,19 @@ class Codes:
 
 
 class Prepared:
-    """Atoms as the kernels read them: transposed, with their Gram matrix."""
+    """Atoms with their Gram matrix, and the matrix that correlates patches with them.
+
+    ``columns`` is (n, atoms); for complex atoms (2 n, 2 atoms), real parts before imaginary ones,
+    so that a row of patch samples times it is conj(atom) . patch.
+    """
 
     def __init__(self, atoms: Array) -> None:
         self.atoms = np.ascontiguousarray(atoms)
         self.complex = np.iscomplexobj(atoms)
         gram = np.conj(self.atoms) @ self.atoms.T
         if self.complex:
-            self.columns = np.ascontiguousarray(np.stack([atoms.T.real, atoms.T.imag]))
+            re, im = atoms.T.real, atoms.T.imag
+            self.columns = np.ascontiguousarray(np.block([[re, -im], [im, re]]))
             self.gram = np.ascontiguousarray(np.stack([gram.real, gram.imag]))
         else:
             self.columns = np.ascontiguousarray(self.atoms.T)
@@ -165,16 +170,17 @@ def pursue(patches: Array, prepared: Prepared, limit: int, error: float | Array 
         block[:, 0] = patches[part].real
         if turned:
             block[:, 1] = patches[part].imag
+        shape = (len(block), sides, len(prepared.atoms))
+        alpha = (block.reshape(-1, len(prepared.columns)) @ prepared.columns).reshape(shape)
         run(
-            block, prepared.columns, prepared.gram, limit, np.ascontiguousarray(targets[part]),
+            block, alpha, prepared.gram, limit, np.ascontiguousarray(targets[part]),
             index[part], values[part], counts[part], residual[part],
         )  # fmt: skip
 
     map_blocks(one, range(0, count, CHUNK))
     joined = values[:, 0] + 1j * values[:, 1] if turned else values[:, 0]
-    kept = np.arange(limit) < counts[:, None]
     kind = np.result_type(real, np.complex64) if turned else real
-    return Codes(np.where(kept, index, 0), np.where(kept, joined, 0).astype(kind), counts, residual)
+    return Codes(index, joined.astype(kind, copy=False), counts, residual)
 
 
 def _check(patches: Array, atoms: Array, method: str, sparsity: int | None, weight: float) -> None:

@@ -8,9 +8,10 @@ e_1, e_2, ..., the rows q_t = D^H e_t hold the Cholesky factor of the chosen Gra
     l^2 = G_jj - sum_t |q_t[j]|^2,   q_k = (G_:j - sum_t conj(q_t[j]) q_t) / l,
     z_k = a_j / l,   a <- a - z_k q_k,   ||r||^2 <- ||r||^2 - |z_k|^2.
 
-Real atoms take several right sides that share their atoms (the real and imaginary part of a
-complex patch, each with its own coefficient); complex atoms have kernels of their own, with real
-and imaginary parts in separate arrays.
+Correlations are one matrix product for many patches, made by the caller. Real atoms take several
+right sides that share their atoms (the real and imaginary part of a complex patch, each with its
+own coefficient); complex atoms have a kernel of their own, with real and imaginary parts in
+separate rows.
 """
 
 from __future__ import annotations
@@ -29,85 +30,13 @@ compiled = numba.njit(
 )
 #: squared length of an atom beyond the atoms chosen, below which it counts as dependent on them
 _DEPENDENT = 1e-5
-_BLOCK = 32
-#: patches whose correlations are taken together
-_TOGETHER = 8
+#: lanes that the largest correlation is looked for in
+LANES = 32
 
 
 @compiled
-def _largest(power: Any) -> Any:
-    """First place of the largest of numbers from 0 up; maxima of blocks keep it branch-free."""
-    number = len(power)
-    whole = number - number % _BLOCK
-    best, at = power[0] * 0 - 1, 0
-    for start in range(0, whole, _BLOCK):
-        most = power[start]
-        for n in range(start + 1, start + _BLOCK):
-            most = power[n] if power[n] > most else most
-        if most > best:
-            best, at = most, start
-    for n in range(at, min(at + _BLOCK, number)):
-        if power[n] == best:
-            at = n
-            break
-    for n in range(whole, number):
-        if power[n] > best:
-            best, at = power[n], n
-    return at
-
-
-@compiled
-def _correlate(patch: Any, columns: Any, out: Any) -> None:
-    """Make ``out`` the sum over samples i of patch[i] times row i of ``columns`` (sample, atom)."""
-    length = len(patch)
-    whole = length - length % 8
-    for n in range(len(out)):
-        out[n] = 0
-    for i in range(0, whole, 8):
-        a, b, c, d = patch[i], patch[i + 1], patch[i + 2], patch[i + 3]
-        e, f, g, h = patch[i + 4], patch[i + 5], patch[i + 6], patch[i + 7]
-        one, two, three, four = columns[i], columns[i + 1], columns[i + 2], columns[i + 3]
-        five, six, seven, eight = columns[i + 4], columns[i + 5], columns[i + 6], columns[i + 7]
-        for n in range(len(out)):
-            near = a * one[n] + b * two[n] + c * three[n] + d * four[n]
-            out[n] += near + (e * five[n] + f * six[n] + g * seven[n] + h * eight[n])
-    for i in range(whole, length):
-        a = patch[i]
-        row = columns[i]
-        for n in range(len(out)):
-            out[n] += a * row[n]
-
-
-@compiled
-def pursue_one(
-    patch: Any,
-    columns: Any,
-    gram: Any,
-    limit: Any,
-    target: Any,
-    alpha: Any,
-    power: Any,
-    q: Any,
-    z: Any,
-    chosen: Any,
-    values: Any,
-) -> Any:
-    """Code one patch of shape (sides, n) over real atoms; (atoms used, squared residual).
-
-    ``chosen`` and ``values`` (sides, limit) receive the atoms and coefficients; the others are
-    workspace. It stops at ``limit`` atoms or at a squared residual of ``target``.
-    """
-    energy = _energy(patch)
-    if energy <= target or energy <= 0 or limit == 0:
-        return 0, energy
-    for r in range(patch.shape[0]):
-        _correlate(patch[r], columns, alpha[r])
-    own = values[: patch.shape[0]]
-    return _follow(energy, gram, limit, target, alpha, power, q, z, chosen, own)
-
-
-@compiled
-def _energy(patch: Any) -> Any:
+def energy_of(patch: Any) -> Any:
+    """Sum of squares of (side, n)."""
     energy = 0.0
     for r in range(patch.shape[0]):
         for i in range(patch.shape[1]):
@@ -116,31 +45,71 @@ def _energy(patch: Any) -> Any:
 
 
 @compiled
-def _follow(
+def _largest(alpha: Any, power: Any, lanes: Any) -> Any:
+    """First atom of the largest squared correlation, summed over the sides of ``alpha``.
+
+    Lane n of ``lanes`` holds the largest of atoms n, n + LANES, ...: maxima of neighbours become
+    vectors, a running maximum does not. ``power`` is filled with the squares.
+    """
+    for r in range(alpha.shape[0]):
+        row = alpha[r]
+        if r == 0:
+            for n in range(len(power)):
+                power[n] = row[n] * row[n]
+        else:
+            for n in range(len(power)):
+                power[n] += row[n] * row[n]
+    for n in range(LANES):
+        lanes[n] = 0
+    for start in range(0, len(power), LANES):
+        part = power[start : start + LANES]
+        for n in range(len(part)):
+            lanes[n] = max(lanes[n], part[n])
+    one, two, three, four = lanes[0], lanes[1], lanes[2], lanes[3]
+    for n in range(4, LANES, 4):
+        one = lanes[n] if lanes[n] > one else one
+        two = lanes[n + 1] if lanes[n + 1] > two else two
+        three = lanes[n + 2] if lanes[n + 2] > three else three
+        four = lanes[n + 3] if lanes[n + 3] > four else four
+    most = max(max(one, two), max(three, four))
+    at = len(power) - 1
+    for lane in range(LANES):
+        if lanes[lane] == most:
+            for n in range(lane, at, LANES):
+                if power[n] == most:
+                    at = n
+                    break
+    return at
+
+
+@compiled
+def pursue_one(
     energy: Any,
     gram: Any,
     limit: Any,
     target: Any,
     alpha: Any,
     power: Any,
+    lanes: Any,
     q: Any,
     z: Any,
     chosen: Any,
     values: Any,
 ) -> Any:
-    """Choose atoms one by one, given a patch's energy and its correlations ``alpha``."""
+    """Code one patch of ``energy`` over real atoms; (atoms used, squared residual).
+
+    ``alpha`` (side, atoms) holds its correlations and is destroyed. ``chosen`` and ``values``
+    (side, limit) receive the atoms and coefficients; ``power``, ``lanes``, ``q`` (limit, atoms) and
+    ``z`` (side + 1, limit) are workspace. It slanes at ``limit`` atoms or at a squared residual of
+    ``target``.
+    """
+    if energy <= target or energy <= 0:
+        return 0, energy
     sides, atoms = len(values), len(power)
     floor = 1e-12 * energy
     count = 0
     while count < limit and energy > target and energy > floor:
-        row = alpha[0]
-        for n in range(atoms):
-            power[n] = row[n] * row[n]
-        for r in range(1, sides):
-            row = alpha[r]
-            for n in range(atoms):
-                power[n] += row[n] * row[n]
-        j = _largest(power)
+        j = _largest(alpha, power, lanes)
         if power[j] <= floor * 1e-3:
             break
         square = gram[j, j]
@@ -148,7 +117,7 @@ def _follow(
             square -= q[t, j] * q[t, j]
         if square < _DEPENDENT:
             break
-        scale = 1 / np.sqrt(square)
+        scale = power.dtype.type(1) / np.sqrt(square)
         chosen[count] = j
         for r in range(sides):
             z[r, count] = alpha[r, j] * scale
@@ -187,13 +156,13 @@ def _follow(
 
 @compiled
 def pursue_one_complex(
-    patch: Any,
-    columns: Any,
+    energy: Any,
     gram: Any,
     limit: Any,
     target: Any,
     alpha: Any,
     power: Any,
+    lanes: Any,
     q: Any,
     z: Any,
     chosen: Any,
@@ -201,31 +170,17 @@ def pursue_one_complex(
 ) -> Any:
     """The same for complex atoms: real and imaginary parts along the first axis of all arrays.
 
-    ``patch`` (2, n), ``columns`` (2, n, atoms), ``gram`` (2, atoms, atoms), ``q`` (2, limit,
-    atoms), ``z`` (3, limit), ``values`` (2, limit).
+    ``alpha`` (2, atoms), ``gram`` (2, atoms, atoms), ``q`` (2, limit, atoms), ``z`` (3, limit),
+    ``values`` (2, limit).
     """
-    atoms = len(power)
-    energy = 0.0
-    for r in range(2):
-        for i in range(patch.shape[1]):
-            energy += patch[r, i] * patch[r, i]
-    floor = 1e-12 * energy
-    if energy <= target or energy <= 0 or limit == 0:
+    if energy <= target or energy <= 0:
         return 0, energy
+    atoms = len(power)
+    floor = 1e-12 * energy
     re, im = alpha[0], alpha[1]
-    _correlate(patch[0], columns[0], re)
-    _correlate(patch[1], columns[1], power)
-    for n in range(atoms):
-        re[n] += power[n]
-    _correlate(patch[1], columns[0], im)
-    _correlate(patch[0], columns[1], power)
-    for n in range(atoms):
-        im[n] -= power[n]
     count = 0
     while count < limit and energy > target and energy > floor:
-        for n in range(atoms):
-            power[n] = re[n] * re[n] + im[n] * im[n]
-        j = _largest(power)
+        j = _largest(alpha, power, lanes)
         if power[j] <= floor * 1e-3:
             break
         square = gram[0, j, j]
@@ -233,7 +188,7 @@ def pursue_one_complex(
             square -= q[0, t, j] * q[0, t, j] + q[1, t, j] * q[1, t, j]
         if square < _DEPENDENT:
             break
-        scale = 1 / np.sqrt(square)
+        scale = power.dtype.type(1) / np.sqrt(square)
         chosen[count] = j
         zr, zi = re[j] * scale, im[j] * scale
         z[0, count], z[1, count], z[2, count] = zr, zi, scale
@@ -253,6 +208,7 @@ def pursue_one_complex(
                     fi[n] -= a * qi[n] - b * qr[n]
             for n in range(atoms):
                 re[n] -= zr * fr[n] - zi * fi[n]
+            for n in range(atoms):
                 im[n] -= zr * fi[n] + zi * fr[n]
         count += 1
     for k in range(count - 1, -1, -1):
@@ -269,7 +225,7 @@ def pursue_one_complex(
 @compiled
 def pursue_rows(
     patches: Any,
-    columns: Any,
+    alpha: Any,
     gram: Any,
     limit: Any,
     targets: Any,
@@ -278,53 +234,24 @@ def pursue_rows(
     counts: Any,
     residual: Any,
 ) -> None:
-    """Code (patch, side, n) over real atoms: index (patch, limit), values (patch, side, limit)."""
-    sides, atoms = patches.shape[1], columns.shape[1]
-    kind = patches.dtype
-    alpha = np.empty((_TOGETHER, sides, atoms), kind)
-    power = np.empty(atoms, kind)
-    q = np.empty((limit, atoms), kind)
-    z = np.empty((sides + 1, limit), kind)
-    for start in range(0, patches.shape[0], _TOGETHER):
-        stop = min(start + _TOGETHER, patches.shape[0])
-        _correlate_some(patches[start:stop], columns, alpha)
-        for p in range(start, stop):
-            energy = _energy(patches[p])
-            counts[p], residual[p] = 0, energy
-            if energy > targets[p] and energy > 0:
-                counts[p], residual[p] = _follow(
-                    energy, gram, limit, targets[p], alpha[p - start], power, q, z, index[p],
-                    values[p],
-                )  # fmt: skip
+    """Code (patch, side, n) over real atoms, correlations (patch, side, atoms) given.
 
-
-@compiled
-def _correlate_some(patches: Any, columns: Any, out: Any) -> None:
-    """Correlations of a few patches: a row of ``columns`` serves all of them while in cache."""
-    length = patches.shape[2]
-    whole = length - length % 4
-    out[:] = 0
-    for i in range(0, whole, 4):
-        one, two, three, four = columns[i], columns[i + 1], columns[i + 2], columns[i + 3]
-        for p in range(patches.shape[0]):
-            for r in range(patches.shape[1]):
-                patch, row = patches[p, r], out[p, r]
-                a, b, c, d = patch[i], patch[i + 1], patch[i + 2], patch[i + 3]
-                for n in range(len(row)):
-                    row[n] += a * one[n] + b * two[n] + c * three[n] + d * four[n]
-    for i in range(whole, length):
-        one = columns[i]
-        for p in range(patches.shape[0]):
-            for r in range(patches.shape[1]):
-                row, a = out[p, r], patches[p, r, i]
-                for n in range(len(row)):
-                    row[n] += a * one[n]
+    ``index`` (patch, limit) and ``values`` (patch, side, limit) are filled up to ``counts``.
+    """
+    sides, atoms = alpha.shape[1], alpha.shape[2]
+    power, lanes = np.empty(atoms, alpha.dtype), np.empty(LANES, alpha.dtype)
+    q, z = np.empty((limit, atoms), alpha.dtype), np.empty((sides + 1, limit), alpha.dtype)
+    for p in range(patches.shape[0]):
+        counts[p], residual[p] = pursue_one(
+            energy_of(patches[p]), gram, limit, targets[p], alpha[p], power, lanes, q, z, index[p],
+            values[p],
+        )  # fmt: skip
 
 
 @compiled
 def pursue_rows_complex(
     patches: Any,
-    columns: Any,
+    alpha: Any,
     gram: Any,
     limit: Any,
     targets: Any,
@@ -334,13 +261,11 @@ def pursue_rows_complex(
     residual: Any,
 ) -> None:
     """The same for complex atoms; shapes as in :func:`pursue_one_complex`."""
-    atoms = columns.shape[2]
-    kind = patches.dtype
-    alpha = np.empty((2, atoms), kind)
-    power = np.empty(atoms, kind)
-    q = np.empty((2, limit, atoms), kind)
-    z = np.empty((3, limit), kind)
+    atoms = alpha.shape[2]
+    power, lanes = np.empty(atoms, alpha.dtype), np.empty(LANES, alpha.dtype)
+    q, z = np.empty((2, limit, atoms), alpha.dtype), np.empty((3, limit), alpha.dtype)
     for p in range(patches.shape[0]):
         counts[p], residual[p] = pursue_one_complex(
-            patches[p], columns, gram, limit, targets[p], alpha, power, q, z, index[p], values[p]
-        )
+            energy_of(patches[p]), gram, limit, targets[p], alpha[p], power, lanes, q, z, index[p],
+            values[p],
+        )  # fmt: skip

@@ -10,13 +10,13 @@ import numpy as np
 from numpy.typing import NDArray
 
 from mrics.errors import RecoveryError
-from mrics.numerics import map_blocks, stream
+from mrics.numerics import map_blocks, stream, stream_blocks
 from mrics.recovery.dictionary import strips
 from mrics.recovery.dictionary.coding import Prepared
 
 Array = NDArray[Any]
-#: rows of patch positions a thread takes at a time, and tasks between two reductions
-_ROWS, _TASKS = 8, 32
+#: rows of patch positions a thread takes at a time
+_ROWS = 8
 #: share of the largest patch energy a chosen patch has at least
 ENERGY_SHARE = 1e-3
 
@@ -187,15 +187,15 @@ def choose(
         rows = (places[:, 1] + layout.size[0] // 2) % u
         cols = (places[:, 2] + layout.size[1] // 2) % v
         places = places[body[middle[places[:, 0]], rows, cols]]
-    kept = []
-    energies = []
-    for start in range(0, len(places), 4096):
+
+    def one(start: int) -> tuple[Array, Array]:
         block = without_mean(cut(stack, layout, places[start : start + 4096]), layout.layers)
-        kept.append(block)
-        energies.append(np.sum(np.abs(block) ** 2, axis=1))
+        return block, np.sum(np.abs(block) ** 2, axis=1)
+
+    kept = map_blocks(one, range(0, len(places), 4096))
     if not kept:
         return np.empty((0, layout.length), stack.dtype)
-    patches, energy = np.concatenate(kept), np.concatenate(energies)
+    patches, energy = (np.concatenate(parts) for parts in zip(*kept, strict=True))
     good = energy > ENERGY_SHARE * energy.max(initial=0)
     return patches[good][:count]
 
@@ -271,15 +271,14 @@ def code_and_average(
         return group, some, out.view(stack.dtype), share.view(stack.dtype), counts, parts
 
     tasks = [(g, f) for g in range(len(layout.groups)) for f in range(0, len(rows), _ROWS)]
-    for start in range(0, len(tasks), _TASKS):
-        for group, some, out, share, counts, parts in map_blocks(one, tasks[start:][:_TASKS]):
-            low, high = int(some[0]), int(some[-1]) + pu
-            for layer, plane in enumerate(layout.groups[group]):
-                total[plane, low:high] += out[layer]
-                weight[plane, low:high] += share
-            use += counts
-            at = np.ix_((some - before) % u, (cols - left) % v)
-            residual[group][at], used[group][at] = parts
+    for group, some, out, share, counts, parts in stream_blocks(one, tasks):
+        low, high = int(some[0]), int(some[-1]) + pu
+        for layer, plane in enumerate(layout.groups[group]):
+            total[plane, low:high] += out[layer]
+            weight[plane, low:high] += share
+        use += counts
+        at = np.ix_((some - before) % u, (cols - left) % v)
+        residual[group][at], used[group][at] = parts
     if layout.border == "reflect":
         inside = (slice(None), slice(before, before + u), slice(left, left + v))
         return Averaged(_divided(total[inside], weight[inside]), residual, used, use, patches)
@@ -292,6 +291,10 @@ def code_and_average(
 def _divided(total: Array, weight: Array) -> Array:
     """Real and imaginary part each by its own weight."""
     image = np.empty_like(total)
-    image.real = total.real / weight.real
-    image.imag = total.imag / weight.imag
+
+    def one(plane: int) -> None:
+        np.divide(total[plane].real, weight[plane].real, out=image[plane].real)
+        np.divide(total[plane].imag, weight[plane].imag, out=image[plane].imag)
+
+    map_blocks(one, range(len(image)))
     return image

@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from mrics.numerics import fft_planes, ifft_planes
+from mrics.numerics import fft_planes, ifft_planes, map_blocks
 
 Array = NDArray[Any]
 #: low frequencies the phase is taken from where no calibration region is stated: n / 4
@@ -37,8 +37,13 @@ def smooth_phase(stack: Array, calibration: Sequence[int] = ()) -> Array:
         k = (np.arange(n) + n // 2) % n - n // 2
         line = np.where(np.abs(k) <= half, np.cos(np.pi * k / (2 * half + 1)) ** 2, 0)
         window = window * line.astype(window.dtype).reshape((-1, 1) if axis == 0 else (1, -1))
-    low = ifft_planes(fft_planes(stack) * window)
-    modulus = np.abs(low)
-    held = modulus > 0
-    factors: Array = np.where(held, low / np.where(held, modulus, 1), 1).astype(stack.dtype)
+    factors = np.empty_like(stack)
+
+    def one(plane: int) -> None:
+        low = ifft_planes(fft_planes(stack[plane]) * window, overwrite=True)
+        modulus = np.abs(low)
+        factors[plane] = 1
+        np.divide(low, modulus, out=factors[plane], where=modulus > 0)
+
+    map_blocks(one, range(len(stack)))
     return factors

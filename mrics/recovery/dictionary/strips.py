@@ -9,7 +9,13 @@ from typing import Any
 
 import numpy as np
 
-from mrics.recovery.dictionary.kernels import compiled, pursue_one, pursue_one_complex
+from mrics.recovery.dictionary.kernels import (
+    LANES,
+    compiled,
+    energy_of,
+    pursue_one,
+    pursue_one_complex,
+)
 
 
 @compiled
@@ -17,7 +23,7 @@ def _centre(image: Any, u: Any, v: Any, pu: Any, pv: Any, patch: Any, means: Any
     """Patch of all layers at (u, v), real and imaginary rows, each layer's mean apart."""
     i = 0
     for layer in range(image.shape[0]):
-        a, b = patch[0, 0] * 0, patch[0, 0] * 0
+        a, b = patch.dtype.type(0), patch.dtype.type(0)
         start = i
         for y in range(u, u + pu):
             for x in range(v, v + pv):
@@ -66,9 +72,14 @@ def denoise_strip(
     length = layers * pu * pv
     number = gram.shape[-1]
     kind = image.dtype
-    patch, estimate = np.empty((2, length), kind), np.empty((2, length), kind)
-    means, factors = np.empty((2, layers), kind), np.empty(2, kind)
-    alpha, power = np.empty((2, number), kind), np.empty(number, kind)
+    sides = 1 if turned else 2
+    many = len(places)
+    patches, means = np.empty((many, 2, length), kind), np.empty((many, 2, layers), kind)
+    wanted = np.empty((sides * many, columns.shape[0]), kind)
+    alpha = np.empty((sides * many, columns.shape[1]), kind)
+    energies, slots = np.empty((many, sides)), np.empty((many, sides), np.int64)
+    estimate, factors = np.empty((2, length), kind), np.empty(2, kind)
+    power, lanes = np.empty(number, kind), np.empty(LANES, kind)
     # Two branches: a compiled function has one type for each name on each of them.
     if turned:  # noqa: SIM108
         q = np.empty((2, limit, number), kind)
@@ -77,16 +88,32 @@ def denoise_strip(
     z = np.empty((3, limit), kind)
     chosen, values = np.empty(limit, np.int32), np.empty((2, limit), kind)
     for row in range(len(rows)):
-        for place in range(len(places)):
-            u, v = rows[row], places[place]
-            _centre(image, u, v, pu, pv, patch, means)
+        u = rows[row]
+        # One matrix product for the patches of a row that are to be coded.
+        active = 0
+        for place in range(many):
+            patch = patches[place]
+            _centre(image, u, places[place], pu, pv, patch, means[place])
+            parts = patch.reshape(sides, -1)
+            for part in range(sides):
+                energy = energy_of(parts[part : part + 1])
+                energies[place, part] = energy
+                slots[place, part] = active
+                if energy > target:
+                    wanted[active] = parts[part]
+                    active += 1
+        if active > 0:
+            np.dot(wanted[:active], columns, alpha[:active])
+        for place in range(many):
+            v = places[place]
             estimate[:, :] = 0
             used[row, place] = 0
             residual[row, place] = 0
             if turned:
                 count, left = pursue_one_complex(
-                    patch, columns, gram, limit, target, alpha, power, q, z, chosen, values
-                )
+                    energies[place, 0], gram, limit, target, alpha[slots[place, 0]].reshape(2, -1),
+                    power, lanes, q, z, chosen, values,
+                )  # fmt: skip
                 used[row, place] = count
                 residual[row, place] = left
                 factors[:] = 1 / (1.0 + count)
@@ -96,12 +123,14 @@ def denoise_strip(
                     a, b = values[0, k], values[1, k]
                     for i in range(length):
                         estimate[0, i] += a * one[i] - b * two[i]
+                    for i in range(length):
                         estimate[1, i] += b * one[i] + a * two[i]
             else:
                 for part in range(2):
+                    slot = slots[place, part]
                     count, left = pursue_one(
-                        patch[part : part + 1], columns, gram, limit, target, alpha, power, q, z,
-                        chosen, values,
+                        energies[place, part], gram, limit, target, alpha[slot : slot + 1], power,
+                        lanes, q, z, chosen, values[:1],
                     )  # fmt: skip
                     used[row, place] += count
                     residual[row, place] += left
@@ -117,7 +146,7 @@ def denoise_strip(
                 for y in range(u, u + pu):
                     for x in range(v, v + pv):
                         for part in range(2):
-                            value = estimate[part, i] + means[part, layer]
+                            value = estimate[part, i] + means[place, part, layer]
                             out[layer, y, 2 * x + part] += factors[part] * value
                         i += 1
             for y in range(u, u + pu):
