@@ -79,6 +79,30 @@ def test_gap_bounds_the_distance_to_the_optimum(points):
     assert best.reached
 
 
+@pytest.mark.parametrize("case", ["points", "lines"])
+@pytest.mark.parametrize("iterations", [1, 2, 25, 1000])
+def test_the_objective_is_that_of_the_image_handed_back(case, iterations, request):
+    """Against PyWavelets and numpy's FFT in double precision, however many iterations ran."""
+    acquisition = request.getfixturevalue(case)
+    levels = 2
+    result = recover(
+        acquisition, weight=1.0, shift="none", wavelet="db2", levels=levels,
+        iterations=iterations, tolerance=1e-9,
+    )  # fmt: skip
+    total = 0.0
+    for image, data, index in zip(
+        result.image, acquisition.kspace[:, 0], acquisition.pattern_index, strict=True
+    ):
+        image = image.astype(np.complex128)
+        kspace = np.fft.fftshift(np.fft.fft2(np.fft.ifftshift(image), norm="ortho"))
+        measured = np.broadcast_to(acquisition.mask[index], kspace.shape)
+        bands = pywt.wavedec2(image, "db2", mode="periodization", level=levels)
+        norm = sum(np.abs(band).sum() for level in bands[1:] for band in level)
+        total += 0.5 * np.linalg.norm((kspace - data)[measured]) ** 2
+        total += result.certificate.sigma * norm
+    assert result.certificate.objective == pytest.approx(total, rel=2e-5)
+
+
 def test_full_sampling_and_no_noise_give_the_image(planes):
     pattern = draw_pattern((40, 48), acceleration=1, calibration=8)
     result = recover(undersample(planes, pattern), shift="none", tolerance=1e-6)
