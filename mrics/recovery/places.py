@@ -103,6 +103,8 @@ class JointSplitting:
             model.start()
             self.best[frame] = model.image
         self.penalty.set_weight(weight, images)
+        for model in models:
+            model.couple(self.penalty.symbol)
         trace = Trace()
         while trace.done < iterations and trace.gap > tolerance:
             self.penalty.pull(images)

@@ -121,6 +121,7 @@ class Splitting:
         model, penalty = self.model, self.penalty
         model.start()
         penalty.set_weight(weight, model.flat)
+        model.couple(penalty.symbol)
         if model.maps is None and isinstance(penalty, OrthonormalWavelet):
             return self._run_shrunk(penalty, iterations, tolerance)
         trace = Trace()
