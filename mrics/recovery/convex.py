@@ -16,7 +16,7 @@ from mrics.recovery.splitting import Penalty, PlaneResult, Splitting
 
 Array = NDArray[Any]
 #: iterations allowed where the settings name none
-ITERATIONS = 300
+ITERATIONS = 500
 MakePenalty = Callable[[tuple[int, int], Any], Penalty]
 
 

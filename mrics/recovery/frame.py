@@ -18,7 +18,7 @@ from mrics.recovery import frame_kernels
 
 Array = NDArray[Any]
 #: shrinkage threshold of the splitting relative to the RMS of the first image's coefficients
-_THRESHOLD = 0.4
+_THRESHOLD = 0.6
 
 
 class FrameWavelet:

@@ -59,7 +59,7 @@ class Convex(Settings):
     weight : float or str
         Weight of the penalty in units of sigma, or one of ``WEIGHT_WORDS``.
     iterations : int or None
-        Most iterations; None for 300, and for 60 where shifts are random.
+        Most iterations; None for 500, and for 60 where shifts are random.
     tolerance : float
         Duality gap, relative to the objective, to stop at.
     """

@@ -26,7 +26,8 @@ def words_of(pdf: bytes) -> str:
     shown = []
     for packed in re.findall(rb"stream\r?\n(.*?)\r?\nendstream", pdf, re.DOTALL):
         try:
-            content = zlib.decompress(packed)
+            # A checksum whose last byte is a carriage return loses it to the line's end.
+            content = zlib.decompressobj().decompress(packed)
         except zlib.error:
             continue
         for block in re.findall(rb"BT(.*?)ET", content, re.DOTALL):
