@@ -120,12 +120,12 @@ def lay_out(
     return Layout(tuple(groups), (pu, pv), stride, border)
 
 
-def padded(layers: Array, layout: Layout) -> Array:
-    """Layers (layer, u, v) extended so that every patch position is inside."""
-    ends = [(0, 0), (0, layout.size[0] - 1), (0, layout.size[1] - 1)]
-    if layout.border == "reflect":
-        ends = [(0, 0)] + [(end, end) for _, end in ends[1:]]
-    return np.pad(layers, ends, mode="wrap" if layout.border == "wrap" else "symmetric")
+def padded(length: int, size: int, border: str) -> NDArray[np.intp]:
+    """Samples of an axis in the order that puts every patch position inside."""
+    before = size - 1 if border == "reflect" else 0
+    mode: Any = "wrap" if border == "wrap" else "symmetric"
+    order: NDArray[np.intp] = np.pad(np.arange(length), (before, size - 1), mode=mode)
+    return order
 
 
 def _starts(total: int, size: int, stride: int) -> NDArray[np.intp]:
@@ -246,8 +246,10 @@ def code_and_average(
     before = pu - 1 if layout.border == "reflect" else 0
     left = pv - 1 if layout.border == "reflect" else 0
     real = np.dtype(stack.dtype.type(0).real.dtype)
-    total = np.zeros((planes, u + before + pu - 1, v + left + pv - 1), stack.dtype)
+    down, across = padded(u, pu, layout.border), padded(v, pv, layout.border)
+    total = np.zeros((planes, len(down), len(across)), stack.dtype)
     weight = np.zeros(total.shape, stack.dtype)
+    layers = np.array(layout.groups)
     rows = _starts(total.shape[1], pu, layout.stride)
     cols = _starts(total.shape[2], pv, layout.stride)
     use = np.zeros(len(atoms), np.int64)
@@ -259,8 +261,7 @@ def code_and_average(
         group, first = task
         some = rows[first : first + _ROWS]
         low, high = int(some[0]), int(some[-1]) + pu
-        image = padded(stack[list(layout.groups[group])], layout)[:, low:high]
-        image = np.ascontiguousarray(image).view(real)
+        image = stack[np.ix_(layers[group], down[low:high], across)].view(real)
         out, share = np.zeros_like(image), np.zeros(image.shape[1:], real)
         counts = np.zeros(len(atoms), np.int64)
         parts = np.empty((2, len(some), len(cols)), np.float32)
