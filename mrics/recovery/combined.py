@@ -74,7 +74,7 @@ class Sum:
         image += self._pulled
 
     def push(self, image: Array, relax: float) -> Array:
-        """See :class:`splitting.Penalty`; neither penalty destroys the image."""
+        """See :class:`splitting.Penalty`."""
         one, two = self.first.push(image, relax), self.second.push(image, relax)
         sums = one + two
         sums[1] = max(one[1], two[1])

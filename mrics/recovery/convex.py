@@ -80,7 +80,7 @@ def certify(
     note: str = "",
 ) -> Recovered:
     """The certificate of the worst plane, objectives summed."""
-    optimality = max(r.optimality for r in results)
+    optimality = float(np.max([r.optimality for r in results]))  # a NaN stays one
     certificate = Certificate(
         method,
         iterations=max(r.iterations for r in results),

@@ -82,7 +82,7 @@ class JointPenalty(Protocol):
         """Fill every image (float view) with its part of rho K^H h."""
 
     def push(self, images: list[Array], relax: float) -> Array:
-        """Move the state to the images; sums as in ``split_bands``."""
+        """Move the state to the images (which stay); sums as in ``split_bands``."""
 
 
 class JointSplitting:
@@ -90,18 +90,15 @@ class JointSplitting:
 
     def __init__(self, models: list[PlaneModel], penalty: JointPenalty) -> None:
         self.models, self.penalty = models, penalty
-        self.best = np.zeros((len(models), *models[0].padded), models[0].dtype)
 
     def run(
         self, active: list[int], weight: float, iterations: int, tolerance: float
     ) -> PlaneResult:
-        """Minimise over the frames ``active``, loaded in their models; :attr:`best` are images."""
+        """Minimise over the frames ``active``, loaded in their models, whose images result."""
         models = [self.models[f] for f in active]
         images = [model.flat for model in models]
-        self.best[...] = 0
-        for frame, model in zip(active, models, strict=True):
+        for model in models:
             model.start()
-            self.best[frame] = model.image
         self.penalty.set_weight(weight, images)
         for model in models:
             model.couple(self.penalty.symbol)
@@ -109,14 +106,13 @@ class JointSplitting:
         while trace.done < iterations and trace.gap > tolerance:
             self.penalty.pull(images)
             terms = np.zeros(4)
-            for frame, model in zip(active, models, strict=True):
+            for model in models:
                 one = np.array(model.solve(self.penalty.symbol, RELAX))
                 one[3] **= 2
                 terms += one
-                self.best[frame] = model.image
             terms[3] **= 0.5
             sums = self.penalty.push(images, RELAX)
-            trace.add(terms, sums, self.best)
+            trace.add(terms, sums, *(model.image for model in models))
         return trace.result()
 
 
@@ -176,7 +172,7 @@ def run_places(
             return PlaneResult()
         result = worker.run(active, threshold / unit, iterations, tolerance)
         for f in active:
-            worker.models[f].write(worker.best[f], unit, image[plane + f])
+            worker.models[f].write(worker.models[f].image, unit, image[plane + f])
         if finish is not None:
             finish(worker.penalty, active, plane // frames, unit)
         return result.scaled(unit)

@@ -70,7 +70,10 @@ class PlaneModel:
     def load(
         self, encoding: Encoding, data: Array, plane: int, unit: float, hybrid: bool = True
     ) -> bool:
-        """Take up one plane of a block, divided by ``unit``; False where all its data are 0."""
+        """Take up one plane of a block, divided by ``unit``.
+
+        False where all its data or all its sensitivities are 0: its image is 0.
+        """
         self.mask = np.ascontiguousarray(
             encoding.mask[plane if encoding.mask.shape[0] > 1 else 0, 0], self.real
         )
@@ -92,6 +95,8 @@ class PlaneModel:
             self.maps = maps
             energy = (self.maps.real**2 + self.maps.imag**2).sum(0)
             self.bound = float(energy.max())
+            if self.bound == 0:
+                return False
             self._make_channels(energy)
         return True
 

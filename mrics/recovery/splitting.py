@@ -11,7 +11,10 @@ s = min(1, min_b w_b / max |q_b|) are feasible for the dual, and in every iterat
 
     F(x) - F* <= F(x) + s^2/2 ||p||^2 + s Re<p, d>
 
-is known without further transforms. Where that condition holds only up to a remainder e (bands
+is known without further transforms. Plain wavelets with one channel hand back z instead of x
+(K^H K is 1, so that z are coefficients of an image): its misfit follows from the spectrum of the
+state (:meth:`PlaneModel.solve_both`), and F(z) is set against the dual value of the iteration
+before, or of the last one. Where that condition holds only up to a remainder e (bands
 without penalty, several channels) s B ||e|| is added, which bounds the distance to every optimum
 in a ball of radius B, twice the norm found.
 """
@@ -74,20 +77,20 @@ class Trace:
         self.dual = -np.inf
         self.history: dict[str, list[float]] = {"objective": [], "optimality": [], "change": []}
 
-    def add(self, terms: Any, sums: Array, image: Array) -> None:
+    def add(self, terms: Any, sums: Array, *images: Array) -> None:
         """One iteration: ``terms`` of :meth:`PlaneModel.solve`, ``sums`` of the penalty."""
-        self.bound(terms, sums, image)
+        self.bound(terms, sums, *images)
         self.measure(0.5 * float(terms[0]) + float(sums[0]))
         self.end()
 
-    def bound(self, terms: Any, sums: Array, image: Array) -> None:
-        """Raise the dual value to that of this iteration; note the change."""
+    def bound(self, terms: Any, sums: Array, *images: Array) -> None:
+        """Take up the dual value of this iteration; note the change."""
         _, p_square, product, slack = (float(term) for term in terms)
-        norm = float(np.sqrt(np.vdot(image, image).real))
+        norm = float(np.sqrt(sum(np.vdot(image, image).real for image in images)))
         s = 1 / max(1.0, float(sums[1]))
         dual = -0.5 * s * s * p_square - s * product
         dual -= 2 * s * (slack * norm + float(np.sqrt(sums[2] * sums[3])))
-        self.dual = max(self.dual, dual)
+        self.dual = dual  # not the largest so far: the ball of an early small image is too small
         self.change = float(np.sqrt(sums[4] / max(sums[5], 1e-300)))
 
     def measure(self, objective: float) -> None:

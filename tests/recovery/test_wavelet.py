@@ -1,6 +1,7 @@
 """The wavelet recovery: optimum against an independent solver, certificate, shifts."""
 
 import warnings
+from dataclasses import replace
 
 import cvxpy
 import numpy as np
@@ -77,6 +78,43 @@ def test_gap_bounds_the_distance_to_the_optimum(points):
         excess = early.objective - best.objective
         assert -2e-4 * best.objective <= excess <= early.optimality * early.objective * 1.001
     assert best.reached
+
+
+def shaded(planes):
+    """Four Gaussian coils whose sum of squares falls to a few per cent of its maximum."""
+    y, x = np.mgrid[-1:1:40j, -1:1:48j]
+    corners = [(a, b) for a in (-1, 1) for b in (-1, 1)]
+    maps = np.array(
+        [np.exp(-((y - a) ** 2 + (x - b) ** 2) / 0.8 + 1j * (a * y + b * x)) for a, b in corners]
+    )
+    energy = (np.abs(maps) ** 2).sum(0)
+    assert energy.min() < 0.07 * energy.max()
+    pattern = draw_pattern((40, 48), acceleration=4, calibration=8, seed=4)
+    return undersample(planes[:1], pattern, sigma=0.02, seed=1, sensitivities=maps[None])
+
+
+@pytest.mark.parametrize("weight", [3.0, 20.0])
+def test_gap_is_true_under_strong_shading(planes, weight):
+    """The first image is far too small there, and with it the ball its dual value speaks of."""
+    settings = {"weight": weight, "shift": "none", "iterations": 5000}
+    acquisition = shaded(planes)
+    best = recover(acquisition, tolerance=1e-6, **settings).certificate
+    for tolerance in (1e-1, 1e-2, 1e-3):
+        early = recover(acquisition, tolerance=tolerance, **settings).certificate
+        assert early.reached
+        assert early.objective - best.objective <= early.optimality * early.objective * (1 + 1e-9)
+
+
+def test_a_plane_without_sensitivity_is_zero_and_disturbs_no_other(planes):
+    maps = np.ones((2, 2, 40, 48), complex) * np.array([1, 0])[:, None, None, None]
+    pattern = draw_pattern((40, 48), acceleration=3, calibration=8, seed=4)
+    both = undersample(planes[:2], pattern, sigma=0.02, seed=1, sensitivities=maps[:1])
+    both = replace(both, sensitivities=maps)
+    result = recover(both, weight=1.0, shift="none").image
+    assert not result[1].any()
+    alone = replace(both, kspace=both.kspace[:1], pattern_index=both.pattern_index[:1])
+    alone = replace(alone, sensitivities=maps[:1])
+    np.testing.assert_array_equal(recover(alone, weight=1.0, shift="none").image[0], result[0])
 
 
 @pytest.mark.parametrize("case", ["points", "lines"])

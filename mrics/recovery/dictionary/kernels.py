@@ -100,7 +100,7 @@ def pursue_one(
 
     ``alpha`` (side, atoms) holds its correlations and is destroyed. ``chosen`` and ``values``
     (side, limit) receive the atoms and coefficients; ``power``, ``lanes``, ``q`` (limit, atoms) and
-    ``z`` (side + 1, limit) are workspace. It slanes at ``limit`` atoms or at a squared residual of
+    ``z`` (side + 1, limit) are workspace. It stops at ``limit`` atoms or at a squared residual of
     ``target``.
     """
     if energy <= target or energy <= 0:

@@ -120,8 +120,8 @@ def lay_out(
     return Layout(tuple(groups), (pu, pv), stride, border)
 
 
-def padded(length: int, size: int, border: str) -> NDArray[np.intp]:
-    """Samples of an axis in the order that puts every patch position inside."""
+def order_of(length: int, size: int, border: str) -> NDArray[np.intp]:
+    """Samples of an axis in an order, longer than it, that puts every patch position inside."""
     before = size - 1 if border == "reflect" else 0
     mode: Any = "wrap" if border == "wrap" else "symmetric"
     order: NDArray[np.intp] = np.pad(np.arange(length), (before, size - 1), mode=mode)
@@ -246,7 +246,7 @@ def code_and_average(
     before = pu - 1 if layout.border == "reflect" else 0
     left = pv - 1 if layout.border == "reflect" else 0
     real = np.dtype(stack.dtype.type(0).real.dtype)
-    down, across = padded(u, pu, layout.border), padded(v, pv, layout.border)
+    down, across = order_of(u, pu, layout.border), order_of(v, pv, layout.border)
     total = np.zeros((planes, len(down), len(across)), stack.dtype)
     weight = np.zeros(total.shape, stack.dtype)
     layers = np.array(layout.groups)
