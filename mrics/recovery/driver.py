@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 
 from mrics.encoding.acquisition import Acquisition
 from mrics.errors import RecoveryError
+from mrics.numerics import one_blas_thread
 from mrics.numerics.scaling import exponent_for, largest_part, times_power_of_two
 from mrics.recovery.contract import Recovered
 from mrics.recovery.fields import Settings
@@ -66,6 +67,18 @@ def recover(
     ``a`` other than 0, to rounding.
     """
     chosen = check_settings(method, settings)
+    # Work is spread over the threads by planes; those of linear algebra would spin beside them.
+    with one_blas_thread():
+        return _recovered(acquisition, method, chosen, reference, mask)
+
+
+def _recovered(
+    acquisition: Acquisition,
+    method: str,
+    chosen: Settings,
+    reference: NDArray[Any] | None,
+    mask: NDArray[np.bool_] | None,
+) -> Recovered:
     started = time.perf_counter()
     largest = _survey(acquisition)
     empty = largest == 0

@@ -145,9 +145,13 @@ def test_recovery_of_a_stack(figure):
     pattern = draw_pattern((256, 256), law="power", exponent=3, acceleration=4, seed=1)
     data = undersample(image, pattern, sigma=0.01, seed=1)
     recover(undersample(image[:1], pattern, sigma=0.01, seed=1), "dictionary", iterations=1)
-    start, own = time.perf_counter(), time.process_time()
-    result = recover(data, "dictionary", iterations=10)
-    wall, busy = time.perf_counter() - start, time.process_time() - own
+    wall, result = np.inf, None
+    for _ in range(3):
+        start, own = time.perf_counter(), time.process_time()
+        result = recover(data, "dictionary", iterations=10)
+        taken = time.perf_counter() - start
+        if taken < wall:
+            wall, busy = taken, time.process_time() - own
     atoms = result.history["atoms_per_patch"][-1]
     tracemalloc.start()
     recover(data, "dictionary", iterations=2)

@@ -19,7 +19,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from mrics.errors import RecoveryError
-from mrics.numerics import map_blocks
+from mrics.numerics import map_blocks, one_blas_thread
 from mrics.recovery.dictionary import kernels
 
 Array = NDArray[Any]
@@ -74,7 +74,8 @@ class Prepared:
     def __init__(self, atoms: Array) -> None:
         self.atoms = np.ascontiguousarray(atoms)
         self.complex = np.iscomplexobj(atoms)
-        gram = np.conj(self.atoms) @ self.atoms.T
+        with one_blas_thread():  # its threads would go on spinning beside the coding's
+            gram = np.conj(self.atoms) @ self.atoms.T
         if self.complex:
             re, im = atoms.T.real, atoms.T.imag
             self.columns = np.ascontiguousarray(np.block([[re, -im], [im, re]]))

@@ -16,7 +16,7 @@ from mrics.recovery.dictionary.coding import Prepared
 
 Array = NDArray[Any]
 #: rows of patch positions a thread takes at a time
-_ROWS = 8
+_ROWS = 16
 #: share of the largest patch energy a chosen patch has at least
 ENERGY_SHARE = 1e-3
 
@@ -180,7 +180,8 @@ def choose(
     _, u, v = stack.shape
     total = len(layout.groups) * u * v
     generator = stream(seed, "patches", *identity)
-    flat = generator.permutation(total)[: 4 * count] if total > count else np.arange(total)
+    most = min(4 * count, total)
+    flat = generator.choice(total, most, replace=False) if total > count else np.arange(total)
     places = np.stack(np.unravel_index(flat, (len(layout.groups), u, v)), axis=1)
     if body is not None:
         middle = np.array([group[len(group) // 2] for group in layout.groups])
@@ -290,12 +291,11 @@ def code_and_average(
 
 
 def _divided(total: Array, weight: Array) -> Array:
-    """Real and imaginary part each by its own weight."""
-    image = np.empty_like(total)
+    """``total`` with real and imaginary part each divided by its own weight, in place."""
 
     def one(plane: int) -> None:
-        np.divide(total[plane].real, weight[plane].real, out=image[plane].real)
-        np.divide(total[plane].imag, weight[plane].imag, out=image[plane].imag)
+        total[plane].real /= weight[plane].real
+        total[plane].imag /= weight[plane].imag
 
-    map_blocks(one, range(len(image)))
-    return image
+    map_blocks(one, range(len(total)))
+    return total

@@ -69,7 +69,7 @@ def solve(acquisition: Acquisition, settings: PatchDictionary, sigma: float) -> 
     prepared = None if atoms is None else Prepared(atoms)
     for step in range(number):
         level = noise * START_FACTOR ** (1 - step / max(1, number - 1))
-        turned = image * np.conj(turn)
+        turned = _turned(image, turn, back=True)
         if settings.source == "adaptive":
             atoms = _learned(turned, layout, settings, atoms, gain * level, step)
             prepared = Prepared(atoms)
@@ -77,7 +77,7 @@ def solve(acquisition: Acquisition, settings: PatchDictionary, sigma: float) -> 
         target = (2 if prepared.complex else 1) * layout.length * (gain * level) ** 2
         averaged = code_and_average(turned, prepared, layout, limit, target)
         coupling = (COUPLING * noise / level) ** 2
-        fresh = data_step(acquisition, averaged.image * turn, coupling, unit)
+        fresh = data_step(acquisition, _turned(averaged.image, turn), coupling, unit)
         change = float(np.linalg.norm(fresh - image)) / max(float(np.linalg.norm(fresh)), 1e-30)
         image = fresh
         history["change"].append(change)
@@ -115,6 +115,18 @@ def solve(acquisition: Acquisition, settings: PatchDictionary, sigma: float) -> 
     )
     image *= image.dtype.type(unit)
     return Recovered(image, certificate, history, extras)
+
+
+def _turned(stack: Array, turn: Array, back: bool = False) -> Array:
+    """The stack times the phase factors, or their conjugates."""
+    out = np.empty(stack.shape, stack.dtype)
+
+    def one(plane: int) -> None:
+        factors = np.conj(turn[plane]) if back else turn[plane]
+        np.multiply(stack[plane], factors, out=out[plane])
+
+    map_blocks(one, range(len(stack)))
+    return out
 
 
 def _in_place(by_start: Array, layout: Layout, planes: int) -> Array:
