@@ -26,6 +26,8 @@ from mrics.recovery.settings import WaveletVariation
 from mrics.recovery.splitting import Penalty
 
 Array = NDArray[Any]
+#: threshold of the bands beside a variation
+_THRESHOLD = 0.4
 
 
 def solve(acquisition: Acquisition, settings: WaveletVariation, sigma: float) -> Recovered:
@@ -35,7 +37,7 @@ def solve(acquisition: Acquisition, settings: WaveletVariation, sigma: float) ->
 
     def make(grid: tuple[int, int], real: Any) -> Penalty:
         return Sum(
-            FrameWavelet(grid, real, settings.wavelet, levels),
+            FrameWavelet(grid, real, settings.wavelet, levels, threshold=_THRESHOLD),
             Variation(grid, real),
             settings.variation,
         )

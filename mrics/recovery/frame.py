@@ -17,14 +17,15 @@ from mrics.numerics.wavelets import filters
 from mrics.recovery import frame_kernels
 
 Array = NDArray[Any]
-#: shrinkage threshold of the splitting relative to the RMS of the first image's coefficients
+#: threshold of the bands by themselves
 _THRESHOLD = 0.6
 
 
 class FrameWavelet:
     """Penalty half of the splitting (:class:`splitting.Penalty`).
 
-    ``scales``: factors of the weight, finest level first; ones if left out.
+    ``scales``: factors of the weight, finest level first; ones if left out. ``threshold``: of the
+    shrinkage, relative to the RMS of the first image's coefficients; it changes the speed alone.
     """
 
     def __init__(
@@ -34,10 +35,11 @@ class FrameWavelet:
         wavelet: str,
         levels: int,
         scales: Sequence[float] | None = None,
+        threshold: float = _THRESHOLD,
     ) -> None:
         self.real = np.dtype(real)
         self.padded = shape
-        self.levels = levels
+        self.levels, self.threshold = levels, threshold
         self.factors = 0.5 ** np.arange(1, levels + 1)
         if scales is not None:
             self.factors *= np.array(scales)
@@ -83,7 +85,7 @@ class FrameWavelet:
         for level in range(self.levels):
             energy = sum(float(np.vdot(one, one)) for one in bands[:, level])
             rms = np.sqrt(energy / count)
-            self.rho[level] = self.weights[level] / (_THRESHOLD * max(rms, 1e-30))
+            self.rho[level] = self.weights[level] / (self.threshold * max(rms, 1e-30))
         self.symbol[...] = np.tensordot(self.rho, self._power, 1)
         return self.rho
 
