@@ -1,7 +1,8 @@
 """Compiled steps of one row of groups: complex values shrunk by their joint modulus.
 
-A group is the differences at a pixel. Each step runs over one row of one member and touches few
-arrays: with more of them a compiler gives up its checks for overlap, and with them the vectors.
+A group is the differences at a pixel, or a coefficient's frames. Each step runs over one row of one
+member and touches few arrays: with more of them a compiler gives up its checks for overlap, and
+with them the vectors.
 """
 
 from __future__ import annotations

@@ -88,31 +88,12 @@ def push_second(
             dual[3, i, j] = here_1 - w[1, j]
             dual[4, i, j] = half * (here_0 - w[0, j] + here_1 - over_1[j])
         a, b, c = _shrink_together(
-            state,
-            i,
-            (0, 1),
-            weights[0] / rhos[0],
-            rhos[0],
-            relax,
-            top[0],
-            dual,
-            factor,
-            c2,
-            q2,
-        )
+            state, i, (0, 1), weights[0] / rhos[0], rhos[0], relax, top[0], dual, factor, c2, q2,
+        )  # fmt: skip
         d, e, f = _shrink_together(
-            state,
-            i,
-            (2, 3, 4),
-            weights[1] / rhos[1],
-            rhos[1],
-            relax,
-            top[1],
-            dual,
-            factor,
-            c2,
+            state, i, (2, 3, 4), weights[1] / rhos[1], rhos[1], relax, top[1], dual, factor, c2,
             q2,
-        )
+        )  # fmt: skip
         sums[0] += weights[0] * a + weights[1] * d
         sums[4] += b + e
         sums[5] += c + f
